@@ -1,0 +1,1 @@
+"""What every other package may use: errors, physical constants, array declarations."""
