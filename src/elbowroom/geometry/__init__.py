@@ -1,0 +1,1 @@
+"""Wires, antennas, grounds, layouts, stations, meshes and directions: shapes only, no fields."""
