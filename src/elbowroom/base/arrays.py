@@ -44,6 +44,8 @@ class ArraySpec:
         Unit, ``"1"`` where there is none.
     doc : str
         One line for the reader of the file.
+    required : bool
+        Whether a record without it is refused; optional arrays are checked only where present.
     """
 
     name: str
@@ -51,6 +53,7 @@ class ArraySpec:
     kind: str
     unit: str
     doc: str
+    required: bool = True
 
 
 def check_array(
