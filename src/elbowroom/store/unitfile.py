@@ -39,8 +39,9 @@ class OtherSchema(Exception):
 class GuardedFile:
     """File object for h5py that keeps the first error of the operating system instead of passing it on.
 
-    A disk that fills up inside HDF5 leaves its library with a file it can neither flush nor close.  So HDF5
-    is told that all went well, and ``error`` is raised by whoever owns the file once HDF5 has let go of it.
+    An error raised inside HDF5 makes it close the file, which writes again and fails again; what comes out is
+    then a ``SystemError`` or ``AttributeError`` in place of "no space left" (seen with h5py 3.16).  So HDF5
+    is told that all went well, and the owner of the file raises ``error`` once HDF5 has let go of it.
 
     Parameters
     ----------
