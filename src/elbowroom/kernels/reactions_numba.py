@@ -366,6 +366,15 @@ def angled_moments(start, end, start2, end2, radius, radius2, wavenumber, tolera
         gap = gap - (gap[0] * t[0] + gap[1] * t[1] + gap[2] * t[2]) * t
         normal[:] = gap
         size = math.sqrt(normal[0] ** 2 + normal[1] ** 2 + normal[2] ** 2)
+        if size < 1e-9 * (h + h2):
+            # On one axis any direction across it serves.
+            smallest = 0
+            for c in range(3):
+                if abs(t[c]) < abs(t[smallest]):
+                    smallest = c
+            normal[:] = -t[smallest] * t
+            normal[smallest] += 1.0
+            size = math.sqrt(normal[0] ** 2 + normal[1] ** 2 + normal[2] ** 2)
     normal /= size
     e2, f2 = np.empty(3), np.empty(3)
     e2[0] = t[1] * normal[2] - t[2] * normal[1]
@@ -414,4 +423,17 @@ def angled_moments(start, end, start2, end2, radius, radius2, wavenumber, tolera
             _touching_panels(
                 start, dp, u0, u1, start2, dq, v0, v1, normal, e2, radius, radius2, wavenumber,
                 touching_points, 2 * touching_points, nodes, weights, breaks, out,
+            )  # fmt: skip
+
+
+@njit(**_OPTIONS)
+def angled_moments_all(
+    start, end, start2, end2, radius, radius2, wavenumber, tolerance, touching_points, nodes, weights, out
+):
+    """Fill ``out`` (E, E', p+1, p'+1) with the moments of every pair of elements of two antennas."""
+    for i in range(start.shape[0]):
+        for j in range(start2.shape[0]):
+            angled_moments(
+                start[i], end[i], start2[j], end2[j], radius[i], radius2[j], wavenumber,
+                tolerance, touching_points, nodes, weights, out[i, j],
             )  # fmt: skip

@@ -13,7 +13,7 @@ import numpy as np
 from scipy.special import ive
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
-from elbowroom.base.constants import IMPEDANCE_OF_VACUUM, SPEED_OF_LIGHT, VACUUM_PERMEABILITY
+from elbowroom.base.constants import IMPEDANCE_OF_VACUUM, VACUUM_PERMEABILITY, wavenumber_of
 from elbowroom.geometry.antennas import Antenna
 from elbowroom.geometry.mesh import Mesh
 from elbowroom.kernels.basis import current_coefficients, overlap_matrix, slope_coefficients
@@ -149,56 +149,59 @@ def element_moments(
     return moments, tangent[:, None, :] * tangent2[None, :, :]
 
 
-def expand_moments(
-    mesh: Mesh, moments: ComplexArray, horizontal: FloatArray, vertical: FloatArray, charge_sign: float, wavenumber: float
+def expand_moments_between(
+    mesh: Mesh, mesh2: Mesh, moments: ComplexArray, products: FloatArray, charge_count: float, wavenumber: float
 ) -> ComplexArray:
-    """Turn element moments into an impedance matrix of the unknowns.
+    """Turn element moments into the impedance block between the unknowns of two meshes.
 
     Z = j k eta/(4 pi) sum (t . t') J[f, f'] + eta/(4 pi j k) J[f', f'], the second with derivatives along the wire.
 
     Parameters
     ----------
-    mesh : Mesh
+    mesh, mesh2 : Mesh
         Elements and unknowns.
-    moments : complex128 (E, E, p+1, p+1)
-        From :func:`element_moments`.
-    horizontal, vertical : float64 (E, E)
-        What the horizontal and vertical products of the tangents count.
-    charge_sign : float
-        +1, or -1 for an image.
+    moments : complex128 (E, E', p+1, p'+1)
+        Legendre moments of all element pairs.
+    products : float64 (E, E')
+        Products of the tangents, as they count.
+    charge_count : float
+        +1, or what the charge of an image counts.
     wavenumber : float
         [rad/m].
 
     Returns
     -------
-    complex128 (N, N)
+    complex128 (N, N')
         [ohm]
     """
-    current, slope = current_coefficients(mesh.order), slope_coefficients(mesh.order)
     factor = 1j * wavenumber * IMPEDANCE_OF_VACUUM / (4.0 * np.pi)
-    charge = charge_sign * IMPEDANCE_OF_VACUUM / (4.0j * np.pi * wavenumber)
-    inverse_half = 2.0 / mesh.length
-    local = (factor * (horizontal + vertical))[:, :, None, None] * (current @ moments @ current.T)
-    local += (charge * inverse_half[:, None] * inverse_half[None, :])[:, :, None, None] * (slope @ moments @ slope.T)
-    n, p1 = mesh.n_elements, mesh.order + 1
-    flat = mesh.expansion.reshape(n * p1, -1)
-    return flat.T @ local.transpose(0, 2, 1, 3).reshape(n * p1, n * p1) @ flat
+    charge = charge_count * IMPEDANCE_OF_VACUUM / (4.0j * np.pi * wavenumber)
+    local = (factor * products)[:, :, None, None] * (
+        current_coefficients(mesh.order) @ moments @ current_coefficients(mesh2.order).T
+    )
+    slopes = slope_coefficients(mesh.order) @ moments @ slope_coefficients(mesh2.order).T
+    local += (charge * (2.0 / mesh.length)[:, None] * (2.0 / mesh2.length)[None, :])[:, :, None, None] * slopes
+    rows, columns = mesh.n_elements * (mesh.order + 1), mesh2.n_elements * (mesh2.order + 1)
+    flat = local.transpose(0, 2, 1, 3).reshape(rows, columns)
+    return mesh.expansion.reshape(rows, -1).T @ flat @ mesh2.expansion.reshape(columns, -1)
 
 
 def free_self_block(mesh: Mesh, frequency_hz: float, settings: NearSettings) -> ComplexArray:
     """Return the free-space impedance matrix (N, N) [ohm] of one antenna, without loss or loads."""
-    wavenumber = 2.0 * np.pi * frequency_hz / SPEED_OF_LIGHT
+    wavenumber = wavenumber_of(frequency_hz)
     moments, cosines = element_moments(mesh, wavenumber, settings)
-    horizontal = cosines[..., 0] + cosines[..., 1]
-    return expand_moments(mesh, moments, horizontal, cosines[..., 2], 1.0, wavenumber)
+    return expand_moments_between(mesh, mesh, moments, cosines.sum(axis=-1), 1.0, wavenumber)
 
 
 def image_self_block(
-    mesh: Mesh, frequency_hz: float, settings: NearSettings, height: float, attitude: FloatArray
+    mesh: Mesh,
+    frequency_hz: float,
+    settings: NearSettings,
+    height: float,
+    attitude: FloatArray,
+    counts: tuple[float, float, float],
 ) -> ComplexArray:
-    """Return what the image in a perfect ground adds to the matrix of one antenna, (N, N) [ohm].
-
-    The image of a current keeps its vertical part and reverses its horizontal part; its charge changes sign.
+    """Return what a mirror image below z = 0 adds to the matrix of one antenna, (N, N) [ohm].
 
     Parameters
     ----------
@@ -212,12 +215,14 @@ def image_self_block(
         Height of the antenna's origin above the ground [m].
     attitude : float64 (3, 3)
         From the antenna's frame to the station's.
+    counts : tuple of 3 floats
+        What the image's horizontal currents, vertical currents and charge count: (-1, 1, -1) on a perfect conductor.
     """
-    wavenumber = 2.0 * np.pi * frequency_hz / SPEED_OF_LIGHT
+    wavenumber = wavenumber_of(frequency_hz)
     moments, cosines = element_moments(mesh, wavenumber, settings, height, attitude)
-    # cosines hold t . (geometric mirror of t'), whose z is reversed already; the image current is minus that mirror.
-    horizontal = -(cosines[..., 0] + cosines[..., 1])
-    return expand_moments(mesh, moments, horizontal, -cosines[..., 2], -1.0, wavenumber)
+    # cosines hold t . (mirrored t'), whose z is reversed: the current that counts as unreversed has the opposite sign.
+    products = counts[0] * (cosines[..., 0] + cosines[..., 1]) - counts[1] * cosines[..., 2]
+    return expand_moments_between(mesh, mesh, moments, products, counts[2], wavenumber)
 
 
 def loss_and_loads(antenna: Antenna, mesh: Mesh, frequency_hz: float) -> ComplexArray:

@@ -1,0 +1,314 @@
+"""A station in numbers: which antennas are alike, their meshes and self blocks, and where their unknowns stand."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from threading import Lock
+
+import numpy as np
+
+from elbowroom.base.arrays import ComplexArray, FloatArray
+from elbowroom.base.constants import wavelength_of, wavenumber_of
+from elbowroom.base.errors import GeometryError, ModelRangeError
+from elbowroom.geometry.antennas import Antenna
+from elbowroom.geometry.mesh import Mesh, MeshSettings, build_mesh, mesh_settings
+from elbowroom.geometry.stations import Placed, Station
+from elbowroom.kernels.grounds import ground_kernels
+from elbowroom.kernels.quadrature import points_per_element, sample_mesh
+from elbowroom.system.self_block import NearSettings, free_self_block, image_self_block, loss_and_loads
+
+GROUND_CONTACT_M = 1e-6
+"""Wire ends nearer to a conducting ground than this are joined to it [m]."""
+
+
+@dataclass(frozen=True)
+class FarSettings:
+    """Accuracy of reactions between antennas.
+
+    Parameters
+    ----------
+    tolerance : float
+        Relative accuracy of the Gauss rules between antennas.
+    close_elements : float
+        Antenna pairs nearer than this times their longest element are integrated element by element, with
+        currents spread over the circumference; more distant ones are filaments sampled at Gauss points.
+    """
+
+    tolerance: float = 1e-7
+    close_elements: float = 0.15
+
+    def levels(self) -> tuple[float, ...]:
+        """Return the distances, in longest elements, from which each set of Gauss rules serves."""
+        return (self.close_elements, 3.0 * self.close_elements, 10.0 * self.close_elements, 40.0 * self.close_elements)
+
+
+@dataclass(frozen=True)
+class Samples:
+    """Quadrature points of one kind of antenna in the station frame, relative to its place in the plane.
+
+    Attributes
+    ----------
+    points : float64 (3, Q)
+        Axis points [m]; x and y are relative to the antenna's position, z is the height above the ground.
+    currents : float64 (3, Q, N)
+        Weights of the x, y and z currents [m].
+    charge : float64 (Q, N)
+        Weights of the charge [1].
+    radius : float64 (Q,)
+        Wire radius at each point [m].
+    tangent : float64 (Q, 3)
+        Unit vector along the wire at each point.
+    """
+
+    points: FloatArray
+    currents: FloatArray
+    charge: FloatArray
+    radius: FloatArray
+    tangent: FloatArray
+
+
+@dataclass(eq=False)
+class Kind:
+    """Antennas of one design, attitude and height: they differ by a horizontal shift only.
+
+    Attributes
+    ----------
+    antenna : Antenna
+        The design.
+    mesh : Mesh
+        Elements in the antenna's own frame.
+    orientation : float64 (3, 3)
+        From the antenna's frame to the station's.
+    height : float
+        Height of the antenna's origin [m].
+    self_block : complex128 (N, N)
+        Impedance matrix of the antenna alone over the ground, loss and loads included [ohm].
+    """
+
+    antenna: Antenna
+    mesh: Mesh
+    orientation: FloatArray
+    height: float
+    self_block: ComplexArray
+    _samples: dict[tuple[float, float, float], Samples] = field(default_factory=dict, repr=False)
+    _lock: Lock = field(default_factory=Lock, repr=False)
+
+    def samples(self, distance: float, wavenumber: float, tolerance: float) -> Samples:
+        """Return the quadrature points that serve sources at a distance [m] or farther, made once."""
+        key = (distance, wavenumber, tolerance)
+        with self._lock:
+            if key not in self._samples:
+                counts = points_per_element(self.mesh, distance, wavenumber, tolerance)
+                local = sample_mesh(self.mesh, counts)
+                points = local.points @ self.orientation.T + [0.0, 0.0, self.height]
+                element = np.repeat(np.arange(self.mesh.n_elements), counts)
+                self._samples[key] = Samples(
+                    points=np.ascontiguousarray(points.T),
+                    currents=np.ascontiguousarray(np.einsum("ij,jqn->iqn", self.orientation, local.current_weights)),
+                    charge=local.charge_weights,
+                    radius=self.mesh.radius[element],
+                    tangent=self.mesh.tangent[element] @ self.orientation.T,
+                )
+            return self._samples[key]
+
+    def placed_elements(self, position: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Return start and end (E, 3) [m] of the elements of an antenna at a position."""
+        offset = np.array([position[0], position[1], self.height])
+        return self.mesh.start @ self.orientation.T + offset, self.mesh.end @ self.orientation.T + offset
+
+
+@dataclass(frozen=True)
+class Discretisation:
+    """A station at one frequency, ready to be assembled.
+
+    Attributes
+    ----------
+    station : Station
+        What was asked for.
+    frequency_hz : float
+        Frequency [Hz].
+    mesh : MeshSettings
+        Mesh settings used.
+    kinds : list of Kind
+        Distinct kinds of antenna.
+    kind_of : int (A,)
+        Kind of each antenna.
+    unknown_offsets, port_offsets : int (A+1,)
+        Where each antenna's unknowns and ports begin.
+    """
+
+    station: Station
+    frequency_hz: float
+    mesh: MeshSettings
+    near: NearSettings
+    far: FarSettings
+    kinds: list[Kind]
+    kind_of: np.ndarray
+    unknown_offsets: np.ndarray
+    port_offsets: np.ndarray
+
+    @property
+    def wavenumber(self) -> float:
+        """Free-space wavenumber [rad/m]."""
+        return wavenumber_of(self.frequency_hz)
+
+    @property
+    def n_unknowns(self) -> int:
+        """Number of unknowns of the station."""
+        return int(self.unknown_offsets[-1])
+
+    @property
+    def n_ports(self) -> int:
+        """Number of ports of the station."""
+        return int(self.port_offsets[-1])
+
+    def unknowns_of(self, antenna: int) -> slice:
+        """Return the rows of one antenna's unknowns."""
+        return slice(int(self.unknown_offsets[antenna]), int(self.unknown_offsets[antenna + 1]))
+
+    def ports_of(self, antenna: int) -> slice:
+        """Return the rows of one antenna's ports."""
+        return slice(int(self.port_offsets[antenna]), int(self.port_offsets[antenna + 1]))
+
+    def antennas_of(self, kind: int) -> np.ndarray:
+        """Return the indices of the antennas of one kind."""
+        return np.flatnonzero(self.kind_of == kind)
+
+
+def grounded_ends(placed: Placed, conducting: bool) -> np.ndarray:
+    """Return which wire ends (W, 2) of a placed antenna lie on the ground.
+
+    Raises
+    ------
+    GeometryError
+        If a wire reaches below z = 0, or lies in the ground's surface.
+    """
+    ends = np.array([[w.start, w.end] for w in placed.antenna.wires])
+    height = placed.to_station(ends)[..., 2]
+    lowest = float(height.min())
+    if lowest < -GROUND_CONTACT_M:
+        wire = int(np.unravel_index(np.argmin(height), height.shape)[0])
+        msg = (
+            f"antenna {placed.name!r} ({placed.antenna.name!r}): wire {wire} reaches {-lowest:g} m below the ground "
+            "(z = 0); raise the antenna with up_m or change its wires"
+        )
+        raise GeometryError(msg)
+    touching = height <= GROUND_CONTACT_M
+    radius = np.array([w.radius for w in placed.antenna.wires])
+    flat = touching.all(axis=1)
+    if flat.any():
+        msg = f"antenna {placed.name!r}: wire {int(np.argmax(flat))} lies in the ground's surface and can carry no field"
+        raise GeometryError(msg)
+    near = (height < radius[:, None]) & ~touching
+    if near.any():
+        wire = int(np.argwhere(near)[0, 0])
+        msg = (
+            f"antenna {placed.name!r}: an end of wire {wire} is {float(height[near][0]):g} m above the ground, less than its "
+            f"radius ({radius[wire]:g} m); end it on z = 0 to join it to the ground, or raise it"
+        )
+        raise GeometryError(msg)
+    if touching.any() and not conducting:
+        msg = f"antenna {placed.name!r}: a wire ends on the ground, which this ground does not conduct"
+        raise GeometryError(msg)
+    return touching
+
+
+def discretise(
+    station: Station,
+    frequency_hz: float,
+    *,
+    mesh: str | MeshSettings = "default",
+    near: NearSettings | None = None,
+    far: FarSettings | None = None,
+) -> Discretisation:
+    """Mesh every kind of antenna of a station and compute its self block.
+
+    Parameters
+    ----------
+    station : Station
+        Antennas and ground.
+    frequency_hz : float
+        Frequency [Hz].
+    mesh : str or MeshSettings, optional
+        ``"default"``, ``"refined"`` or settings.
+    near, far : optional
+        Accuracy of reactions inside and between antennas.
+
+    Returns
+    -------
+    Discretisation
+
+    Raises
+    ------
+    GeometryError
+        If an antenna cannot be modelled where it stands.
+    ModelRangeError
+        If the frequency is not positive, or a wire is too thick for it.
+    """
+    if not (np.isfinite(frequency_hz) and frequency_hz > 0.0):
+        msg = f"frequency {frequency_hz!r} Hz: expected a positive number"
+        raise ModelRangeError(msg)
+    settings, near, far = mesh_settings(mesh), near or NearSettings(), far or FarSettings()
+    wavelength = wavelength_of(frequency_hz)
+    ground = ground_kernels(station.ground)
+    for design in station.designs:
+        for index, wire in enumerate(design.wires):
+            if wire.radius > 0.02 * wavelength:
+                msg = (
+                    f"antenna {design.name!r}, wire {index}: radius {wire.radius:g} m exceeds 0.02 wavelengths "
+                    f"({0.02 * wavelength:g} m) at {frequency_hz / 1e6:g} MHz; the thin-wire model does not hold"
+                )
+                raise ModelRangeError(msg)
+
+    kinds: list[Kind] = []
+    kind_of = np.empty(len(station), dtype=int)
+    index_of: dict[tuple, int] = {}
+    meshes: dict[tuple, tuple[Mesh, ComplexArray]] = {}
+    images: dict[tuple, ComplexArray] = {}
+    designs = station.designs
+    design_index = {id(d): i for i, d in enumerate(designs)}
+    image_counts = ground.self_images()
+    for a, placed in enumerate(station):
+        if id(placed.antenna) not in design_index:
+            design_index[id(placed.antenna)] = designs.index(placed.antenna)
+        design = design_index[id(placed.antenna)]
+        # Over free space height is just another shift; keeping it in the kind costs nothing but a little memory.
+        height = placed.position[2]
+        key = (design, placed.attitude, height)
+        if key in index_of:
+            kind_of[a] = index_of[key]
+            continue
+        if ground.conducting_surface:
+            ends = grounded_ends(placed, conducting=True)
+        else:
+            ends = np.zeros((len(placed.antenna.wires), 2), dtype=bool)
+        mesh_key = (design, ends.tobytes())
+        if mesh_key not in meshes:
+            made = build_mesh(placed.antenna, wavelength, settings, ends)
+            block = free_self_block(made, frequency_hz, near) + loss_and_loads(placed.antenna, made, frequency_hz)
+            meshes[mesh_key] = (made, block)
+        made, block = meshes[mesh_key]
+        if image_counts is not None:
+            level = placed.tilt_east_deg == 0.0 and placed.tilt_north_deg == 0.0
+            image_key = (mesh_key, height, None if level else placed.attitude)
+            if image_key not in images:
+                images[image_key] = image_self_block(
+                    made, frequency_hz, near, height, np.eye(3) if level else placed.orientation, image_counts
+                )
+            block = block + images[image_key]
+        kind_of[a] = index_of[key] = len(kinds)
+        kinds.append(Kind(placed.antenna, made, placed.orientation, height, block))
+
+    unknowns = np.array([kinds[k].mesh.n_unknowns for k in kind_of])
+    ports = np.array([len(p.antenna.ports) for p in station])
+    return Discretisation(
+        station=station,
+        frequency_hz=float(frequency_hz),
+        mesh=settings,
+        near=near,
+        far=far,
+        kinds=kinds,
+        kind_of=kind_of,
+        unknown_offsets=np.concatenate([[0], np.cumsum(unknowns)]),
+        port_offsets=np.concatenate([[0], np.cumsum(ports)]),
+    )
