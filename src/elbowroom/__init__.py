@@ -1,0 +1,1 @@
+"""Mutual coupling, embedded element patterns and station beams of wire-antenna arrays."""
