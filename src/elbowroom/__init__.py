@@ -1,1 +1,50 @@
-"""Mutual coupling, embedded element patterns and station beams of wire-antenna arrays."""
+"""Mutual coupling, embedded element patterns and station beams of wire-antenna arrays.
+
+The public names are loaded when they are first used, so that ``import elbowroom`` and ``elbowroom --help`` stay quick.
+"""
+
+from __future__ import annotations
+
+from importlib import import_module
+from typing import Any
+
+__version__ = "0.1.0"
+
+_HOMES = {
+    "Wire": "elbowroom.geometry.wires",
+    "Antenna": "elbowroom.geometry.antennas",
+    "Port": "elbowroom.geometry.antennas",
+    "Load": "elbowroom.geometry.antennas",
+    "Placed": "elbowroom.geometry.stations",
+    "Station": "elbowroom.geometry.stations",
+    "FreeSpace": "elbowroom.geometry.grounds",
+    "PerfectGround": "elbowroom.geometry.grounds",
+    "MeshSettings": "elbowroom.geometry.mesh",
+    "crossed_dipoles": "elbowroom.geometry.shapes",
+    "Layout": "elbowroom.geometry.layouts",
+    "read_layout": "elbowroom.geometry.layouts",
+    "write_layout": "elbowroom.geometry.layouts",
+    "random_disc": "elbowroom.geometry.arrangements",
+    "hemisphere_grid": "elbowroom.geometry.directions",
+    "sphere_quadrature": "elbowroom.geometry.directions",
+    "cut": "elbowroom.geometry.directions",
+    "ludwig3": "elbowroom.geometry.directions",
+    "solve": "elbowroom.job.solve",
+    "Solution": "elbowroom.radiation.solution",
+    "ElbowroomError": "elbowroom.base.errors",
+}
+
+__all__ = [*_HOMES, "__version__"]
+
+
+def __getattr__(name: str) -> Any:  # noqa: ANN401 - any public object
+    """Load a public name from where it lives."""
+    if name not in _HOMES:
+        msg = f"module 'elbowroom' has no attribute {name!r}"
+        raise AttributeError(msg)
+    return getattr(import_module(_HOMES[name]), name)
+
+
+def __dir__() -> list[str]:
+    """Return the public names."""
+    return sorted(__all__)

@@ -220,6 +220,7 @@ def discretise(
     mesh: str | MeshSettings = "default",
     near: NearSettings | None = None,
     far: FarSettings | None = None,
+    self_blocks: bool = True,
 ) -> Discretisation:
     """Mesh every kind of antenna of a station and compute its self block.
 
@@ -233,6 +234,8 @@ def discretise(
         ``"default"``, ``"refined"`` or settings.
     near, far : optional
         Accuracy of reactions inside and between antennas.
+    self_blocks : bool, optional
+        Whether to compute the self blocks; without them patterns can be made but nothing can be solved.
 
     Returns
     -------
@@ -285,10 +288,13 @@ def discretise(
         mesh_key = (design, ends.tobytes())
         if mesh_key not in meshes:
             made = build_mesh(placed.antenna, wavelength, settings, ends)
-            block = free_self_block(made, frequency_hz, near) + loss_and_loads(placed.antenna, made, frequency_hz)
+            if self_blocks:
+                block = free_self_block(made, frequency_hz, near) + loss_and_loads(placed.antenna, made, frequency_hz)
+            else:
+                block = np.empty((0, 0), dtype=complex)
             meshes[mesh_key] = (made, block)
         made, block = meshes[mesh_key]
-        if image_counts is not None:
+        if image_counts is not None and self_blocks:
             level = placed.tilt_east_deg == 0.0 and placed.tilt_north_deg == 0.0
             image_key = (mesh_key, height, None if level else placed.attitude)
             if image_key not in images:

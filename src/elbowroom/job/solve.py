@@ -1,0 +1,234 @@
+"""Solving a station at a frequency, with or without a store: where geometry, physics and store meet."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from elbowroom.base.arrays import ArraySpec
+from elbowroom.base.errors import ModelRangeError
+from elbowroom.geometry.antennas import Antenna
+from elbowroom.geometry.mesh import MeshSettings, mesh_settings
+from elbowroom.geometry.stations import Station, orientation_matrix
+from elbowroom.radiation.solution import Solution
+from elbowroom.store.keys import content_key
+from elbowroom.store.records import Record, Schema, Store
+from elbowroom.system.assembly import Progress
+from elbowroom.system.discretisation import Discretisation, FarSettings, discretise
+from elbowroom.system.self_block import NearSettings
+from elbowroom.system.solving import REFERENCE_OHM, PortCurrents, SolveStatistics, solve_direct, solve_isolated
+
+MODEL_VERSION = 1
+"""Raised whenever a change of the physics or numerics changes solved currents beyond rounding."""
+
+PLACE_STEP_M = 1e-6
+"""Places that agree to this are one place in a key: a thousandth of a degree of phase at 350 MHz is 2.4e-6 m."""
+
+CONVENTIONS = (
+    "SI units. Time factor exp(+j omega t). Frame: x east, y north, z up, ground surface at z = 0. Unknowns are currents along wires, "
+    "antenna by antenna; column p of currents_per_volt is driven by 1 V behind the reference resistance of port p, every other "
+    "port loaded with it; port current positive from the first to the second end of the wire. Results of a model, not a measurement."
+)
+
+SOLUTION_SCHEMA = Schema(
+    "station-solution",
+    1,
+    (
+        ArraySpec("currents_per_volt", ("unknown", "port"), "c", "A/V", "Unknowns driven by each port's source"),
+        ArraySpec("loaded_admittance_s", ("port", "port"), "c", "S", "Port currents for 1 V behind each reference resistance"),
+        ArraySpec("isolated_currents_per_volt", ("unknown", "local_port"), "c", "A/V", "The same, every antenna alone"),
+        ArraySpec("isolated_loaded_admittance_s", ("port", "local_port"), "c", "S", "Port currents, every antenna alone"),
+        ArraySpec("position_m", ("antenna", "axis"), "f", "m", "East, north, up of each antenna as solved"),
+        ArraySpec("unknown_offset", ("antenna_edge",), "iu", "1", "First unknown of each antenna, and the end"),
+        ArraySpec("port_offset", ("antenna_edge",), "iu", "1", "First port of each antenna, and the end"),
+    ),
+    CONVENTIONS,
+)
+
+
+def _design_inputs(antenna: Antenna) -> dict[str, Any]:
+    """Return what the currents of a design depend on: no names, no polarisation labels."""
+    return {
+        "wires": [
+            (w.start, w.end, w.radius, w.conductivity, w.relative_permeability if w.conductivity is not None else None)
+            for w in antenna.wires
+        ],
+        "ports": [(g.wire, g.low, g.high) for g in antenna.port_gaps],
+        "loads": [
+            (g.wire, g.low, g.high, q.resistance_ohm, q.inductance_h, q.capacitance_f)
+            for g, q in zip(antenna.load_gaps, antenna.loads, strict=True)
+        ],
+    }
+
+
+def _relative_places(station: Station) -> tuple[np.ndarray, np.ndarray]:
+    """Return places and attitudes in whole steps, the same for stations that are turned or shifted copies.
+
+    The frame's origin is the first antenna and its x axis points to the antenna farthest from it.
+    """
+    positions = station.positions.copy()
+    positions[:, :2] -= positions[0, :2]
+    distance = np.hypot(positions[:, 0], positions[:, 1])
+    far = int(np.argmax(np.round(distance / PLACE_STEP_M)))
+    if distance[far] > PLACE_STEP_M:
+        angle = np.degrees(np.arctan2(positions[far, 1], positions[far, 0]))
+    else:
+        angle = station.placed[0].rotation_deg
+    back = orientation_matrix(-angle)
+    places = np.round(positions @ back.T / PLACE_STEP_M).astype(np.int64)
+    attitudes = np.array([back @ p.orientation for p in station])
+    return places, np.round(attitudes / 1e-8).astype(np.int64)
+
+
+def solution_key(
+    station: Station, frequency_hz: float, mesh: MeshSettings, near: NearSettings, far: FarSettings, strategy: tuple[str, str]
+) -> str:
+    """Return the store's key of a solve: equal for everything that leaves the currents as they are.
+
+    Terminations, weights and names are no part of it, nor is a turn or a shift of the whole station.
+    """
+    designs = station.designs
+    index = [designs.index(p.antenna) for p in station]
+    places, attitudes = _relative_places(station)
+    return content_key(
+        {
+            "model_version": MODEL_VERSION,
+            "designs": [_design_inputs(d) for d in designs],
+            "design_of_antenna": index,
+            "places": places,
+            "attitudes": attitudes,
+            "ground": station.ground,
+            "frequency_hz": float(frequency_hz),
+            "mesh": mesh,
+            "near": near,
+            "far": far,
+            "strategy": strategy,
+            "reference_ohm": REFERENCE_OHM,
+        }
+    )
+
+
+def _to_record(solution: Solution, attributes: dict[str, Any]) -> Record:
+    d = solution.discretisation
+    widest = int(np.diff(d.port_offsets).max())
+    isolated_currents = np.zeros((d.n_unknowns, widest), dtype=complex)
+    isolated_admittance = np.zeros((d.n_ports, widest), dtype=complex)
+    for a, alone in enumerate(solution.isolated):
+        n = alone.currents.shape[1]
+        isolated_currents[d.unknowns_of(a), :n] = alone.currents
+        isolated_admittance[d.ports_of(a), :n] = alone.loaded_admittance
+    s = solution.statistics
+    return Record(
+        {
+            "currents_per_volt": solution.coupled.currents,
+            "loaded_admittance_s": solution.coupled.loaded_admittance,
+            "isolated_currents_per_volt": isolated_currents,
+            "isolated_loaded_admittance_s": isolated_admittance,
+            "position_m": d.station.positions,
+            "unknown_offset": d.unknown_offsets,
+            "port_offset": d.port_offsets,
+        },
+        {
+            "frequency_hz": d.frequency_hz,
+            "reference_ohm": solution.reference_ohm,
+            "ground": d.station.ground.name,
+            "antenna_names": [p.name for p in d.station],
+            "port_names": [str(n) for n in d.station.port_names],
+            "strategy": s.strategy,
+            "precision": s.precision,
+            "relative_residual": s.relative_residual,
+            "seconds": dict(s.seconds),
+            **attributes,
+        },
+    )
+
+
+def _from_record(record: Record, d: Discretisation) -> Solution:
+    a, attributes = record.arrays, record.attributes
+    alone: list[PortCurrents] = []
+    made: dict[bytes, PortCurrents] = {}
+    for i in range(len(d.station)):
+        n = d.port_offsets[i + 1] - d.port_offsets[i]
+        currents = a["isolated_currents_per_volt"][d.unknowns_of(i), :n]
+        # Antennas alike share one object again, so that patterns of a kind are worked out once.
+        key = currents.tobytes()
+        if key not in made:
+            made[key] = PortCurrents(currents, a["isolated_loaded_admittance_s"][d.ports_of(i), :n])
+        alone.append(made[key])
+    statistics = SolveStatistics(
+        strategy=attributes["strategy"],
+        precision=attributes["precision"],
+        n_unknowns=d.n_unknowns,
+        n_ports=d.n_ports,
+        relative_residual=float(attributes["relative_residual"]),
+        seconds={k: float(v) for k, v in attributes["seconds"].items()},
+    )
+    return Solution(
+        d, PortCurrents(a["currents_per_volt"], a["loaded_admittance_s"]), tuple(alone), float(attributes["reference_ohm"]), statistics
+    )
+
+
+def solve(
+    station: Station,
+    frequency_hz: float,
+    *,
+    solver: str = "auto",
+    mesh: str | MeshSettings = "default",
+    precision: str = "mixed",
+    near: NearSettings | None = None,
+    far: FarSettings | None = None,
+    store: Store | None = None,
+    attributes: dict[str, Any] | None = None,
+    progress: Progress | None = None,
+) -> Solution:
+    """Solve a station at one frequency, or fetch what was solved before.
+
+    Parameters
+    ----------
+    station : Station
+        Antennas and ground.
+    frequency_hz : float
+        Frequency [Hz].
+    solver : str, optional
+        ``"direct"``, or ``"auto"``, which is the direct solver.
+    mesh : str or MeshSettings, optional
+        ``"default"``, ``"refined"`` or settings.
+    precision : str, optional
+        ``"mixed"``, ``"double"`` or ``"single"``.
+    near, far : optional
+        Accuracy of reactions inside and between antennas.
+    store : Store, optional
+        Where to look first and to keep the result.
+    attributes : dict, optional
+        Stored beside the result, for the reader of the file.
+    progress : callable, optional
+        Told the stage and the fraction done.
+
+    Returns
+    -------
+    Solution
+
+    Raises
+    ------
+    GeometryError, ModelRangeError, SolveError, StoreError
+        See the stages.
+    """
+    if solver not in ("auto", "direct"):
+        msg = f"solver {solver!r}: expected 'auto' or 'direct'"
+        raise ModelRangeError(msg)
+    settings, near, far = mesh_settings(mesh), near or NearSettings(), far or FarSettings()
+    key = ""
+    if store is not None:
+        key = solution_key(station, frequency_hz, settings, near, far, ("direct", precision))
+        record = store.get(key)
+        if record is not None:
+            return _from_record(record, discretise(station, frequency_hz, mesh=settings, near=near, far=far, self_blocks=False))
+        store.check_writable()
+    d = discretise(station, frequency_hz, mesh=settings, near=near, far=far)
+    per_kind = solve_isolated(d)
+    coupled, statistics = solve_direct(d, precision=precision, progress=progress)
+    solution = Solution(d, coupled, tuple(per_kind[k] for k in d.kind_of), REFERENCE_OHM, statistics)
+    if store is not None:
+        store.put(key, _to_record(solution, attributes or {}))
+    return solution

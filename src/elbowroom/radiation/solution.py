@@ -1,0 +1,291 @@
+"""A solved station at one frequency: port matrices, patterns and beams under any termination.
+
+Nothing here solves a field problem again.  Terminations are algebra on port quantities, weights are applied to currents before
+any field is computed, and every pattern is evaluated at exactly the directions asked for.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import ArrayLike
+
+from elbowroom.base.arrays import ComplexArray, FloatArray
+from elbowroom.base.errors import ModelRangeError
+from elbowroom.geometry.stations import PortName, Station
+from elbowroom.kernels.grounds import ground_kernels
+from elbowroom.radiation.beams import current_beams, pointing_weights
+from elbowroom.radiation.patterns import CHUNK_DIRECTIONS, direction_frame, kind_vectors, phases, station_patterns
+from elbowroom.system.discretisation import Discretisation
+from elbowroom.system.port_algebra import (
+    admittance_from_loaded,
+    impedance_from_loaded,
+    response_matrix,
+    scattering_from_impedance,
+    scattering_from_loaded,
+)
+from elbowroom.system.solving import PortCurrents, SolveStatistics
+from elbowroom.system.terminations import Termination, reflection_of
+
+
+@dataclass(frozen=True, eq=False)
+class Solution:
+    """What is known of a station once its currents are solved.
+
+    Attributes
+    ----------
+    discretisation : Discretisation
+        The station, its frequency and its meshes.
+    coupled : PortCurrents
+        Currents (N, P) and loaded admittance (P, P) of the whole station.
+    isolated : tuple of PortCurrents
+        For each antenna, the currents and loaded admittance of that antenna alone over the same ground.
+    reference_ohm : float
+        Resistance that loaded every port while solving [ohm].
+    statistics : SolveStatistics
+        Sizes, residual and times of the solve.
+    """
+
+    discretisation: Discretisation
+    coupled: PortCurrents
+    isolated: tuple[PortCurrents, ...]
+    reference_ohm: float
+    statistics: SolveStatistics
+
+    @property
+    def station(self) -> Station:
+        """The station."""
+        return self.discretisation.station
+
+    @property
+    def frequency_hz(self) -> float:
+        """Frequency [Hz]."""
+        return self.discretisation.frequency_hz
+
+    @property
+    def port_names(self) -> tuple[PortName, ...]:
+        """Antenna and port of every row of the port matrices."""
+        return self.station.port_names
+
+    def impedance_matrix(self) -> ComplexArray:
+        """Return the open-circuit impedance matrix (P, P) [ohm]."""
+        return impedance_from_loaded(self.coupled.loaded_admittance, self.reference_ohm)
+
+    def admittance_matrix(self) -> ComplexArray:
+        """Return the short-circuit admittance matrix (P, P) [S]."""
+        return admittance_from_loaded(self.coupled.loaded_admittance, self.reference_ohm)
+
+    def scattering_matrix(self, reference_ohm: complex | ArrayLike = 100.0) -> ComplexArray:
+        """Return the scattering matrix (P, P), power waves where a reference impedance is complex.
+
+        Parameters
+        ----------
+        reference_ohm : complex or complex (P,), optional
+            Reference impedance of every port [ohm].
+        """
+        if np.ndim(reference_ohm) == 0 and complex(reference_ohm) == self.reference_ohm:  # type: ignore[arg-type]
+            return scattering_from_loaded(self.coupled.loaded_admittance, self.reference_ohm)
+        return scattering_from_impedance(self.impedance_matrix(), reference_ohm)
+
+    def isolated_impedance(self, antenna: int) -> ComplexArray:
+        """Return the impedance matrix [ohm] of the ports of one antenna standing alone over the ground."""
+        return impedance_from_loaded(self.isolated[antenna].loaded_admittance, self.reference_ohm)
+
+    def _response(self, termination: Termination) -> ComplexArray:
+        reflection = reflection_of(termination, self.discretisation.n_ports, self.reference_ohm)
+        return response_matrix(self.coupled.loaded_admittance, self.reference_ohm, reflection)
+
+    def _isolated_amounts(self, termination: Termination) -> list[ComplexArray]:
+        """Return, for each antenna, its terminated receiving currents alone (N of the antenna, P of the antenna)."""
+        reflection = reflection_of(termination, self.discretisation.n_ports, self.reference_ohm)
+        amounts: list[ComplexArray] = []
+        made: dict[tuple, ComplexArray] = {}
+        for a, alone in enumerate(self.isolated):
+            own = reflection[self.discretisation.ports_of(a)]
+            key = (id(alone), own.tobytes())
+            if key not in made:
+                made[key] = alone.currents @ response_matrix(alone.loaded_admittance, self.reference_ohm, own).T
+            amounts.append(made[key])
+        return amounts
+
+    def _port_rows(self, ports: Sequence[int] | np.ndarray | None) -> np.ndarray:
+        count = self.discretisation.n_ports
+        rows = np.arange(count) if ports is None else np.asarray(ports, dtype=int)
+        if rows.size and (rows.min() < 0 or rows.max() >= count):
+            msg = f"ports: expected indices from 0 to {count - 1}, got {rows.min()} to {rows.max()}"
+            raise ModelRangeError(msg)
+        return rows
+
+    def embedded_patterns(
+        self,
+        theta_rad: ArrayLike,
+        phi_rad: ArrayLike,
+        *,
+        termination: Termination = 100.0,
+        ports: Sequence[int] | np.ndarray | None = None,
+        circumference: bool = True,
+    ) -> ComplexArray:
+        """Return embedded element patterns: the response of each port with all others terminated.
+
+        Parameters
+        ----------
+        theta_rad, phi_rad : array_like
+            Zenith angles and azimuths from east towards north [rad], of shapes that broadcast to D directions.
+        termination : number, "open", "short" or one of these per port, optional
+            What the ports see [ohm].
+        ports : sequence of int, optional
+            Ports wanted; all by default.
+        circumference : bool, optional
+            Whether currents fill their tubes (default) or their axes.
+
+        Returns
+        -------
+        complex128 (P, D, 2)
+            Receive effective length along theta_hat and phi_hat [m]: port voltage per unit incident field.  A shorted
+            port gives its short-circuit current instead [m/ohm].
+        """
+        frame = direction_frame(theta_rad, phi_rad)
+        amounts = self.coupled.currents @ self._response(termination)[self._port_rows(ports)].T
+        return station_patterns(self.discretisation, amounts, frame, circumference=circumference)
+
+    def isolated_patterns(
+        self,
+        theta_rad: ArrayLike,
+        phi_rad: ArrayLike,
+        *,
+        termination: Termination = 100.0,
+        ports: Sequence[int] | np.ndarray | None = None,
+    ) -> ComplexArray:
+        """Return isolated element patterns: each antenna alone, at its own place, over the same ground.
+
+        Parameters and result are those of :meth:`embedded_patterns`.
+        """
+        d = self.discretisation
+        frame = direction_frame(theta_rad, phi_rad)
+        rows = self._port_rows(ports)
+        amounts = self._isolated_amounts(termination)
+        ground = ground_kernels(d.station.ground)
+        positions = d.station.positions * [1.0, 1.0, 0.0]
+        owner = d.station.port_antennas[rows]
+        out = np.empty((rows.size, frame.count, 2), dtype=complex)
+        for first in range(0, frame.count, CHUNK_DIRECTIONS):
+            chunk = slice(first, min(first + CHUNK_DIRECTIONS, frame.count))
+            part = frame.part(chunk)
+            for k in np.unique(d.kind_of[owner]):
+                vectors = kind_vectors(d.kinds[k], ground, part, d.wavenumber)
+                for a in np.unique(owner[d.kind_of[owner] == k]):
+                    mine = np.flatnonzero(owner == a)
+                    local = rows[mine] - d.port_offsets[a]
+                    turn = phases(part.unit, positions[a : a + 1], d.wavenumber)[0]
+                    out[mine, chunk] = turn[:, None] * np.tensordot(amounts[a][:, local].T, vectors, axes=1)
+        return out
+
+    def beam_currents(self, weights: ArrayLike, termination: Termination = 100.0) -> ComplexArray:
+        """Return the currents (N, B) whose field is the coupled beam of the weights (P,) or (B, P)."""
+        return self.coupled.currents @ (self._response(termination).T @ self._checked_weights(weights).T)
+
+    def beam(
+        self, weights: ArrayLike, theta_rad: ArrayLike, phi_rad: ArrayLike, *, termination: Termination = 100.0
+    ) -> ComplexArray:
+        """Return the coupled beam: the weighted sum of embedded element patterns, B = sum w_i h_i.
+
+        Parameters
+        ----------
+        weights : complex (P,) or (B, P)
+            Weight of every port; zero leaves a port out, whose antenna still couples.
+        theta_rad, phi_rad : array_like
+            Directions, as for :meth:`embedded_patterns`.
+        termination : optional
+            What the ports see [ohm].
+
+        Returns
+        -------
+        complex128 (D, 2) or (B, D, 2)
+            Effective length along theta_hat and phi_hat [m].
+        """
+        frame = direction_frame(theta_rad, phi_rad)
+        beams = current_beams(self.discretisation, self.beam_currents(weights, termination), frame)
+        return beams if np.ndim(weights) == 2 else beams[0]
+
+    def isolated_beam(
+        self, weights: ArrayLike, theta_rad: ArrayLike, phi_rad: ArrayLike, *, termination: Termination = 100.0
+    ) -> ComplexArray:
+        """Return the isolated beam: the weighted sum of isolated element patterns; see :meth:`beam`."""
+        frame = direction_frame(theta_rad, phi_rad)
+        table = self._checked_weights(weights)
+        amounts = self._isolated_amounts(termination)
+        currents = np.empty((self.discretisation.n_unknowns, len(table)), dtype=complex)
+        for a, amount in enumerate(amounts):
+            currents[self.discretisation.unknowns_of(a)] = amount @ table[:, self.discretisation.ports_of(a)].T
+        beams = current_beams(self.discretisation, currents, frame)
+        return beams if np.ndim(weights) == 2 else beams[0]
+
+    def pointing_weights(
+        self,
+        theta_rad: float,
+        phi_rad: float,
+        *,
+        port: str | None = None,
+        antennas: Sequence[str] | None = None,
+        delay_step_s: float | None = None,
+    ) -> ComplexArray:
+        """Return weights exp(-jk r0_hat . r_i) of the ports that take part, zero for the others.
+
+        Parameters
+        ----------
+        theta_rad, phi_rad : float
+            Where to point: zenith angle and azimuth from east towards north [rad].
+        port : str, optional
+            Name of the port of each antenna that takes part; all ports by default.
+        antennas : sequence of str, optional
+            Names of the antennas that take part; all by default.
+        delay_step_s : float, optional
+            Rounds delays to multiples of this [s].
+
+        Returns
+        -------
+        complex128 (P,)
+        """
+        names = self.port_names
+        if port is not None and not any(n.port == port for n in names):
+            msg = f"no antenna has a port {port!r}; there are {', '.join(sorted({n.port for n in names}))}"
+            raise ModelRangeError(msg)
+        unknown = set(antennas or ()) - {n.antenna for n in names}
+        if unknown:
+            msg = f"no antenna is called {sorted(unknown)[0]!r}"
+            raise ModelRangeError(msg)
+        chosen = None if antennas is None else set(antennas)
+        amplitude = np.array(
+            [float((port is None or n.port == port) and (chosen is None or n.antenna in chosen)) for n in names]
+        )
+        return pointing_weights(
+            self.station.port_positions,
+            theta_rad,
+            phi_rad,
+            self.discretisation.wavenumber,
+            amplitudes=amplitude,
+            delay_step_s=delay_step_s,
+        )
+
+    def _checked_weights(self, weights: ArrayLike) -> ComplexArray:
+        table = np.atleast_2d(np.asarray(weights, dtype=complex))
+        if table.ndim != 2 or table.shape[1] != self.discretisation.n_ports:
+            msg = (
+                f"weights: expected shape ({self.discretisation.n_ports},) or (B, {self.discretisation.n_ports}), "
+                f"got {np.shape(weights)}"
+            )
+            raise ModelRangeError(msg)
+        if not np.all(np.isfinite(table)):
+            msg = "weights: expected finite numbers"
+            raise ModelRangeError(msg)
+        return table
+
+
+def antenna_power_gain(effective_length: ComplexArray, admittance: complex | FloatArray, wavelength: float) -> FloatArray:
+    """Return the realised gain 4 pi eta |h|^2 Re(Y_T)/lambda^2 of each component of an effective length [m]."""
+    from elbowroom.base.constants import IMPEDANCE_OF_VACUUM
+
+    scale = 4.0 * np.pi * IMPEDANCE_OF_VACUUM * np.real(admittance) / wavelength**2
+    return scale * np.abs(effective_length) ** 2
