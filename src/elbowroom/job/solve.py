@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -17,7 +18,7 @@ from elbowroom.store.records import Record, Schema, Store
 from elbowroom.system.assembly import Progress
 from elbowroom.system.discretisation import Discretisation, FarSettings, discretise
 from elbowroom.system.self_block import NearSettings
-from elbowroom.system.solving import REFERENCE_OHM, PortCurrents, SolveStatistics, solve_direct, solve_isolated
+from elbowroom.system.solving import REFERENCE_OHM, PortCurrents, SolveStatistics, mesh_error, solve_direct, solve_isolated
 
 MODEL_VERSION = 1
 """Raised whenever a change of the physics or numerics changes solved currents beyond rounding."""
@@ -138,6 +139,7 @@ def _to_record(solution: Solution, attributes: dict[str, Any]) -> Record:
             "strategy": s.strategy,
             "precision": s.precision,
             "relative_residual": s.relative_residual,
+            "mesh_error": s.mesh_error,
             "seconds": dict(s.seconds),
             **attributes,
         },
@@ -162,6 +164,7 @@ def _from_record(record: Record, d: Discretisation) -> Solution:
         n_unknowns=d.n_unknowns,
         n_ports=d.n_ports,
         relative_residual=float(attributes["relative_residual"]),
+        mesh_error=float(attributes["mesh_error"]),
         seconds={k: float(v) for k, v in attributes["seconds"].items()},
     )
     return Solution(
@@ -228,6 +231,7 @@ def solve(
     d = discretise(station, frequency_hz, mesh=settings, near=near, far=far)
     per_kind = solve_isolated(d)
     coupled, statistics = solve_direct(d, precision=precision, progress=progress)
+    statistics = replace(statistics, mesh_error=mesh_error(d, per_kind))
     solution = Solution(d, coupled, tuple(per_kind[k] for k in d.kind_of), REFERENCE_OHM, statistics)
     if store is not None:
         store.put(key, _to_record(solution, attributes or {}))

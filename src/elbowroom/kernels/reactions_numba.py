@@ -16,10 +16,12 @@ import math
 import numpy as np
 from numba import njit
 
-_OPTIONS = {"nogil": True, "error_model": "numpy", "cache": True}
+from elbowroom.kernels.accelerate import JIT_OPTIONS
 
 
-@njit(**_OPTIONS)
+
+
+@njit(**JIT_OPTIONS)
 def _ring_means(far, near):
     """Return the means of 1/R and R over a ring whose largest and smallest distances are given.
 
@@ -47,7 +49,7 @@ def _ring_means(far, near):
     return 1.0 / mean, (far * far - total) / mean
 
 
-@njit(**_OPTIONS)
+@njit(**JIT_OPTIONS)
 def ring_kernel(offset2, difference2, product4, wavenumber, n_ring):
     """Return the mean of exp(-jkR)/R over a ring, R^2 = offset2 + difference2 + product4 sin^2(phi/2).
 
@@ -74,7 +76,7 @@ def ring_kernel(offset2, difference2, product4, wavenumber, n_ring):
     return complex(real, -wavenumber * odd / n_ring)
 
 
-@njit(**_OPTIONS)
+@njit(**JIT_OPTIONS)
 def _legendre(u, values):
     """Fill ``values`` with P_0(u) .. P_{len-1}(u)."""
     values[0] = 1.0
@@ -84,7 +86,7 @@ def _legendre(u, values):
         values[n] = ((2 * n - 1) * u * values[n - 1] - (n - 1) * values[n - 2]) / n
 
 
-@njit(**_OPTIONS)
+@njit(**JIT_OPTIONS)
 def _graded_breaks(lower, upper, smallest, breaks):
     """Fill ``breaks`` with panel ends on [lower, upper] that grow from 0 by a factor of four; return their count."""
     count = 1
@@ -124,7 +126,7 @@ def _graded_breaks(lower, upper, smallest, breaks):
     return count + 1
 
 
-@njit(**_OPTIONS)
+@njit(**JIT_OPTIONS)
 def coaxial_moments(start, end, start2, end2, radius, radius2, wavenumber, order, order2, nodes, weights, n_ring, out):
     """Fill ``out`` (order+1, order2+1) with the moments of two elements on one axis.
 
@@ -193,7 +195,7 @@ def coaxial_moments(start, end, start2, end2, radius, radius2, wavenumber, order
                         out[m, n] += kernel * inner[m, n]
 
 
-@njit(**_OPTIONS)
+@njit(**JIT_OPTIONS)
 def _segment_distance(p, dp, q, dq):
     """Return the distance between the segments p + s dp and q + t dq, 0 <= s, t <= 1, and the s and t of it."""
     a = dp[0] * dp[0] + dp[1] * dp[1] + dp[2] * dp[2]
@@ -221,7 +223,7 @@ def _segment_distance(p, dp, q, dq):
     return best, best_s, best_t
 
 
-@njit(**_OPTIONS)
+@njit(**JIT_OPTIONS)
 def _gauss_count(ratio, order, tolerance):
     """Return how many Gauss points integrate degree ``order`` times a kernel whose pole is ``ratio`` half lengths away.
 
@@ -233,14 +235,14 @@ def _gauss_count(ratio, order, tolerance):
     return min(max(n, order // 2 + 2), 24)
 
 
-@njit(**_OPTIONS)
+@njit(**JIT_OPTIONS)
 def _ring_count(ratio, tolerance):
     """Return how many points of a ring represent its mean at a distance of ``ratio`` radii."""
     n = int(math.ceil(-math.log(tolerance) / math.log(ratio)))
     return min(max(n, 3), 24)
 
 
-@njit(**_OPTIONS)
+@njit(**JIT_OPTIONS)
 def _separated_panels(
     p, dp, u0, u1, q, dq, v0, v1, e1, e2, f1, f2, radius, radius2, k, n, n2, n_ring, n_ring2, nodes, weights, out
 ):
@@ -293,7 +295,7 @@ def _separated_panels(
                 out[m, m2] += wu * values[m] * row[m2]
 
 
-@njit(**_OPTIONS)
+@njit(**JIT_OPTIONS)
 def _touching_panels(
     p, dp, u0, u1, q, dq, v0, v1, e1, e2, radius, radius2, k, n_outer, n_ring, nodes, weights, breaks, out
 ):
@@ -342,7 +344,7 @@ def _touching_panels(
                 out[m, m2] += (wu / n_ring) * values[m] * row[m2]
 
 
-@njit(**_OPTIONS)
+@njit(**JIT_OPTIONS)
 def angled_moments(start, end, start2, end2, radius, radius2, wavenumber, tolerance, touching_points, nodes, weights, out):
     """Fill ``out`` with the moments of two elements that do not share an axis.
 
@@ -426,7 +428,7 @@ def angled_moments(start, end, start2, end2, radius, radius2, wavenumber, tolera
             )  # fmt: skip
 
 
-@njit(**_OPTIONS)
+@njit(**JIT_OPTIONS)
 def angled_moments_all(
     start, end, start2, end2, radius, radius2, wavenumber, tolerance, touching_points, nodes, weights, out
 ):

@@ -122,8 +122,13 @@ class Factors:
         x = np.array(right, dtype=self.dtype)
         for k in range(count):
             block = x[o[k] : o[k + 1]]
+            # Port sources are local: until an antenna is reached, its ports' columns are zero and need no work.
+            filled = np.flatnonzero(block.any(axis=0))
+            if filled.size == 0:
+                continue
+            last = int(filled[-1]) + 1
             for i in range(k + 1, count):
-                x[o[i] : o[i + 1]] -= self.tiles[i, k] @ block
+                x[o[i] : o[i + 1], :last] -= self.tiles[i, k] @ block[:, :last]
         for k in range(count):
             x[o[k] : o[k + 1]] = self.tiles[k, k] @ x[o[k] : o[k + 1]]
         for k in reversed(range(count)):
