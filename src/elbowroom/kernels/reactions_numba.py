@@ -224,14 +224,21 @@ def _segment_distance(p, dp, q, dq):
 
 
 @njit(**JIT_OPTIONS)
-def _gauss_count(ratio, order, tolerance):
+def _gauss_count(ratio, phase, order, tolerance):
     """Return how many Gauss points integrate degree ``order`` times a kernel whose pole is ``ratio`` half lengths away.
 
     The error of an n-point rule falls as rho^(-2n) with rho = ratio + sqrt(ratio^2 + 1) (Bernstein ellipse through
-    a pole beside the middle of the interval); the polynomial costs ``order`` of it.
+    a pole beside the middle of the interval), and for a phase that turns by ``phase`` from the middle to the end as
+    (phase/2)^(2n)/(2n)!; the polynomial costs ``order`` of either.
     """
     rho = ratio + math.sqrt(ratio * ratio + 1.0)
-    n = int(math.ceil((-math.log(tolerance) / math.log(rho) + order) / 2.0))
+    degree = -math.log(tolerance) / math.log(rho)
+    term = 0.5 * phase
+    m = 1
+    while term > tolerance and m < 40:
+        m += 1
+        term *= 0.5 * phase / m
+    n = int(math.ceil((max(degree, float(m)) + order) / 2.0))
     return min(max(n, order // 2 + 2), 24)
 
 
@@ -401,8 +408,8 @@ def angled_moments(start, end, start2, end2, radius, radius2, wavenumber, tolera
         clear = distance - radius - radius2
         longest = max(la, lb)
         if clear >= 0.8 * longest and distance >= 8.0 * widest:
-            n = _gauss_count(2.0 * clear / la, order, tolerance)
-            n2 = _gauss_count(2.0 * clear / lb, order2, tolerance)
+            n = _gauss_count(2.0 * clear / la, 0.5 * wavenumber * la, order, tolerance)
+            n2 = _gauss_count(2.0 * clear / lb, 0.5 * wavenumber * lb, order2, tolerance)
             r = _ring_count(distance / radius, tolerance)
             r2 = _ring_count(distance / radius2, tolerance)
             _separated_panels(
