@@ -1,0 +1,244 @@
+"""Antenna files: TOML in, an :class:`Antenna` out.
+
+Either one of the parametric shapes::
+
+    name = "drooping dipoles"         # optional; the file's name by default
+    shape = "crossed-dipoles"         # keys below: the arguments of elbowroom.geometry.shapes.crossed_dipoles
+    arm_length_m = 0.66
+    height_m = 0.50
+    wire_radius_m = 0.006
+
+or wires, ports and loads one by one:
+
+================================= ==========================================================================
+key                               meaning
+================================= ==========================================================================
+``name``                          name of the design; the file's name by default
+``[[wire]] name``                 optional, so that ports and loads can say ``wire = "arm"``
+``[[wire]] start_m, end_m``       ends of the axis in the antenna's own frame [east, north, up] [m]
+``[[wire]] radius_m``             wire radius [m]
+``[[wire]] conductivity_s_per_m`` conductivity [S/m]; a perfect conductor without it
+``[[wire]] relative_permeability`` for the loss of steel wires; 1 by default
+``[[port]] name``                 name, unique in the antenna
+``[[port]] wire``                 the wire with the gap: its name, or its number counted from 0
+``[[port]] position``             middle of the gap as a fraction of the wire's length; 0.5 by default
+``[[port]] gap_m``                width of the gap [m]; the wire's diameter by default
+``[[port]] nominal_azimuth_deg``  co-polarisation at zenith, from east towards north [deg]; along the wire by
+                                  default
+``[[load]] wire, position``       as for a port; ``position`` is required
+``[[load]] resistance_ohm``       series resistance [ohm]; 0 by default
+``[[load]] inductance_h``         series inductance [H]; 0 by default
+``[[load]] capacitance_f``        series capacitance [F]; none by default
+``[[load]] gap_m``                width over which the load is spread [m]; the wire's diameter by default
+================================= ==========================================================================
+
+Wires whose ends meet, or that end on another wire, are joined there.
+"""
+
+from __future__ import annotations
+
+import inspect
+from collections import Counter
+from pathlib import Path
+from typing import Annotated, Any, get_type_hints
+
+from pydantic import Field, create_model
+
+from elbowroom.base.errors import GeometryError
+from elbowroom.geometry.antennas import Antenna, Load, Port
+from elbowroom.geometry.shapes import SHAPES
+from elbowroom.geometry.wires import Wire
+from elbowroom.job.tomlfile import Table, fail, key_path, near_miss, read_toml, shown, validate_table
+
+_Positive = Annotated[float, Field(gt=0.0)]
+_NotNegative = Annotated[float, Field(ge=0.0)]
+_Fraction = Annotated[float, Field(ge=0.0, le=1.0)]
+_Point = Annotated[list[float], Field(min_length=3, max_length=3)]
+_Name = Annotated[str, Field(min_length=1)]
+
+
+class _Wire(Table):
+    name: _Name | None = None
+    start_m: _Point
+    end_m: _Point
+    radius_m: _Positive
+    conductivity_s_per_m: _Positive | None = None
+    relative_permeability: _Positive = 1.0
+
+
+class _Port(Table):
+    name: _Name
+    wire: Any
+    position: _Fraction = 0.5
+    gap_m: _Positive | None = None
+    nominal_azimuth_deg: float | None = None
+
+
+class _Load(Table):
+    wire: Any
+    position: _Fraction
+    resistance_ohm: _NotNegative = 0.0
+    inductance_h: _NotNegative = 0.0
+    capacitance_f: _Positive | None = None
+    gap_m: _Positive | None = None
+
+
+_FREE_KEYS = ("name", "wire", "port", "load")
+
+
+def read_antenna(path: str | Path) -> Antenna:
+    """Read an antenna from a TOML file.
+
+    Parameters
+    ----------
+    path : str or Path
+        The file, UTF-8; see the module's table for its keys.
+
+    Returns
+    -------
+    Antenna
+
+    Raises
+    ------
+    JobFileError
+        With every problem found, each with its key; entries of ``[[wire]]``, ``[[port]]`` and ``[[load]]``
+        are counted from 0.
+    """
+    file = Path(path)
+    _, table = read_toml(file, "antenna file")
+    problems: list[str] = []
+    name = table.get("name", file.stem)
+    if not isinstance(name, str) or not name.strip():
+        problems.append(f"name = {shown(name)}: expected text in quotes")
+        name = file.stem
+    antenna = _from_shape(table, name, problems) if "shape" in table else _from_wires(table, name, problems)
+    if antenna is None or problems:
+        fail(file, "antenna file", problems)
+    return antenna
+
+
+def _from_shape(table: dict[str, Any], name: str, problems: list[str]) -> Antenna | None:
+    shape = table["shape"]
+    rest = {k: v for k, v in table.items() if k not in ("shape", "name")}
+    for key in ("wire", "port", "load"):
+        if rest.pop(key, None) is not None:
+            problems.append(f"{key}: a shape brings its own; leave out either shape or the [[{key}]] tables")
+    if not isinstance(shape, str) or shape not in SHAPES:
+        hint = near_miss(shape, SHAPES, "known shapes") if isinstance(shape, str) else "expected text in quotes"
+        problems.append(f"shape = {shown(shape)}: unknown shape; {hint}")
+        return None
+    function = SHAPES[shape]
+    hints = get_type_hints(function)
+    fields: dict[str, Any] = {
+        key: (hints[key], ... if p.default is inspect.Parameter.empty else p.default)
+        for key, p in inspect.signature(function).parameters.items()
+        if key != "name"
+    }
+    values = validate_table(create_model("_Shape", __base__=Table, **fields), rest, problems)
+    if values is None:
+        return None
+    try:
+        return function(name, **{key: getattr(values, key) for key in fields})
+    except GeometryError as cause:
+        problems.append(f"shape = {shown(shape)}: {cause}")
+        return None
+
+
+def _from_wires(table: dict[str, Any], name: str, problems: list[str]) -> Antenna | None:
+    known = (*_FREE_KEYS, "shape")
+    shape_keys = {k for f in SHAPES.values() for k in inspect.signature(f).parameters}
+    for key in table:
+        if key in _FREE_KEYS:
+            continue
+        hint = "needs shape = ..., which is missing" if key in shape_keys else near_miss(key, known, "known keys")
+        problems.append(f"{key_path(key)}: unknown key; {hint}")
+    given: dict[str, list] = {}
+    for key in ("wire", "port", "load"):
+        entries = table.get(key, [])
+        if not isinstance(entries, list):
+            problems.append(f"{key}: expected [[{key}]] tables in double brackets, found {shown(entries)}")
+            entries = []
+        elif not entries and key != "load":
+            problems.append(f"[[{key}]] is missing: at least one expected" + ("" if table else ", or a shape"))
+        given[key] = entries
+
+    wires: list[Wire | None] = []
+    wire_names: list[str | None] = []
+    for i, entry in enumerate(given["wire"]):
+        wire_names.append(entry.get("name") if isinstance(entry, dict) else None)
+        wires.append(_wire(entry, i, problems))
+    for wire_name, count in Counter(n for n in wire_names if isinstance(n, str)).items():
+        if count > 1:
+            problems.append(f"wire: the name {wire_name!r} is used {count} times")
+
+    ports, loads = [], []
+    for i, entry in enumerate(given["port"]):
+        p = validate_table(_Port, entry, problems, ("port", i))
+        index = None if p is None else _wire_index(p.wire, wire_names, f"port[{i}].wire", problems)
+        if p is not None and index is not None:
+            ports.append((i, Port(p.name, index, p.position, p.gap_m, p.nominal_azimuth_deg)))
+    for i, entry in enumerate(given["load"]):
+        q = validate_table(_Load, entry, problems, ("load", i))
+        index = None if q is None else _wire_index(q.wire, wire_names, f"load[{i}].wire", problems)
+        if q is not None and index is not None:
+            load = Load(index, q.position, q.resistance_ohm, q.inductance_h, q.capacitance_f, q.gap_m)
+            loads.append((i, load))
+    for port_name, count in Counter(p.name for _, p in ports).items():
+        if count > 1:
+            problems.append(f"port: the name {port_name!r} is used {count} times")
+    # Each gap is tried alone on its wire first, so that all that do not fit are told, not only the first.
+    for key, items in (("port", ports), ("load", loads)):
+        for i, item in items:
+            wire = wires[item.wire]
+            if wire is not None:
+                _try_gap(name, wire, key, i, item, problems)
+    if problems:
+        return None
+    try:
+        return Antenna(name, [w for w in wires if w is not None], [p for _, p in ports], [q for _, q in loads])
+    except GeometryError as cause:
+        problems.append(str(cause))
+        return None
+
+
+def _wire(entry: object, i: int, problems: list[str]) -> Wire | None:
+    w = validate_table(_Wire, entry, problems, ("wire", i))
+    if w is None:
+        return None
+    try:
+        return Wire(
+            (w.start_m[0], w.start_m[1], w.start_m[2]),
+            (w.end_m[0], w.end_m[1], w.end_m[2]),
+            w.radius_m,
+            w.conductivity_s_per_m,
+            w.relative_permeability,
+        )
+    except GeometryError as cause:
+        problems.append(f"wire[{i}]: {cause}")
+        return None
+
+
+def _wire_index(wire: object, names: list[str | None], path: str, problems: list[str]) -> int | None:
+    if isinstance(wire, int) and not isinstance(wire, bool):
+        if 0 <= wire < len(names):
+            return wire
+        problems.append(f"{path} = {wire}: no such wire; expected a number from 0 to {len(names) - 1}, or a wire's name")
+    elif isinstance(wire, str):
+        if wire in names:
+            return names.index(wire)
+        known = [n for n in names if isinstance(n, str)]
+        problems.append(f"{path} = {shown(wire)}: no wire of that name; {near_miss(wire, known, 'named wires')}")
+    else:
+        problems.append(f"{path} = {shown(wire)}: expected a wire's number, counted from 0, or its name in quotes")
+    return None
+
+
+def _try_gap(name: str, wire: Wire, key: str, i: int, item: Port | Load, problems: list[str]) -> None:
+    try:
+        if isinstance(item, Port):
+            Antenna(name, [wire], [Port(item.name, 0, item.position, item.gap)])
+        else:
+            Antenna(name, [wire], [Port("-", 0)], [Load(0, item.position, gap=item.gap)])
+    except GeometryError as cause:
+        reason = str(cause).split(": ", 1)[-1]
+        problems.append(f"{key}[{i}]: {reason}")
