@@ -34,7 +34,7 @@ class FarSettings:
         currents spread over the circumference; more distant ones are filaments sampled at Gauss points.
     """
 
-    tolerance: float = 1e-7
+    tolerance: float = 1e-6
     close_elements: float = 0.15
 
     def levels(self) -> tuple[float, ...]:
