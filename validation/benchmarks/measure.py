@@ -54,8 +54,9 @@ def _plain_loop(x, y, z, x2, y2, z2, wavenumber, out):
 def kernel() -> None:
     """Rate of the point kernel against a loop that calls sin, cos and sqrt for every sample; target 20x at 1e-9."""
     rng = np.random.default_rng(0)
-    points, points2 = rng.random((3, 96)), rng.random((3, 2048)) + 2.0
-    out = np.empty((96, 2048), dtype=complex)
+    # The shape of an assembly's fills: one antenna's points against those of a tile of antennas.
+    points, points2 = rng.random((3, 110)), rng.random((3, 1760)) + 2.0
+    out = np.empty((110, 1760), dtype=complex)
     real, imag = np.empty(out.shape), np.empty(out.shape)
 
     def plain() -> None:

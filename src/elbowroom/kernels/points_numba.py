@@ -43,46 +43,120 @@ def _half_turn(turns):
 
 
 @njit(**FAST_JIT_OPTIONS)
+def _rest_of_turn(turns):
+    """Return what is left of ``turns`` after whole turns are taken off, in [-1/2, 1/2]."""
+    return turns - np.rint(turns)
+
+
+@njit(**FAST_JIT_OPTIONS)
+def _wave(inverse, rest):
+    """Return real and imaginary part of exp(-jkR)/R from 1/R and the rest of the turn."""
+    v = rest * rest
+    s = rest * (S0 + v * (S1 + v * (S2 + v * (S3 + v * (S4 + v * S5)))))
+    c = C0 + v * (C1 + v * (C2 + v * (C3 + v * (C4 + v * C5))))
+    twice = 2.0 * inverse * s
+    return inverse - twice * s, -twice * c
+
+
+# The loops below are pipelined by hand: while the distances of one row are worked out (square root and division, long to
+# wait for), the polynomials of the row before are evaluated from what was left in the output arrays.  One sample after
+# another, the processor waits for the whole chain; so arranged, it is as fast as its divider (measured: 1.7 times faster).
+
+
+@njit(**FAST_JIT_OPTIONS)
+def _free_first(x, y, z, x2, y2, z2, turns_per_metre, inverse, rest):
+    for j in range(x2.size):
+        dx, dy, dz = x - x2[j], y - y2[j], z - z2[j]
+        r = math.sqrt(dx * dx + dy * dy + dz * dz)
+        inverse[j] = 1.0 / r
+        rest[j] = _rest_of_turn(r * turns_per_metre)
+
+
+@njit(**FAST_JIT_OPTIONS)
+def _free_both(x, y, z, x2, y2, z2, turns_per_metre, real, imag, next_inverse, next_rest):
+    for j in range(x2.size):
+        dx, dy, dz = x - x2[j], y - y2[j], z - z2[j]
+        r = math.sqrt(dx * dx + dy * dy + dz * dz)
+        re, im = _wave(real[j], imag[j])
+        next_inverse[j] = 1.0 / r
+        next_rest[j] = _rest_of_turn(r * turns_per_metre)
+        real[j] = re
+        imag[j] = im
+
+
+@njit(**FAST_JIT_OPTIONS)
+def _free_last(real, imag):
+    for j in range(real.size):
+        real[j], imag[j] = _wave(real[j], imag[j])
+
+
+@njit(**FAST_JIT_OPTIONS)
 def fill_free(x, y, z, x2, y2, z2, wavenumber, real, imag):
-    """Fill (Q, Q2) with exp(-jkR)/R between all points of two sets."""
-    turns_per_metre = wavenumber / (2.0 * math.pi)
-    for i in range(x.size):
-        xi, yi, zi = x[i], y[i], z[i]
-        for j in range(x2.size):
-            dx, dy, dz = xi - x2[j], yi - y2[j], zi - z2[j]
-            r2 = dx * dx + dy * dy + dz * dz
-            g = 1.0 / math.sqrt(r2)
-            s, c = _half_turn(r2 * g * turns_per_metre)
-            gs = 2.0 * g * s
-            real[i, j] = g - gs * s
-            imag[i, j] = -gs * c
+    """Fill (Q, Q2) with exp(-jkR)/R between all points of two sets; long second sets are fastest."""
+    t = wavenumber / (2.0 * math.pi)
+    n = x.size
+    _free_first(x[0], y[0], z[0], x2, y2, z2, t, real[0], imag[0])
+    for i in range(n - 1):
+        _free_both(x[i + 1], y[i + 1], z[i + 1], x2, y2, z2, t, real[i], imag[i], real[i + 1], imag[i + 1])
+    _free_last(real[n - 1], imag[n - 1])
+
+
+@njit(**FAST_JIT_OPTIONS)
+def _image_first(x, y, z, x2, y2, z2, turns_per_metre, inverse, rest, inverse2, rest2):
+    for j in range(x2.size):
+        dx, dy, dz, tz = x - x2[j], y - y2[j], z - z2[j], z + z2[j]
+        flat = dx * dx + dy * dy
+        r, r2 = math.sqrt(flat + dz * dz), math.sqrt(flat + tz * tz)
+        inverse[j] = 1.0 / r
+        rest[j] = _rest_of_turn(r * turns_per_metre)
+        inverse2[j] = 1.0 / r2
+        rest2[j] = _rest_of_turn(r2 * turns_per_metre)
+
+
+@njit(**FAST_JIT_OPTIONS)
+def _image_both(
+    x, y, z, x2, y2, z2, turns_per_metre, a_real, a_imag, b_real, b_imag, next_a, next_a_rest, next_b, next_b_rest
+):
+    for j in range(x2.size):
+        dx, dy, dz, tz = x - x2[j], y - y2[j], z - z2[j], z + z2[j]
+        flat = dx * dx + dy * dy
+        r, r2 = math.sqrt(flat + dz * dz), math.sqrt(flat + tz * tz)
+        re, im = _wave(a_real[j], a_imag[j])
+        re2, im2 = _wave(b_real[j], b_imag[j])
+        next_a[j] = 1.0 / r
+        next_a_rest[j] = _rest_of_turn(r * turns_per_metre)
+        next_b[j] = 1.0 / r2
+        next_b_rest[j] = _rest_of_turn(r2 * turns_per_metre)
+        a_real[j] = re + re2
+        a_imag[j] = im + im2
+        b_real[j] = re - re2
+        b_imag[j] = im - im2
+
+
+@njit(**FAST_JIT_OPTIONS)
+def _image_last(a_real, a_imag, b_real, b_imag):
+    for j in range(a_real.size):
+        re, im = _wave(a_real[j], a_imag[j])
+        re2, im2 = _wave(b_real[j], b_imag[j])
+        a_real[j] = re + re2
+        a_imag[j] = im + im2
+        b_real[j] = re - re2
+        b_imag[j] = im - im2
 
 
 @njit(**FAST_JIT_OPTIONS)
 def fill_image(x, y, z, x2, y2, z2, wavenumber, sum_real, sum_imag, difference_real, difference_imag):
     """Fill (Q, Q2) with the sum and the difference of the direct kernel and that of the points mirrored in z = 0."""
-    turns_per_metre = wavenumber / (2.0 * math.pi)
-    for i in range(x.size):
-        xi, yi, zi = x[i], y[i], z[i]
-        for j in range(x2.size):
-            dx, dy, dz, tz = xi - x2[j], yi - y2[j], zi - z2[j], zi + z2[j]
-            flat = dx * dx + dy * dy
-            r2 = flat + dz * dz
-            g = 1.0 / math.sqrt(r2)
-            s, c = _half_turn(r2 * g * turns_per_metre)
-            gs = 2.0 * g * s
-            re = g - gs * s
-            im = -gs * c
-            r2 = flat + tz * tz
-            g = 1.0 / math.sqrt(r2)
-            s, c = _half_turn(r2 * g * turns_per_metre)
-            gs = 2.0 * g * s
-            re2 = g - gs * s
-            im2 = -gs * c
-            sum_real[i, j] = re + re2
-            sum_imag[i, j] = im + im2
-            difference_real[i, j] = re - re2
-            difference_imag[i, j] = im - im2
+    t = wavenumber / (2.0 * math.pi)
+    n = x.size
+    _image_first(x[0], y[0], z[0], x2, y2, z2, t, sum_real[0], sum_imag[0], difference_real[0], difference_imag[0])
+    for i in range(n - 1):
+        _image_both(
+            x[i + 1], y[i + 1], z[i + 1], x2, y2, z2, t,
+            sum_real[i], sum_imag[i], difference_real[i], difference_imag[i],
+            sum_real[i + 1], sum_imag[i + 1], difference_real[i + 1], difference_imag[i + 1],
+        )  # fmt: skip
+    _image_last(sum_real[n - 1], sum_imag[n - 1], difference_real[n - 1], difference_imag[n - 1])
 
 
 @njit(**FAST_JIT_OPTIONS)

@@ -150,12 +150,13 @@ class PairFiller:
         counts = [w.points.shape[1] for w in theirs]
         points = np.concatenate([w.points for w in theirs], axis=1)
         points[:2] += np.repeat(shift[:, :2], counts, axis=0).T
-        kernels = self.ground.fill(points, mine.points, d.wavenumber, work)
-        horizontal = kernels.horizontal @ mine.square_horizontal
-        vertical = kernels.vertical @ mine.square_vertical
+        # Kernels are filled with the long set of points innermost, where the compiled loop is fastest.
+        kernels = self.ground.fill(mine.points, points, d.wavenumber, work)
+        horizontal = np.swapaxes(kernels.horizontal, 1, 2) @ mine.square_horizontal
+        vertical = np.swapaxes(kernels.vertical, 1, 2) @ mine.square_vertical
         if not self.charge_with_horizontal:
             n = mine.square_vertical.shape[1]
-            horizontal[..., 2 * n :] = kernels.charge @ mine.square_horizontal[:, 2 * n :]
+            horizontal[..., 2 * n :] = np.swapaxes(kernels.charge, 1, 2) @ mine.square_horizontal[:, 2 * n :]
         blocks, first = [], 0
         n = mine.square_vertical.shape[1]
         for w, count in zip(theirs, counts, strict=True):
