@@ -57,7 +57,7 @@ def kernel() -> None:
     # The shape of an assembly's fills: one antenna's points against those of a tile of antennas.
     points, points2 = rng.random((3, 110)), rng.random((3, 1760)) + 2.0
     out = np.empty((110, 1760), dtype=complex)
-    real, imag = np.empty(out.shape), np.empty(out.shape)
+    real, imag = np.empty((2, *out.shape))
 
     def plain() -> None:
         for _ in range(5):

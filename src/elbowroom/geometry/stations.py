@@ -82,6 +82,40 @@ class Placed:
         return points @ self.orientation.T + np.asarray(self.position)
 
 
+def turned(placed: Placed, turn_deg: float, shift_east_m: float = 0.0, shift_north_m: float = 0.0) -> Placed:
+    """Return an antenna carried along when its station is turned about the vertical, then shifted.
+
+    Parameters
+    ----------
+    placed : Placed
+        The antenna as it stands.
+    turn_deg : float
+        Turn of the station about its reference point, from east towards north [deg].
+    shift_east_m, shift_north_m : float, optional
+        Shift after the turn [m].
+
+    Returns
+    -------
+    Placed
+        The orientation is exactly that of the turned antenna; one without tilts gets none.
+    """
+    if turn_deg == 0.0 and shift_east_m == 0.0 and shift_north_m == 0.0:
+        return placed
+    turn = orientation_matrix(turn_deg)
+    east, north, up = (float(v) for v in turn @ np.asarray(placed.position))
+    rotation, lean_east, lean_north = placed.rotation_deg + turn_deg, placed.tilt_east_deg, placed.tilt_north_deg
+    if turn_deg != 0.0 and (lean_east != 0.0 or lean_north != 0.0):
+        # The axis, turned, gives the new tilts; what remains of the orientation is a turn about it.
+        whole = turn @ placed.orientation
+        lean_east = float(np.degrees(np.arctan2(whole[0, 2], np.hypot(whole[1, 2], whole[2, 2]))))
+        lean_north = float(np.degrees(np.arctan2(whole[1, 2], whole[2, 2])))
+        rest = orientation_matrix(0.0, lean_east, lean_north).T @ whole
+        rotation = float(np.degrees(np.arctan2(rest[1, 0], rest[0, 0])))
+    return Placed(
+        placed.antenna, (east + shift_east_m, north + shift_north_m, up), rotation, lean_east, lean_north, placed.name
+    )
+
+
 @dataclass(frozen=True)
 class PortName:
     """Which port a row of a port matrix belongs to."""
