@@ -1,0 +1,300 @@
+"""What a job will take: memory, disk and time, told before any work, and refused where the machine has less.
+
+Memory is counted from what the direct solver keeps at its peak.  Time is arithmetic over a rate: the counts of operations
+are those of the method, the overheads beside them were measured once, and the rate is measured on the spot.
+"""
+
+from __future__ import annotations
+
+import shutil
+import time
+from collections.abc import Sequence
+from dataclasses import dataclass
+from functools import lru_cache
+from pathlib import Path
+
+import numpy as np
+
+from elbowroom.base.errors import ModelRangeError, ResourceError
+from elbowroom.geometry.mesh import MeshSettings
+from elbowroom.geometry.stations import Station
+
+PROCESS_BYTES = 400_000_000
+"""The interpreter with its libraries and compiled kernels [byte]; measured."""
+
+TILE_ORDER = 768
+"""Order of the tiles of the matrix, which decides how much is kept beside the half matrix."""
+
+STORE_OVERHEAD_BYTES = 200_000
+"""Header, attributes and chunk tables of one file of the store [byte]; measured, rounded up."""
+
+ASSEMBLY_OPERATIONS = 9200.0
+"""Operations per entry of the matrix pair, n^2, at the rate of single-precision products: 15 s for n = 16384 at
+165 GFLOP/s, measured."""
+
+FACTOR_EFFICIENCY = 0.74
+"""Rate of the factorisation over that of large products: 48 s for n = 16384 at 165 GFLOP/s, measured."""
+
+EXCITATION_OPERATIONS = {"mixed": 83.0, "double": 48.0, "single": 8.0}
+"""Operations per n^2 P of solving for the ports, in single-precision operations.
+
+One solve with the factors takes 8 and one product with the matrix 8, twice that in double precision.  Single: one solve.
+Double: one solve and one refinement.  Mixed: two to three refinements; 69 s for n = 16384 and P = 512 at 165 GFLOP/s,
+measured."""
+
+_CALIBRATION_ORDER = 1024
+
+
+@dataclass(frozen=True)
+class Prediction:
+    """What a solve, or several one after another, will take.
+
+    Attributes
+    ----------
+    memory_bytes : int
+        Peak memory [byte].
+    disk_bytes : int
+        Added to the store [byte].
+    seconds : float
+        Wall time [s], with an error of tens of per cent.
+    n_unknowns : int
+        Unknowns of the largest solve.
+    """
+
+    memory_bytes: int
+    disk_bytes: int
+    seconds: float
+    n_unknowns: int = 0
+
+
+def predict(
+    n_unknowns: int,
+    n_ports: int,
+    n_antennas: int,
+    precision: str = "mixed",
+    *,
+    operations_per_second: float | None = None,
+) -> Prediction:
+    """Return what one solve by the direct solver takes.
+
+    Parameters
+    ----------
+    n_unknowns, n_ports, n_antennas : int
+        Size of the station.
+    precision : str, optional
+        ``"mixed"``, ``"double"`` or ``"single"``.
+    operations_per_second : float, optional
+        Rate of single-precision complex matrix products [real operations/s]; by default measured once per process.
+
+    Returns
+    -------
+    Prediction
+
+    Raises
+    ------
+    ModelRangeError
+        If a size is not positive or the precision unknown.
+    """
+    if precision not in EXCITATION_OPERATIONS:
+        msg = f"precision {precision!r}: expected {', '.join(EXCITATION_OPERATIONS)}"
+        raise ModelRangeError(msg)
+    if min(n_unknowns, n_ports, n_antennas) < 1:
+        msg = f"a station of {n_antennas} antennas, {n_ports} ports and {n_unknowns} unknowns: positive numbers expected"
+        raise ModelRangeError(msg)
+    rate = calibrated_rate() if operations_per_second is None else operations_per_second
+    n, p = float(n_unknowns), float(n_ports)
+    double = 2.0 if precision == "double" else 1.0
+    seconds = (
+        ASSEMBLY_OPERATIONS * n**2 / rate
+        + 4.0 / 3.0 * n**3 * double / (FACTOR_EFFICIENCY * rate)
+        + EXCITATION_OPERATIONS[precision] * n**2 * p / rate
+    )
+    tile = min(n, TILE_ORDER)
+    half = 0.5 * n * (n + tile)
+    # All precisions keep the matrix in double to measure the residual, and the factors beside it.
+    factor_bytes = 16.0 if precision == "double" else 8.0
+    matrix = (16.0 + factor_bytes) * half
+    factorising = n * tile * factor_bytes
+    # Sources (real) and solutions; product, difference and correction of a refinement.
+    exciting = n * p * (8.0 + 16.0 + 16.0 + 16.0 + factor_bytes)
+    memory = PROCESS_BYTES + matrix + max(factorising, exciting)
+    ports_of_antenna = np.ceil(p / n_antennas)
+    disk = STORE_OVERHEAD_BYTES + 16.0 * (n * p + p * p + (n + p) * ports_of_antenna) + 40.0 * n_antennas
+    return Prediction(int(memory), int(disk), float(seconds), n_unknowns)
+
+
+def predict_station(
+    station: Station,
+    frequencies_hz: Sequence[float],
+    mesh: str | MeshSettings = "default",
+    precision: str = "mixed",
+    *,
+    operations_per_second: float | None = None,
+) -> list[Prediction]:
+    """Return what each frequency of a station takes, see `predict` and `total`."""
+    from elbowroom.job.checks import mesh_statistics
+
+    n_ports = len(station.port_names)
+    predictions = []
+    for frequency in frequencies_hz:
+        n = mesh_statistics(station, frequency, mesh)["unknowns"]
+        predictions.append(predict(n, n_ports, len(station), precision, operations_per_second=operations_per_second))
+    return predictions
+
+
+def total(predictions: Sequence[Prediction]) -> Prediction:
+    """Return what solves one after another take: the largest memory, the sums of disk and time."""
+    return Prediction(
+        max((p.memory_bytes for p in predictions), default=0),
+        sum(p.disk_bytes for p in predictions),
+        sum(p.seconds for p in predictions),
+        max((p.n_unknowns for p in predictions), default=0),
+    )
+
+
+@lru_cache(maxsize=1)
+def calibrated_rate() -> float:
+    """Return the rate of complex single-precision matrix products on this machine [real operations/s], measured once.
+
+    The better of two products of order 1024, about a tenth of a second; a complex multiplication with its addition counts
+    as eight operations.
+    """
+    rng = np.random.default_rng(0)
+    n = _CALIBRATION_ORDER
+    a = (rng.standard_normal((n, n)) + 1j * rng.standard_normal((n, n))).astype(np.complex64)
+    a[:64] @ a  # wakes the library's threads
+    best = np.inf
+    for _ in range(2):
+        clock = time.perf_counter()
+        a @ a
+        best = min(best, time.perf_counter() - clock)
+    return 8.0 * n**3 / best
+
+
+def available_memory_bytes(root: str | Path = "/") -> int:
+    """Return the memory this process can still take [byte].
+
+    The least of what the machine has free, what control groups (both versions) leave and what the limit on the process's
+    address space leaves.
+
+    Parameters
+    ----------
+    root : str or Path, optional
+        Where ``proc`` and ``sys`` are found; for tests.
+    """
+    import psutil
+
+    bounds = [int(psutil.virtual_memory().available), *_control_group_bounds(Path(root))]
+    try:
+        import resource
+    except ImportError:  # no such limit on this system
+        return max(min(bounds), 0)
+    soft, _ = resource.getrlimit(resource.RLIMIT_AS)
+    if soft != resource.RLIM_INFINITY:
+        bounds.append(soft - int(psutil.Process().memory_info().vms))
+    return max(min(bounds), 0)
+
+
+def _control_group_bounds(root: Path) -> list[int]:
+    try:
+        lines = (root / "proc/self/cgroup").read_text().splitlines()
+    except OSError:
+        return []
+    bounds = []
+    for line in lines:
+        parts = line.split(":", 2)
+        if len(parts) != 3:
+            continue
+        number, controllers, group = parts
+        if number == "0" and not controllers:
+            mount, names = root / "sys/fs/cgroup", ("memory.max", "memory.current", "inactive_file")
+        elif "memory" in controllers.split(","):
+            mount = root / "sys/fs/cgroup/memory"
+            names = ("memory.limit_in_bytes", "memory.usage_in_bytes", "total_inactive_file")
+        else:
+            continue
+        # Every group above sets a limit too; inside a container the path may name folders only seen outside.
+        path = [part for part in group.split("/") if part and part != ".."]
+        for depth in range(len(path), -1, -1):
+            bound = _group_bound(mount.joinpath(*path[:depth]), *names)
+            if bound is not None:
+                bounds.append(bound)
+    return bounds
+
+
+def _group_bound(folder: Path, limit_name: str, usage_name: str, cache_name: str) -> int | None:
+    try:
+        limit = int((folder / limit_name).read_text())
+        usage = int((folder / usage_name).read_text())
+    except (OSError, ValueError):  # "max" is no number and no limit
+        return None
+    cache = 0
+    try:
+        for line in (folder / "memory.stat").read_text().splitlines():
+            if line.startswith(cache_name + " "):
+                cache = int(line.split()[1])
+    except (OSError, ValueError):
+        pass
+    # file pages not lately used are given back before anything is refused
+    return limit - max(usage - cache, 0)
+
+
+def refuse_if_too_large(
+    prediction: Prediction, *, folder: str | Path | None = None, available_bytes: int | None = None
+) -> None:
+    """Raise ResourceError, with figures, if a prediction exceeds what the machine has.
+
+    Parameters
+    ----------
+    prediction : Prediction
+        What the work takes.
+    folder : str or Path, optional
+        Where the store is or will be; without it the disk is not looked at.
+    available_bytes : int, optional
+        Memory to compare with [byte]; by default what is available now.
+
+    Raises
+    ------
+    ResourceError
+        If there is too little memory or disk.
+    """
+    available = available_memory_bytes() if available_bytes is None else available_bytes
+    found = []
+    if prediction.memory_bytes > available:
+        found.append(
+            f"{format_bytes(prediction.memory_bytes)} of memory needed for {prediction.n_unknowns} unknowns, "
+            f"{format_bytes(available)} available"
+        )
+    if folder is not None:
+        place = Path(folder).absolute()
+        while not place.exists() and place != place.parent:
+            place = place.parent
+        free = shutil.disk_usage(place).free
+        if prediction.disk_bytes > free:
+            found.append(
+                f"{format_bytes(prediction.disk_bytes)} of disk needed in {folder}, {format_bytes(free)} free"
+            )
+    if found:
+        msg = (
+            f"this job is too large here: {'; '.join(found)}; nothing was started. Take fewer antennas, the default mesh "
+            "or a lower top frequency, or a machine with more of it"
+        )
+        raise ResourceError(msg)
+
+
+def format_bytes(count: float) -> str:
+    """Return a number of bytes for people: ``3.2 GB``, powers of 1000."""
+    for unit in ("byte", "kB", "MB", "GB", "TB"):
+        if abs(count) < 999.5 or unit == "TB":
+            return f"{count:.0f} {unit}" if unit == "byte" else f"{count:.3g} {unit}"
+        count /= 1000.0
+    raise AssertionError
+
+
+def format_seconds(seconds: float) -> str:
+    """Return a time for people: ``8 s``, ``12 min``, ``3.5 h``."""
+    if seconds < 90.0:
+        return f"{seconds:.0f} s" if seconds >= 1.0 else "less than 1 s"
+    if seconds < 5400.0:
+        return f"{seconds / 60.0:.0f} min"
+    return f"{seconds / 3600.0:.1f} h"
