@@ -1,0 +1,261 @@
+"""Commands.  Each is a few lines over functions of ``elbowroom.job``; heavy imports wait until a command needs them."""
+
+from __future__ import annotations
+
+import sys
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import click
+
+from elbowroom import __version__
+from elbowroom.base.errors import ElbowroomError
+
+if TYPE_CHECKING:
+    from elbowroom.cli.screen import Screen
+    from elbowroom.job.pipeline import JobRun
+
+INTERRUPTED_EXIT_CODE = 130
+
+JOB = click.argument("job", type=click.Path(path_type=Path))
+FREQUENCIES = click.option(
+    "--frequency-hz", "frequencies_hz", type=float, multiple=True, metavar="HZ",
+    help="Only this frequency of the job; may be given several times.",
+)  # fmt: skip
+
+
+def modes(command: Any) -> Any:  # noqa: ANN401 - a click decorator
+    """Add ``--quiet`` and ``--json``."""
+    command = click.option("--json", "mode", flag_value="json", help="One JSON object a line, for scripts.")(command)
+    return click.option("--quiet", "mode", flag_value="quiet", help="Results and errors only.")(command)
+
+
+@click.group(
+    context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 110},
+    epilog="Begin with 'elbowroom start my_station', then 'elbowroom run my_station/job.toml'.  "
+    "Results come from a model; they are not measurements.",
+)
+@click.version_option(__version__, prog_name="elbowroom")
+def cli() -> None:
+    """Embedded element patterns and beams of stations of wire antennas, with their mutual coupling.
+
+    A job file says what to solve: where the antennas stand, what they are made of, the ground, the frequencies and what the
+    ports see.  Solved currents are kept in a store, so that nothing is solved twice and an interrupted run goes on where it was.
+    """
+
+
+def _screen(mode: str | None) -> Screen:
+    from elbowroom.cli.screen import Screen
+
+    return Screen(mode or "normal")
+
+
+def _open(job: Path, frequencies_hz: tuple[float, ...], screen: Screen) -> JobRun:
+    from elbowroom.job.jobfile import read_job
+    from elbowroom.job.pipeline import JobRun
+
+    return JobRun(read_job(job), frequencies_hz=frequencies_hz or None, report=lambda damage: screen.warn(str(damage)))
+
+
+def _prepare(run: JobRun, screen: Screen) -> list:
+    """Show the settings and the doubts, refuse what cannot work, and return the plan."""
+    for line in run.job.resolved_lines():
+        screen.say(f"  {line}")
+    for problem in run.problems():
+        if problem.severity != "error":
+            screen.warn(problem.text)
+    return run.prepare()
+
+
+def _solve_all(run: JobRun, screen: Screen) -> tuple[list[float], list]:
+    """Solve what the store lacks; return the frequencies that are solved and the failures."""
+    from elbowroom.cli.screen import SolveProgress, readable_seconds
+    from elbowroom.job.pipeline import Failure
+
+    units = _prepare(run, screen)
+    missing = {u.frequency_hz: u.prediction.seconds for u in units if not u.stored}
+    screen.say(f"{len(units)} frequencies, {len(units) - len(missing)} in the store already, {len(missing)} to solve")
+    rows, solved, failures = [], [], []
+    with SolveProgress(screen, missing) as progress:
+        for frequency, outcome in zip(run.frequencies_hz, run.solutions(progress), strict=True):
+            progress.finished(frequency)
+            if isinstance(outcome, Failure):
+                failures.append(outcome)
+                screen.emit("failed", frequency_hz=frequency, error=str(outcome.error))
+                continue
+            solved.append(frequency)
+            s = outcome.statistics
+            total = sum(s.seconds.values())
+            state = "solved" if frequency in missing else "from store"
+            rows.append(
+                [frequency / 1e6, state, s.n_unknowns, s.n_ports, f"{s.relative_residual:.1e}", f"{s.mesh_error:.1e}",
+                 readable_seconds(total)]
+            )  # fmt: skip
+            screen.emit(
+                "unit", frequency_hz=frequency, state=state, unknowns=s.n_unknowns, ports=s.n_ports,
+                relative_residual=s.relative_residual, mesh_error=s.mesh_error, seconds=total, file=str(run.path_of(frequency)),
+            )  # fmt: skip
+    if rows:
+        screen.table(
+            "Solutions", ["frequency [MHz]", "state", "unknowns", "ports", "residual", "mesh error", "solve time"], rows
+        )
+        screen.say("residual: of the linear system; mesh error: change of an isolated antenna's admittance on a finer mesh")
+    for failure in failures:
+        screen.error.print(f"failed at {failure.frequency_hz / 1e6:g} MHz: {failure.error}", markup=False)
+    return solved, failures
+
+
+def _exit_on(failures: list) -> None:
+    """End with the code of the first failure; the others' causes are on the screen."""
+    if failures:
+        sys.exit(failures[0].error.exit_code)
+
+
+@cli.command()
+@click.argument("folder", type=click.Path(path_type=Path))
+@click.option("--template", default="small", show_default=True, help="'small' (seven antennas) or 'demo' (a whole station).")
+def start(folder: Path, template: str) -> None:
+    """Write a job, an antenna and a layout into FOLDER, ready to run and to be changed."""
+    from elbowroom.job.templates import write_template
+
+    for path in write_template(template, folder):
+        click.echo(f"wrote {path}")
+    click.echo(f"next: elbowroom inspect {folder / 'job.toml'}")
+
+
+@cli.command()
+@click.argument("kind", type=click.Choice(["disc", "rings", "spiral", "grid"]))
+@click.argument("file", type=click.Path(path_type=Path))
+@click.option("--count", type=int, help="Number of antennas (disc, spiral).")
+@click.option("--radius-m", type=float, help="Radius of the disc [m] (disc, spiral).")
+@click.option("--spacing-m", type=float, help="Least spacing (disc), or spacing (rings, grid) [m].")
+@click.option("--rings", "ring_counts", help="Antennas in each ring, from the middle, as 1,6,12 (rings).")
+@click.option("--columns", type=int, help="Columns (grid).")
+@click.option("--rows", type=int, help="Rows (grid).")
+@click.option("--arms", type=int, help="Arms of the spiral; a sunflower by default (spiral).")
+@click.option("--turn", default="0", show_default=True, help="Turn of every antenna [deg], or 'random'.")
+@click.option("--seed", type=int, default=1, show_default=True, help="Seed of everything random.")
+@click.option("--antenna", default="", help="Design named in the antenna column.")
+def layout(
+    kind: str, file: Path, count: int | None, radius_m: float | None, spacing_m: float | None, ring_counts: str | None,
+    columns: int | None, rows: int | None, arms: int | None, turn: str, seed: int, antenna: str,
+) -> None:  # fmt: skip
+    """Make a layout of KIND and write it to FILE as CSV."""
+    from elbowroom.geometry import arrangements
+    from elbowroom.geometry.layouts import closest_spacing, diameter, write_layout
+
+    def need(**options: Any) -> None:  # noqa: ANN401 - option values
+        absent = [name for name, value in options.items() if value is None]
+        if absent:
+            raise click.UsageError(f"layout {kind} needs {', '.join('--' + n.replace('_', '-') for n in absent)}")
+
+    try:
+        turn_of: Any = "random" if turn == "random" else float(turn)
+    except ValueError:
+        raise click.UsageError(f"--turn {turn!r}: expected degrees or 'random'") from None
+    common = {"turn": turn_of, "antenna": antenna}
+    if kind == "disc":
+        need(count=count, radius_m=radius_m, spacing_m=spacing_m)
+        made = arrangements.random_disc(count, radius_m, spacing_m, seed, **common)  # type: ignore[arg-type]
+    elif kind == "rings":
+        need(rings=ring_counts, spacing_m=spacing_m)
+        try:
+            counts = [int(n) for n in str(ring_counts).split(",")]
+        except ValueError:
+            raise click.UsageError(f"--rings {ring_counts!r}: expected whole numbers, as 1,6,12") from None
+        made = arrangements.rings(counts, spacing_m, seed=seed, **common)  # type: ignore[arg-type]
+    elif kind == "spiral":
+        need(count=count, radius_m=radius_m)
+        made = arrangements.spiral(count, radius_m, arms, seed=seed, **common)  # type: ignore[arg-type]
+    else:
+        need(columns=columns, rows=rows, spacing_m=spacing_m)
+        made = arrangements.grid(columns, rows, spacing_m, seed=seed, **common)  # type: ignore[arg-type]
+    write_layout(made, file, header_comment=f"made by elbowroom layout {kind}, seed {seed}")
+    spacing = f", closest pair {closest_spacing(made):.4g} m" if len(made) > 1 else ""
+    click.echo(f"wrote {file}: {len(made)} antennas, {diameter(made):.4g} m across{spacing}")
+
+
+@cli.command()
+@JOB
+@FREQUENCIES
+@modes
+def inspect(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> None:
+    """Look at JOB without solving: settings, problems of the model, meshes, predicted time, memory and disk."""
+    from elbowroom.cli.screen import readable_bytes, readable_seconds
+    from elbowroom.job.checks import mesh_statistics
+    from elbowroom.job.plan import available_memory_bytes
+
+    screen = _screen(mode)
+    run = _open(job, frequencies_hz, screen)
+    for line in run.job.resolved_lines():
+        screen.say(f"  {line}")
+    problems = run.problems()
+    for problem in problems:
+        screen.emit("problem", severity=problem.severity, text=problem.text)
+    errors = [p for p in problems if p.severity == "error"]
+    if screen.mode != "json":
+        for problem in problems:
+            screen.out.print(f"{problem.severity}: {problem.text}", markup=False)
+        if not problems:
+            screen.say("no problems found in the model")
+    if not errors:
+        rows = []
+        for unit in run.plan():
+            mesh = mesh_statistics(run.station, unit.frequency_hz, run.job.mesh)
+            p = unit.prediction
+            rows.append(
+                [unit.frequency_hz / 1e6, "yes" if unit.stored else "no", mesh["unknowns"], max(mesh["elements_per_antenna"].values()),
+                 mesh["shortest_element_m"], mesh["longest_element_m"], mesh["longest_element_wavelengths"],
+                 readable_seconds(p.seconds), readable_bytes(p.memory_bytes), readable_bytes(p.disk_bytes)]
+            )  # fmt: skip
+            screen.emit(
+                "unit", frequency_hz=unit.frequency_hz, stored=unit.stored, key=unit.key, seconds=p.seconds,
+                memory_bytes=p.memory_bytes, disk_bytes=p.disk_bytes, mesh=mesh,
+            )  # fmt: skip
+        screen.table(
+            "Plan",
+            ["frequency [MHz]", "in store", "unknowns", "elements per antenna", "shortest [m]", "longest [m]",
+             "longest [wavelengths]", "time", "memory", "disk"],
+            rows,
+        )  # fmt: skip
+        screen.say(f"memory available: {readable_bytes(available_memory_bytes())}")
+    if errors:
+        sys.exit(3)
+
+
+@cli.command()
+@JOB
+@FREQUENCIES
+@modes
+def solve(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> None:
+    """Solve the currents of JOB at all its frequencies and keep them in its store.
+
+    What the store holds already is not solved again.  The run may be interrupted at any time; the next one goes on.
+    """
+    screen = _screen(mode)
+    _, failures = _solve_all(_open(job, frequencies_hz, screen), screen)
+    _exit_on(failures)
+
+
+def main() -> None:
+    """Run a command; say what is wrong in one message and end with the code of its kind."""
+    try:
+        code = cli.main(standalone_mode=False)
+        sys.exit(code if isinstance(code, int) else 0)
+    except click.ClickException as error:
+        error.show()
+        sys.exit(error.exit_code)
+    except (click.Abort, KeyboardInterrupt):
+        click.echo("interrupted: what was finished is in the store, and the next run goes on from there", err=True)
+        sys.exit(INTERRUPTED_EXIT_CODE)
+    except ElbowroomError as error:
+        click.echo(f"error: {error}", err=True)
+        sys.exit(error.exit_code)
+    except BrokenPipeError:
+        # The reader of our output has gone; nothing more can be said to it.
+        sys.stderr.close()
+        sys.exit(1)
+
+
+if __name__ == "__main__":
+    main()

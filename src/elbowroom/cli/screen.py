@@ -1,0 +1,124 @@
+"""What is written to the terminal: tables, progress and messages."""
+
+from __future__ import annotations
+
+import json
+import sys
+import time
+from collections.abc import Sequence
+from types import TracebackType
+from typing import Any
+
+from rich.console import Console
+from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn, TimeRemainingColumn
+from rich.table import Table
+
+
+def readable_bytes(count: float) -> str:
+    """Return a size with a binary unit."""
+    for unit in ("B", "KiB", "MiB"):
+        if abs(count) < 1024.0:
+            return f"{count:.0f} {unit}" if unit == "B" else f"{count:.1f} {unit}"
+        count /= 1024.0
+    return f"{count:.2f} GiB"
+
+
+def readable_seconds(seconds: float) -> str:
+    """Return a duration in the unit people would use."""
+    if seconds < 90.0:
+        return f"{seconds:.1f} s"
+    if seconds < 5400.0:
+        return f"{seconds / 60.0:.1f} min"
+    return f"{seconds / 3600.0:.1f} h"
+
+
+class Screen:
+    """Where a command talks to its user.
+
+    Parameters
+    ----------
+    mode : str
+        ``"normal"``, ``"quiet"`` (results and errors only) or ``"json"`` (one JSON object a line on standard output).
+    """
+
+    def __init__(self, mode: str = "normal") -> None:
+        self.mode = mode
+        width = None if sys.stdout.isatty() else 140
+        self.out = Console(highlight=False, soft_wrap=True, width=width)
+        self.error = Console(stderr=True, highlight=False, soft_wrap=True)
+
+    def say(self, text: str = "") -> None:
+        """Write a line that quiet runs leave out."""
+        if self.mode == "normal":
+            self.out.print(text, markup=False)
+
+    def warn(self, text: str) -> None:
+        """Write a warning to standard error."""
+        self.error.print(f"warning: {text}", markup=False)
+
+    def emit(self, kind: str, **values: Any) -> None:  # noqa: ANN401 - any JSON value
+        """Write one JSON line, in JSON mode only."""
+        if self.mode == "json":
+            print(json.dumps({"kind": kind, **values}), flush=True)
+
+    def table(self, title: str, columns: Sequence[str], rows: Sequence[Sequence[Any]]) -> None:
+        """Write a table, except in JSON mode."""
+        if self.mode == "json":
+            return
+        made = Table(title=title, title_justify="left")
+        for index, column in enumerate(columns):
+            numeric = bool(rows) and all(isinstance(row[index], int | float) for row in rows)
+            made.add_column(column, justify="right" if numeric else "left", overflow="fold")
+        for row in rows:
+            made.add_row(*[f"{cell:.6g}" if isinstance(cell, float) else str(cell) for cell in row])
+        self.out.print(made)
+
+
+class SolveProgress:
+    """Progress of solving some frequencies: a bar on a terminal, lines elsewhere.
+
+    The bar advances by predicted seconds, so that the time left takes the size of each unit and stage into account.
+    """
+
+    SHARES = {"assemble": (0.0, 0.25), "factorise": (0.25, 0.55), "port excitations": (0.8, 0.2)}
+
+    def __init__(self, screen: Screen, weights: dict[float, float]) -> None:
+        self.screen, self.weights = screen, weights
+        self.done = 0.0
+        self.total = sum(weights.values()) or 1.0
+        self.last_line = 0.0
+        self.bar: Progress | None = None
+        if screen.mode == "normal" and screen.out.is_terminal:
+            self.bar = Progress(
+                TextColumn("{task.description}"), BarColumn(), TextColumn("{task.percentage:>3.0f}%"), TimeElapsedColumn(),
+                TextColumn("left"), TimeRemainingColumn(), console=screen.out, transient=True,
+            )  # fmt: skip
+            self.task = self.bar.add_task("solving", total=self.total)
+
+    def __enter__(self) -> SolveProgress:
+        """Show the bar."""
+        if self.bar is not None:
+            self.bar.start()
+        return self
+
+    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None) -> None:
+        """Take the bar away."""
+        if self.bar is not None:
+            self.bar.stop()
+
+    def __call__(self, frequency_hz: float, stage: str, fraction: float) -> None:
+        """Move on."""
+        start, share = self.SHARES.get(stage, (0.0, 0.0))
+        reached = self.done + self.weights.get(frequency_hz, 0.0) * (start + share * fraction)
+        label = f"{frequency_hz / 1e6:g} MHz: {stage}"
+        if self.bar is not None:
+            self.bar.update(self.task, completed=reached, description=label)
+        elif self.screen.mode == "normal" and (fraction >= 1.0 or time.monotonic() - self.last_line > 20.0):
+            self.last_line = time.monotonic()
+            self.screen.say(f"  {label} {fraction:.0%} ({reached / self.total:.0%} of all)")
+        if fraction >= 1.0:
+            self.screen.emit("progress", frequency_hz=frequency_hz, stage=stage, fraction_of_all=reached / self.total)
+
+    def finished(self, frequency_hz: float) -> None:
+        """Count a unit as done, however long it took."""
+        self.done += self.weights.get(frequency_hz, 0.0)

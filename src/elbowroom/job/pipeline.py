@@ -1,0 +1,174 @@
+"""From a job file to solutions: checks, plan, store and one frequency after another."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from elbowroom.base.errors import ElbowroomError, GeometryError, JobFileError
+from elbowroom.geometry.stations import Station
+from elbowroom.job.checks import Problem, check_station
+from elbowroom.job.jobfile import Job
+from elbowroom.job.plan import Prediction, predict_station, refuse_if_too_large, total
+from elbowroom.job.solve import SOLUTION_SCHEMA, solution_key, solve
+from elbowroom.store import Hdf5Store
+from elbowroom.store.records import DamageReport
+
+if TYPE_CHECKING:
+    from elbowroom.radiation.solution import Solution
+
+UnitProgress = Callable[[float, str, float], None]
+"""Told the frequency [Hz], the stage and the fraction of it that is done."""
+
+
+@dataclass(frozen=True)
+class Unit:
+    """One station at one frequency.
+
+    Attributes
+    ----------
+    frequency_hz : float
+        [Hz]
+    key : str
+        Key in the store.
+    stored : bool
+        Whether the store has it already.
+    prediction : Prediction
+        What solving it takes.
+    """
+
+    frequency_hz: float
+    key: str
+    stored: bool
+    prediction: Prediction
+
+
+@dataclass(frozen=True)
+class Failure:
+    """A unit that could not be solved, and why."""
+
+    frequency_hz: float
+    error: ElbowroomError
+
+
+class JobRun:
+    """A job with its station and store, ready to be inspected or solved.
+
+    Parameters
+    ----------
+    job : Job
+        The job.
+    frequencies_hz : sequence of float, optional
+        Only these of the job's frequencies [Hz].
+    report : callable, optional
+        Told about damaged files in the store.
+
+    Raises
+    ------
+    JobFileError
+        If a frequency is not one of the job's.
+    """
+
+    def __init__(
+        self,
+        job: Job,
+        *,
+        frequencies_hz: Sequence[float] | None = None,
+        report: Callable[[DamageReport], None] | None = None,
+    ) -> None:
+        self.job = job
+        self.station: Station = job.station()
+        if frequencies_hz:
+            unknown = [f for f in frequencies_hz if not any(abs(f - known) < 0.5 for known in job.frequencies_hz)]
+            if unknown:
+                known = ", ".join(f"{f:.10g}" for f in job.frequencies_hz[:8])
+                msg = f"{unknown[0]:.10g} Hz is not a frequency of this job; it has {known}"
+                raise JobFileError(msg, file=job.path)
+            self.frequencies_hz = tuple(k for k in job.frequencies_hz if any(abs(f - k) < 0.5 for f in frequencies_hz))
+        else:
+            self.frequencies_hz = job.frequencies_hz
+        options = {} if report is None else {"report": report}
+        self.store = Hdf5Store(job.store_folder, SOLUTION_SCHEMA, **options)
+
+    @property
+    def termination(self) -> list:
+        """What every port sees [ohm], in the order of the ports."""
+        return self.job.termination_values(self.station)
+
+    def problems(self) -> list[Problem]:
+        """Return what is wrong or doubtful in the model; nothing is solved."""
+        return check_station(self.station, self.frequencies_hz, self.job.mesh)
+
+    def plan(self) -> list[Unit]:
+        """Return the units of the job, which the store has, and what the others take."""
+        predictions = predict_station(self.station, self.frequencies_hz, self.job.mesh, self.job.precision)
+        units = []
+        for frequency, prediction in zip(self.frequencies_hz, predictions, strict=True):
+            key = self.key(frequency)
+            units.append(Unit(frequency, key, key in self.store, prediction))
+        return units
+
+    def key(self, frequency_hz: float) -> str:
+        """Return the store's key of the unit at a frequency [Hz]."""
+        from elbowroom.geometry.mesh import mesh_settings
+        from elbowroom.system.discretisation import FarSettings
+        from elbowroom.system.self_block import NearSettings
+
+        return solution_key(
+            self.station, frequency_hz, mesh_settings(self.job.mesh), NearSettings(), FarSettings(), ("direct", self.job.precision)
+        )
+
+    def path_of(self, frequency_hz: float) -> Path:
+        """Return the store's file of the unit at a frequency [Hz]."""
+        return self.store.path_of(self.key(frequency_hz))
+
+    def prepare(self) -> list[Unit]:
+        """Check model, store and machine before any work, and return the plan.
+
+        Raises
+        ------
+        GeometryError
+            If the model has errors; all are listed.
+        StoreError
+            If the store cannot be written.
+        ResourceError
+            If a unit needs more memory, or the store more disk, than there is.
+        """
+        errors = tuple(p.text for p in self.problems() if p.severity == "error")
+        if errors:
+            msg = f"{self.job.path}: the station cannot be modelled"
+            raise GeometryError(msg, problems=errors)
+        units = self.plan()
+        missing = [u for u in units if not u.stored]
+        if missing:
+            refuse_if_too_large(total([u.prediction for u in missing]), folder=self.job.store_folder)
+            self.store.check_writable()
+        return units
+
+    def solution(self, frequency_hz: float, progress: UnitProgress | None = None) -> Solution:
+        """Return the solution at a frequency [Hz], from the store or solved now and stored."""
+
+        def tell(stage: str, fraction: float) -> None:
+            if progress is not None:
+                progress(frequency_hz, stage, fraction)
+
+        return solve(
+            self.station,
+            frequency_hz,
+            solver=self.job.solver,
+            mesh=self.job.mesh,
+            precision=self.job.precision,
+            store=self.store,
+            attributes={"title": self.job.title, "job_file": self.job.text},
+            progress=tell,
+        )
+
+    def solutions(self, progress: UnitProgress | None = None) -> Iterator[Solution | Failure]:
+        """Solve one frequency after another; a unit that fails does not stop the others."""
+        for frequency in self.frequencies_hz:
+            try:
+                yield self.solution(frequency, progress)
+            except ElbowroomError as error:
+                yield Failure(frequency, error)
