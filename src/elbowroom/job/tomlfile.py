@@ -32,6 +32,10 @@ def counted(count: int, noun: str) -> str:
     return f"{count} {noun}{'' if count == 1 else 's'}"
 
 
+def _article(noun: str) -> str:
+    return "an" if noun[:1] in "aeiou" else "a"
+
+
 def near_miss(found: str, known: Iterable[str], what: str = "known") -> str:
     """Return ``did you mean 'this'?``, or the list of what is known."""
     names = list(known)
@@ -79,13 +83,13 @@ def read_toml(path: str | Path, what: str) -> tuple[str, dict[str, Any]]:
         msg = f"no such {what}" + (f"; did you mean {close[0]!r}?" if close else "")
         raise JobFileError(msg, file=file) from None
     except IsADirectoryError:
-        msg = f"is a folder; a {what} expected"
+        msg = f"is a folder; {_article(what)} {what} expected"
         raise JobFileError(msg, file=file) from None
     except (OSError, ValueError) as cause:
         msg = f"cannot be read: {getattr(cause, 'strerror', None) or cause}"
         raise JobFileError(msg, file=file) from cause
     if not data.strip():
-        msg = f"the file is empty; a {what} expected"
+        msg = f"the file is empty; {_article(what)} {what} expected"
         raise JobFileError(msg, file=file)
     try:
         text = data.decode("utf-8-sig")

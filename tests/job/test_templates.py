@@ -1,0 +1,96 @@
+"""Starting points: they run as they are, and the demonstration is one and the same in both places."""
+
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from elbowroom import random_disc
+from elbowroom.base.errors import ExportError, JobFileError
+from elbowroom.geometry.wires import segment_distances
+from elbowroom.job.checks import check_station
+from elbowroom.job.jobfile import _SECTIONS, _BeamTable, read_job
+from elbowroom.job.solve import solve
+from elbowroom.job.templates import TEMPLATES, template_files, write_template
+
+DEMO = Path(__file__).parents[2] / "demo_data"
+
+
+@pytest.mark.parametrize("name", TEMPLATES)
+def test_templates__are_read_and_pass_every_check(tmp_path, name):
+    written = write_template(name, tmp_path / "new" / "job")
+    assert written[0].name == "job.toml"
+    job = read_job(written[0])
+    assert check_station(job.station(), job.frequencies_hz, job.mesh) == []
+    assert job.output_folder.parent == tmp_path / "new" / "job"
+
+
+@pytest.mark.parametrize("name", TEMPLATES)
+def test_templates__explain_every_key(name):
+    text = template_files(name)["job.toml"].decode()
+    keys = {key for model in _SECTIONS.values() for key in model.model_fields} | set(_BeamTable.model_fields)
+    assert len(keys) > 20
+    assert [key for key in keys if key not in text] == []
+
+
+def test_demo__package_data_and_demo_data_are_the_same():
+    files = template_files("demo")
+    assert sorted(files) == sorted(p.name for p in DEMO.iterdir())
+    for name, data in files.items():
+        assert (DEMO / name).read_bytes() == data, name
+
+
+def test_demo__is_the_station_that_its_readme_says():
+    job = read_job(DEMO / "job.toml")
+    assert len(job.layout) == 240
+    assert job.frequencies_hz == (60e6, 110e6, 165e6, 230e6, 300e6)
+    again = random_disc(240, radius_m=18.5, minimum_spacing_m=1.45, seed=20)
+    # half a millimetre of rounding in each coordinate
+    assert np.abs(job.layout.positions - again.positions).max() <= 0.5e-3 * (1 + 1e-9)
+    offsets = job.layout.positions[:, None] - job.layout.positions[None]
+    distance = np.linalg.norm(offsets, axis=2) + 100.0 * np.eye(240)
+    assert distance.min() >= 1.45
+
+
+def test_demo__wires_of_neighbours_clear_each_other_by_3_cm():
+    station = read_job(DEMO / "job.toml").station()
+    ends = np.array([p.to_station(np.array([[w.start, w.end] for w in p.antenna.wires])) for p in station])
+    positions = station.positions
+    nearest = np.inf
+    for i in range(len(station)):
+        near = [j for j in range(i) if np.linalg.norm(positions[i] - positions[j]) < 1.5]
+        for j in near:
+            between = segment_distances(ends[i][:, None, 0], ends[i][:, None, 1], ends[j][None, :, 0], ends[j][None, :, 1])
+            nearest = min(nearest, between.min())
+    assert 0.03 < nearest < 0.5
+
+
+def test_small__solves_in_seconds(tmp_path):
+    job = read_job(write_template("small", tmp_path)[0])
+    station = job.station()
+    solution = solve(station, job.frequencies_hz[0], mesh=job.mesh, precision=job.precision)
+    impedance = solution.impedance_matrix()
+    assert impedance.shape == (14, 14)
+    # a passive station: the resistance matrix has no negative eigenvalue
+    assert np.linalg.eigvalsh(impedance.real).min() > 0.0
+
+
+def test_write__overwrites_nothing(tmp_path):
+    (tmp_path / "layout.csv").write_text("mine")
+    with pytest.raises(ExportError, match=r"layout\.csv already there; nothing was written; choose another folder"):
+        write_template("small", tmp_path)
+    assert [p.name for p in tmp_path.iterdir()] == ["layout.csv"]
+    assert (tmp_path / "layout.csv").read_text() == "mine"
+
+
+def test_write__folder_that_is_a_file(tmp_path):
+    (tmp_path / "file").write_text("")
+    with pytest.raises(ExportError, match="cannot write the template 'small'"):
+        write_template("small", tmp_path / "file")
+
+
+def test_unknown_template__gets_a_hint(tmp_path):
+    with pytest.raises(JobFileError, match="no template 'demos'; did you mean 'demo'"):
+        write_template("demos", tmp_path)
+    with pytest.raises(JobFileError, match="no template 'zzz'; known: small, demo"):
+        template_files("zzz")
