@@ -2,7 +2,6 @@
 
 import numpy as np
 import pytest
-from helpers import FREQUENCY_HZ, cluster, crossed, dipole
 
 from elbowroom.base.errors import ModelRangeError, SolveError
 from elbowroom.geometry.directions import hemisphere_grid
@@ -11,6 +10,7 @@ from elbowroom.geometry.stations import Placed, Station
 from elbowroom.job.solve import solve
 from elbowroom.system.assembly import assemble
 from elbowroom.system.solving import _port_rows
+from helpers import FREQUENCY_HZ, cluster, crossed, dipole
 
 SKY = hemisphere_grid(15.0)
 

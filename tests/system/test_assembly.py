@@ -2,7 +2,6 @@
 
 import numpy as np
 import pytest
-from helpers import FREQUENCY_HZ, cluster, crossed
 
 from elbowroom.geometry.arrangements import grid
 from elbowroom.geometry.grounds import FreeSpace, PerfectGround
@@ -10,6 +9,7 @@ from elbowroom.geometry.stations import Placed, Station
 from elbowroom.system import assembly
 from elbowroom.system.assembly import PairFiller, antenna_distances, assemble, tile_groups
 from elbowroom.system.discretisation import discretise
+from helpers import FREQUENCY_HZ, cluster, crossed
 
 
 @pytest.mark.parametrize("ground", [FreeSpace(), PerfectGround()])

@@ -19,13 +19,14 @@ letter meaning
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-FloatArray = NDArray[np.float64]
-ComplexArray = NDArray[np.complex128]
-AnyComplexArray = NDArray[np.complexfloating]
+FloatArray = NDArray[np.floating[Any]]
+ComplexArray = NDArray[np.complexfloating[Any, Any]]
+AnyComplexArray = NDArray[np.complexfloating[Any, Any]]
 
 
 @dataclass(frozen=True)

@@ -24,7 +24,7 @@ FREQUENCIES = click.option(
 )  # fmt: skip
 
 
-def modes(command: Any) -> Any:  # noqa: ANN401 - a click decorator
+def modes(command: Any) -> Any:
     """Add ``--quiet`` and ``--json``."""
     command = click.option("--json", "mode", flag_value="json", help="One JSON object a line, for scripts.")(command)
     return click.option("--quiet", "mode", flag_value="quiet", help="Results and errors only.")(command)
@@ -96,9 +96,7 @@ def _solve_all(run: JobRun, screen: Screen) -> tuple[list[float], list]:
                 relative_residual=s.relative_residual, mesh_error=s.mesh_error, seconds=total, file=str(run.path_of(frequency)),
             )  # fmt: skip
     if rows:
-        screen.table(
-            "Solutions", ["frequency [MHz]", "state", "unknowns", "ports", "residual", "mesh error", "solve time"], rows
-        )
+        screen.table("Solutions", ["frequency [MHz]", "state", "unknowns", "ports", "residual", "mesh error", "solve time"], rows)
         screen.say("residual: of the linear system; mesh error: change of an isolated antenna's admittance on a finer mesh")
     for failure in failures:
         screen.error.print(f"failed at {failure.frequency_hz / 1e6:g} MHz: {failure.error}", markup=False)
@@ -144,15 +142,17 @@ def layout(
     from elbowroom.geometry import arrangements
     from elbowroom.geometry.layouts import closest_spacing, diameter, write_layout
 
-    def need(**options: Any) -> None:  # noqa: ANN401 - option values
+    def need(**options: Any) -> None:
         absent = [name for name, value in options.items() if value is None]
         if absent:
-            raise click.UsageError(f"layout {kind} needs {', '.join('--' + n.replace('_', '-') for n in absent)}")
+            msg = f"layout {kind} needs {', '.join('--' + n.replace('_', '-') for n in absent)}"
+            raise click.UsageError(msg)
 
     try:
         turn_of: Any = "random" if turn == "random" else float(turn)
     except ValueError:
-        raise click.UsageError(f"--turn {turn!r}: expected degrees or 'random'") from None
+        msg = f"--turn {turn!r}: expected degrees or 'random'"
+        raise click.UsageError(msg) from None
     common = {"turn": turn_of, "antenna": antenna}
     if kind == "disc":
         need(count=count, radius_m=radius_m, spacing_m=spacing_m)
@@ -162,7 +162,8 @@ def layout(
         try:
             counts = [int(n) for n in str(ring_counts).split(",")]
         except ValueError:
-            raise click.UsageError(f"--rings {ring_counts!r}: expected whole numbers, as 1,6,12") from None
+            msg = f"--rings {ring_counts!r}: expected whole numbers, as 1,6,12"
+            raise click.UsageError(msg) from None
         made = arrangements.rings(counts, spacing_m, seed=seed, **common)  # type: ignore[arg-type]
     elif kind == "spiral":
         need(count=count, radius_m=radius_m)
@@ -204,7 +205,8 @@ def inspect(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> N
             mesh = mesh_statistics(run.station, unit.frequency_hz, run.job.mesh)
             p = unit.prediction
             rows.append(
-                [unit.frequency_hz / 1e6, "yes" if unit.stored else "no", mesh["unknowns"], max(mesh["elements_per_antenna"].values()),
+                [unit.frequency_hz / 1e6, "yes" if unit.stored else "no", mesh["unknowns"],
+                 max(mesh["elements_per_antenna"].values()),
                  mesh["shortest_element_m"], mesh["longest_element_m"], mesh["longest_element_wavelengths"],
                  readable_seconds(p.seconds), readable_bytes(p.memory_bytes), readable_bytes(p.disk_bytes)]
             )  # fmt: skip

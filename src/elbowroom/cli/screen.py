@@ -7,7 +7,7 @@ import sys
 import time
 from collections.abc import Sequence
 from types import TracebackType
-from typing import Any
+from typing import Any, ClassVar
 
 from rich.console import Console
 from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn, TimeRemainingColumn
@@ -56,7 +56,7 @@ class Screen:
         """Write a warning to standard error."""
         self.error.print(f"warning: {text}", markup=False)
 
-    def emit(self, kind: str, **values: Any) -> None:  # noqa: ANN401 - any JSON value
+    def emit(self, kind: str, **values: Any) -> None:
         """Write one JSON line, in JSON mode only."""
         if self.mode == "json":
             print(json.dumps({"kind": kind, **values}), flush=True)
@@ -80,7 +80,7 @@ class SolveProgress:
     The bar advances by predicted seconds, so that the time left takes the size of each unit and stage into account.
     """
 
-    SHARES = {"assemble": (0.0, 0.25), "factorise": (0.25, 0.55), "port excitations": (0.8, 0.2)}
+    SHARES: ClassVar = {"assemble": (0.0, 0.25), "factorise": (0.25, 0.55), "port excitations": (0.8, 0.2)}
 
     def __init__(self, screen: Screen, weights: dict[float, float]) -> None:
         self.screen, self.weights = screen, weights

@@ -113,9 +113,7 @@ class Antenna:
     port_gaps: tuple[Gap, ...] = field(init=False, repr=False)
     load_gaps: tuple[Gap, ...] = field(init=False, repr=False)
 
-    def __init__(
-        self, name: str, wires: Sequence[Wire], ports: Sequence[Port], loads: Sequence[Load] = ()
-    ) -> None:
+    def __init__(self, name: str, wires: Sequence[Wire], ports: Sequence[Port], loads: Sequence[Load] = ()) -> None:
         object.__setattr__(self, "name", name)
         object.__setattr__(self, "wires", tuple(wires))
         object.__setattr__(self, "ports", tuple(ports))
@@ -131,9 +129,7 @@ class Antenna:
             if names.count(port_name) > 1:
                 msg = f"antenna {name!r}: port name {port_name!r} is used {names.count(port_name)} times"
                 raise GeometryError(msg)
-        object.__setattr__(
-            self, "port_gaps", tuple(self._place(p, f"port {p.name!r}", may_touch_end=True) for p in self.ports)
-        )
+        object.__setattr__(self, "port_gaps", tuple(self._place(p, f"port {p.name!r}", may_touch_end=True) for p in self.ports))
         object.__setattr__(
             self, "load_gaps", tuple(self._place(q, f"load {i}", may_touch_end=False) for i, q in enumerate(self.loads))
         )

@@ -218,9 +218,7 @@ def spiral(
             raise GeometryError(msg)
         k = np.arange(count)
         golden_angle = math.pi * (3.0 - math.sqrt(5.0))
-        return _layout(
-            _polar(radius_m * np.sqrt((k + 0.5) / (count - 0.5)), k * golden_angle), turn, seed, antenna
-        )
+        return _layout(_polar(radius_m * np.sqrt((k + 0.5) / (count - 0.5)), k * golden_angle), turn, seed, antenna)
     _check_count("arms", arms)
     if count % arms:
         msg = f"count: expected a multiple of the number of arms, got {count} antennas on {arms} arms"

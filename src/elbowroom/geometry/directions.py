@@ -260,9 +260,7 @@ def _intervals_of_quarter(step_deg: float) -> int:
 
 def _product(theta: FloatArray, phi: FloatArray, row_weights_sr: FloatArray) -> Directions:
     shape = (theta.size, phi.size)
-    return Directions(
-        np.repeat(theta, phi.size), np.tile(phi, theta.size), np.repeat(row_weights_sr, phi.size), shape
-    )
+    return Directions(np.repeat(theta, phi.size), np.tile(phi, theta.size), np.repeat(row_weights_sr, phi.size), shape)
 
 
 def ludwig3(
@@ -302,9 +300,7 @@ def ludwig3(
     return cosine * theta_part - sine * phi_part, sine * theta_part + cosine * phi_part
 
 
-def rotated(
-    theta_rad: ArrayLike, phi_rad: ArrayLike, rotation_matrix: ArrayLike
-) -> tuple[FloatArray, FloatArray, FloatArray]:
+def rotated(theta_rad: ArrayLike, phi_rad: ArrayLike, rotation_matrix: ArrayLike) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Return station directions as seen from a turned frame, and the way back for field components.
 
     Parameters
@@ -355,8 +351,6 @@ def rotated(
     along = np.sign(local[at_pole, 2])[:, None] * (theta_hat[at_pole] @ matrix)
     local_phi[at_pole] = np.arctan2(along[:, 1], along[:, 0])
 
-    local_pair = (
-        np.stack(spherical_basis(local_theta, local_phi), axis=1) @ matrix.T
-    )  # (D, 2, 3), station frame
+    local_pair = np.stack(spherical_basis(local_theta, local_phi), axis=1) @ matrix.T  # (D, 2, 3), station frame
     station_pair = np.stack([theta_hat, phi_hat], axis=1)
     return local_theta, local_phi, station_pair @ np.swapaxes(local_pair, 1, 2)

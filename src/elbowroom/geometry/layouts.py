@@ -85,9 +85,7 @@ class Layout:
         if count == 0:
             msg = "layout: no antennas"
             raise GeometryError(msg)
-        antenna = (
-            (self.antenna,) * count if isinstance(self.antenna, str) else tuple(self.antenna) or ("",) * count
-        )
+        antenna = (self.antenna,) * count if isinstance(self.antenna, str) else tuple(self.antenna) or ("",) * count
         if len(antenna) != count:
             msg = f"antenna: expected {count} design names, one for each antenna, got {len(antenna)}"
             raise GeometryError(msg)
@@ -249,9 +247,7 @@ def read_layout(path: str | Path) -> Layout:
         row = dict(zip(header, cells, strict=True))
         values = []
         for key, default in _NUMBER_DEFAULTS.items():
-            value, problem = (
-                _number(key, row[key]) if key in row else (math.nan if default is None else default, "")
-            )
+            value, problem = _number(key, row[key]) if key in row else (math.nan if default is None else default, "")
             values.append(value)
             if problem:
                 problems.append((line, problem))
@@ -296,9 +292,7 @@ def write_layout(layout: Layout, path: str | Path, header_comment: str = "") -> 
     writer = csv.writer(text, lineterminator="\n")
     writer.writerow(_COLUMNS)
     attitudes = np.column_stack([layout.rotation_deg, layout.tilt_east_deg, layout.tilt_north_deg])
-    for name, place, attitude, design in zip(
-        layout.names, layout.positions, attitudes, layout.antenna, strict=True
-    ):
+    for name, place, attitude, design in zip(layout.names, layout.positions, attitudes, layout.antenna, strict=True):
         writer.writerow([name, *(repr(float(x)) for x in (*place, *attitude)), design])
     unfinished = Path(f"{path}.{os.getpid()}.unfinished")
     try:
@@ -313,9 +307,7 @@ def write_layout(layout: Layout, path: str | Path, header_comment: str = "") -> 
 
 def _fail(file: Path, problems: list[tuple[int, str]]) -> NoReturn:
     msg = f"not a usable layout, {_counted(len(problems), 'problem')}"
-    lines = tuple(
-        f"line {line}: {text}" if line else text for line, text in sorted(problems, key=lambda p: p[0])
-    )
+    lines = tuple(f"line {line}: {text}" if line else text for line, text in sorted(problems, key=lambda p: p[0]))
     raise JobFileError(msg, file=file, problems=lines)
 
 
@@ -401,16 +393,8 @@ def _header_problems(line: int, header: list[str]) -> list[tuple[int, str]]:
         explained.update(near)
         hint = f"did you mean {near[0]!r}?" if near else f"known columns: {', '.join(_COLUMNS)}"
         problems.append((line, f"unknown column {cell!r}; {hint}"))
-    problems += [
-        (line, f"column {key!r} appears {n} times")
-        for key, n in Counter(header).items()
-        if n > 1 and key in _COLUMNS
-    ]
-    problems += [
-        (line, f"required column {key!r} is missing")
-        for key in _REQUIRED
-        if key not in header and key not in explained
-    ]
+    problems += [(line, f"column {key!r} appears {n} times") for key, n in Counter(header).items() if n > 1 and key in _COLUMNS]
+    problems += [(line, f"required column {key!r} is missing") for key in _REQUIRED if key not in header and key not in explained]
     return problems
 
 
@@ -428,9 +412,7 @@ def _number(key: str, cell: str) -> tuple[float, str]:
     return value, ""
 
 
-def _text_problems(
-    labels: Sequence[str], names: Sequence[str], antenna: Sequence[str]
-) -> list[tuple[int, str]]:
+def _text_problems(labels: Sequence[str], names: Sequence[str], antenna: Sequence[str]) -> list[tuple[int, str]]:
     problems = []
     first: dict[str, int] = {}
     for i, (name, design) in enumerate(zip(names, antenna, strict=True)):
@@ -445,15 +427,11 @@ def _text_problems(
         for what, text in (("name", name), ("antenna", design)):
             # such text would come back changed from a file
             if not text.isprintable() or text != text.strip() or (what == "name" and text.startswith("#")):
-                problems.append(
-                    (i, f"{what} {text!r} has unprintable characters, outer spaces or a leading '#'")
-                )
+                problems.append((i, f"{what} {text!r} has unprintable characters, outer spaces or a leading '#'"))
     return problems
 
 
-def _place_problems(
-    labels: Sequence[str], names: Sequence[str], positions: FloatArray
-) -> list[tuple[int, str]]:
+def _place_problems(labels: Sequence[str], names: Sequence[str], positions: FloatArray) -> list[tuple[int, str]]:
     """Coordinates beyond reason, and antennas at the place of an earlier one; rows with NaN are left out."""
     problems = []
     cells: dict[tuple[int, ...], list[int]] = {}

@@ -157,9 +157,7 @@ class Mesh:
         return (self.end - self.start) / self.length[:, None]
 
 
-def graded_lengths(
-    length: float, first: float | None, last: float | None, growth: float, longest: float
-) -> FloatArray:
+def graded_lengths(length: float, first: float | None, last: float | None, growth: float, longest: float) -> FloatArray:
     """Return element lengths that fill a piece of wire, growing geometrically from graded ends.
 
     Parameters

@@ -77,7 +77,10 @@ def crossed_dipoles(
     for index, (port, axis) in enumerate((("x", (1.0, 0.0)), ("y", (0.0, 1.0)))):
         height = height_m - index * separation
         if height - fall <= radius:
-            msg = f"antenna {name!r}: the arms of port {port!r} reach down to {height - fall:g} m; raise height_m or lessen the droop"
+            msg = (
+                f"antenna {name!r}: the arms of port {port!r} reach down to {height - fall:g} m; "
+                "raise height_m or lessen the droop"
+            )
             raise GeometryError(msg)
         u = np.array([axis[0], axis[1], 0.0])
         up = np.array([0.0, 0.0, 1.0])

@@ -111,9 +111,7 @@ def turned(placed: Placed, turn_deg: float, shift_east_m: float = 0.0, shift_nor
         lean_north = float(np.degrees(np.arctan2(whole[1, 2], whole[2, 2])))
         rest = orientation_matrix(0.0, lean_east, lean_north).T @ whole
         rotation = float(np.degrees(np.arctan2(rest[1, 0], rest[0, 0])))
-    return Placed(
-        placed.antenna, (east + shift_east_m, north + shift_north_m, up), rotation, lean_east, lean_north, placed.name
-    )
+    return Placed(placed.antenna, (east + shift_east_m, north + shift_north_m, up), rotation, lean_east, lean_north, placed.name)
 
 
 @dataclass(frozen=True)
@@ -156,9 +154,7 @@ class Station:
             msg = f"ground {ground!r}: expected FreeSpace() or PerfectGround()"
             raise GeometryError(msg)
         named = tuple(
-            p
-            if p.name
-            else Placed(p.antenna, p.position, p.rotation_deg, p.tilt_east_deg, p.tilt_north_deg, f"A{i + 1:03d}")
+            p if p.name else Placed(p.antenna, p.position, p.rotation_deg, p.tilt_east_deg, p.tilt_north_deg, f"A{i + 1:03d}")
             for i, p in enumerate(placed)
         )
         seen: dict[str, int] = {}

@@ -117,7 +117,12 @@ class JobRun:
         from elbowroom.system.self_block import NearSettings
 
         return solution_key(
-            self.station, frequency_hz, mesh_settings(self.job.mesh), NearSettings(), FarSettings(), ("direct", self.job.precision)
+            self.station,
+            frequency_hz,
+            mesh_settings(self.job.mesh),
+            NearSettings(),
+            FarSettings(),
+            ("direct", self.job.precision),
         )
 
     def path_of(self, frequency_hz: float) -> Path:

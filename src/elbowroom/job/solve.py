@@ -27,9 +27,10 @@ PLACE_STEP_M = 1e-6
 """Places that agree to this are one place in a key: a thousandth of a degree of phase at 350 MHz is 2.4e-6 m."""
 
 CONVENTIONS = (
-    "SI units. Time factor exp(+j omega t). Frame: x east, y north, z up, ground surface at z = 0. Unknowns are currents along wires, "
-    "antenna by antenna; column p of currents_per_volt is driven by 1 V behind the reference resistance of port p, every other "
-    "port loaded with it; port current positive from the first to the second end of the wire. Results of a model, not a measurement."
+    "SI units. Time factor exp(+j omega t). Frame: x east, y north, z up, ground surface at z = 0. Unknowns are currents "
+    "along wires, antenna by antenna; column p of currents_per_volt is driven by 1 V behind the reference resistance of "
+    "port p, every other port loaded with it; port current positive from the first to the second end of the wire. "
+    "Results of a model, not a measurement."
 )
 
 SOLUTION_SCHEMA = Schema(
@@ -168,7 +169,11 @@ def _from_record(record: Record, d: Discretisation) -> Solution:
         seconds={k: float(v) for k, v in attributes["seconds"].items()},
     )
     return Solution(
-        d, PortCurrents(a["currents_per_volt"], a["loaded_admittance_s"]), tuple(alone), float(attributes["reference_ohm"]), statistics
+        d,
+        PortCurrents(a["currents_per_volt"], a["loaded_admittance_s"]),
+        tuple(alone),
+        float(attributes["reference_ohm"]),
+        statistics,
     )
 
 

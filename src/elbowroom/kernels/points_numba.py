@@ -114,9 +114,7 @@ def _image_first(x, y, z, x2, y2, z2, turns_per_metre, inverse, rest, inverse2, 
 
 
 @njit(**FAST_JIT_OPTIONS)
-def _image_both(
-    x, y, z, x2, y2, z2, turns_per_metre, a_real, a_imag, b_real, b_imag, next_a, next_a_rest, next_b, next_b_rest
-):
+def _image_both(x, y, z, x2, y2, z2, turns_per_metre, a_real, a_imag, b_real, b_imag, next_a, next_a_rest, next_b, next_b_rest):
     for j in range(x2.size):
         dx, dy, dz, tz = x - x2[j], y - y2[j], z - z2[j], z + z2[j]
         flat = dx * dx + dy * dy

@@ -19,8 +19,6 @@ from numba import njit
 from elbowroom.kernels.accelerate import JIT_OPTIONS
 
 
-
-
 @njit(**JIT_OPTIONS)
 def _ring_means(far, near):
     """Return the means of 1/R and R over a ring whose largest and smallest distances are given.
@@ -238,14 +236,14 @@ def _gauss_count(ratio, phase, order, tolerance):
     while term > tolerance and m < 40:
         m += 1
         term *= 0.5 * phase / m
-    n = int(math.ceil((max(degree, float(m)) + order) / 2.0))
+    n = math.ceil((max(degree, float(m)) + order) / 2.0)
     return min(max(n, order // 2 + 2), 24)
 
 
 @njit(**JIT_OPTIONS)
 def _ring_count(ratio, tolerance):
     """Return how many points of a ring represent its mean at a distance of ``ratio`` radii."""
-    n = int(math.ceil(-math.log(tolerance) / math.log(ratio)))
+    n = math.ceil(-math.log(tolerance) / math.log(ratio))
     return min(max(n, 3), 24)
 
 
@@ -303,9 +301,7 @@ def _separated_panels(
 
 
 @njit(**JIT_OPTIONS)
-def _touching_panels(
-    p, dp, u0, u1, q, dq, v0, v1, e1, e2, radius, radius2, k, n_outer, n_ring, nodes, weights, breaks, out
-):
+def _touching_panels(p, dp, u0, u1, q, dq, v0, v1, e1, e2, radius, radius2, k, n_outer, n_ring, nodes, weights, breaks, out):
     """Add the moments of two short panels whose tubes may touch or cut each other.
 
     The second tube's ring mean is analytic (its logarithm included) and its length is integrated on panels graded
@@ -436,9 +432,7 @@ def angled_moments(start, end, start2, end2, radius, radius2, wavenumber, tolera
 
 
 @njit(**JIT_OPTIONS)
-def angled_moments_all(
-    start, end, start2, end2, radius, radius2, wavenumber, tolerance, touching_points, nodes, weights, out
-):
+def angled_moments_all(start, end, start2, end2, radius, radius2, wavenumber, tolerance, touching_points, nodes, weights, out):
     """Fill ``out`` (E, E', p+1, p'+1) with the moments of every pair of elements of two antennas."""
     for i in range(start.shape[0]):
         for j in range(start2.shape[0]):

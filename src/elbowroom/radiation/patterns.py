@@ -10,6 +10,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import ArrayLike
 from scipy.special import j0
 
 from elbowroom.base.arrays import ComplexArray, FloatArray, check_array
@@ -48,7 +49,7 @@ class DirectionFrame:
         return DirectionFrame(self.theta_rad[rows], self.phi_rad[rows], self.unit[rows])
 
 
-def direction_frame(theta_rad: FloatArray, phi_rad: FloatArray) -> DirectionFrame:
+def direction_frame(theta_rad: ArrayLike, phi_rad: ArrayLike) -> DirectionFrame:
     """Check and flatten directions.
 
     Parameters
@@ -92,9 +93,7 @@ def _sampled_sums(
     fill_phases(unit, points, wavenumber, parts[0], parts[1])
     if circumference:
         # A tube's far field: J0(ka sin psi), psi the angle between the direction and the (mirrored) wire.
-        tangents, index = np.unique(
-            np.column_stack([sampled.tangent * flip, sampled.radius]), axis=0, return_inverse=True
-        )
+        tangents, index = np.unique(np.column_stack([sampled.tangent * flip, sampled.radius]), axis=0, return_inverse=True)
         cosine = np.clip(tangents[:, :3] @ unit.T, -1.0, 1.0)
         parts *= j0(wavenumber * tangents[:, 3:] * np.sqrt(1.0 - cosine**2))[index.ravel()]
     n = sampled.charge.shape[1]

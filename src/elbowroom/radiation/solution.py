@@ -257,9 +257,7 @@ class Solution:
             msg = f"no antenna is called {sorted(unknown)[0]!r}"
             raise ModelRangeError(msg)
         chosen = None if antennas is None else set(antennas)
-        amplitude = np.array(
-            [float((port is None or n.port == port) and (chosen is None or n.antenna in chosen)) for n in names]
-        )
+        amplitude = np.array([float((port is None or n.port == port) and (chosen is None or n.antenna in chosen)) for n in names])
         return pointing_weights(
             self.station.port_positions,
             theta_rad,
@@ -287,5 +285,5 @@ def antenna_power_gain(effective_length: ComplexArray, admittance: complex | Flo
     """Return the realised gain 4 pi eta |h|^2 Re(Y_T)/lambda^2 of each component of an effective length [m]."""
     from elbowroom.base.constants import IMPEDANCE_OF_VACUUM
 
-    scale = 4.0 * np.pi * IMPEDANCE_OF_VACUUM * np.real(admittance) / wavelength**2
-    return scale * np.abs(effective_length) ** 2
+    scale = 4.0 * np.pi * IMPEDANCE_OF_VACUUM * np.asarray(np.real(admittance), dtype=float) / wavelength**2
+    return np.asarray(scale * np.abs(effective_length) ** 2)

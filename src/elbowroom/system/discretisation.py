@@ -274,10 +274,10 @@ def discretise(
     for a, placed in enumerate(station):
         if id(placed.antenna) not in design_index:
             design_index[id(placed.antenna)] = designs.index(placed.antenna)
-        design = design_index[id(placed.antenna)]
+        which = design_index[id(placed.antenna)]
         # Over free space height is just another shift; keeping it in the kind costs nothing but a little memory.
         height = placed.position[2]
-        key = (design, placed.attitude, height)
+        key = (which, placed.attitude, height)
         if key in index_of:
             kind_of[a] = index_of[key]
             continue
@@ -285,7 +285,7 @@ def discretise(
             ends = grounded_ends(placed, conducting=True)
         else:
             ends = np.zeros((len(placed.antenna.wires), 2), dtype=bool)
-        mesh_key = (design, ends.tobytes())
+        mesh_key = (which, ends.tobytes())
         if mesh_key not in meshes:
             made = build_mesh(placed.antenna, wavelength, settings, ends)
             if self_blocks:

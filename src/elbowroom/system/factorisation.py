@@ -13,7 +13,7 @@ from collections.abc import Sequence
 import numpy as np
 from scipy.linalg import get_blas_funcs, inv
 
-from elbowroom.base.arrays import AnyComplexArray
+from elbowroom.base.arrays import AnyComplexArray, FloatArray
 from elbowroom.base.errors import SolveError
 
 
@@ -93,7 +93,10 @@ class TiledSymmetric:
             try:
                 inverse = inv(pivot, check_finite=True)
             except (np.linalg.LinAlgError, ValueError) as cause:
-                msg = f"the impedance matrix cannot be factored (tile {k} of {count}: {cause}); check the model for wires in one place"
+                msg = (
+                    f"the impedance matrix cannot be factored (tile {k} of {count}: {cause}); "
+                    "check the model for wires in one place"
+                )
                 raise SolveError(msg) from cause
             inverse = np.asfortranarray(0.5 * (inverse + inverse.T))
             tiles[k, k] = inverse
@@ -116,7 +119,7 @@ class Factors:
     ) -> None:
         self.sizes, self.offsets, self.tiles, self.dtype = sizes, offsets, tiles, dtype
 
-    def solve(self, right: AnyComplexArray) -> AnyComplexArray:
+    def solve(self, right: AnyComplexArray | FloatArray) -> AnyComplexArray:
         """Return the solutions (n, R) of some right-hand sides (n, R), in the precision of the factors."""
         o, count = self.offsets, len(self.sizes)
         x = np.array(right, dtype=self.dtype)

@@ -31,9 +31,9 @@ def admittance_from_loaded(loaded_admittance: ComplexArray, reference_ohm: float
 
 
 def scattering_from_impedance(impedance: ComplexArray, reference: ArrayLike) -> ComplexArray:
-    """Return the power-wave scattering matrix for complex reference impedances.
+    r"""Return the power-wave scattering matrix for complex reference impedances.
 
-    .. math:: S = F (Z - Z_r^*) (Z + Z_r)^{-1} F^{-1}, \\quad F = (2 \\sqrt{\\Re Z_r})^{-1}
+    .. math:: S = F (Z - Z_r^*) (Z + Z_r)^{-1} F^{-1}, \quad F = (2 \sqrt{\Re Z_r})^{-1}
 
     Parameters
     ----------

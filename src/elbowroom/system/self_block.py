@@ -41,10 +41,10 @@ class NearSettings:
 
 
 def internal_impedance(radius: float, conductivity: float, relative_permeability: float, frequency_hz: float) -> complex:
-    """Return the internal impedance per length of a round wire [ohm/m].
+    r"""Return the internal impedance per length of a round wire [ohm/m].
 
-    .. math:: Z_i = \\frac{\\gamma}{2 \\pi a \\sigma} \\frac{I_0(\\gamma a)}{I_1(\\gamma a)},
-              \\quad \\gamma = \\sqrt{j \\omega \\mu \\sigma}
+    .. math:: Z_i = \frac{\gamma}{2 \pi a \sigma} \frac{I_0(\gamma a)}{I_1(\gamma a)},
+              \quad \gamma = \sqrt{j \omega \mu \sigma}
 
     Exact for a current that does not vary along the wire.
 

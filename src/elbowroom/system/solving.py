@@ -89,7 +89,7 @@ def _probed_residual(matrix: TiledSymmetric, right: FloatArray, x: ComplexArray)
 
 
 def _port_rows(discretisation: Discretisation) -> FloatArray:
-    rows = np.zeros((discretisation.n_unknowns, discretisation.n_ports))
+    rows: FloatArray = np.zeros((discretisation.n_unknowns, discretisation.n_ports))
     for a in range(len(discretisation.station)):
         vectors = discretisation.kinds[discretisation.kind_of[a]].mesh.port_vectors
         rows[discretisation.unknowns_of(a), discretisation.ports_of(a)] = vectors.T
@@ -103,7 +103,7 @@ def solve_isolated(discretisation: Discretisation, reference_ohm: float = REFERE
         vectors = kind.mesh.port_vectors
         loaded = kind.self_block + reference_ohm * (vectors.T @ vectors)
         scale = 1.0 / np.sqrt(np.abs(np.diagonal(loaded)))
-        currents = scale[:, None] * np.linalg.solve(loaded * np.outer(scale, scale), scale[:, None] * vectors.T)
+        currents: ComplexArray = scale[:, None] * np.linalg.solve(loaded * np.outer(scale, scale), scale[:, None] * vectors.T)
         admittance = vectors @ currents
         result.append(PortCurrents(currents, 0.5 * (admittance + admittance.T)))
     return result
