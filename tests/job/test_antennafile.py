@@ -163,7 +163,7 @@ def test_bad_shapes(tmp_path, old, new, expected):
         ("start_m = [0, -0.5, 1.2]", "start_m = [0, -0.5, nan]", "wire[1].start_m[2] = nan: expected a finite number"),
         ("gap_m = 0.02", "gap_m = 2.0", "port[1]: gap of 2 m must be positive and shorter than its wire (1 m)"),
         ("gap_m = 0.015", "gap_m = 0.3", "load[0]: the gap of 0.3 m sticks out of the end of its wire"),
-        ("conductivity_s_per_m = 3.5e7", "conductivity_s_per_m = -1.0", "wire[0].conductivity_s_per_m = -1.0: expected a number above"),
+        ("_per_m = 3.5e7", "_per_m = -1.0", "wire[0].conductivity_s_per_m = -1.0: expected a number above"),
         ("resistance_ohm = 50.0", "resistance_ohm = -50.0", "load[0].resistance_ohm = -50.0: expected a number of at least 0.0"),
         ("capacitance_f = 2e-12", "capacitance_f = 0", "load[0].capacitance_f = 0: expected a number above 0.0"),
         ("resistance_ohm", "resistence_ohm", "load[0].resistence_ohm: unknown key; did you mean 'resistance_ohm'?"),

@@ -9,7 +9,8 @@ from elbowroom import random_disc
 from elbowroom.base.errors import ExportError, JobFileError
 from elbowroom.geometry.wires import segment_distances
 from elbowroom.job.checks import check_station
-from elbowroom.job.jobfile import _SECTIONS, _BeamTable, read_job
+from elbowroom.job.jobfile import read_job
+from elbowroom.job.jobtables import SECTIONS, BeamTable
 from elbowroom.job.solve import solve
 from elbowroom.job.templates import TEMPLATES, template_files, write_template
 
@@ -28,7 +29,7 @@ def test_templates__are_read_and_pass_every_check(tmp_path, name):
 @pytest.mark.parametrize("name", TEMPLATES)
 def test_templates__explain_every_key(name):
     text = template_files(name)["job.toml"].decode()
-    keys = {key for model in _SECTIONS.values() for key in model.model_fields} | set(_BeamTable.model_fields)
+    keys = {key for model in SECTIONS.values() for key in model.model_fields} | set(BeamTable.model_fields)
     assert len(keys) > 20
     assert [key for key in keys if key not in text] == []
 

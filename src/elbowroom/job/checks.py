@@ -61,9 +61,7 @@ class Problem:
         return f"{self.severity}: {self.text}"
 
 
-def check_station(
-    station: Station, frequencies_hz: Sequence[float], mesh: str | MeshSettings = "default"
-) -> list[Problem]:
+def check_station(station: Station, frequencies_hz: Sequence[float], mesh: str | MeshSettings = "default") -> list[Problem]:
     """Return everything that can be found wrong with a station without solving it.
 
     Parameters
@@ -178,9 +176,7 @@ def _meshes(station: Station, wavelength: float, settings: MeshSettings) -> Iter
         stance = (design, placed.attitude, placed.position[2])
         if stance not in ends_of:
             ends_of[stance] = (
-                grounded_ends(placed, conducting=True)
-                if conducting
-                else np.zeros((len(placed.antenna.wires), 2), dtype=bool)
+                grounded_ends(placed, conducting=True) if conducting else np.zeros((len(placed.antenna.wires), 2), dtype=bool)
             )
         ends = ends_of[stance]
         key = (design, ends.tobytes())
@@ -219,7 +215,7 @@ def _wires_between(station: Station) -> Iterator[Problem]:
         starts.append(points[:, 0])
         ends.append(points[:, 1])
         radii.append(np.array([w.radius for w in placed.antenna.wires]))
-    # Spheres that hold all wires of an antenna, widened by half of what is near for its thickest wire.
+    # Spheres that hold all wires of an antenna, widened so that the spheres of antennas that are near meet.
     low = np.array([np.minimum(s, e).min(axis=0) for s, e in zip(starts, ends, strict=True)])
     high = np.array([np.maximum(s, e).max(axis=0) for s, e in zip(starts, ends, strict=True)])
     centre = 0.5 * (low + high)
@@ -291,16 +287,18 @@ def _wires_within(design: Antenna) -> Iterator[Problem]:
         joints = _distinct([*on_second, *on_first], tolerance)
         names = (f"{label}wire {a}", f"wire {b}")
         if len(joints) > 1:
-            yield Problem("error", f"{names[0]} and {names[1]} lie on one another between {_point(joints[0])} and {_point(joints[1])}")
+            where = f"between {_point(joints[0])} and {_point(joints[1])}"
+            yield Problem("error", f"{names[0]} and {names[1]} lie on one another {where}")
         elif joints:
             # Joined, but at so small an angle that the tubes overlap far beyond the joint.
             reach1 = min(_distance_to(p, s2, e2) for p in (s1, e1) if np.linalg.norm(p - joints[0]) > tolerance)
             reach2 = min(_distance_to(p, s1, e1) for p in (s2, e2) if np.linalg.norm(p - joints[0]) > tolerance)
-            if min(reach1, reach2) < total:
+            apart = min(reach1, reach2)
+            if apart < total:
                 yield Problem(
                     "error",
-                    f"{names[0]} and {names[1]} are joined at {_point(joints[0])} but stay within "
-                    f"{min(reach1, reach2) * 1e3:.3g} mm over the whole length of one; the sum of their radii is {total * 1e3:.3g} mm",
+                    f"{names[0]} and {names[1]} are joined at {_point(joints[0])} but stay within {apart * 1e3:.3g} mm "
+                    f"over the whole length of one; the sum of their radii is {total * 1e3:.3g} mm",
                 )
         else:
             advice = (
@@ -406,8 +404,8 @@ def _elements(station: Station, frequencies_hz: Sequence[float], settings: MeshS
                 told.add(f"many {name}")
                 yield Problem(
                     "warning",
-                    f"antenna {name!r}: {m.n_elements} elements and {m.n_unknowns} unknowns at {frequency / 1e6:g} MHz, more than "
-                    f"{MOST_UNKNOWNS_OF_ANTENNA}; time grows with their cube",
+                    f"antenna {name!r}: {m.n_elements} elements and {m.n_unknowns} unknowns at {frequency / 1e6:g} MHz, "
+                    f"more than {MOST_UNKNOWNS_OF_ANTENNA}; time grows with their cube",
                 )
 
 

@@ -42,9 +42,7 @@ import math
 from collections import Counter
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Annotated, Any, Literal
-
-from pydantic import AfterValidator, Field, model_validator
+from typing import Any
 
 from elbowroom.base.arrays import FloatArray
 from elbowroom.base.errors import JobFileError
@@ -53,21 +51,13 @@ from elbowroom.geometry.grounds import FreeSpace, Ground, PerfectGround
 from elbowroom.geometry.layouts import Layout, read_layout
 from elbowroom.geometry.stations import Placed, Station, turned
 from elbowroom.job.antennafile import read_antenna
-from elbowroom.job.tomlfile import Table, counted, fail, key_path, near_miss, read_toml, shown, validate_table
+from elbowroom.job.jobtables import SECTIONS, BeamTable, OnePort, StationTable
+from elbowroom.job.tomlfile import counted, fail, key_path, near_miss, read_toml, shown, validate_table
 
 SCHEMA = 1
 """Version of the keys above."""
 
-LOWEST_HZ, HIGHEST_HZ = 1e6, 1e9
-"""Frequencies outside are taken for a wrong unit: antennas of metres are made for 50 to 350 MHz."""
-
-MOST_FREQUENCIES = 100_000
-
-OnePort = float | complex | str
-"""Termination of one port: ohms, ``"open"`` or ``"short"``."""
-
 _GROUNDS: dict[str, Ground] = {"perfect": PerfectGround(), "free-space": FreeSpace()}
-_UNITS = {"kHz": 1e3, "MHz": 1e6, "GHz": 1e9}
 
 
 def azimuth_to_phi_deg(azimuth_deg: float) -> float:
@@ -77,170 +67,7 @@ def azimuth_to_phi_deg(azimuth_deg: float) -> float:
     return 0.0 if phi >= 360.0 else phi
 
 
-def _frequency(value: float) -> float:
-    if not value > 0.0:
-        msg = f"{value:g} Hz: expected a positive frequency"
-        raise ValueError(msg)
-    if LOWEST_HZ <= value <= HIGHEST_HZ:
-        return value
-    # 60 to 300 in MHz and 60000 in kHz are what a slip looks like; 0.15 is GHz
-    plausible = [unit for unit, factor in _UNITS.items() if 3e7 <= value * factor <= HIGHEST_HZ and value < LOWEST_HZ]
-    guess = f"; {plausible[0]} given for Hz? {value:g} {plausible[0]} is {value * _UNITS[plausible[0]]:g} Hz" if plausible else ""
-    msg = f"{value:g} Hz: expected {LOWEST_HZ:g} to {HIGHEST_HZ:g} Hz{guess}"
-    raise ValueError(msg)
-
-
-def _impedance(value: Any) -> OnePort:  # noqa: ANN401 - TOML gives anything
-    expected = 'expected ohms, [resistance, reactance] in ohms, "open" or "short"'
-    if isinstance(value, str):
-        if value in ("open", "short"):
-            return value
-        msg = f"{shown(value)} is not known; {expected}; {near_miss(value, ('open', 'short'), 'words')}"
-        raise ValueError(msg)
-    parts = value if isinstance(value, list) else [value]
-    if len(parts) not in (1, 2) or (isinstance(value, list) and len(parts) != 2):
-        msg = f"{shown(value)}: {expected}"
-        raise ValueError(msg)
-    if not all(isinstance(p, int | float) and not isinstance(p, bool) for p in parts):
-        msg = f"{shown(value)}: {expected}"
-        raise ValueError(msg)
-    if not all(math.isfinite(p) for p in parts):
-        msg = f'{shown(value)} is not finite; use "open" for an open port'
-        raise ValueError(msg)
-    if parts[0] < 0.0:
-        msg = f"{shown(value)}: a resistance of {parts[0]:g} ohm is negative; a passive termination expected"
-        raise ValueError(msg)
-    return complex(parts[0], parts[1]) if len(parts) == 2 else float(parts[0])
-
-
-def _step_divides(value: float) -> float:
-    intervals = round(90.0 / value) if 0.0 < value <= 90.0 else 0
-    if intervals == 0 or abs(intervals * value - 90.0) > 1e-6 or value < 0.05:
-        msg = f"{value:g} deg: expected a step of at least 0.05 that divides 90 degrees, as 1, 0.5 or 7.5 do"
-        raise ValueError(msg)
-    return value
-
-
-def _plain_name(value: str) -> str:
-    if not value or value != value.strip() or not value.isprintable() or "/" in value:
-        msg = f"{shown(value)}: expected a name without slashes, line ends or outer spaces"
-        raise ValueError(msg)
-    return value
-
-
-_Hertz = Annotated[float, AfterValidator(_frequency)]
-_Ohms = Annotated[Any, AfterValidator(_impedance)]
-_FileName = Annotated[str, Field(min_length=1)]
-
-
-class _StationTable(Table):
-    layout: _FileName
-    antenna: _FileName | None = None
-    antennas: dict[str, _FileName] = {}
-    ground: Literal["perfect", "free-space"] = "perfect"
-    turn_deg: float = 0.0
-    shift_east_m: float = 0.0
-    shift_north_m: float = 0.0
-
-
-class _BandTable(Table):
-    frequency_hz: list[_Hertz] | None = None
-    start_hz: _Hertz | None = None
-    stop_hz: _Hertz | None = None
-    step_hz: Annotated[float, Field(gt=0.0)] | None = None
-
-    @model_validator(mode="after")
-    def _whole(self) -> _BandTable:
-        self.frequencies()
-        return self
-
-    def frequencies(self) -> tuple[float, ...]:
-        """Return the frequencies in rising order; raise ValueError if the keys do not make a band."""
-        steps = {"start_hz": self.start_hz, "stop_hz": self.stop_hz, "step_hz": self.step_hz}
-        given = [key for key, value in steps.items() if value is not None]
-        if self.frequency_hz is not None:
-            if given:
-                msg = f"both frequency_hz and {given[0]} are given; expected the list, or start_hz, stop_hz and step_hz"
-                raise ValueError(msg)
-            return self._listed(self.frequency_hz)
-        if not given:
-            msg = "no frequencies; expected frequency_hz = [...], or start_hz, stop_hz and step_hz"
-            raise ValueError(msg)
-        if self.start_hz is None or self.stop_hz is None or self.step_hz is None:
-            absent = [key for key in steps if key not in given]
-            msg = f"{' and '.join(absent)} missing beside {' and '.join(given)}"
-            raise ValueError(msg)
-        if self.stop_hz < self.start_hz:
-            msg = f"stop_hz = {self.stop_hz:g} lies below start_hz = {self.start_hz:g}; expected start_hz <= stop_hz"
-            raise ValueError(msg)
-        # a stop that is whole steps away but for rounding belongs to the band
-        steps_float = (self.stop_hz - self.start_hz) / self.step_hz
-        if steps_float >= MOST_FREQUENCIES:
-            self._too_many(int(min(steps_float, 1e15)) + 1)
-        count = math.floor(steps_float + 1e-9) + 1
-        return tuple(self.start_hz + i * self.step_hz for i in range(count))
-
-    @staticmethod
-    def _too_many(count: int) -> None:
-        msg = f"{count} frequencies; expected at most {MOST_FREQUENCIES}; take a larger step_hz"
-        raise ValueError(msg)
-
-    @classmethod
-    def _listed(cls, values: list[float]) -> tuple[float, ...]:
-        if not values:
-            msg = "frequency_hz = []: expected at least one frequency"
-            raise ValueError(msg)
-        if len(values) > MOST_FREQUENCIES:
-            cls._too_many(len(values))
-        twice = [value for value, n in Counter(values).items() if n > 1]
-        if twice:
-            msg = f"frequency_hz: {', '.join(f'{v:g}' for v in twice[:5])} Hz appears more than once"
-            raise ValueError(msg)
-        return tuple(sorted(values))
-
-
-class _TerminationTable(Table):
-    impedance_ohm: _Ohms = 100.0
-    ports: dict[str, _Ohms] = {}
-
-
-class _SolverTable(Table):
-    method: Literal["auto", "direct"] = "auto"
-    mesh: Literal["default", "refined"] = "default"
-    precision: Literal["mixed", "double", "single"] = "mixed"
-
-
-class _BeamTable(Table):
-    name: Annotated[str, AfterValidator(_plain_name)]
-    port: str
-    zenith_angle_deg: Annotated[float, Field(ge=0.0, le=90.0)] = 0.0
-    azimuth_deg: Annotated[float, Field(ge=-360.0, le=360.0)] = 0.0
-    antennas: Annotated[list[str], Field(min_length=1)] | None = None
-    delay_step_s: Annotated[float, Field(gt=0.0, le=1e-6)] | None = None
-
-
-class _SkyTable(Table):
-    step_deg: Annotated[float, AfterValidator(_step_divides)] = 1.0
-
-
-class _StoreTable(Table):
-    folder: _FileName = "store"
-
-
-class _OutputTable(Table):
-    folder: _FileName = "results"
-
-
-_SECTIONS: dict[str, type[Table]] = {
-    "station": _StationTable,
-    "band": _BandTable,
-    "termination": _TerminationTable,
-    "solver": _SolverTable,
-    "sky": _SkyTable,
-    "store": _StoreTable,
-    "output": _OutputTable,
-}
-_TOP_KEYS = ("schema", "title", *_SECTIONS, "beam")
+_TOP_KEYS = ("schema", "title", *SECTIONS, "beam")
 
 
 @dataclass(frozen=True)
@@ -283,9 +110,7 @@ class Beam:
         import numpy as np
 
         chosen = None if self.antennas is None else set(self.antennas)
-        return np.array(
-            [float(n.port == self.port and (chosen is None or n.antenna in chosen)) for n in station.port_names]
-        )
+        return np.array([float(n.port == self.port and (chosen is None or n.antenna in chosen)) for n in station.port_names])
 
 
 @dataclass(frozen=True)
@@ -452,7 +277,7 @@ def read_job(path: str | Path) -> Job:
             free = [k for k in _TOP_KEYS if k not in table]
             hint = near_miss(key, free, "known keys")
             # [station] layout = ... written without its table is the likeliest slip
-            homes = [name for name, model in _SECTIONS.items() if key in model.model_fields]
+            homes = [name for name, model in SECTIONS.items() if key in model.model_fields]
             problems.append(f"{key_path(key)}: unknown key; " + (f"it belongs into [{homes[0]}]" if homes else hint))
     schema = table.get("schema", SCHEMA)
     if schema != SCHEMA or not isinstance(schema, int) or isinstance(schema, bool):
@@ -461,7 +286,7 @@ def read_job(path: str | Path) -> Job:
     if not isinstance(title, str) or not title.isprintable():
         problems.append(f"title = {shown(title)}: expected one line of text in quotes")
     parts: dict[str, Any] = {}
-    for key, model in _SECTIONS.items():
+    for key, model in SECTIONS.items():
         if key in ("station", "band") and key not in table:
             problems.append(f"[{key}] is missing")
         else:
@@ -469,7 +294,9 @@ def read_job(path: str | Path) -> Job:
     beams = _beams(table.get("beam", []), problems)
     folder = file.parent
     station_table = parts.get("station")
-    layout, designs, antenna_paths = None, {}, {}
+    layout: Layout | None = None
+    designs: dict[str, Antenna] | None = None
+    antenna_paths: dict[str, Path] = {}
     if station_table is not None:
         layout, designs, antenna_paths = _station_files(folder, station_table, problems)
     if layout is not None and designs is not None:
@@ -510,7 +337,7 @@ def _beams(entries: object, problems: list[str]) -> list[tuple[int, Beam]]:
         return []
     beams = []
     for i, entry in enumerate(entries):
-        b = validate_table(_BeamTable, entry, problems, ("beam", i))
+        b = validate_table(BeamTable, entry, problems, ("beam", i))
         if b is not None:
             antennas = None if b.antennas is None else tuple(b.antennas)
             beams.append((i, Beam(b.name, b.port, b.zenith_angle_deg, b.azimuth_deg, antennas, b.delay_step_s)))
@@ -523,7 +350,7 @@ def _beams(entries: object, problems: list[str]) -> list[tuple[int, Beam]]:
 
 
 def _station_files(
-    folder: Path, table: _StationTable, problems: list[str]
+    folder: Path, table: StationTable, problems: list[str]
 ) -> tuple[Layout | None, dict[str, Antenna] | None, dict[str, Path]]:
     """Return the layout, the designs by name (None unless all in use are there) and their paths."""
 

@@ -19,8 +19,8 @@ from elbowroom.base.errors import ModelRangeError, ResourceError
 from elbowroom.geometry.mesh import MeshSettings
 from elbowroom.geometry.stations import Station
 
-PROCESS_BYTES = 400_000_000
-"""The interpreter with its libraries and compiled kernels [byte]; measured."""
+PROCESS_BYTES = 300_000_000
+"""The interpreter with its libraries and compiled kernels [byte]; 190 MB measured, with room for threads' work space."""
 
 TILE_ORDER = 768
 """Order of the tiles of the matrix, which decides how much is kept beside the half matrix."""
@@ -239,9 +239,7 @@ def _group_bound(folder: Path, limit_name: str, usage_name: str, cache_name: str
     return limit - max(usage - cache, 0)
 
 
-def refuse_if_too_large(
-    prediction: Prediction, *, folder: str | Path | None = None, available_bytes: int | None = None
-) -> None:
+def refuse_if_too_large(prediction: Prediction, *, folder: str | Path | None = None, available_bytes: int | None = None) -> None:
     """Raise ResourceError, with figures, if a prediction exceeds what the machine has.
 
     Parameters
@@ -271,9 +269,7 @@ def refuse_if_too_large(
             place = place.parent
         free = shutil.disk_usage(place).free
         if prediction.disk_bytes > free:
-            found.append(
-                f"{format_bytes(prediction.disk_bytes)} of disk needed in {folder}, {format_bytes(free)} free"
-            )
+            found.append(f"{format_bytes(prediction.disk_bytes)} of disk needed in {folder}, {format_bytes(free)} free")
     if found:
         msg = (
             f"this job is too large here: {'; '.join(found)}; nothing was started. Take fewer antennas, the default mesh "

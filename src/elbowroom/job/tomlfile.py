@@ -122,7 +122,7 @@ def key_path(*parts: str | int) -> str:
     return path
 
 
-def shown(value: Any) -> str:  # noqa: ANN401 - whatever a TOML file may hold
+def shown(value: Any) -> str:
     """Return a value as TOML would write it, shortened."""
     if isinstance(value, bool):
         text = "true" if value else "false"
@@ -150,7 +150,7 @@ _EXPECTED = {
 }
 
 
-def _sentence(error: Any, where: tuple[str | int, ...], known: Iterable[str]) -> str:  # noqa: ANN401 - pydantic's dict
+def _sentence(error: Any, where: tuple[str | int, ...], known: Iterable[str]) -> str:
     kind, context, found = error["type"], error.get("ctx", {}), error["input"]
     path = key_path(*where, *(p for p in error["loc"]))
     if kind == "extra_forbidden":

@@ -1,0 +1,206 @@
+"""The tables of a job file as pydantic models: which keys there are, their defaults, and what each may hold.
+
+What the keys mean is told in `elbowroom.job.jobfile`.
+"""
+
+from __future__ import annotations
+
+import math
+from collections import Counter
+from typing import Annotated, Any, Literal
+
+from pydantic import AfterValidator, Field, model_validator
+
+from elbowroom.job.tomlfile import Table, near_miss, shown
+
+LOWEST_HZ, HIGHEST_HZ = 1e6, 1e9
+"""Frequencies outside are taken for a wrong unit: antennas of metres are made for 50 to 350 MHz."""
+
+MOST_FREQUENCIES = 100_000
+
+OnePort = float | complex | str
+"""Termination of one port: ohms, ``"open"`` or ``"short"``."""
+
+_UNITS = {"kHz": 1e3, "MHz": 1e6, "GHz": 1e9}
+
+
+def _frequency(value: float) -> float:
+    if not value > 0.0:
+        msg = f"{value:g} Hz: expected a positive frequency"
+        raise ValueError(msg)
+    if LOWEST_HZ <= value <= HIGHEST_HZ:
+        return value
+    # 60 to 300 in MHz and 60000 in kHz are what a slip looks like; 0.15 is GHz
+    plausible = [unit for unit, factor in _UNITS.items() if 3e7 <= value * factor <= HIGHEST_HZ and value < LOWEST_HZ]
+    guess = f"; {plausible[0]} given for Hz? {value:g} {plausible[0]} is {value * _UNITS[plausible[0]]:g} Hz" if plausible else ""
+    msg = f"{value:g} Hz: expected {LOWEST_HZ:g} to {HIGHEST_HZ:g} Hz{guess}"
+    raise ValueError(msg)
+
+
+def _impedance(value: Any) -> OnePort:
+    expected = 'expected ohms, [resistance, reactance] in ohms, "open" or "short"'
+    if isinstance(value, str):
+        if value in ("open", "short"):
+            return value
+        msg = f"{shown(value)} is not known; {expected}; {near_miss(value, ('open', 'short'), 'words')}"
+        raise ValueError(msg)
+    parts = value if isinstance(value, list) else [value]
+    if len(parts) not in (1, 2) or (isinstance(value, list) and len(parts) != 2):
+        msg = f"{shown(value)}: {expected}"
+        raise ValueError(msg)
+    if not all(isinstance(p, int | float) and not isinstance(p, bool) for p in parts):
+        msg = f"{shown(value)}: {expected}"
+        raise ValueError(msg)
+    if not all(math.isfinite(p) for p in parts):
+        msg = f'{shown(value)} is not finite; use "open" for an open port'
+        raise ValueError(msg)
+    if parts[0] < 0.0:
+        msg = f"{shown(value)}: a resistance of {parts[0]:g} ohm is negative; a passive termination expected"
+        raise ValueError(msg)
+    return complex(parts[0], parts[1]) if len(parts) == 2 else float(parts[0])
+
+
+def _step_divides(value: float) -> float:
+    intervals = round(90.0 / value) if 0.0 < value <= 90.0 else 0
+    if intervals == 0 or abs(intervals * value - 90.0) > 1e-6 or value < 0.05:
+        msg = f"{value:g} deg: expected a step of at least 0.05 that divides 90 degrees, as 1, 0.5 or 7.5 do"
+        raise ValueError(msg)
+    return value
+
+
+def _plain_name(value: str) -> str:
+    if not value or value != value.strip() or not value.isprintable() or "/" in value:
+        msg = f"{shown(value)}: expected a name without slashes, line ends or outer spaces"
+        raise ValueError(msg)
+    return value
+
+
+_Hertz = Annotated[float, AfterValidator(_frequency)]
+_Ohms = Annotated[Any, AfterValidator(_impedance)]
+_FileName = Annotated[str, Field(min_length=1)]
+
+
+class StationTable(Table):
+    """Where antennas stand and what they are."""
+
+    layout: _FileName
+    antenna: _FileName | None = None
+    antennas: dict[str, _FileName] = Field(default_factory=dict)
+    ground: Literal["perfect", "free-space"] = "perfect"
+    turn_deg: float = 0.0
+    shift_east_m: float = 0.0
+    shift_north_m: float = 0.0
+
+
+class BandTable(Table):
+    """Frequencies: a list, or start, stop and step."""
+
+    frequency_hz: list[_Hertz] | None = None
+    start_hz: _Hertz | None = None
+    stop_hz: _Hertz | None = None
+    step_hz: Annotated[float, Field(gt=0.0)] | None = None
+
+    @model_validator(mode="after")
+    def _whole(self) -> BandTable:
+        self.frequencies()
+        return self
+
+    def frequencies(self) -> tuple[float, ...]:
+        """Return the frequencies in rising order; raise ValueError if the keys do not make a band."""
+        steps = {"start_hz": self.start_hz, "stop_hz": self.stop_hz, "step_hz": self.step_hz}
+        given = [key for key, value in steps.items() if value is not None]
+        if self.frequency_hz is not None:
+            if given:
+                msg = f"both frequency_hz and {given[0]} are given; expected the list, or start_hz, stop_hz and step_hz"
+                raise ValueError(msg)
+            return self._listed(self.frequency_hz)
+        if not given:
+            msg = "no frequencies; expected frequency_hz = [...], or start_hz, stop_hz and step_hz"
+            raise ValueError(msg)
+        if self.start_hz is None or self.stop_hz is None or self.step_hz is None:
+            absent = [key for key in steps if key not in given]
+            msg = f"{' and '.join(absent)} missing beside {' and '.join(given)}"
+            raise ValueError(msg)
+        if self.stop_hz < self.start_hz:
+            msg = f"stop_hz = {self.stop_hz:g} lies below start_hz = {self.start_hz:g}; expected start_hz <= stop_hz"
+            raise ValueError(msg)
+        # a stop that is whole steps away but for rounding belongs to the band
+        steps_float = (self.stop_hz - self.start_hz) / self.step_hz
+        if steps_float >= MOST_FREQUENCIES:
+            self._too_many(int(min(steps_float, 1e15)) + 1)
+        count = math.floor(steps_float + 1e-9) + 1
+        return tuple(self.start_hz + i * self.step_hz for i in range(count))
+
+    @staticmethod
+    def _too_many(count: int) -> None:
+        msg = f"{count} frequencies; expected at most {MOST_FREQUENCIES}; take a larger step_hz"
+        raise ValueError(msg)
+
+    @classmethod
+    def _listed(cls, values: list[float]) -> tuple[float, ...]:
+        if not values:
+            msg = "frequency_hz = []: expected at least one frequency"
+            raise ValueError(msg)
+        if len(values) > MOST_FREQUENCIES:
+            cls._too_many(len(values))
+        twice = [value for value, n in Counter(values).items() if n > 1]
+        if twice:
+            msg = f"frequency_hz: {', '.join(f'{v:g}' for v in twice[:5])} Hz appears more than once"
+            raise ValueError(msg)
+        return tuple(sorted(values))
+
+
+class TerminationTable(Table):
+    """What ports see."""
+
+    impedance_ohm: _Ohms = 100.0
+    ports: dict[str, _Ohms] = Field(default_factory=dict)
+
+
+class SolverTable(Table):
+    """How to solve."""
+
+    method: Literal["auto", "direct"] = "auto"
+    mesh: Literal["default", "refined"] = "default"
+    precision: Literal["mixed", "double", "single"] = "mixed"
+
+
+class BeamTable(Table):
+    """One beam."""
+
+    name: Annotated[str, AfterValidator(_plain_name)]
+    port: str
+    zenith_angle_deg: Annotated[float, Field(ge=0.0, le=90.0)] = 0.0
+    azimuth_deg: Annotated[float, Field(ge=-360.0, le=360.0)] = 0.0
+    antennas: Annotated[list[str], Field(min_length=1)] | None = None
+    delay_step_s: Annotated[float, Field(gt=0.0, le=1e-6)] | None = None
+
+
+class SkyTable(Table):
+    """Directions of maps."""
+
+    step_deg: Annotated[float, AfterValidator(_step_divides)] = 1.0
+
+
+class StoreTable(Table):
+    """Where solved currents are kept."""
+
+    folder: _FileName = "store"
+
+
+class OutputTable(Table):
+    """Where tables and pictures go."""
+
+    folder: _FileName = "results"
+
+
+SECTIONS: dict[str, type[Table]] = {
+    "station": StationTable,
+    "band": BandTable,
+    "termination": TerminationTable,
+    "solver": SolverTable,
+    "sky": SkyTable,
+    "store": StoreTable,
+    "output": OutputTable,
+}
+"""Tables by name; ``[[beam]]`` apart, of which there may be several."""
