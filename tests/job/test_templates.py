@@ -7,12 +7,15 @@ import pytest
 
 from elbowroom import random_disc
 from elbowroom.base.errors import ExportError, JobFileError
+from elbowroom.geometry.mesh import mesh_settings
 from elbowroom.geometry.wires import segment_distances
 from elbowroom.job.checks import check_station
 from elbowroom.job.jobfile import read_job
 from elbowroom.job.jobtables import SECTIONS, BeamTable
-from elbowroom.job.solve import solve
+from elbowroom.job.solve import solution_key, solve
 from elbowroom.job.templates import TEMPLATES, template_files, write_template
+from elbowroom.system.discretisation import FarSettings
+from elbowroom.system.self_block import NearSettings
 
 DEMO = Path(__file__).parents[2] / "demo_data"
 
@@ -95,3 +98,19 @@ def test_unknown_template__gets_a_hint(tmp_path):
         write_template("demos", tmp_path)
     with pytest.raises(JobFileError, match="no template 'zzz'; known: small, demo"):
         template_files("zzz")
+
+
+def test_turned_and_shifted_job__is_the_same_solve(tmp_path):
+    path = write_template("small", tmp_path)[0]
+    text = path.read_text()
+
+    def key():
+        settings = (mesh_settings("default"), NearSettings(), FarSettings(), ("direct", "mixed"))
+        return solution_key(read_job(path).station(), 110e6, *settings)
+
+    before = key()
+    path.write_text(text.replace("turn_deg = 0.0", "turn_deg = 37.0").replace("shift_east_m = 0.0", "shift_east_m = 12.5"))
+    assert read_job(path).turn_deg == 37.0
+    assert key() == before
+    (tmp_path / "layout.csv").write_text((tmp_path / "layout.csv").read_text().replace("-0.627", "-0.628", 1))
+    assert key() != before
