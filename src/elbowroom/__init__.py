@@ -37,7 +37,7 @@ _HOMES = {
 __all__ = [*_HOMES, "__version__"]
 
 
-def __getattr__(name: str) -> Any:  # noqa: ANN401 - any public object
+def __getattr__(name: str) -> Any:
     """Load a public name from where it lives."""
     if name not in _HOMES:
         msg = f"module 'elbowroom' has no attribute {name!r}"

@@ -2,7 +2,6 @@
 
 import numpy as np
 import pytest
-from helpers import FREQUENCY_HZ, cluster, crossed
 
 from elbowroom.base.errors import StoreError
 from elbowroom.geometry.directions import hemisphere_grid
@@ -11,6 +10,7 @@ from elbowroom.geometry.stations import Placed, Station
 from elbowroom.job import solve as solve_module
 from elbowroom.job.solve import SOLUTION_SCHEMA, solve
 from elbowroom.store import Hdf5Store, MemoryStore
+from helpers import FREQUENCY_HZ, cluster, crossed
 
 SKY = hemisphere_grid(15.0)
 

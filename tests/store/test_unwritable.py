@@ -105,7 +105,7 @@ def test_full_disk__at_any_moment_of_a_write(tmp_path, reports, mount):
                 store.put(key_of(0), record_of(1, n_ports=40))
                 outcomes.append("stored")
             except StoreError as error:
-                assert "no space left" in str(error) or "File too large" in str(error)  # noqa: PT017
+                assert "no space left" in str(error) or "File too large" in str(error)
                 outcomes.append("refused")
             leave(None)
             expected = record_of(1 if outcomes[-1] == "stored" else 0, n_ports=40)

@@ -53,3 +53,21 @@ def test_factorise__singular_matrix_is_a_solve_error():
 def test_factorise__not_finite_is_a_solve_error():
     with pytest.raises(SolveError, match="cannot be factored"):
         tiled(np.full((4, 4), np.nan), (2, 2)).factorise()
+
+
+@pytest.mark.parametrize("dtype", [np.complex128, np.complex64])
+def test_astype__shares_nothing_with_the_original(dtype):
+    rng = np.random.default_rng(9)
+    matrix = passive_matrix(rng, 8)
+    held = tiled(matrix, (5, 3), dtype)
+    before = held.dense()
+    held.astype(dtype).factorise()
+    np.testing.assert_array_equal(held.dense(), before)
+
+
+def test_lowered__keeps_single_precision_only():
+    rng = np.random.default_rng(10)
+    held = tiled(passive_matrix(rng, 8), (5, 3))
+    size = held.nbytes
+    assert held.lowered().nbytes == size // 2
+    assert held.dtype == np.complex64

@@ -38,12 +38,9 @@ FACTOR_EFFICIENCY = 0.74
 DOUBLE_COST = 2.3
 """Time of double-precision products over that of single ones; measured."""
 
-EXCITATION_OPERATIONS = {"mixed": 83.0, "double": 16.0, "single": 8.0}
-"""Operations per n^2 P of solving for the ports, in single-precision operations.
-
-One solve with the factors takes 8 and one product with the matrix 8, twice that in double precision.  Single: one solve.
-Double: one solve, which needs no refinement.  Mixed: two to three refinements; 69 s for n = 16384 and P = 512 at 165 GFLOP/s,
-measured."""
+EXCITATION_OPERATIONS = {"mixed": 42.0, "double": 16.0, "single": 7.0}
+"""Operations per n^2 P of solving for the ports, in single-precision operations: 4.4, 1.6 and 0.74 s for n = 8192 and
+P = 256 at 165 GFLOP/s, measured.  Mixed takes two solves and one product with the matrix in double."""
 
 _CALIBRATION_ORDER = 1024
 
@@ -114,9 +111,9 @@ def predict(
     )
     tile = min(n, TILE_ORDER)
     half = 0.5 * n * (n + tile)
-    # All precisions keep the matrix in double to measure the residual, and the factors beside it.
+    # The matrix stays in double to measure the residual, with the factors beside it; single turns it into its factors.
     factor_bytes = 16.0 if precision == "double" else 8.0
-    matrix = (16.0 + factor_bytes) * half
+    matrix = 16.0 * half if precision == "single" else (16.0 + factor_bytes) * half
     factorising = n * tile * factor_bytes
     # Sources (real) and solutions; product, difference and correction of a refinement.
     exciting = n * p * (8.0 + 16.0 + 16.0 + 16.0 + factor_bytes)

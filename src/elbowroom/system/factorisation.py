@@ -49,11 +49,18 @@ class TiledSymmetric:
         return sum(tile.nbytes for tile in self.tiles.values())
 
     def astype(self, dtype: type) -> TiledSymmetric:
-        """Return a copy in another precision."""
+        """Return a copy in another precision, or in the same; nothing is shared."""
         other = TiledSymmetric.__new__(TiledSymmetric)
         other.sizes, other.offsets, other.dtype = self.sizes, self.offsets, np.dtype(dtype)
-        other.tiles = {key: np.asfortranarray(tile, dtype=dtype) for key, tile in self.tiles.items()}
+        other.tiles = {key: np.array(tile, dtype=dtype, order="F") for key, tile in self.tiles.items()}
         return other
+
+    def lowered(self) -> TiledSymmetric:
+        """Turn the tiles into single precision one by one, freeing the double ones, and return the matrix."""
+        for key in self.tiles:
+            self.tiles[key] = np.array(self.tiles[key], dtype=np.complex64, order="F")
+        self.dtype = np.dtype(np.complex64)
+        return self
 
     def dense(self) -> AnyComplexArray:
         """Return the whole matrix, for small cases and tests."""
