@@ -202,3 +202,24 @@ class Station:
     def port_positions(self) -> FloatArray:
         """Position of the antenna of each port, (P, 3) [m]."""
         return self.positions[self.port_antennas]
+
+    @property
+    def port_nominal_phi_rad(self) -> FloatArray:
+        """Direction of each port's co-polarisation at zenith, (P,), from east towards north [rad].
+
+        The nominal azimuth of the design's port, or else that of the wire that carries its gap, turned with the antenna;
+        0 for a vertical wire.
+        """
+        angles = []
+        for placed in self.placed:
+            for port in placed.antenna.ports:
+                if port.nominal_azimuth_deg is None:
+                    wire = placed.antenna.wires[port.wire]
+                    own = np.asarray(wire.end) - np.asarray(wire.start)
+                else:
+                    nominal = np.deg2rad(port.nominal_azimuth_deg)
+                    own = np.array([np.cos(nominal), np.sin(nominal), 0.0])
+                along = placed.orientation @ own
+                level = float(np.hypot(along[0], along[1]))
+                angles.append(np.arctan2(along[1], along[0]) if level > 1e-9 * float(np.linalg.norm(along)) else 0.0)
+        return np.array(angles)

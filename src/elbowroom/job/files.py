@@ -1,0 +1,53 @@
+"""Files that leave the program: written whole under another name, then renamed, so that none is ever half there."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
+
+from elbowroom.base.errors import ElbowroomError, ExportError
+
+
+@contextmanager
+def written_whole(path: str | Path) -> Iterator[Path]:
+    """Give a temporary name beside the target; rename it to the target when the block ends well.
+
+    An older file of the target's name stays as it was until then, and for good if the block fails.
+
+    Parameters
+    ----------
+    path : str or Path
+        The target; its folder is made if need be.
+
+    Yields
+    ------
+    Path
+        Where to write.
+
+    Raises
+    ------
+    ExportError
+        If the folder or the file cannot be written.
+    """
+    target = Path(path)
+    temporary = target.with_name(f".{target.name}.{os.getpid()}.part")
+    try:
+        target.parent.mkdir(parents=True, exist_ok=True)
+        yield temporary
+        with temporary.open("rb") as file:
+            os.fsync(file.fileno())
+        temporary.replace(target)
+    except ElbowroomError:
+        # Some are operating-system errors by birth; what they say must not be put down to this file.
+        raise
+    except OSError as cause:
+        msg = f"cannot write {target}: {cause.strerror or cause}"
+        raise ExportError(msg) from cause
+    finally:
+        # Gone after a rename; left over after a failure or an interrupt.
+        try:
+            temporary.unlink(missing_ok=True)
+        except OSError:
+            pass
