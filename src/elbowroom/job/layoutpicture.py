@@ -1,0 +1,252 @@
+"""A picture of a station: where its antennas stand, seen from above, and what one of each design looks like."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import numpy as np
+from matplotlib.collections import LineCollection
+from matplotlib.lines import Line2D
+
+from elbowroom.base.arrays import FloatArray
+from elbowroom.base.constants import wavelength_of
+from elbowroom.geometry.antennas import Antenna
+from elbowroom.geometry.grounds import FreeSpace
+from elbowroom.geometry.stations import Placed, Station
+from elbowroom.job.sheets import HALO, PORT_COLOURS, band_text, legend_above, printable, sheet, shortened, termination_text
+from elbowroom.system.terminations import Termination
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+
+_NAMED_ANTENNAS = 30
+_MOST_DESIGNS = 4
+_MARK = "#b3123f"
+
+
+def draw_layout(
+    station: Station,
+    path: str | Path,
+    *,
+    title: str = "",
+    frequencies_hz: Sequence[float] = (),
+    termination: Termination | None = None,
+) -> Path:
+    """Draw a station as seen from above, and one antenna of each design from the side.
+
+    Parameters
+    ----------
+    station : Station
+        What to draw; nothing is solved.
+    path : str or Path
+        The PNG file.
+    title : str, optional
+        Title of the job.
+    frequencies_hz : sequence of float, optional
+        Frequencies of the job [Hz]; the spacing is told in wavelengths at the lowest and the highest one.
+    termination : optional
+        What the ports see [ohm].
+
+    Returns
+    -------
+    Path
+        The file.
+
+    Raises
+    ------
+    ExportError
+        If the file cannot be written.
+    """
+    pair, spacing, diameter = _extent(station)
+    n_ports = len(station.port_names)
+    counts = f"{_counted(len(station), 'antenna')}, {_counted(n_ports, 'port')}"
+    details = [title, counts, _spacing_text(station, pair, spacing, diameter, frequencies_hz)]
+    caption = [band_text(frequencies_hz), "east and north from the reference point of the layout"]
+    if termination is not None:
+        caption.append(termination_text(termination))
+    colours = _port_colours(station)
+    shown = station.designs[:_MOST_DESIGNS]
+    if len(station.designs) > len(shown):
+        caption.append(f"side views of {len(shown)} of {len(station.designs)} designs")
+    views = [(design, direction) for design in shown for direction in ("south", "east")]
+    if len(shown) > 2:
+        views = [(design, "south") for design in shown]
+    with sheet(path, "Station layout", details, caption, size=(12.0, 8.0)) as figure:
+        grid = figure.add_gridspec(len(views), 2, width_ratios=(1.75, 1.0))
+        plan = figure.add_subplot(grid[:, 0])
+        handles = _draw_plan(plan, station, colours, pair)
+        legend_above(figure, handles, [str(handle.get_label()) for handle in handles])
+        plan.set_title("seen from above", loc="left")
+        for row, (design, direction) in enumerate(views):
+            axes = figure.add_subplot(grid[row, 1])
+            _draw_side(axes, station, design, direction, colours)
+    return Path(path)
+
+
+def _counted(count: int, noun: str) -> str:
+    return f"{count} {noun}{'' if count == 1 else 's'}"
+
+
+def _extent(station: Station) -> tuple[tuple[int, int] | None, float, float]:
+    """Return the closest pair, its distance and the largest distance between two antennas [m]."""
+    from scipy.spatial import cKDTree
+
+    places = station.positions
+    if len(places) == 1:
+        return None, np.inf, 0.0
+    distance, index = cKDTree(places).query(places, k=2)
+    # Of antennas in one place either may come first; the farther column is never the antenna itself then.
+    first = int(np.argmin(distance[:, 1]))
+    second = int(index[first, 1]) if index[first, 1] != first else int(index[first, 0])
+    diameter = max(float(np.max(np.linalg.norm(places[i:] - places[i], axis=1))) for i in range(len(places)))
+    return (first, second), float(distance[first, 1]), diameter
+
+
+def _spacing_text(
+    station: Station, pair: tuple[int, int] | None, spacing: float, diameter: float, frequencies_hz: Sequence[float]
+) -> str:
+    if pair is None:
+        return ""
+    names = " and ".join(printable(shortened(station.placed[i].name, 16)) for i in pair)
+    waves = ""
+    if len(frequencies_hz):
+        waves = " to ".join(f"{spacing / wavelength_of(f):.2f}" for f in sorted({min(frequencies_hz), max(frequencies_hz)}))
+        waves = f" = {waves} wavelengths"
+    return f"closest pair {names}: {spacing:.3g} m{waves}   |   diameter {diameter:.3g} m"
+
+
+def _port_colours(station: Station) -> dict[str, str]:
+    """Return a colour for each port name, in order of first use."""
+    names = dict.fromkeys(n.port for n in station.port_names)
+    return {name: PORT_COLOURS[i % len(PORT_COLOURS)] for i, name in enumerate(names)}
+
+
+def _wire_ends(placed: Placed) -> FloatArray:
+    """Return the ends of the wires of a placed antenna in the station frame, (W, 2, 3) [m]."""
+    return placed.to_station(np.array([(w.start, w.end) for w in placed.antenna.wires]))
+
+
+def _draw_plan(axes: Axes, station: Station, colours: dict[str, str], pair: tuple[int, int] | None) -> list[Line2D]:
+    wires = [_wire_ends(placed) for placed in station]
+    flat = np.concatenate(wires)[:, :, :2]
+    few = len(station) <= _NAMED_ANTENNAS
+    axes.add_collection(LineCollection(list(flat), colors="0.45", linewidths=1.6 if few else 0.8, zorder=2))
+    reach = np.array([np.max(np.linalg.norm(w[:, :, :2] - p.position[:2], axis=-1)) for w, p in zip(wires, station, strict=True)])
+    owner, level = station.port_antennas, _level_ports(station)
+    arrow = np.maximum(reach, 1e-3)[owner]
+    heading = station.port_nominal_phi_rad
+    port_of = np.array([n.port for n in station.port_names])
+    for name, colour in colours.items():
+        mine = level & (port_of == name)
+        axes.quiver(
+            *station.port_positions[mine, :2].T,
+            *(arrow[mine] * np.array([np.cos(heading[mine]), np.sin(heading[mine])])),
+            angles="xy", scale_units="xy", scale=1.0, units="dots", width=2.6 if few else 1.4,
+            headwidth=4.0, headlength=4.5, headaxislength=4.0, color=colour, zorder=3,
+        )  # fmt: skip
+        upright = ~level & (port_of == name)
+        axes.plot(*station.port_positions[upright, :2].T, "o", ms=5 if few else 3, mfc="none", mec=colour, zorder=3)
+    if pair is not None:
+        axes.plot(*station.positions[list(pair), :2].T, "-", color=_MARK, lw=1.2, zorder=4)
+        axes.plot(*station.positions[list(pair), :2].T, "o", ms=11 if few else 8, mfc="none", mec=_MARK, mew=1.1, zorder=4)
+    if few:
+        for placed, own in zip(station, reach, strict=True):
+            # At 45 degrees between the arms of a crossed antenna there is room.
+            where = np.asarray(placed.position[:2]) + 0.30 * max(own, 0.05) * np.array([1.0, -1.0])
+            axes.annotate(
+                printable(shortened(placed.name, 12)),
+                where,
+                ha="left",
+                va="top",
+                fontsize=8.5,
+                color="0.15",
+                zorder=5,
+                path_effects=HALO,
+            )
+    low, high = flat.reshape(-1, 2).min(axis=0), flat.reshape(-1, 2).max(axis=0)
+    half = 0.54 * float(np.max(high - low)) + 1e-2
+    middle = 0.5 * (low + high)
+    axes.set_xlim(middle[0] - half, middle[0] + half)
+    axes.set_ylim(middle[1] - half, middle[1] + half)
+    axes.set_aspect("equal")
+    axes.set_xlabel("east [m]")
+    axes.set_ylabel("north [m]")
+    axes.grid(color="0.92", lw=0.6)
+    axes.set_axisbelow(True)
+    arrow_style = {"arrowstyle": "-|>,head_width=0.3,head_length=0.6", "color": "0.1", "lw": 1.4}
+    axes.annotate(
+        "", xy=(1.03, 0.96), xytext=(1.03, 0.87), xycoords="axes fraction", textcoords="axes fraction", arrowprops=arrow_style
+    )
+    axes.text(1.03, 0.965, "N", transform=axes.transAxes, ha="center", va="bottom", fontweight="bold")
+    handles = [Line2D([], [], color="0.45", lw=1.6, label="wires")]
+    handles += [
+        Line2D([], [], color=colour, lw=2.0, label=f"port {printable(shortened(name, 16))}: co-polarisation")
+        if np.any(level[port_of == name])
+        else Line2D([], [], ls="", marker="o", mfc="none", mec=colour, label=f"port {printable(shortened(name, 16))}: vertical")
+        for name, colour in colours.items()
+    ]
+    if pair is not None:
+        handles.append(Line2D([], [], color=_MARK, marker="o", mfc="none", lw=1.2, label="closest pair"))
+    return handles
+
+
+def _level_ports(station: Station) -> np.ndarray:
+    """Return whether each port has a direction in the horizontal plane, (P,)."""
+    level = []
+    for placed in station:
+        for port in placed.antenna.ports:
+            along = placed.orientation @ placed.antenna.wires[port.wire].direction
+            level.append(port.nominal_azimuth_deg is not None or float(np.hypot(along[0], along[1])) > 1e-6)
+    return np.array(level)
+
+
+def _draw_side(axes: Axes, station: Station, design: Antenna, direction: str, colours: dict[str, str]) -> None:
+    """Draw the first antenna of a design as seen from the south or the east, with its gaps and the ground."""
+    placed = next(p for p in station if p.antenna is design or p.antenna == design)
+    ends = _wire_ends(placed)
+    # From the south east lies on the right, from the east north does.
+    across = 0 if direction == "south" else 1
+    offset = placed.position[across]
+    lines = np.stack([ends[:, :, across] - offset, ends[:, :, 2]], axis=-1)
+    axes.add_collection(LineCollection(list(lines), colors="0.35", linewidths=2.0, capstyle="round", zorder=2))
+    count = sum(p.antenna == design for p in station)
+    points = lines.reshape(-1, 2)
+    width = max(float(np.ptp(points[:, 0])), 0.05)
+    grounded = not isinstance(station.ground, FreeSpace)
+    bottom = min(0.0, float(points[:, 1].min())) if grounded else float(points[:, 1].min())
+    top = float(points[:, 1].max())
+    height = max(top - bottom, 0.05)
+    for i, (port, gap) in enumerate(zip(design.ports, design.port_gaps, strict=True)):
+        middle = placed.to_station(design.wires[gap.wire].point(0.5 * (gap.low + gap.high)))
+        at = (middle[across] - offset, middle[2])
+        axes.plot(*at, "s", ms=5.5, mfc="white", mec=colours[port.name], mew=1.6, zorder=4)
+        axes.annotate(
+            printable(shortened(port.name, 12)), at, xytext=(9, 8) if i % 2 == 0 else (-11, 13),
+            textcoords="offset points", ha="left" if i % 2 == 0 else "right", va="center",
+            color=colours[port.name], fontweight="bold", zorder=5,
+        )  # fmt: skip
+    for gap in design.load_gaps:
+        middle = placed.to_station(design.wires[gap.wire].point(0.5 * (gap.low + gap.high)))
+        axes.plot(middle[across] - offset, middle[2], "D", ms=5, color="0.1", zorder=4)
+    middle_x = 0.5 * (points[:, 0].min() + points[:, 0].max())
+    half = 0.62 * max(width, 0.8 * height)
+    axes.set_xlim(middle_x - half, middle_x + half)
+    if grounded:
+        axes.axhspan(bottom - 0.2 * height, 0.0, facecolor="0.93", edgecolor="0.7", hatch="////", lw=0.0, zorder=0)
+        axes.axhline(0.0, color="0.2", lw=1.3, zorder=1)
+        axes.text(0.985, 0.02, f"{station.ground.name} ground", transform=axes.transAxes, ha="right", va="bottom", fontsize=8,
+                  bbox={"facecolor": "white", "edgecolor": "none", "pad": 1.5})  # fmt: skip
+    axes.set_ylim(bottom - (0.16 if grounded else 0.1) * height, top + 0.25 * height)
+    axes.set_aspect("equal")
+    name = printable(shortened(design.name, 28))
+    axes.set_title(f"{name}, from the {direction}", loc="left")
+    radii = sorted({w.radius * 1e3 for w in design.wires})
+    radius = f"{radii[0]:.3g}" if len(radii) == 1 else f"{radii[0]:.3g} to {radii[-1]:.3g}"
+    name_of_it = printable(shortened(placed.name, 16)) + (f", one of {count}" if count > 1 else "")
+    ground = "" if grounded else ", free space"
+    axes.text(0.02, 0.98, f"{name_of_it}; wire radius {radius} mm{ground}", transform=axes.transAxes,
+              ha="left", va="top", fontsize=8, color="0.35")  # fmt: skip
+    axes.set_xlabel(f"{'east' if direction == 'south' else 'north'} of its centre [m]")
+    axes.set_ylabel("height [m]")

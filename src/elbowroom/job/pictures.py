@@ -1,0 +1,7 @@
+"""Pictures, all of them: their parts are in `sheets`, `layoutpicture`, `portpicture` and `skymaps`."""
+
+from elbowroom.job.layoutpicture import draw_layout as draw_layout
+from elbowroom.job.portpicture import PortImpedances as PortImpedances
+from elbowroom.job.portpicture import draw_impedance as draw_impedance
+from elbowroom.job.portpicture import port_impedances as port_impedances
+from elbowroom.job.sheets import picture_name as picture_name
