@@ -4,31 +4,16 @@ from __future__ import annotations
 
 import sys
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import click
 
 from elbowroom import __version__
 from elbowroom.base.errors import ElbowroomError
-
-if TYPE_CHECKING:
-    from elbowroom.cli.screen import Screen
-    from elbowroom.job.pipeline import JobRun
+from elbowroom.cli.common import FREQUENCIES, JOB, exit_on, make_screen, modes, open_job, solve_all
+from elbowroom.cli.results import compare, export
 
 INTERRUPTED_EXIT_CODE = 130
-
-JOB = click.argument("job", type=click.Path(path_type=Path))
-FREQUENCIES = click.option(
-    "--frequency-hz", "frequencies_hz", type=float, multiple=True, metavar="HZ",
-    help="Only this frequency of the job; may be given several times.",
-)  # fmt: skip
-
-
-def modes(command: Any) -> Any:
-    """Add ``--quiet`` and ``--json``."""
-    command = click.option("--json", "mode", flag_value="json", help="One JSON object a line, for scripts.")(command)
-    return click.option("--quiet", "mode", flag_value="quiet", help="Results and errors only.")(command)
-
 
 @click.group(
     context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 110},
@@ -42,71 +27,6 @@ def cli() -> None:
     A job file says what to solve: where the antennas stand, what they are made of, the ground, the frequencies and what the
     ports see.  Solved currents are kept in a store, so that nothing is solved twice and an interrupted run goes on where it was.
     """
-
-
-def _screen(mode: str | None) -> Screen:
-    from elbowroom.cli.screen import Screen
-
-    return Screen(mode or "normal")
-
-
-def _open(job: Path, frequencies_hz: tuple[float, ...], screen: Screen) -> JobRun:
-    from elbowroom.job.jobfile import read_job
-    from elbowroom.job.pipeline import JobRun
-
-    return JobRun(read_job(job), frequencies_hz=frequencies_hz or None, report=lambda damage: screen.warn(str(damage)))
-
-
-def _prepare(run: JobRun, screen: Screen) -> list:
-    """Show the settings and the doubts, refuse what cannot work, and return the plan."""
-    for line in run.job.resolved_lines():
-        screen.say(f"  {line}")
-    for problem in run.problems():
-        if problem.severity != "error":
-            screen.warn(problem.text)
-    return run.prepare()
-
-
-def _solve_all(run: JobRun, screen: Screen) -> tuple[list[float], list]:
-    """Solve what the store lacks; return the frequencies that are solved and the failures."""
-    from elbowroom.cli.screen import SolveProgress, readable_seconds
-    from elbowroom.job.pipeline import Failure
-
-    units = _prepare(run, screen)
-    missing = {u.frequency_hz: u.prediction.seconds for u in units if not u.stored}
-    screen.say(f"{len(units)} frequencies, {len(units) - len(missing)} in the store already, {len(missing)} to solve")
-    rows, solved, failures = [], [], []
-    with SolveProgress(screen, missing) as progress:
-        for frequency, outcome in zip(run.frequencies_hz, run.solutions(progress), strict=True):
-            progress.finished(frequency)
-            if isinstance(outcome, Failure):
-                failures.append(outcome)
-                screen.emit("failed", frequency_hz=frequency, error=str(outcome.error))
-                continue
-            solved.append(frequency)
-            s = outcome.statistics
-            total = sum(s.seconds.values())
-            state = "solved" if frequency in missing else "from store"
-            rows.append(
-                [frequency / 1e6, state, s.n_unknowns, s.n_ports, f"{s.relative_residual:.1e}", f"{s.mesh_error:.1e}",
-                 readable_seconds(total)]
-            )  # fmt: skip
-            screen.emit(
-                "unit", frequency_hz=frequency, state=state, unknowns=s.n_unknowns, ports=s.n_ports,
-                relative_residual=s.relative_residual, mesh_error=s.mesh_error, seconds=total, file=str(run.path_of(frequency)),
-            )  # fmt: skip
-    if rows:
-        screen.table("Solutions", ["frequency [MHz]", "state", "unknowns", "ports", "residual", "mesh error", "solve time"], rows)
-        screen.say("residual: of the linear system; mesh error: change of an isolated antenna's admittance on a finer mesh")
-    for failure in failures:
-        screen.error.print(f"failed at {failure.frequency_hz / 1e6:g} MHz: {failure.error}", markup=False)
-    return solved, failures
-
-
-def _exit_on(failures: list) -> None:
-    """End with the code of the first failure; the others' causes are on the screen."""
-    if failures:
-        sys.exit(failures[0].error.exit_code)
 
 
 @cli.command()
@@ -186,8 +106,8 @@ def inspect(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> N
     from elbowroom.job.checks import mesh_statistics
     from elbowroom.job.plan import available_memory_bytes
 
-    screen = _screen(mode)
-    run = _open(job, frequencies_hz, screen)
+    screen = make_screen(mode)
+    run = open_job(job, frequencies_hz, screen)
     for line in run.job.resolved_lines():
         screen.say(f"  {line}")
     problems = run.problems()
@@ -234,9 +154,13 @@ def solve(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> Non
 
     What the store holds already is not solved again.  The run may be interrupted at any time; the next one goes on.
     """
-    screen = _screen(mode)
-    _, failures = _solve_all(_open(job, frequencies_hz, screen), screen)
-    _exit_on(failures)
+    screen = make_screen(mode)
+    _, failures = solve_all(open_job(job, frequencies_hz, screen), screen)
+    exit_on(failures)
+
+
+for _command in (compare, export):
+    cli.add_command(_command)
 
 
 def main() -> None:

@@ -6,6 +6,7 @@ import json
 import sys
 import time
 from collections.abc import Sequence
+from pathlib import Path
 from types import TracebackType
 from typing import Any, ClassVar
 
@@ -30,6 +31,14 @@ def readable_seconds(seconds: float) -> str:
     if seconds < 5400.0:
         return f"{seconds / 60.0:.1f} min"
     return f"{seconds / 3600.0:.1f} h"
+
+
+def _is_number(cell: Any) -> bool:
+    try:
+        float(cell)
+    except (TypeError, ValueError):
+        return False
+    return True
 
 
 class Screen:
@@ -61,13 +70,19 @@ class Screen:
         if self.mode == "json":
             print(json.dumps({"kind": kind, **values}), flush=True)
 
+    def wrote(self, path: Path, what: str = "") -> None:
+        """Tell that a file was written."""
+        self.emit("file", path=str(path), what=what)
+        if self.mode != "json":
+            self.out.print(f"wrote {path}" + (f" ({what})" if what else ""), markup=False)
+
     def table(self, title: str, columns: Sequence[str], rows: Sequence[Sequence[Any]]) -> None:
         """Write a table, except in JSON mode."""
         if self.mode == "json":
             return
         made = Table(title=title, title_justify="left")
         for index, column in enumerate(columns):
-            numeric = bool(rows) and all(isinstance(row[index], int | float) for row in rows)
+            numeric = bool(rows) and all(_is_number(row[index]) for row in rows)
             made.add_column(column, justify="right" if numeric else "left", overflow="fold")
         for row in rows:
             made.add_row(*[f"{cell:.6g}" if isinstance(cell, float) else str(cell) for cell in row])

@@ -1,0 +1,114 @@
+"""What several commands share: options, opening a job, solving what its store lacks."""
+
+from __future__ import annotations
+
+import sys
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import click
+
+if TYPE_CHECKING:
+    from elbowroom.cli.screen import Screen
+    from elbowroom.job.pipeline import JobRun
+
+JOB = click.argument("job", type=click.Path(path_type=Path))
+FREQUENCIES = click.option(
+    "--frequency-hz", "frequencies_hz", type=float, multiple=True, metavar="HZ",
+    help="Only this frequency of the job; may be given several times.",
+)  # fmt: skip
+
+
+def modes(command: Any) -> Any:
+    """Add ``--quiet`` and ``--json``."""
+    command = click.option("--json", "mode", flag_value="json", help="One JSON object a line, for scripts.")(command)
+    return click.option("--quiet", "mode", flag_value="quiet", help="Results and errors only.")(command)
+
+
+def make_screen(mode: str | None) -> Screen:
+    """Return the screen of a command in the mode its options ask for."""
+    from elbowroom.cli.screen import Screen
+
+    return Screen(mode or "normal")
+
+
+def open_job(job: Path, frequencies_hz: tuple[float, ...], screen: Screen) -> JobRun:
+    """Read a job and find its store; damaged files in it are told on the screen."""
+    from elbowroom.job.jobfile import read_job
+    from elbowroom.job.pipeline import JobRun
+
+    return JobRun(read_job(job), frequencies_hz=frequencies_hz or None, report=lambda damage: screen.warn(str(damage)))
+
+
+def prepare(run: JobRun, screen: Screen) -> list:
+    """Show the settings and the doubts, refuse what cannot work, and return the plan."""
+    for line in run.job.resolved_lines():
+        screen.say(f"  {line}")
+    for problem in run.problems():
+        if problem.severity != "error":
+            screen.warn(problem.text)
+    return run.prepare()
+
+
+def solve_all(run: JobRun, screen: Screen) -> tuple[list[float], list]:
+    """Solve what the store lacks; return the frequencies that are solved and the failures."""
+    from elbowroom.cli.screen import SolveProgress, readable_seconds
+    from elbowroom.job.pipeline import Failure
+
+    units = prepare(run, screen)
+    missing = {u.frequency_hz: u.prediction.seconds for u in units if not u.stored}
+    screen.say(f"{len(units)} frequencies, {len(units) - len(missing)} in the store already, {len(missing)} to solve")
+    rows, solved, failures = [], [], []
+    with SolveProgress(screen, missing) as progress:
+        for frequency, outcome in zip(run.frequencies_hz, run.solutions(progress), strict=True):
+            progress.finished(frequency)
+            if isinstance(outcome, Failure):
+                failures.append(outcome)
+                screen.emit("failed", frequency_hz=frequency, error=str(outcome.error))
+                continue
+            solved.append(frequency)
+            s = outcome.statistics
+            total = sum(s.seconds.values())
+            state = "solved" if frequency in missing else "from store"
+            rows.append(
+                [frequency / 1e6, state, s.n_unknowns, s.n_ports, f"{s.relative_residual:.1e}", f"{s.mesh_error:.1e}",
+                 readable_seconds(total)]
+            )  # fmt: skip
+            screen.emit(
+                "unit", frequency_hz=frequency, state=state, unknowns=s.n_unknowns, ports=s.n_ports,
+                relative_residual=s.relative_residual, mesh_error=s.mesh_error, seconds=total, file=str(run.path_of(frequency)),
+            )  # fmt: skip
+    if rows:
+        screen.table("Solutions", ["frequency [MHz]", "state", "unknowns", "ports", "residual", "mesh error", "solve time"], rows)
+        screen.say("residual: of the linear system; mesh error: change of an isolated antenna's admittance on a finer mesh")
+    for failure in failures:
+        screen.error.print(f"failed at {failure.frequency_hz / 1e6:g} MHz: {failure.error}", markup=False)
+    return solved, failures
+
+
+def exit_on(failures: list) -> None:
+    """End with the code of the first failure; the others' causes are on the screen."""
+    if failures:
+        sys.exit(failures[0].error.exit_code)
+
+
+
+
+def require_stored(run: JobRun) -> None:
+    """Refuse to go on unless the store has every frequency.
+
+    Raises
+    ------
+    StoreError
+        Naming what is missing and how to get it.
+    """
+    from elbowroom.base.errors import StoreError
+
+    missing = [f for f in run.frequencies_hz if run.key(f) not in run.store]
+    if missing:
+        shown = ", ".join(f"{f / 1e6:g} MHz" for f in missing[:5]) + (", ..." if len(missing) > 5 else "")
+        msg = (
+            f"{len(missing)} of {len(run.frequencies_hz)} frequencies are not solved yet ({shown}); "
+            f"'elbowroom solve {run.job.path}' solves them, 'elbowroom run' does everything"
+        )
+        raise StoreError(msg, path=run.job.store_folder)
