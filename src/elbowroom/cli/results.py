@@ -76,7 +76,7 @@ def _write_comparison(run: JobRun, rows: list[BeamComparison], path: Path) -> No
 @click.command()
 @JOB
 @FREQUENCIES
-@click.option("--output", type=click.Path(path_type=Path), help=f"CSV file; by default {COMPARISON_FILE} in the job's output folder.")
+@click.option("--output", type=click.Path(path_type=Path), help=f"CSV file; by default {COMPARISON_FILE} of the job.")
 @modes
 def compare(job: Path, frequencies_hz: tuple[float, ...], output: Path | None, mode: str | None) -> None:
     """Compare coupled with isolated beams of a solved JOB: a table on the screen and a CSV file."""
