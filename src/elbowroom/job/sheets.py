@@ -43,7 +43,8 @@ HALO = [withStroke(linewidth=2.5, foreground="white")]
 """Path effects of text on lines."""
 
 _DOTS_PER_INCH = 130
-_LONGEST_NAME, _LONGEST_TITLE = 60, 96
+_LONGEST_NAME = 60
+_LETTERS_PER_INCH = 12.5
 _FONT = "DejaVu Sans"
 _STYLE = {
     "font.family": _FONT,
@@ -101,7 +102,7 @@ def sheet(
         figure = Figure(figsize=size, dpi=_DOTS_PER_INCH, layout="constrained")
         canvas = FigureCanvasAgg(figure)
         width, height = size
-        subtitle = "   |   ".join(printable(shortened(text, _LONGEST_TITLE)) for text in details if text)
+        subtitle = printable(_one_line([text for text in details if text], int(width * _LETTERS_PER_INCH)))
         foot = _lines([NOT_MEASURED, *(printable(text) for text in caption if text)], int(width * 15.0))
         # Title and caption own strips of the sheet [inch], which the layout of the axes leaves free.
         above, below, side = 0.76, 0.20 + 0.16 * len(foot.splitlines()), 0.12
@@ -109,7 +110,7 @@ def sheet(
             w_pad=0.09,
             h_pad=0.07,
             wspace=0.02,
-            hspace=0.02,
+            hspace=0.04,
             rect=(side / width, below / height, 1.0 - 2.0 * side / width, 1.0 - (above + below) / height),
         )
         figure.text(0.15 / width, 1.0 - 0.12 / height, printable(title), va="top", fontsize=13, fontweight="bold")
@@ -139,6 +140,16 @@ def legend_of(axes: Iterable[Axes]) -> tuple[list[Artist], list[str]]:
         for handle, label in zip(*panel.get_legend_handles_labels(), strict=True):
             found.setdefault(label, handle)
     return list(found.values()), list(found)
+
+
+def _one_line(parts: Sequence[str], longest: int) -> str:
+    """Join parts to one line; if it gets too long, the first part, a title, gives way first."""
+    between = "   |   "
+    line = between.join(parts)
+    if len(line) > longest and len(parts) > 1:
+        room = max(longest - len(line) + len(parts[0]), 12)
+        line = between.join([shortened(parts[0], room), *parts[1:]])
+    return shortened(line, longest)
 
 
 def _lines(parts: Sequence[str], width: int) -> str:
