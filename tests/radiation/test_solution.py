@@ -9,7 +9,7 @@ from elbowroom.geometry.grounds import PerfectGround
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.job.solve import solve
 from elbowroom.system.assembly import assemble
-from elbowroom.system.solving import _port_rows
+from elbowroom.system.solving import port_excitations
 from helpers import FREQUENCY_HZ, cluster, crossed, dipole
 
 SKY = hemisphere_grid(15.0)
@@ -35,7 +35,7 @@ def test_embedded_patterns__retermination_equals_loads_in_the_solve(solution, te
     d = solution.discretisation
     load = np.broadcast_to(np.asarray(termination, dtype=complex), (6,))
     matrix, scales = assemble(d, 0.0)
-    rows = scales[:, None] * _port_rows(d)
+    rows = scales[:, None] * port_excitations(d)[0]
     z = matrix.dense() + rows @ np.diag(load) @ rows.T
     currents = scales[:, None] * np.linalg.solve(z, rows)
     # h = -Z_T times the currents that reach each port.

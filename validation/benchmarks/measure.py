@@ -81,7 +81,7 @@ def kernel() -> None:
 def _admittance(antenna: Antenna, frequency_hz: float, mesh: str | MeshSettings) -> tuple[complex, int]:
     made = build_mesh(antenna, SPEED_OF_LIGHT / frequency_hz, mesh_settings(mesh))
     z = free_self_block(made, frequency_hz, NearSettings())
-    return complex((made.port_vectors @ np.linalg.solve(z, made.port_vectors.T))[0, 0]), made.n_unknowns
+    return complex((made.gap_vectors @ np.linalg.solve(z, made.gap_vectors.T))[0, 0]), made.n_unknowns
 
 
 def mesh() -> None:

@@ -1,4 +1,4 @@
-"""An antenna: wires, the gap ports that feed it and the lumped loads inside it."""
+"""An antenna: wires, the ports that feed it, the lumped loads and the network inside it."""
 
 from __future__ import annotations
 
@@ -6,19 +6,20 @@ from collections.abc import Sequence
 from dataclasses import dataclass, field
 
 from elbowroom.base.errors import GeometryError
+from elbowroom.geometry.networks import FeedPoint, Network, resolve_nodes
 from elbowroom.geometry.wires import Wire
 
 
 @dataclass(frozen=True)
 class Port:
-    """A feed gap in a wire, across which a uniform field is impressed.
+    """A pair of terminals: a gap in a wire, across which a uniform field is impressed, or a node of the antenna's network.
 
     Parameters
     ----------
     name : str
         Name of the port, unique in its antenna.
-    wire : int
-        Index of the wire that carries the gap.
+    wire : int, optional
+        Index of the wire that carries the gap; the gap is then a node of the port's name.
     position : float, optional
         Middle of the gap as a fraction of the wire's length.  At 0 or 1 the wire must end on the ground: the gap
         is then the half that lies above it, so that a monopole has exactly half the impedance of its dipole.
@@ -27,13 +28,21 @@ class Port:
     nominal_azimuth_deg : float, optional
         Direction of the port's co-polarisation at zenith, from east towards north [deg]; by default the
         azimuth of the wire that carries the gap.
+    node : str, optional
+        Instead of a wire: the node of the network that the port looks into.
     """
 
     name: str
-    wire: int
+    wire: int | None = None
     position: float = 0.5
     gap: float | None = None
     nominal_azimuth_deg: float | None = None
+    node: str | None = None
+
+    def __post_init__(self) -> None:
+        if (self.wire is None) == (self.node is None):
+            msg = f"port {self.name!r}: expected either the wire that carries its gap or a node of the network"
+            raise GeometryError(msg)
 
 
 @dataclass(frozen=True)
@@ -99,6 +108,19 @@ class Antenna:
         The ports, in the order in which they are numbered.
     loads : sequence of Load, optional
         Lumped loads inside the structure.
+    feeds : sequence of FeedPoint, optional
+        Gaps that the network reaches and no port looks into.
+    network : Network, optional
+        Lines, stubs, branches and transformers between gaps and ports.
+
+    Attributes
+    ----------
+    gaps : tuple of Gap
+        Where the gaps are: those of ports, in order, then feed points.
+    nodes : tuple of str
+        Pairs of terminals: the gaps, in that order, then the free nodes of the network.
+    port_nodes : tuple of str
+        Node of each port.
 
     Raises
     ------
@@ -110,14 +132,28 @@ class Antenna:
     wires: tuple[Wire, ...]
     ports: tuple[Port, ...]
     loads: tuple[Load, ...] = ()
-    port_gaps: tuple[Gap, ...] = field(init=False, repr=False)
+    feeds: tuple[FeedPoint, ...] = ()
+    network: Network = Network()
+    gaps: tuple[Gap, ...] = field(init=False, repr=False)
     load_gaps: tuple[Gap, ...] = field(init=False, repr=False)
+    nodes: tuple[str, ...] = field(init=False, repr=False)
+    port_nodes: tuple[str, ...] = field(init=False, repr=False)
 
-    def __init__(self, name: str, wires: Sequence[Wire], ports: Sequence[Port], loads: Sequence[Load] = ()) -> None:
+    def __init__(
+        self,
+        name: str,
+        wires: Sequence[Wire],
+        ports: Sequence[Port],
+        loads: Sequence[Load] = (),
+        feeds: Sequence[FeedPoint] = (),
+        network: Network | None = None,
+    ) -> None:
         object.__setattr__(self, "name", name)
         object.__setattr__(self, "wires", tuple(wires))
         object.__setattr__(self, "ports", tuple(ports))
         object.__setattr__(self, "loads", tuple(loads))
+        object.__setattr__(self, "feeds", tuple(feeds))
+        object.__setattr__(self, "network", network or Network())
         if not self.wires:
             msg = f"antenna {name!r} has no wires"
             raise GeometryError(msg)
@@ -129,13 +165,27 @@ class Antenna:
             if names.count(port_name) > 1:
                 msg = f"antenna {name!r}: port name {port_name!r} is used {names.count(port_name)} times"
                 raise GeometryError(msg)
-        object.__setattr__(self, "port_gaps", tuple(self._place(p, f"port {p.name!r}", may_touch_end=True) for p in self.ports))
+        gap_items: list[Port | FeedPoint] = [*(p for p in self.ports if p.wire is not None), *self.feeds]
+        gap_names = [item.name for item in gap_items]
+        for gap_name in gap_names:
+            if gap_names.count(gap_name) > 1:
+                msg = f"antenna {name!r}: {gap_names.count(gap_name)} gaps are called {gap_name!r}"
+                raise GeometryError(msg)
+        gaps = [self._place(item, label, may_touch_end=True) for item, label in zip(gap_items, self.gap_labels, strict=True)]
+        object.__setattr__(self, "gaps", tuple(gaps))
+        object.__setattr__(self, "port_nodes", tuple(p.name if p.node is None else p.node for p in self.ports))
+        object.__setattr__(self, "nodes", resolve_nodes(name, gap_names, list(self.port_nodes), self.network))
         object.__setattr__(
             self, "load_gaps", tuple(self._place(q, f"load {i}", may_touch_end=False) for i, q in enumerate(self.loads))
         )
 
-    def _place(self, item: Port | Load, label: str, *, may_touch_end: bool) -> Gap:
-        if not 0 <= item.wire < len(self.wires):
+    @property
+    def gap_labels(self) -> tuple[str, ...]:
+        """What each gap is called in messages, in the order of ``gaps``."""
+        return (*(f"port {p.name!r}" for p in self.ports if p.wire is not None), *(f"feed {q.name!r}" for q in self.feeds))
+
+    def _place(self, item: Port | FeedPoint | Load, label: str, *, may_touch_end: bool) -> Gap:
+        if item.wire is None or not 0 <= item.wire < len(self.wires):
             msg = f"antenna {self.name!r}, {label}: wire {item.wire} does not exist (0 to {len(self.wires) - 1})"
             raise GeometryError(msg)
         wire = self.wires[item.wire]
@@ -157,6 +207,16 @@ class Antenna:
             msg = f"antenna {self.name!r}, {label}: the gap of {width:g} m sticks out of the end of its wire"
             raise GeometryError(msg)
         return Gap(item.wire, max(low, 0.0), min(high, wire.length))
+
+    @property
+    def port_gaps(self) -> tuple[Gap, ...]:
+        """Gap of each port: its own, or the design's first where a network lies between."""
+        return tuple(self.gaps[self.nearest_gap(p)] for p in self.ports)
+
+    def nearest_gap(self, port: Port) -> int:
+        """Return the index of the gap that a port looks into; 0 if a network lies between."""
+        node = port.name if port.node is None else port.node
+        return self.nodes.index(node) if node in self.nodes[: len(self.gaps)] else 0
 
     def port_index(self, name: str) -> int:
         """Return the index of the port of that name; raise GeometryError when there is none."""

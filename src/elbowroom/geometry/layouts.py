@@ -74,9 +74,9 @@ class Layout:
 
     names: tuple[str, ...]
     positions: FloatArray
-    rotation_deg: FloatArray = field(default=0.0)  # type: ignore[assignment]
-    tilt_east_deg: FloatArray = field(default=0.0)  # type: ignore[assignment]
-    tilt_north_deg: FloatArray = field(default=0.0)  # type: ignore[assignment]
+    rotation_deg: FloatArray = field(default=0.0)  # type: ignore[assignment,arg-type]
+    tilt_east_deg: FloatArray = field(default=0.0)  # type: ignore[assignment,arg-type]
+    tilt_north_deg: FloatArray = field(default=0.0)  # type: ignore[assignment,arg-type]
     antenna: tuple[str, ...] = ()
 
     def __post_init__(self) -> None:

@@ -118,7 +118,7 @@ class Mesh:
         Index of the wire that each element lies on.
     expansion : float64 (E, p+1, N)
         Coefficient of each local function in each unknown.
-    port_vectors : float64 (P, N)
+    gap_vectors : float64 (G, N)
         Mean over the gap of each unknown's current: row p dotted with the unknowns is the port current.
     load_vectors : float64 (L, N)
         The same for the lumped loads.
@@ -132,7 +132,7 @@ class Mesh:
     radius: FloatArray
     wire: np.ndarray
     expansion: FloatArray
-    port_vectors: FloatArray
+    gap_vectors: FloatArray
     load_vectors: FloatArray
     grounded: np.ndarray
 
@@ -200,7 +200,7 @@ def _breaks_of(antenna: Antenna, index: int, tolerance: float) -> FloatArray:
     """Return the sorted distances [m] along a wire at which it must be cut."""
     wire = antenna.wires[index]
     places = [0.0, wire.length]
-    for gap in (*antenna.port_gaps, *antenna.load_gaps):
+    for gap in (*antenna.gaps, *antenna.load_gaps):
         if gap.wire == index:
             places += [gap.low, gap.high]
     for other_index, other in enumerate(antenna.wires):
@@ -295,7 +295,7 @@ def build_mesh(
                 node_grounded.add(last)
             raw.append((w, low, high, first, last))
 
-    gaps = (*antenna.port_gaps, *antenna.load_gaps)
+    gaps = (*antenna.gaps, *antenna.load_gaps)
 
     def smallest(w: int, low: float, high: float, node: int) -> float | None:
         wire = wires[w]
@@ -355,7 +355,7 @@ def build_mesh(
             expansion[e, m, n] += value
 
     flat = expansion.reshape(n_elements * (order + 1), -1)
-    port_means = _gap_means(antenna.port_gaps, antenna, pieces, order)
+    gap_means = _gap_means(antenna.gaps, antenna, pieces, order)
     load_means = _gap_means(antenna.load_gaps, antenna, pieces, order)
     return Mesh(
         order=order,
@@ -364,7 +364,7 @@ def build_mesh(
         radius=np.array([wires[w].radius for w, _, _ in pieces]),
         wire=np.array([w for w, _, _ in pieces]),
         expansion=expansion,
-        port_vectors=port_means.reshape(len(antenna.ports), -1) @ flat,
+        gap_vectors=gap_means.reshape(len(antenna.gaps), -1) @ flat,
         load_vectors=load_means.reshape(len(antenna.loads), n_elements * (order + 1)) @ flat,
         grounded=grounded,
     )
@@ -372,7 +372,7 @@ def build_mesh(
 
 def _check_gaps(antenna: Antenna, grounded_wires: np.ndarray) -> None:
     labelled = [
-        *((f"port {p.name!r}", g) for p, g in zip(antenna.ports, antenna.port_gaps, strict=True)),
+        *zip(antenna.gap_labels, antenna.gaps, strict=True),
         *((f"load {i}", g) for i, g in enumerate(antenna.load_gaps)),
     ]
     for i, (label, gap) in enumerate(labelled):
@@ -380,15 +380,16 @@ def _check_gaps(antenna: Antenna, grounded_wires: np.ndarray) -> None:
             if gap.wire == other.wire and min(gap.high, other.high) - max(gap.low, other.low) > 1e-9 * gap.width:
                 msg = f"antenna {antenna.name!r}: the gaps of {other_label} and {label} overlap on wire {gap.wire}"
                 raise GeometryError(msg)
-    for port, gap in zip(antenna.ports, antenna.port_gaps, strict=True):
+    positions = [*(p.position for p in antenna.ports if p.wire is not None), *(q.position for q in antenna.feeds)]
+    for position, label, gap in zip(positions, antenna.gap_labels, antenna.gaps, strict=True):
         wire = antenna.wires[gap.wire]
-        at_end = 0 if port.position == 0.0 else 1 if port.position == 1.0 else None
+        at_end = 0 if position == 0.0 else 1 if position == 1.0 else None
         if at_end is not None and not grounded_wires[gap.wire, at_end]:
             ends = [p for i, w in enumerate(antenna.wires) if i != gap.wire for p in (w.start, w.end)]
             here = wire.start if at_end == 0 else wire.end
             if min((float(np.linalg.norm(np.subtract(here, p))) for p in ends), default=np.inf) > 1e-6 * wire.length:
                 msg = (
-                    f"antenna {antenna.name!r}: port {port.name!r} sits at an end of wire {gap.wire} that touches "
+                    f"antenna {antenna.name!r}: {label} sits at an end of wire {gap.wire} that touches "
                     "neither the ground nor another wire: no current can flow through it"
                 )
                 raise GeometryError(msg)

@@ -207,14 +207,14 @@ class Station:
     def port_nominal_phi_rad(self) -> FloatArray:
         """Direction of each port's co-polarisation at zenith, (P,), from east towards north [rad].
 
-        The nominal azimuth of the design's port, or else that of the wire that carries its gap, turned with the antenna;
-        0 for a vertical wire.
+        The nominal azimuth of the design's port, or else that of the wire that carries its gap (the design's first gap, if
+        the port looks into a network), turned with the antenna; 0 for a vertical wire.
         """
         angles = []
         for placed in self.placed:
-            for port in placed.antenna.ports:
+            for port, gap in zip(placed.antenna.ports, placed.antenna.port_gaps, strict=True):
                 if port.nominal_azimuth_deg is None:
-                    wire = placed.antenna.wires[port.wire]
+                    wire = placed.antenna.wires[gap.wire]
                     own = np.asarray(wire.end) - np.asarray(wire.start)
                 else:
                     nominal = np.deg2rad(port.nominal_azimuth_deg)

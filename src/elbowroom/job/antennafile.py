@@ -189,7 +189,7 @@ def _from_wires(table: dict[str, Any], name: str, problems: list[str]) -> Antenn
     # Each gap is tried alone on its wire first, so that all that do not fit are told, not only the first.
     for key, items in (("port", ports), ("load", loads)):
         for i, item in items:
-            wire = wires[item.wire]
+            wire = None if item.wire is None else wires[item.wire]
             if wire is not None:
                 _try_gap(name, wire, key, i, item, problems)
     if problems:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
+from dataclasses import fields, replace
 from typing import Any
 
 import numpy as np
@@ -49,14 +49,29 @@ SOLUTION_SCHEMA = Schema(
 )
 
 
+def _network_inputs(antenna: Antenna) -> dict[str, Any]:
+    """Return what connects gaps and ports, with numbers for the names of nodes; nothing if each port has its own gap."""
+    number = {name: i for i, name in enumerate(antenna.nodes)}
+    if not antenna.network and not antenna.feeds:
+        return {}
+    elements: dict[str, Any] = {}
+    for group in fields(antenna.network):
+        elements[group.name] = [
+            {f.name: number.get(getattr(e, f.name), getattr(e, f.name)) for f in fields(e)}
+            for e in getattr(antenna.network, group.name)
+        ]
+    return {"port_nodes": [number[n] for n in antenna.port_nodes], "network": elements}
+
+
 def _design_inputs(antenna: Antenna) -> dict[str, Any]:
     """Return what the currents of a design depend on: no names, no polarisation labels."""
     return {
+        **_network_inputs(antenna),
         "wires": [
             (w.start, w.end, w.radius, w.conductivity, w.relative_permeability if w.conductivity is not None else None)
             for w in antenna.wires
         ],
-        "ports": [(g.wire, g.low, g.high) for g in antenna.port_gaps],
+        "ports": [(g.wire, g.low, g.high) for g in antenna.gaps],
         "loads": [
             (g.wire, g.low, g.high, q.resistance_ohm, q.inductance_h, q.capacitance_f)
             for g, q in zip(antenna.load_gaps, antenna.loads, strict=True)

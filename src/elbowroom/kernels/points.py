@@ -18,7 +18,7 @@ def turn_polynomials(degree: int = 5) -> tuple[FloatArray, FloatArray]:
     fit = np.polynomial.Polynomial.fit
     sine = fit(v, np.sin(np.pi * u) / u, degree, domain=[0.0, 0.25]).convert()
     cosine = fit(v, np.cos(np.pi * u), degree, domain=[0.0, 0.25]).convert()
-    return sine.coef, cosine.coef
+    return np.asarray(sine.coef, dtype=float), np.asarray(cosine.coef, dtype=float)
 
 
 def free_kernel(points: FloatArray, points2: FloatArray, wavenumber: float) -> ComplexArray:

@@ -22,7 +22,7 @@ from elbowroom.geometry.wires import segment_distances
 from elbowroom.kernels.grounds import GroundKernels, Workspace, ground_kernels
 from elbowroom.kernels.quadrature import gauss_table
 from elbowroom.kernels.reactions_numba import angled_moments_all
-from elbowroom.system.discretisation import Discretisation, Kind, Samples
+from elbowroom.system.discretisation import Discretisation, Kind, Samples, attachments
 from elbowroom.system.factorisation import TiledSymmetric
 from elbowroom.system.self_block import expand_moments_between
 
@@ -296,6 +296,7 @@ def assemble(
     levels = np.vectorize(filler.level_of, otypes=[int])(antenna_distances(discretisation))
     shared = _equal_displacements(discretisation)
     n_antennas = len(discretisation.station)
+    attached = attachments(discretisation, reference_ohm)
 
     def place(i: int, j: int, block: ComplexArray) -> None:
         tile = matrix.tiles[group_of[j], group_of[i]]
@@ -308,7 +309,7 @@ def assemble(
 
     def fill_row(i: int) -> None:
         kind = discretisation.kinds[discretisation.kind_of[i]]
-        loaded = kind.self_block + reference_ohm * (kind.mesh.port_vectors.T @ kind.mesh.port_vectors)
+        loaded = kind.self_block + attached[kind.antenna].structure(kind.mesh.gap_vectors)
         place(i, i, loaded)
         for group in groups:
             others = np.arange(max(group.start, i + 1), group.stop)

@@ -15,6 +15,7 @@ from elbowroom.geometry.mesh import Mesh, MeshSettings, build_mesh, mesh_setting
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.kernels.grounds import ground_kernels
 from elbowroom.kernels.quadrature import points_per_element, sample_mesh
+from elbowroom.system.networks import PortAttachment, attach_ports
 from elbowroom.system.self_block import NearSettings, free_self_block, image_self_block, loss_and_loads
 
 GROUND_CONTACT_M = 1e-6
@@ -175,6 +176,15 @@ class Discretisation:
         return np.flatnonzero(self.kind_of == kind)
 
 
+def attachments(discretisation: Discretisation, reference_ohm: float) -> dict[Antenna, PortAttachment]:
+    """Return how the ports of each design hang on its gaps under a reference resistance [ohm]."""
+    made: dict[Antenna, PortAttachment] = {}
+    for kind in discretisation.kinds:
+        if kind.antenna not in made:
+            made[kind.antenna] = attach_ports(kind.antenna, discretisation.frequency_hz, reference_ohm)
+    return made
+
+
 def grounded_ends(placed: Placed, conducting: bool) -> np.ndarray:
     """Return which wire ends (W, 2) of a placed antenna lie on the ground.
 
@@ -289,10 +299,10 @@ def discretise(
         if mesh_key not in meshes:
             made = build_mesh(placed.antenna, wavelength, settings, ends)
             if self_blocks:
-                block = free_self_block(made, frequency_hz, near) + loss_and_loads(placed.antenna, made, frequency_hz)
+                own: ComplexArray = free_self_block(made, frequency_hz, near) + loss_and_loads(placed.antenna, made, frequency_hz)
             else:
-                block = np.empty((0, 0), dtype=complex)
-            meshes[mesh_key] = (made, block)
+                own = np.empty((0, 0), dtype=complex)
+            meshes[mesh_key] = (made, own)
         made, block = meshes[mesh_key]
         if image_counts is not None and self_blocks:
             level = placed.tilt_east_deg == 0.0 and placed.tilt_north_deg == 0.0

@@ -31,7 +31,7 @@ class TiledSymmetric:
     def __init__(self, sizes: Sequence[int], dtype: type = np.complex128) -> None:
         self.sizes = tuple(int(s) for s in sizes)
         self.offsets = np.concatenate([[0], np.cumsum(self.sizes)])
-        self.dtype = np.dtype(dtype)
+        self.dtype: np.dtype = np.dtype(dtype)
         self.tiles: dict[tuple[int, int], AnyComplexArray] = {
             (i, j): np.zeros((self.sizes[i], self.sizes[j]), dtype=self.dtype, order="F")
             for i in range(len(self.sizes))
@@ -64,7 +64,7 @@ class TiledSymmetric:
 
     def dense(self) -> AnyComplexArray:
         """Return the whole matrix, for small cases and tests."""
-        full = np.zeros((self.order, self.order), dtype=self.dtype)
+        full: AnyComplexArray = np.zeros((self.order, self.order), dtype=self.dtype)
         for (i, j), tile in self.tiles.items():
             rows = slice(self.offsets[i], self.offsets[i + 1])
             columns = slice(self.offsets[j], self.offsets[j + 1])
@@ -73,9 +73,9 @@ class TiledSymmetric:
                 full[columns, rows] = tile.T
         return full
 
-    def product(self, vectors: AnyComplexArray) -> AnyComplexArray:
+    def product(self, vectors: AnyComplexArray | FloatArray) -> AnyComplexArray:
         """Return the matrix times vectors (n, R)."""
-        result = np.zeros((self.order, vectors.shape[1]), dtype=np.result_type(self.dtype, vectors.dtype))
+        result: AnyComplexArray = np.zeros((self.order, vectors.shape[1]), dtype=np.result_type(self.dtype, vectors.dtype))
         o = self.offsets
         for (i, j), tile in self.tiles.items():
             result[o[i] : o[i + 1]] += tile @ vectors[o[j] : o[j + 1]]

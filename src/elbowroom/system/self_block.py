@@ -116,7 +116,7 @@ def element_moments(
             start, end = start @ tilt.T, end @ tilt.T
         start, end = start + [0.0, 0.0, mirror_height], end + [0.0, 0.0, mirror_height]
         mesh = Mesh(
-            mesh.order, start, end, mesh.radius, mesh.wire, mesh.expansion, mesh.port_vectors, mesh.load_vectors, mesh.grounded
+            mesh.order, start, end, mesh.radius, mesh.wire, mesh.expansion, mesh.gap_vectors, mesh.load_vectors, mesh.grounded
         )
         flip = np.array([1.0, 1.0, -1.0])
         start2, end2 = start * flip, end * flip

@@ -13,7 +13,7 @@ from elbowroom.base.errors import SolveError
 from elbowroom.geometry.mesh import MESHES
 from elbowroom.geometry.stations import Station
 from elbowroom.system.assembly import Progress, assemble
-from elbowroom.system.discretisation import Discretisation, discretise
+from elbowroom.system.discretisation import Discretisation, attachments, discretise
 from elbowroom.system.factorisation import TiledSymmetric
 from elbowroom.system.port_algebra import admittance_from_loaded
 
@@ -76,7 +76,7 @@ class PortCurrents:
     loaded_admittance: ComplexArray
 
 
-def _probed_residual(matrix: TiledSymmetric, right: FloatArray, x: ComplexArray) -> float:
+def _probed_residual(matrix: TiledSymmetric, right: FloatArray | ComplexArray, x: ComplexArray) -> float:
     """Return the largest relative residual over random combinations of the ports' solutions.
 
     A combination with random signs has, in the mean square, the sum of the squared residuals of all ports over
@@ -90,7 +90,9 @@ def _probed_residual(matrix: TiledSymmetric, right: FloatArray, x: ComplexArray)
     return float(np.max(np.linalg.norm(residual, axis=0) / np.linalg.norm(right, axis=0)))
 
 
-def _solve_single(matrix: TiledSymmetric, right: FloatArray, lap: Callable[[str], None]) -> tuple[ComplexArray, float]:
+def _solve_single(
+    matrix: TiledSymmetric, right: FloatArray | ComplexArray, lap: Callable[[str], None]
+) -> tuple[ComplexArray, float]:
     """Solve keeping nothing but single-precision factors, whose error shows on vectors multiplied beforehand.
 
     The error returned is that of the vectors themselves, which is no smaller than a residual of theirs is worth.
@@ -104,23 +106,32 @@ def _solve_single(matrix: TiledSymmetric, right: FloatArray, lap: Callable[[str]
     return factors.solve(right).astype(np.complex128), error
 
 
-def _port_rows(discretisation: Discretisation) -> FloatArray:
-    rows: FloatArray = np.zeros((discretisation.n_unknowns, discretisation.n_ports))
+def port_excitations(
+    discretisation: Discretisation, reference_ohm: float = REFERENCE_OHM
+) -> tuple[FloatArray | ComplexArray, ComplexArray]:
+    """Return the right-hand sides (N, P) of all ports' sources, and the port currents (P, P) [S] that flow with gaps open."""
+    rows: ComplexArray = np.zeros((discretisation.n_unknowns, discretisation.n_ports), dtype=complex)
+    own: ComplexArray = np.zeros((discretisation.n_ports, discretisation.n_ports), dtype=complex)
+    attached = attachments(discretisation, reference_ohm)
     for a in range(len(discretisation.station)):
-        vectors = discretisation.kinds[discretisation.kind_of[a]].mesh.port_vectors
-        rows[discretisation.unknowns_of(a), discretisation.ports_of(a)] = vectors.T
-    return rows
+        kind, ports = discretisation.kinds[discretisation.kind_of[a]], discretisation.ports_of(a)
+        rows[discretisation.unknowns_of(a), ports] = attached[kind.antenna].excitations(kind.mesh.gap_vectors)
+        own[ports, ports] = attached[kind.antenna].admittance
+    # Real where ports look straight into gaps: half the work for whoever multiplies with it.
+    return (rows if np.any(rows.imag) else rows.real), own
 
 
 def solve_isolated(discretisation: Discretisation, reference_ohm: float = REFERENCE_OHM) -> list[PortCurrents]:
     """Return the port currents of each kind of antenna alone over the ground."""
     result = []
+    attached = attachments(discretisation, reference_ohm)
     for kind in discretisation.kinds:
-        vectors = kind.mesh.port_vectors
-        loaded = kind.self_block + reference_ohm * (vectors.T @ vectors)
+        ports = attached[kind.antenna]
+        loaded = kind.self_block + ports.structure(kind.mesh.gap_vectors)
+        right = ports.excitations(kind.mesh.gap_vectors)
         scale = 1.0 / np.sqrt(np.abs(np.diagonal(loaded)))
-        currents: ComplexArray = scale[:, None] * np.linalg.solve(loaded * np.outer(scale, scale), scale[:, None] * vectors.T)
-        admittance = vectors @ currents
+        currents: ComplexArray = scale[:, None] * np.linalg.solve(loaded * np.outer(scale, scale), scale[:, None] * right)
+        admittance = ports.admittance + right.T @ currents
         result.append(PortCurrents(currents, 0.5 * (admittance + admittance.T)))
     return result
 
@@ -212,7 +223,8 @@ def solve_direct(
 
     matrix, scales = assemble(discretisation, reference_ohm, progress=progress)
     lap("assemble")
-    right = scales[:, None] * _port_rows(discretisation)
+    excitations, own = port_excitations(discretisation, reference_ohm)
+    right = scales[:, None] * excitations
     tell("factorise", 0.0)
     if precision == "single":
         x, worst = _solve_single(matrix, right, lap)
@@ -237,7 +249,7 @@ def solve_direct(
             "try precision 'double', or look for wires that almost coincide"
         )
         raise SolveError(msg)
-    admittance = (scales[:, None] * _port_rows(discretisation)).T @ x
+    admittance = own + right.T @ x
     return (
         PortCurrents(scales[:, None] * x, 0.5 * (admittance + admittance.T)),
         SolveStatistics("direct", precision, discretisation.n_unknowns, discretisation.n_ports, worst, seconds=seconds),
