@@ -68,6 +68,8 @@ def draw_layout(
         caption.append(termination_text(termination))
     colours = _port_colours(station)
     shown = station.designs[:_MOST_DESIGNS]
+    radii = sorted({wire.radius * 1e3 for design in station.designs for wire in design.wires})
+    caption.append(f"wire radius {radii[0]:.3g}" + (f" to {radii[-1]:.3g} mm" if len(radii) > 1 else " mm"))
     if len(station.designs) > len(shown):
         caption.append(f"side views of {len(shown)} of {len(station.designs)} designs")
     views = [(design, direction) for design in shown for direction in ("south", "east")]
@@ -81,7 +83,7 @@ def draw_layout(
         plan.set_title("seen from above", loc="left")
         for row, (design, direction) in enumerate(views):
             axes = figure.add_subplot(grid[row, 1])
-            _draw_side(axes, station, design, direction, colours)
+            _draw_side(axes, station, design, direction, colours, len(views))
     return Path(path)
 
 
@@ -114,7 +116,7 @@ def _spacing_text(
     if len(frequencies_hz):
         waves = " to ".join(f"{spacing / wavelength_of(f):.2f}" for f in sorted({min(frequencies_hz), max(frequencies_hz)}))
         waves = f" = {waves} wavelengths"
-    return f"closest pair {names}: {spacing:.3g} m{waves}   |   diameter {diameter:.3g} m"
+    return f"closest pair {names}: {spacing:.3g} m{waves}; diameter {diameter:.3g} m"
 
 
 def _port_colours(station: Station) -> dict[str, str]:
@@ -134,30 +136,33 @@ def _draw_plan(axes: Axes, station: Station, colours: dict[str, str], pair: tupl
     few = len(station) <= _NAMED_ANTENNAS
     axes.add_collection(LineCollection(list(flat), colors="0.45", linewidths=1.6 if few else 0.8, zorder=2))
     reach = np.array([np.max(np.linalg.norm(w[:, :, :2] - p.position[:2], axis=-1)) for w, p in zip(wires, station, strict=True)])
-    owner, level = station.port_antennas, _level_ports(station)
+    owner = station.port_antennas
+    middle_of_gap, level = _port_places(station)
     arrow = np.maximum(reach, 1e-3)[owner]
     heading = station.port_nominal_phi_rad
     port_of = np.array([n.port for n in station.port_names])
     for name, colour in colours.items():
         mine = level & (port_of == name)
         axes.quiver(
-            *station.port_positions[mine, :2].T,
+            *middle_of_gap[mine, :2].T,
             *(arrow[mine] * np.array([np.cos(heading[mine]), np.sin(heading[mine])])),
             angles="xy", scale_units="xy", scale=1.0, units="dots", width=2.6 if few else 1.4,
             headwidth=4.0, headlength=4.5, headaxislength=4.0, color=colour, zorder=3,
         )  # fmt: skip
         upright = ~level & (port_of == name)
-        axes.plot(*station.port_positions[upright, :2].T, "o", ms=5 if few else 3, mfc="none", mec=colour, zorder=3)
+        axes.plot(*middle_of_gap[upright, :2].T, "o", ms=5 if few else 3, mfc="none", mec=colour, zorder=3)
     if pair is not None:
         axes.plot(*station.positions[list(pair), :2].T, "-", color=_MARK, lw=1.2, zorder=4)
         axes.plot(*station.positions[list(pair), :2].T, "o", ms=11 if few else 8, mfc="none", mec=_MARK, mew=1.1, zorder=4)
     if few:
         for placed, own in zip(station, reach, strict=True):
             # At 45 degrees between the arms of a crossed antenna there is room.
-            where = np.asarray(placed.position[:2]) + 0.30 * max(own, 0.05) * np.array([1.0, -1.0])
+            where = np.asarray(placed.position[:2]) + 0.25 * own * np.array([1.0, -1.0])
             axes.annotate(
                 printable(shortened(placed.name, 12)),
                 where,
+                xytext=(4, -4),
+                textcoords="offset points",
                 ha="left",
                 va="top",
                 fontsize=8.5,
@@ -166,7 +171,7 @@ def _draw_plan(axes: Axes, station: Station, colours: dict[str, str], pair: tupl
                 path_effects=HALO,
             )
     low, high = flat.reshape(-1, 2).min(axis=0), flat.reshape(-1, 2).max(axis=0)
-    half = 0.54 * float(np.max(high - low)) + 1e-2
+    half = max(0.54 * float(np.max(high - low)), 0.3)
     middle = 0.5 * (low + high)
     axes.set_xlim(middle[0] - half, middle[0] + half)
     axes.set_ylim(middle[1] - half, middle[1] + half)
@@ -192,17 +197,20 @@ def _draw_plan(axes: Axes, station: Station, colours: dict[str, str], pair: tupl
     return handles
 
 
-def _level_ports(station: Station) -> np.ndarray:
-    """Return whether each port has a direction in the horizontal plane, (P,)."""
-    level = []
+def _port_places(station: Station) -> tuple[FloatArray, np.ndarray]:
+    """Return the middle of each port's gap, (P, 3) [m], and whether the port has a direction in the horizontal plane, (P,)."""
+    places, level = [], []
     for placed in station:
-        for port in placed.antenna.ports:
-            along = placed.orientation @ placed.antenna.wires[port.wire].direction
-            level.append(port.nominal_azimuth_deg is not None or float(np.hypot(along[0], along[1])) > 1e-6)
-    return np.array(level)
+        for port, gap in zip(placed.antenna.ports, placed.antenna.port_gaps, strict=True):
+            wire = placed.antenna.wires[gap.wire]
+            places.append(placed.to_station(wire.point(0.5 * (gap.low + gap.high))))
+            along = placed.to_station(np.array([wire.start, wire.end]))
+            across = float(np.hypot(*(along[1] - along[0])[:2]))
+            level.append(port.nominal_azimuth_deg is not None or across > 1e-6 * wire.length)
+    return np.array(places), np.array(level)
 
 
-def _draw_side(axes: Axes, station: Station, design: Antenna, direction: str, colours: dict[str, str]) -> None:
+def _draw_side(axes: Axes, station: Station, design: Antenna, direction: str, colours: dict[str, str], rows: int) -> None:
     """Draw the first antenna of a design as seen from the south or the east, with its gaps and the ground."""
     placed = next(p for p in station if p.antenna is design or p.antenna == design)
     ends = _wire_ends(placed)
@@ -231,22 +239,18 @@ def _draw_side(axes: Axes, station: Station, design: Antenna, direction: str, co
         middle = placed.to_station(design.wires[gap.wire].point(0.5 * (gap.low + gap.high)))
         axes.plot(middle[across] - offset, middle[2], "D", ms=5, color="0.1", zorder=4)
     middle_x = 0.5 * (points[:, 0].min() + points[:, 0].max())
-    half = 0.62 * max(width, 0.8 * height)
+    # Rows of more than two designs are low and wide.
+    half = max(0.62 * width, (0.6 if rows <= 2 else 1.0) * height)
     axes.set_xlim(middle_x - half, middle_x + half)
     if grounded:
         axes.axhspan(bottom - 0.2 * height, 0.0, facecolor="0.93", edgecolor="0.7", hatch="////", lw=0.0, zorder=0)
         axes.axhline(0.0, color="0.2", lw=1.3, zorder=1)
         axes.text(0.985, 0.02, f"{station.ground.name} ground", transform=axes.transAxes, ha="right", va="bottom", fontsize=8,
                   bbox={"facecolor": "white", "edgecolor": "none", "pad": 1.5})  # fmt: skip
-    axes.set_ylim(bottom - (0.16 if grounded else 0.1) * height, top + 0.25 * height)
-    axes.set_aspect("equal")
-    name = printable(shortened(design.name, 28))
-    axes.set_title(f"{name}, from the {direction}", loc="left")
-    radii = sorted({w.radius * 1e3 for w in design.wires})
-    radius = f"{radii[0]:.3g}" if len(radii) == 1 else f"{radii[0]:.3g} to {radii[-1]:.3g}"
-    name_of_it = printable(shortened(placed.name, 16)) + (f", one of {count}" if count > 1 else "")
-    ground = "" if grounded else ", free space"
-    axes.text(0.02, 0.98, f"{name_of_it}; wire radius {radius} mm{ground}", transform=axes.transAxes,
-              ha="left", va="top", fontsize=8, color="0.35")  # fmt: skip
+    axes.set_ylim(bottom - (0.16 if grounded else 0.1) * height, top + 0.18 * height)
+    axes.set_aspect("equal", anchor="W")
+    which = printable(shortened(placed.name, 14)) + (f", one of {count}" if count > 1 else "")
+    space = "" if grounded else " in free space"
+    axes.set_title(f"{printable(shortened(design.name, 24))}{space}, from the {direction} ({which})", loc="left", fontsize=9)
     axes.set_xlabel(f"{'east' if direction == 'south' else 'north'} of its centre [m]")
     axes.set_ylabel("height [m]")

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from matplotlib.ticker import MaxNLocator
@@ -120,7 +120,7 @@ def port_impedances(solution: Solution, termination: Termination = 100.0) -> Por
     reference, n_ports = solution.reference_ohm, len(solution.port_names)
     load = reflection_of(termination, n_ports, reference)
     one = isinstance(termination, str) or np.ndim(termination) == 0
-    values = (termination,) * n_ports if one else tuple(termination)  # type: ignore[arg-type]
+    values: tuple[Any, ...] = (termination,) * n_ports if one else tuple(termination)  # type: ignore[arg-type]
     coupled = input_reflection(scattering_from_loaded(solution.coupled.loaded_admittance, reference), load)
     isolated = np.concatenate(
         [
@@ -215,11 +215,23 @@ def draw_impedance(
                 _draw_spread(axes, frequencies, own, single)
                 axes.set_ylabel(quantity)
                 axes.set_title(f"port {label}", loc="left")
-            row[2].set_ylim(bottom=0.0)
+            # Differences of rounding and residual are not to fill a panel.
+            _widen(row[0], 1e-3 * float(np.abs(isolated).max()))
+            _widen(row[1], 1e-3 * float(np.abs(isolated).max()))
+            row[2].set_ylim(0.0, max(1.08 * float(change.max()), 0.01))
             if len(every) > 1:
                 row[3].set_ylim(0.0, 1.0)
+            else:
+                row[3].set_ylim(top=min(row[3].get_ylim()[1], 1.01))
         legend_above(figure, *legend_of(panels[0]))
     return Path(path)
+
+
+def _widen(axes: Axes, least: float) -> None:
+    """Give the vertical scale at least this range."""
+    low, high = axes.get_ylim()
+    lacking = max(least - (high - low), 0.0)
+    axes.set_ylim(low - 0.5 * lacking, high + 0.5 * lacking)
 
 
 def _draw_spread(axes: Axes, frequencies_mhz: FloatArray, coupled: FloatArray, isolated: FloatArray | None) -> None:
@@ -235,7 +247,7 @@ def _draw_spread(axes: Axes, frequencies_mhz: FloatArray, coupled: FloatArray, i
             axes.plot(order, isolated[0], "_", ms=11 if count <= 40 else 5, mew=2.0, color=ISOLATED, label="isolated")
         axes.axhline(np.median(coupled[0]), color=COUPLED, lw=1.0, alpha=0.7, label="coupled, median", zorder=1)
         axes.set_xlabel("antenna, in the order of the layout")
-        axes.xaxis.set_major_locator(MaxNLocator(integer=True, nbins=8))
+        axes.xaxis.set_major_locator(MaxNLocator(integer=True, nbins=8, min_n_ticks=1))
         axes.set_xlim(1 - max(0.4, 0.01 * count), count + max(0.4, 0.01 * count))
         return
     x = frequencies_mhz

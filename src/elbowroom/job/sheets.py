@@ -14,6 +14,7 @@ from collections.abc import Iterable, Iterator, Sequence
 from contextlib import contextmanager
 from functools import cache
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 from matplotlib import rc_context
@@ -22,6 +23,7 @@ from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 from matplotlib.font_manager import findfont, get_font
+from matplotlib.layout_engine import ConstrainedLayoutEngine
 from matplotlib.patheffects import withStroke
 from numpy.typing import ArrayLike
 
@@ -46,7 +48,7 @@ _DOTS_PER_INCH = 130
 _LONGEST_NAME = 60
 _LETTERS_PER_INCH = 12.5
 _FONT = "DejaVu Sans"
-_STYLE = {
+_STYLE: dict[Any, Any] = {
     "font.family": _FONT,
     "font.size": 9.5,
     "axes.titlesize": 10.0,
@@ -99,20 +101,17 @@ def sheet(
         If the file cannot be written.
     """
     with rc_context(_STYLE):
-        figure = Figure(figsize=size, dpi=_DOTS_PER_INCH, layout="constrained")
-        canvas = FigureCanvasAgg(figure)
         width, height = size
-        subtitle = printable(_one_line([text for text in details if text], int(width * _LETTERS_PER_INCH)))
+        subtitle = printable(
+            _one_line([" ".join(text.split()) for text in details if text.strip()], int(width * _LETTERS_PER_INCH))
+        )
         foot = _lines([NOT_MEASURED, *(printable(text) for text in caption if text)], int(width * 15.0))
         # Title and caption own strips of the sheet [inch], which the layout of the axes leaves free.
         above, below, side = 0.76, 0.20 + 0.16 * len(foot.splitlines()), 0.12
-        figure.get_layout_engine().set(  # type: ignore[union-attr]
-            w_pad=0.09,
-            h_pad=0.07,
-            wspace=0.02,
-            hspace=0.04,
-            rect=(side / width, below / height, 1.0 - 2.0 * side / width, 1.0 - (above + below) / height),
-        )
+        strips = (side / width, below / height, 1.0 - 2.0 * side / width, 1.0 - (above + below) / height)
+        engine = ConstrainedLayoutEngine(w_pad=0.09, h_pad=0.07, wspace=0.02, hspace=0.04, rect=strips)
+        figure = Figure(figsize=size, dpi=_DOTS_PER_INCH, layout=engine)
+        canvas = FigureCanvasAgg(figure)
         figure.text(0.15 / width, 1.0 - 0.12 / height, printable(title), va="top", fontsize=13, fontweight="bold")
         figure.text(0.15 / width, 1.0 - 0.43 / height, subtitle, va="top", fontsize=9.5, color="0.25")
         figure.text(0.15 / width, 0.09 / height, foot, va="bottom", fontsize=8, color="0.35", linespacing=1.35)
@@ -248,13 +247,11 @@ def one_termination_text(value: complex | float | str) -> str:
 
 def termination_text(termination: Termination) -> str:
     """Return what the ports see in words: one value, or the commonest one and how many ports see another."""
-    if isinstance(termination, str) or np.ndim(termination) == 0:
-        return f"ports terminated with {one_termination_text(termination)}"  # type: ignore[arg-type]
-    counts = Counter(one_termination_text(value) for value in termination)  # type: ignore[union-attr]
+    values = [termination] if isinstance(termination, str) or np.ndim(termination) == 0 else list(termination)  # type: ignore[arg-type]
+    counts = Counter(one_termination_text(value) for value in values)  # type: ignore[arg-type]
     (common, count), total = counts.most_common(1)[0], counts.total()
-    if count == total:
-        return f"ports terminated with {common}"
-    return f"ports terminated with {common}, {total - count} of {total} otherwise"
+    words = {"open": "ports open", "short": "ports shorted"}.get(common, f"ports terminated with {common}")
+    return words if count == total else f"{words}, {total - count} of {total} otherwise"
 
 
 def decibels(amplitude: ArrayLike, reference: float, floor_db: float = -60.0) -> FloatArray:

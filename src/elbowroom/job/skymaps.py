@@ -122,12 +122,14 @@ def closed_grid(values: ArrayLike, directions: Directions) -> np.ndarray:
 
 
 def response_words(termination: Termination, rows: Sequence[int] | np.ndarray) -> tuple[str, str]:
-    """Return name and unit of what some ports answer with: effective length, or current per field where all are shorted."""
+    """Return name and unit of what some ports answer with: effective length, or current per field where they are shorted."""
     one = isinstance(termination, str) or np.ndim(termination) == 0
     seen = [termination if one else termination[int(row)] for row in rows]  # type: ignore[index]
     shorted = [isinstance(value, str) and value == "short" for value in seen]
     if shorted and all(shorted):
         return "short-circuit current per field", "m/ohm"
+    if any(shorted):
+        return "voltages and short-circuit currents per field, added", "in mixed units"
     return "effective length", "m"
 
 
