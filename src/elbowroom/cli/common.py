@@ -92,8 +92,6 @@ def exit_on(failures: list) -> None:
         sys.exit(failures[0].error.exit_code)
 
 
-
-
 def require_stored(run: JobRun) -> None:
     """Refuse to go on unless the store has every frequency.
 

@@ -11,9 +11,10 @@ import click
 from elbowroom import __version__
 from elbowroom.base.errors import ElbowroomError
 from elbowroom.cli.common import FREQUENCIES, JOB, exit_on, make_screen, modes, open_job, solve_all
-from elbowroom.cli.results import compare, export
+from elbowroom.cli.results import compare, draw, export, run
 
 INTERRUPTED_EXIT_CODE = 130
+
 
 @click.group(
     context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 110},
@@ -159,7 +160,7 @@ def solve(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> Non
     exit_on(failures)
 
 
-for _command in (compare, export):
+for _command in (compare, draw, export, run):
     cli.add_command(_command)
 
 

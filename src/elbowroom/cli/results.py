@@ -9,14 +9,7 @@ from typing import TYPE_CHECKING
 
 import click
 
-from elbowroom.cli.common import (
-    FREQUENCIES,
-    JOB,
-    make_screen,
-    modes,
-    open_job,
-    require_stored,
-)
+from elbowroom.cli.common import FREQUENCIES, JOB, exit_on, make_screen, modes, open_job, require_stored, solve_all
 
 if TYPE_CHECKING:
     from elbowroom.cli.screen import Screen
@@ -136,3 +129,143 @@ def _tell_table(screen: Screen, path: Path, settings: TableSettings) -> None:
 
     screen.wrote(path, f"{settings.components}, {settings.normalisation.replace('-', ' ')}")
     screen.say(WARNING)
+
+
+MOST_DRAWN = 12
+"""Frequencies beyond this many get no sky maps and cuts each, unless they are asked for by name."""
+
+
+def _drawn_frequencies(run: JobRun, chosen: tuple[float, ...], screen: Screen) -> set[float]:
+    """Return the frequencies [Hz] that get pictures of their own."""
+    every = run.frequencies_hz
+    if chosen or len(every) <= MOST_DRAWN:
+        return set(every)
+    few = {every[0], every[len(every) // 2], every[-1]}
+    screen.say(
+        f"{len(every)} frequencies: sky maps and cuts at the lowest, the middle and the highest only; "
+        "name others with --frequency-hz"
+    )
+    return few
+
+
+class _Pictures:
+    """The pictures of a job, drawn as one frequency after another comes by."""
+
+    def __init__(self, run: JobRun, folder: Path, screen: Screen, drawn: set[float], component: str = "total") -> None:
+        self.run, self.folder, self.screen, self.drawn, self.component = run, folder, screen, drawn, component
+        self.impedances: list = []
+
+    def _wrote(self, path: Path) -> None:
+        self.screen.wrote(path)
+
+    def layout(self) -> None:
+        """Draw where the antennas stand and what they look like."""
+        from elbowroom.job.pictures import draw_layout, picture_name
+
+        job = self.run.job
+        path = self.folder / picture_name("layout")
+        self._wrote(
+            draw_layout(
+                self.run.station, path, title=job.title, frequencies_hz=self.run.frequencies_hz, termination=self.run.termination
+            )
+        )
+
+    def add(self, fields: BeamFields) -> None:
+        """Draw what belongs to one frequency."""
+        from elbowroom.job.pictures import draw_cuts, draw_element_spread, draw_sky_maps, picture_name, port_impedances
+        from elbowroom.job.skymaps import isolated_peak
+
+        solution, seen, title = fields.solution, fields.termination, self.run.job.title
+        self.impedances.append(port_impedances(solution, seen))
+        frequency = solution.frequency_hz
+        if frequency not in self.drawn:
+            return
+        for index, beam in enumerate(fields.beams):
+            sky = self.folder / picture_name("sky", beam.name, frequency)
+            self._wrote(draw_sky_maps(fields, index, sky, title=title, component=self.component))
+            cuts = self.folder / picture_name("cuts", beam.name, frequency)
+            peak = isolated_peak(fields, index)
+            self._wrote(draw_cuts(solution, beam, cuts, termination=seen, title=title, component=self.component, peak=peak))
+        for port in sorted({beam.port for beam in fields.beams}):
+            spread = self.folder / picture_name("antennas", port, frequency)
+            self._wrote(draw_element_spread(solution, port, spread, termination=seen, title=title))
+
+    def finish(self) -> None:
+        """Draw what runs over frequency."""
+        from elbowroom.job.pictures import draw_impedance, picture_name
+
+        self._wrote(draw_impedance(self.impedances, self.folder / picture_name("impedance"), title=self.run.job.title))
+
+
+@click.command()
+@JOB
+@FREQUENCIES
+@click.option("--output", type=click.Path(path_type=Path), help="Folder of the pictures; by default the job's output folder.")
+@click.option(
+    "--component", type=click.Choice(["total", "co", "cross"]), default="total", show_default=True,
+    help="What maps and cuts show: both components together, or one of Ludwig's third definition.",
+)  # fmt: skip
+@click.option("--layout-only", is_flag=True, help="Only the layout, for which nothing needs to be solved.")
+@modes
+def draw(
+    job: Path, frequencies_hz: tuple[float, ...], output: Path | None, component: str, layout_only: bool, mode: str | None
+) -> None:
+    """Draw a solved JOB: layout, port impedance over frequency, all-sky maps, cuts, and how much the antennas differ."""
+    screen = make_screen(mode)
+    run_ = open_job(job, frequencies_hz, screen)
+    folder = output or run_.job.output_folder
+    if not layout_only:
+        require_stored(run_)
+    pictures = _Pictures(run_, folder, screen, _drawn_frequencies(run_, frequencies_hz, screen), component)
+    pictures.layout()
+    if layout_only:
+        return
+    for fields in _fields(run_):
+        pictures.add(fields)
+    pictures.finish()
+
+
+@click.command()
+@JOB
+@FREQUENCIES
+@modes
+def run(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> None:
+    """Do it all for JOB: solve what the store lacks, compare beams, export the HDF5 beam table, draw.
+
+    Frequencies that cannot be solved are told and left out of the results.
+    """
+    from elbowroom.job.compare import compare_beams
+    from elbowroom.job.export import TableSettings, export_hdf5
+
+    screen = make_screen(mode)
+    run_ = open_job(job, frequencies_hz, screen)
+    solved, failures = solve_all(run_, screen)
+    if not solved:
+        exit_on(failures)
+    run_.frequencies_hz = tuple(solved)
+    folder = run_.job.output_folder
+    pictures = _Pictures(run_, folder, screen, _drawn_frequencies(run_, frequencies_hz, screen))
+    pictures.layout()
+    rows: list[BeamComparison] = []
+
+    def each() -> Iterator[BeamFields]:
+        for fields in _fields(run_):
+            if fields.beams:
+                rows.extend(compare_beams(fields))
+            pictures.add(fields)
+            yield fields
+
+    if run_.job.beams:
+        settings = TableSettings()
+        path = folder / TABLE_FILES["hdf5"]
+        export_hdf5(path, each(), len(solved), settings=settings, title=run_.job.title, job_text=run_.job.text)
+        pictures.finish()
+        _tell_table(screen, path, settings)
+        _write_comparison(run_, rows, folder / COMPARISON_FILE)
+        _show_comparison(rows, screen, folder / COMPARISON_FILE)
+    else:
+        screen.warn("the job has no [[beam]]: no comparison and no beam table")
+        for _ in each():
+            pass
+        pictures.finish()
+    exit_on(failures)
