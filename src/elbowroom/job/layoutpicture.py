@@ -22,7 +22,7 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
 
 _NAMED_ANTENNAS = 30
-_MOST_DESIGNS = 4
+_MOST_DESIGNS = 3
 _MARK = "#b3123f"
 
 
