@@ -262,13 +262,14 @@ def build_mesh(
     Raises
     ------
     GeometryError
-        If a port sits at a wire end that does not touch the ground, two gaps overlap, or nothing carries current.
+        If a port sits at a wire end that does not touch the ground, a gap is too narrow to be cut out, two gaps overlap, or
+        nothing carries current.
     """
     wires = antenna.wires
     grounded_wires = np.zeros((len(wires), 2), dtype=bool) if grounded_ends is None else grounded_ends
     scale = max(w.length for w in wires)
     tolerance = max(1e-3 * min(w.radius for w in wires), 1e-9 * scale)
-    _check_gaps(antenna, grounded_wires)
+    _check_gaps(antenna, grounded_wires, tolerance)
 
     # Pieces between cuts, and the nodes at their ends.
     points: list[np.ndarray] = []
@@ -370,12 +371,19 @@ def build_mesh(
     )
 
 
-def _check_gaps(antenna: Antenna, grounded_wires: np.ndarray) -> None:
+def _check_gaps(antenna: Antenna, grounded_wires: np.ndarray, tolerance: float) -> None:
     labelled = [
         *zip(antenna.gap_labels, antenna.gaps, strict=True),
         *((f"load {i}", g) for i, g in enumerate(antenna.load_gaps)),
     ]
     for i, (label, gap) in enumerate(labelled):
+        # Cuts nearer than the tolerance are one cut: the gap would vanish, and its port carry no current at all.
+        if gap.width <= 2.0 * tolerance:
+            msg = (
+                f"antenna {antenna.name!r}: the gap of {label} is {gap.width:g} m wide, too narrow to be cut out of wire "
+                f"{gap.wire}; at least {2.0 * tolerance:.3g} m is needed here"
+            )
+            raise GeometryError(msg)
         for other_label, other in labelled[:i]:
             if gap.wire == other.wire and min(gap.high, other.high) - max(gap.low, other.low) > 1e-9 * gap.width:
                 msg = f"antenna {antenna.name!r}: the gaps of {other_label} and {label} overlap on wire {gap.wire}"
