@@ -18,7 +18,8 @@ import pytest
 from numpy.polynomial.legendre import leggauss
 
 import references as ref
-from elbowroom.base.constants import IMPEDANCE_OF_VACUUM, SPEED_OF_LIGHT
+from dipole_models import FREQUENCY_HZ, K, sinusoid
+from elbowroom.base.constants import IMPEDANCE_OF_VACUUM
 from elbowroom.geometry.antennas import Antenna, Port
 from elbowroom.geometry.grounds import FreeSpace, PerfectGround
 from elbowroom.geometry.mesh import Mesh, MeshSettings
@@ -32,8 +33,6 @@ from elbowroom.system.self_block import expand_moments_between
 
 pytestmark = pytest.mark.validation
 
-K = 2.0 * pi
-FREQUENCY_OF_1_M_HZ = SPEED_OF_LIGHT
 FINE = MeshSettings(order=8, end_radii=1.5, gap_radii=3.0, floor_wavelengths=0.01, growth=4.0, longest_wavelengths=0.1)
 
 CARTER = "Carter 1932, closed form in Si and Ci"
@@ -53,30 +52,6 @@ def antenna(*dipoles):
     return Antenna("sinusoids", wires, [Port("p", 0, position=0.4)])
 
 
-def sinusoid(mesh: Mesh, centre, half_length, wires, direction):
-    """Return the unknowns (N,) of sin(k(h - |s|)) on some wires: nodal values, and bubbles by projection of the slope.
-
-    The slopes of the bubbles are orthonormal Legendre polynomials, so each coefficient is one integral.
-    """
-    order = mesh.order
-    u, w = leggauss(24)
-    legendre = np.polynomial.legendre.legvander(u, order)
-    local = np.zeros((mesh.n_elements, order + 1))
-    for e in np.flatnonzero(np.isin(mesh.wire, wires)):
-        points = mesh.start[e] + 0.5 * (u[:, None] + 1.0) * (mesh.end[e] - mesh.start[e])
-        sign = float(np.sign(mesh.tangent[e] @ direction))
-        s, first, last = ((p - np.asarray(centre)) @ direction for p in (points, mesh.start[e], mesh.end[e]))
-        local[e, 0], local[e, 1] = (sign * np.sin(K * (half_length - abs(x))) for x in (first, last))
-        slope = -sign * np.sign(s) * K * np.cos(K * (half_length - abs(s))) * sign * 0.5 * mesh.length[e]
-        for n in range(2, order + 1):
-            local[e, n] = np.sqrt(0.5 * (2 * n - 1)) * np.sum(w * slope * legendre[:, n - 1])
-    flat = mesh.expansion.reshape(-1, mesh.n_unknowns)
-    unknowns, *_ = np.linalg.lstsq(flat, local.ravel(), rcond=None)
-    # A current that the unknowns cannot carry (a jump at a node) would be lost here without a sound.
-    np.testing.assert_allclose(flat @ unknowns, local.ravel(), atol=1e-12)
-    return unknowns
-
-
 def first_sinusoid(mesh, half_length, centre=(0.0, 0.0, 0.0), direction=(0.0, 0.0, 1.0)):
     """Return the sinusoid on the first two wires."""
     return sinusoid(mesh, centre, half_length, [0, 1], np.asarray(direction))
@@ -90,7 +65,7 @@ def coupled(h, h2, distance, offset, *, radius=1e-5, ground=None, height=0.0, di
     direction2 = direction if direction2 is None else direction2
     designs = [antenna(((0, 0, 0), t, x, radius)) for x, t in ((h, direction), (h2, direction2))]
     placed = [Placed(designs[0], (0.0, 0.0, height)), Placed(designs[1], (distance, 0.0, height + offset))]
-    d = discretise(Station(placed, ground or FreeSpace()), FREQUENCY_OF_1_M_HZ, mesh=FINE, self_blocks=False)
+    d = discretise(Station(placed, ground or FreeSpace()), FREQUENCY_HZ, mesh=FINE, self_blocks=False)
     filler = PairFiller(d)
     level = filler.level_of(antenna_distances(d)[0, 1])
     block = filler.close_block(0, 1) if level < 0 else filler.sampled_blocks(0, np.array([1]), level)[0]
@@ -186,7 +161,7 @@ def filament_block(mesh: Mesh, radius):
 
 def alone(design, ground=None, height=0.0):
     """Return mesh and self block of one antenna."""
-    d = discretise(Station([Placed(design, (0.0, 0.0, height))], ground or FreeSpace()), FREQUENCY_OF_1_M_HZ, mesh=FINE)
+    d = discretise(Station([Placed(design, (0.0, 0.0, height))], ground or FreeSpace()), FREQUENCY_HZ, mesh=FINE)
     return d.kinds[0].mesh, d.kinds[0].self_block
 
 
