@@ -69,7 +69,7 @@ def solve_all(run: JobRun, screen: Screen) -> tuple[list[float], list]:
             solved.append(frequency)
             s = outcome.statistics
             total = sum(s.seconds.values())
-            state = "solved" if frequency in missing else "from store"
+            state = "solved" if frequency in progress.worked_on else "from store"
             rows.append(
                 [frequency / 1e6, state, s.n_unknowns, s.n_ports, f"{s.relative_residual:.1e}", f"{s.mesh_error:.1e}",
                  readable_seconds(total)]

@@ -100,6 +100,7 @@ class SolveProgress:
     def __init__(self, screen: Screen, weights: dict[float, float]) -> None:
         self.screen, self.weights = screen, weights
         self.done = 0.0
+        self.worked_on: set[float] = set()
         self.total = sum(weights.values()) or 1.0
         self.last_line = 0.0
         self.bar: Progress | None = None
@@ -123,6 +124,8 @@ class SolveProgress:
 
     def __call__(self, frequency_hz: float, stage: str, fraction: float) -> None:
         """Move on."""
+        # Frequencies that were thought to be in the store are worked on too, if their file is found damaged.
+        self.worked_on.add(frequency_hz)
         start, share = self.SHARES.get(stage, (0.0, 0.0))
         reached = self.done + self.weights.get(frequency_hz, 0.0) * (start + share * fraction)
         label = f"{frequency_hz / 1e6:g} MHz: {stage}"

@@ -1,0 +1,258 @@
+"""Whatever is wrong with the input: one clear message, the exit code of its kind, no traceback, nothing lost."""
+
+import subprocess
+import sys
+
+import h5py
+import pytest
+
+from elbowroom.job.templates import write_template
+
+FREE_WIRES = """name = "wires"
+[[wire]]
+start_m = [-0.5, 0.0, 1.0]
+end_m = [0.5, 0.0, 1.0]
+radius_m = 0.003
+[[port]]
+name = "x"
+wire = 0
+[[port]]
+name = "y"
+wire = 0
+position = 0.4
+"""
+ANOTHER_WIRE = """[[wire]]
+start_m = [{}]
+end_m = [{}]
+radius_m = 0.003
+"""
+
+
+def refused(outcome, code, *words):
+    assert outcome.code == code, outcome.all
+    assert "Traceback" not in outcome.all
+    for word in words:
+        assert word in outcome.err, f"{word!r} is not in: {outcome.err}"
+
+
+@pytest.mark.parametrize(
+    ("name", "old", "new", "code", "words"),
+    [
+        ("layout.csv", "east_m,north_m,up_m", "east_m,nort_m,up_m", 2, ("layout.csv", "nort_m", "north_m")),
+        ("layout.csv", "east_m,north_m,up_m", "east_m,up_m", 2, ("layout.csv", "line 4")),
+        ("layout.csv", "1.387", "wide", 2, ("layout.csv", "line 6", "east_m", "wide")),
+        ("layout.csv", "1.387", "nan", 2, ("layout.csv", "line 6", "east_m", "nan")),
+        ("layout.csv", "1.387", "inf", 2, ("layout.csv", "line 6", "inf")),
+        ("layout.csv", "1.387", "1387e3", 2, ("layout.csv", "line 6", "east_m")),
+        ("layout.csv", "A002", "A001", 2, ("layout.csv", "line 6", "A001", "already used")),
+        ("layout.csv", "1.387,-0.367", "-0.627,0.13", 2, ("A001", "A002")),
+        ("layout.csv", "1.387,-0.367,0.0", "1.387,-0.367,-0.9", 3, ("A002", "ground")),
+        ("layout.csv", "1.387,-0.367,0.0,0.0,0.0,0.0,", "1.387,-0.367,0.0,0.0,0.0,0.0,tall", 2, ("tall",)),
+        ("job.toml", "[110e6]", "[110]", 2, ("band.frequency_hz", "110", "Hz")),
+        ("job.toml", "[110e6]", "[0.0]", 2, ("band.frequency_hz", "0")),
+        ("job.toml", "[110e6]", "[-110e6]", 2, ("band.frequency_hz", "-1.1")),
+        ("job.toml", "[110e6]", "[nan]", 2, ("band.frequency_hz", "nan")),
+        ("job.toml", "[110e6]", "[]", 2, ("frequency_hz = []", "at least one")),
+        ("job.toml", "frequency_hz", "frequencies_hz", 2, ("frequencies_hz", "frequency_hz")),
+        ("job.toml", "\n[band]\n", "\n[bend]\n", 2, ("bend", "band")),
+        ("job.toml", "\n[band]\n", "\n[band\n", 2, ("job.toml", "line")),
+        ("job.toml", 'port = "x"', 'port = "z"', 2, ("beam[0].port", "z", "x, y")),
+        ("job.toml", "impedance_ohm = 100.0", "impedance_ohm = -100.0", 2, ("termination.impedance_ohm", "-100")),
+        ("job.toml", 'layout = "layout.csv"', 'layout = "lay.csv"', 2, ("lay.csv",)),
+        ("job.toml", 'ground = "perfect"', 'ground = "perfct"', 2, ("ground", "perfct", "perfect")),
+        ("job.toml", "step_deg = 10.0", "step_deg = 7.0", 2, ("sky.step_deg", "7")),
+        ("antenna.toml", "arm_length_m", "arm_lenght_m", 2, ("arm_lenght_m", "arm_length_m")),
+        ("antenna.toml", "arm_length_m = 0.80", 'arm_length_m = "long"', 2, ("arm_length_m", "long")),
+        ("antenna.toml", "wire_radius_m = 0.006", "wire_radius_m = 0.4", 2, ("antenna.toml",)),
+        ("antenna.toml", "wire_radius_m = 0.006", "wire_radius_m = 0.06", 2, ("antenna.toml",)),
+        ("antenna.toml", "wire_radius_m = 0.006", "wire_radius_m = -0.006", 2, ("antenna.toml", "-0.006", "must be positive")),
+        ("antenna.toml", 'shape = "crossed-dipoles"', 'shape = "crossed-dipole"', 2, ("crossed-dipole", "crossed-dipoles")),
+    ],
+)  # fmt: skip
+@pytest.mark.parametrize("verb", ["inspect", "run"])
+def test_input__wrong_in_one_place__is_named(command, job, change, name, old, new, code, words, verb):
+    change(job.parent / name, old, new)
+    outcome = command(verb, job)
+    if verb == "inspect" and code == 3:
+        # inspect lists problems of the model as its result
+        assert outcome.code == 3
+        assert all(word in outcome.all for word in words)
+        return
+    refused(outcome, code, *words)
+    assert not (job.parent / "results").exists()
+
+
+def test_layout__without_antennas__is_refused(command, job):
+    (job.parent / "layout.csv").write_text("name,east_m,north_m\n")
+    refused(command("run", job), 2, "layout.csv", "no antennas")
+    (job.parent / "layout.csv").write_text("")
+    refused(command("run", job), 2, "layout.csv")
+
+
+@pytest.mark.parametrize(
+    ("extra", "words"),
+    [
+        (ANOTHER_WIRE.format("0.1, 0.0, 1.0", "0.9, 0.0, 1.0"), ("wire",)),
+        (ANOTHER_WIRE.format("0.0, -0.3, 1.0", "0.0, 0.3, 1.002"), ("wire",)),
+        (ANOTHER_WIRE.format("0.0, 0.2, 1.0", "0.0, 0.2, 1.0"), ("wire[1]", "length")),
+        (ANOTHER_WIRE.format("0.0, 0.2, -1.0", "0.0, 0.2, -2.0"), ("below the ground",)),
+        (ANOTHER_WIRE.format("0.0, 0.2, 1.0", "0.0, 0.2, 1.004"), ("wire[1]", "radius", "length")),
+    ],
+    ids=["overlapping", "crossing", "no length", "below ground", "thick"],
+)
+def test_wires__that_cannot_be__are_refused(command, job, extra, words):
+    (job.parent / "antenna.toml").write_text(FREE_WIRES + extra)
+    outcome = command("run", job)
+    assert outcome.code in (2, 3)
+    refused(outcome, outcome.code, *words)
+
+
+def test_antennas__whose_wires_cut_each_other__are_refused(command, job, change):
+    change(job.parent / "layout.csv", "1.387,-0.367", "-0.227,0.13")
+    refused(command("solve", job), 3, "A001", "A002")
+
+
+def test_job__too_large_for_the_machine__is_refused_before_it_starts(command, job, monkeypatch):
+    import elbowroom.job.plan as plan
+
+    monkeypatch.setattr(plan, "available_memory_bytes", lambda root="/": 1_000_000)
+    outcome = command("run", job)
+    refused(outcome, 8, "of memory needed", "1 MB available", "nothing was started")
+    assert not list(job.parent.rglob("*.h5"))
+
+
+def test_job__too_large_for_the_process_limit__is_refused(tmp_path):
+    # a real limit on the address space, as a container or batch system sets one; the demo station needs gigabytes
+    write_template("demo", tmp_path / "demo")
+    script = (
+        "import resource, sys; from elbowroom.cli.main import main; import psutil, numba, scipy.linalg, h5py; "
+        "resource.setrlimit(resource.RLIMIT_AS, (psutil.Process().memory_info().vms + 800_000_000,) * 2); "
+        f"sys.argv = ['elbowroom', 'run', {str(tmp_path / 'demo' / 'job.toml')!r}]; main()"
+    )
+    done = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True, check=False)
+    assert done.returncode == 8, done.stdout + done.stderr
+    assert "of memory needed" in done.stderr
+    assert "Traceback" not in done.stderr
+    assert not list((tmp_path / "demo").rglob("*.h5"))
+
+
+@pytest.mark.parametrize("what", ["store", "results"])
+def test_folder__whose_parent_is_a_file__is_refused(command, job, what):
+    (job.parent / "taken").write_text("a file")
+    table = "[store]\nfolder" if what == "store" else "[output]\nfolder"
+    text = job.read_text()
+    old = f'{table} = "{what}"'
+    assert old in text
+    job.write_text(text.replace(old, f'{table} = "taken/{what}"'))
+    outcome = command("run", job, "--quiet")
+    refused(outcome, 6 if what == "store" else 7, "taken")
+    assert (job.parent / "taken").read_text() == "a file"
+    if what == "results":
+        # what was solved is kept
+        assert list((job.parent / "store").rglob("*.h5"))
+
+
+def stored(job):
+    (path,) = (job.parent / "store").rglob("*.h5")
+    return path
+
+
+@pytest.mark.parametrize("damage", ["bit", "truncated", "empty", "foreign"])
+def test_damaged_unit__is_told_set_aside_and_solved_again(command, job, damage):
+    assert command("solve", job, "--quiet").code == 0
+    path = stored(job)
+    content = bytearray(path.read_bytes())
+    if damage == "bit":
+        content[len(content) // 2] ^= 4
+    content = {"truncated": content[: len(content) // 2], "empty": b"", "foreign": b"not a unit " * 500}.get(damage, content)
+    path.write_bytes(content)
+    outcome = command("solve", job)
+    assert outcome.code == 0, outcome.all
+    assert "warning" in outcome.err
+    assert "solved" in outcome.out
+    again = command("solve", job)
+    assert again.code == 0
+    assert "from store" in again.out
+    assert "warning" not in again.err
+
+
+def test_unit_of_another_schema_version__is_told_and_solved_again(command, job, monkeypatch):
+    import dataclasses
+
+    import elbowroom.job.pipeline as pipeline
+    import elbowroom.job.solve as solving
+
+    newer = dataclasses.replace(solving.SOLUTION_SCHEMA, version=solving.SOLUTION_SCHEMA.version + 1)
+    with monkeypatch.context() as patch:
+        patch.setattr(pipeline, "SOLUTION_SCHEMA", newer)
+        assert command("solve", job, "--quiet").code == 0
+    theirs = stored(job)
+    before = theirs.read_bytes()
+    outcome = command("solve", job)
+    assert outcome.code == 0, outcome.all
+    assert "solved" in outcome.out
+    # a newer program's file is not ours to throw away, or it is set aside under another name
+    kept = [p for p in (job.parent / "store").rglob("*") if p.is_file() and p.read_bytes() == before]
+    assert kept, "the other version's file is lost"
+
+
+def test_results_of_a_job_not_solved__say_how_to_get_them(command, job):
+    for verb in ("compare", "export", "draw"):
+        refused(command(verb, job), 6, "not solved yet", "elbowroom solve")
+
+
+def test_frequency__that_the_job_has_not__is_refused(command, job):
+    refused(command("solve", job, "--frequency-hz", "111e6"), 2, "111000000", "110000000")
+    refused(command("solve", job, "--frequency-hz", "fast"), 2, "fast")
+
+
+def test_export__with_options_that_do_not_fit__is_refused(command, job):
+    assert command("solve", job, "--quiet").code == 0
+    refused(command("export", job, "--step-deg", 7), 3, "divides 90")
+    refused(command("export", job, "--format", "csv", "--elements"), 7, "HDF5 only")
+    refused(command("export", job, "--format", "fits"), 2, "fits")
+
+
+def test_start__in_a_folder_with_files__overwrites_nothing(command, job):
+    before = job.read_text()
+    outcome = command("start", job.parent)
+    assert outcome.code != 0
+    assert "Traceback" not in outcome.all
+    assert job.read_text() == before
+
+
+@pytest.mark.parametrize(
+    ("arguments", "words"),
+    [
+        (("disc", "l.csv"), ("--count", "--radius-m", "--spacing-m")),
+        (("disc", "l.csv", "--count", 500, "--radius-m", 5, "--spacing-m", 1.5), ("500",)),
+        (("grid", "l.csv", "--columns", 0, "--rows", 3, "--spacing-m", 1.5), ("columns",)),
+        (("rings", "l.csv", "--rings", "1,b", "--spacing-m", 1.5), ("1,b",)),
+        (("disc", "l.csv", "--count", 5, "--radius-m", 5, "--spacing-m", 1.5, "--turn", "left"), ("left",)),
+        (("triangle", "l.csv"), ("triangle",)),
+    ],
+)
+def test_layout__that_cannot_be_made__is_refused(command, tmp_path, monkeypatch, arguments, words):
+    monkeypatch.chdir(tmp_path)
+    outcome = command("layout", *arguments)
+    assert outcome.code in (2, 3)
+    refused(outcome, outcome.code, *words)
+    assert not (tmp_path / "l.csv").exists()
+
+
+def test_one_bad_frequency__does_not_stop_the_others(command, job, change):
+    # a radius of 8 mm is beyond 0.02 wavelengths at 900 MHz; the model's limits are known before anything is solved
+    change(job, "[110e6]", "[110e6, 900e6]")
+    change(job.parent / "antenna.toml", "wire_radius_m = 0.006", "wire_radius_m = 0.008")
+    outcome = command("solve", job)
+    assert outcome.code in (3, 4), outcome.all
+    assert "900 MHz" in outcome.err
+    assert "Traceback" not in outcome.all
+
+
+def test_stored_file__opens_with_plain_h5py(command, job):
+    assert command("solve", job, "--quiet").code == 0
+    with h5py.File(stored(job)) as file:
+        names: list[str] = []
+        file.visit(names.append)
+        assert any(name.endswith("loaded_admittance_s") for name in names)
