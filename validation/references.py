@@ -161,9 +161,7 @@ def mutual_impedance(half_length, half_length2, distance, offset, wavenumber, *,
     return refer_impedance(1j * _UNIT * total, half_length, half_length2, wavenumber, reference)[()]
 
 
-def mutual_impedance_by_quadrature(
-    half_length, half_length2, distance, offset, wavenumber, *, reference="maximum"
-):
+def mutual_impedance_by_quadrature(half_length, half_length2, distance, offset, wavenumber, *, reference="maximum"):
     """Return the same quantity by adaptive quadrature of the exact field (scalars, distance > 0)."""
 
     def integrand(t):
@@ -268,9 +266,7 @@ def half_wave_collinear_impedance(offset, wavenumber):
 # --- tubes: the circumferentially averaged kernel -----------------------------------------------------------
 
 
-def coaxial_tube_impedance(
-    half_length, half_length2, offset, radius, radius2, wavenumber, *, reference="maximum", n_points=96
-):
+def coaxial_tube_impedance(half_length, half_length2, offset, radius, radius2, wavenumber, *, reference="maximum", n_points=96):
     """Return the reaction of two coaxial tubes with sinusoidal currents: exact thin-wire kernel.
 
     The kernel averaged around the tube is the mean of filament kernels at the distances
@@ -297,9 +293,7 @@ def coaxial_tube_impedance(
 
 def tube_self_impedance(half_length, radius, wavenumber, *, reference="maximum"):
     """Return the self reaction of a sinusoid on a tube with the exact (circumferentially averaged) kernel."""
-    return coaxial_tube_impedance(
-        half_length, half_length, 0.0, radius, radius, wavenumber, reference=reference
-    )
+    return coaxial_tube_impedance(half_length, half_length, 0.0, radius, radius, wavenumber, reference=reference)
 
 
 def tube_self_impedance_mp(half_length, radius, wavenumber):
@@ -401,9 +395,7 @@ def ring_averaged_impedance(
         for angle2 in angles + pi / n_ring:
             x = distance + radius2 * np.cos(angle2) - radius * np.cos(angle)
             y = radius2 * np.sin(angle2) - radius * np.sin(angle)
-            total = total + mutual_impedance(
-                half_length, half_length2, np.hypot(x, y), offset, wavenumber, reference=reference
-            )
+            total = total + mutual_impedance(half_length, half_length2, np.hypot(x, y), offset, wavenumber, reference=reference)
     return total / n_ring**2
 
 

@@ -32,9 +32,7 @@ def row_sum(transverse, spacing, phase_gradient, *, method="auto"):
         decay = np.sqrt(-transverse) * spacing
         return 4j / pi * np.sum(special.k0(decay * m) * np.cos(phase_gradient * spacing * m))
     step = 2.0 * pi / spacing
-    pairs = _inverse_normal(transverse, phase_gradient + step * m) + _inverse_normal(
-        transverse, phase_gradient - step * m
-    )
+    pairs = _inverse_normal(transverse, phase_gradient + step * m) + _inverse_normal(transverse, phase_gradient - step * m)
     # Asymptotic pair, j (2/g + (2 q^2 + kappa^2)/g^3), g = step m: the first part cancels a logarithm, the
     # second is summed by zeta(3); what is left falls as m^-5.
     second = 1j * (2.0 * phase_gradient**2 + transverse) / step**3
@@ -171,9 +169,7 @@ def windowed_array_sum(
     factor_z = both * taper * np.cos(scan_kz * spacing_z * index)
     if self_kernel == "exact":
         heights = index * spacing_z
-        column = np.array(
-            [coaxial_tube_impedance(half_length, half_length, z, radius, radius, k) for z in heights]
-        )
+        column = np.array([coaxial_tube_impedance(half_length, half_length, z, radius, radius, k) for z in heights])
     else:
         column = mutual_impedance(half_length, half_length, radius, index * spacing_z, k)
     distance, offset = np.meshgrid(index[1:] * spacing_x, index * spacing_z, indexing="ij")

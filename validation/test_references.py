@@ -392,9 +392,7 @@ def test_windowed_array_sum__tends_to_floquet_with_the_second_order_it_must(scan
     curvature = 0.0
     for key, spacing in (("scan_kx", 0.55), ("scan_kz", 0.5)):
         moved = [
-            array.floquet_scan_impedance(
-                **LATTICE, **{**scan, key: scan.get(key, 0.0) + sign * step / spacing}
-            )
+            array.floquet_scan_impedance(**LATTICE, **{**scan, key: scan.get(key, 0.0) + sign * step / spacing})
             for sign in (1, -1)
         ]
         curvature += (moved[0] - 2 * target + moved[1]) / step**2

@@ -32,9 +32,7 @@ def random_directions(count=200, seed=5):
 
 def spherical_harmonic(degree, order, theta, phi):
     """Orthonormal Y_l^m for m >= 0, from scipy's associated Legendre functions."""
-    log_norm = (
-        math.log((2 * degree + 1) / (4 * np.pi)) + gammaln(degree - order + 1) - gammaln(degree + order + 1)
-    )
+    log_norm = math.log((2 * degree + 1) / (4 * np.pi)) + gammaln(degree - order + 1) - gammaln(degree + order + 1)
     return np.exp(0.5 * log_norm) * lpmv(order, degree, np.cos(theta)) * np.exp(1j * order * phi)
 
 
@@ -135,13 +133,7 @@ class TestSphereQuadrature:
     def test_sphere_quadrature__harmonics_orthonormal(self):
         top = 9
         rule = sphere_quadrature(2 * top)
-        modes = np.array(
-            [
-                spherical_harmonic(l, m, rule.theta_rad, rule.phi_rad)
-                for l in range(top + 1)
-                for m in range(l + 1)
-            ]
-        )
+        modes = np.array([spherical_harmonic(l, m, rule.theta_rad, rule.phi_rad) for l in range(top + 1) for m in range(l + 1)])
         gram = (modes * rule.weights_sr) @ modes.conj().T
         assert_allclose(gram, np.eye(len(modes)), rtol=0, atol=1e-12)
 
@@ -256,9 +248,7 @@ class TestRotated:
         matrix = Rotation.random(random_state=8).as_matrix()
         theta, phi = random_directions()
         local_theta, local_phi, to_station = rotated(theta, phi, matrix)
-        assert_allclose(
-            unit_vectors(local_theta, local_phi) @ matrix.T, unit_vectors(theta, phi), rtol=0, atol=ROUNDING
-        )
+        assert_allclose(unit_vectors(local_theta, local_phi) @ matrix.T, unit_vectors(theta, phi), rtol=0, atol=ROUNDING)
         local = np.random.default_rng(1).normal(size=(len(theta), 2))
         station = np.einsum("dij,dj->di", to_station, local)
         local_pair = np.stack(spherical_basis(local_theta, local_phi), axis=1) @ matrix.T

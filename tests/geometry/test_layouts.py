@@ -127,10 +127,7 @@ class TestReading:
             ),
             (
                 "A001,1.0,-2.0\nA002,2,3\n",
-                [
-                    "line 1: the header is missing; column names expected first, "
-                    "for example name,east_m,north_m"
-                ],
+                ["line 1: the header is missing; column names expected first, for example name,east_m,north_m"],
             ),
             (
                 "name,east_m,north_m\nA,one,2\n",
@@ -251,9 +248,9 @@ class TestReading:
 
 finite = st.floats(-360.0, 360.0)
 places = st.tuples(*[st.floats(-1e4, 1e4)] * 3)
-words = st.text(
-    st.characters(exclude_categories=["C", "Z"], include_characters=' ,"'), min_size=1, max_size=8
-).filter(lambda s: s == s.strip() and not s.startswith("#") and s.isprintable())
+words = st.text(st.characters(exclude_categories=["C", "Z"], include_characters=' ,"'), min_size=1, max_size=8).filter(
+    lambda s: s == s.strip() and not s.startswith("#") and s.isprintable()
+)
 
 
 class TestWriting:

@@ -19,9 +19,7 @@ from elbowroom.geometry.grounds import PerfectGround
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import Wire
 from elbowroom.job.beamfields import beam_fields
-from elbowroom.job.cuts import principal_planes
 from elbowroom.job.jobfile import Beam, read_job
-from elbowroom.job.layoutpicture import _port_places
 from elbowroom.job.pictures import (
     draw_cuts,
     draw_element_spread,
@@ -31,9 +29,11 @@ from elbowroom.job.pictures import (
     picture_name,
     port_impedances,
 )
-from elbowroom.job.portpicture import input_reflection, mismatch
-from elbowroom.job.sheets import decibels, frequency_text, printable, sheet, shortened, termination_text
-from elbowroom.job.skymaps import central_port, closed_grid, component_size, isolated_peak, map_places, response_words
+from elbowroom.job.pictures.cuts import principal_planes
+from elbowroom.job.pictures.layouts import _port_places
+from elbowroom.job.pictures.ports import input_reflection, mismatch
+from elbowroom.job.pictures.sheets import decibels, frequency_text, printable, sheet, shortened, termination_text
+from elbowroom.job.pictures.skymaps import central_port, closed_grid, component_size, isolated_peak, map_places, response_words
 from elbowroom.job.solve import solve
 from elbowroom.job.templates import write_template
 from helpers import FREQUENCY_HZ, cluster, crossed, dipole
@@ -333,7 +333,7 @@ def test_map__east_of_the_picture_is_east_of_the_sky(tmp_path):
     from matplotlib import colormaps
     from matplotlib.image import imread
 
-    from elbowroom.job.skymaps import _draw_map
+    from elbowroom.job.pictures.skymaps import _draw_map
 
     sky = hemisphere_grid(5.0)
     level = closed_grid(np.where(np.cos(sky.phi_rad) > 0.5, 0.0, -60.0), sky)

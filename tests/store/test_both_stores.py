@@ -107,9 +107,7 @@ def test_store__says_where_a_record_came_from(any_store):
     assert provenance["numpy_version"] == np.__version__
     assert provenance["key"] == key_of(0)
     assert provenance["conventions"] == SCHEMA.conventions
-    assert {"program_version", "python_version", "scipy_version", "h5py_version", "created_utc"} <= set(
-        provenance
-    )
+    assert {"program_version", "python_version", "scipy_version", "h5py_version", "created_utc"} <= set(provenance)
 
 
 def test_store__holds_a_copy(any_store):
@@ -166,9 +164,7 @@ def test_store__refuses_records_that_do_not_fit(any_store, record, message):
 
 
 def test_store__names_all_problems_together(any_store):
-    with pytest.raises(
-        StoreError, match=r"(?s)'extra' is not declared.*'impedance' is missing.*'position_m'"
-    ):
+    with pytest.raises(StoreError, match=r"(?s)'extra' is not declared.*'impedance' is missing.*'position_m'"):
         any_store.put(key_of(0), Record({"extra": np.zeros(1), "position_m": np.zeros(3)}))
 
 

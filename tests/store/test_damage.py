@@ -52,9 +52,7 @@ def _flipped(content: bytes, bit: int) -> bytes:
 
 def test_get__any_flipped_bit_is_noticed(disk_store, sound, reports):
     with h5py.File(disk_store.path_of(KEY), "r") as file:
-        ranges = [
-            (d.id.get_offset(), d.id.get_storage_size()) for d in (file["impedance"], file["position_m"])
-        ]
+        ranges = [(d.id.get_offset(), d.id.get_storage_size()) for d in (file["impedance"], file["position_m"])]
     numbers = {byte for start, size in ranges for byte in range(start, start + size)}
     at_numbers = record_of(0).arrays["impedance"].tobytes()
     assert sound[ranges[0][0] : ranges[0][0] + ranges[0][1]] == at_numbers

@@ -97,12 +97,8 @@ def test_put__what_does_not_read_back_is_not_stored(disk_store, monkeypatch):
 
 def test_put__compares_what_it_reads_back_with_the_record(disk_store, monkeypatch):
     write = hdf5.write_unit
-    monkeypatch.setattr(
-        hdf5, "write_unit", lambda file, schema, key, record: write(file, schema, key, record_of(1))
-    )
-    with pytest.raises(
-        StoreError, match="does not read back as written: impedance, position_m, record_attributes"
-    ):
+    monkeypatch.setattr(hdf5, "write_unit", lambda file, schema, key, record: write(file, schema, key, record_of(1)))
+    with pytest.raises(StoreError, match="does not read back as written: impedance, position_m, record_attributes"):
         disk_store.put(key_of(0), record_of(0))
 
 

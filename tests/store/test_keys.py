@@ -155,9 +155,7 @@ def test_content_key__a_structure_that_contains_itself_is_an_error():
 _LEAVES = st.sampled_from([None, True, False, 0, 1, 1.0, -0.0, 0.5, 1j, "", "a", "1", ":", "l1:"])
 _TREES = st.recursive(
     _LEAVES,
-    lambda inner: (
-        st.lists(inner, max_size=3) | st.dictionaries(st.sampled_from(["", "a", "b"]), inner, max_size=3)
-    ),
+    lambda inner: st.lists(inner, max_size=3) | st.dictionaries(st.sampled_from(["", "a", "b"]), inner, max_size=3),
     max_leaves=5,
 )
 

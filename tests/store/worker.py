@@ -65,9 +65,7 @@ def main(folder: str) -> None:
             os.close(reader)
         else:
             times = int(arguments[0])
-            children = [
-                forked(lambda writer=n, n_times=times: write_same(folder, writer, n_times)) for n in (1, 2)
-            ]
+            children = [forked(lambda writer=n, n_times=times: write_same(folder, writer, n_times)) for n in (1, 2)]
             print("status", max(os.waitpid(child, 0)[1] for child in children), flush=True)
 
 

@@ -86,7 +86,7 @@ def check_array(
         The converted array.
     """
     try:
-        array = np.asarray(values, dtype=dtype)
+        array: np.ndarray = np.asarray(values, dtype=dtype)
     except (TypeError, ValueError) as cause:
         msg = f"{name}: expected numbers, got {values!r}"
         raise error(msg) from cause

@@ -173,7 +173,7 @@ class _Pictures:
     def add(self, fields: BeamFields) -> None:
         """Draw what belongs to one frequency."""
         from elbowroom.job.pictures import draw_cuts, draw_element_spread, draw_sky_maps, picture_name, port_impedances
-        from elbowroom.job.skymaps import isolated_peak
+        from elbowroom.job.pictures.skymaps import isolated_peak
 
         solution, seen, title = fields.solution, fields.termination, self.run.job.title
         self.impedances.append(port_impedances(solution, seen))

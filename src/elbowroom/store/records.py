@@ -58,9 +58,7 @@ class Schema:
         if isinstance(self.version, bool) or not isinstance(self.version, int) or self.version < 1:
             problems.append(f"schema version: expected a whole number from 1, got {self.version!r}")
         names = [spec.name for spec in self.arrays]
-        problems += [
-            f"array {name!r} is declared twice" for name in sorted({n for n in names if names.count(n) > 1})
-        ]
+        problems += [f"array {name!r} is declared twice" for name in sorted({n for n in names if names.count(n) > 1})]
         for spec in self.arrays:
             if not _ARRAY_NAME.fullmatch(spec.name) or spec.name == RESERVED_NAME:
                 problems.append(f"array name: expected letters, digits, underscores, got {spec.name!r}")
@@ -89,9 +87,7 @@ class Schema:
             if name not in declared:
                 near = difflib.get_close_matches(str(name), declared, n=1)
                 hint = f"; did you mean {near[0]!r}?" if near else ""
-                problems.append(
-                    f"array {name!r} is not declared in schema {self.name} version {self.version}{hint}"
-                )
+                problems.append(f"array {name!r} is not declared in schema {self.name} version {self.version}{hint}")
         lengths: dict[str, tuple[int, str]] = {}
         for spec in self.arrays:
             if spec.name not in arrays:
@@ -100,30 +96,21 @@ class Schema:
                 continue
             array = arrays[spec.name]
             if not isinstance(array, np.ndarray) or isinstance(array, np.ma.MaskedArray):
-                problems.append(
-                    f"array {spec.name!r}: expected a plain numpy array, got {type(array).__name__}"
-                )
+                problems.append(f"array {spec.name!r}: expected a plain numpy array, got {type(array).__name__}")
                 continue
             if array.dtype.kind not in spec.kind:
-                problems.append(
-                    f"array {spec.name!r}: expected a type of kind {spec.kind!r}, got {array.dtype}"
-                )
+                problems.append(f"array {spec.name!r}: expected a type of kind {spec.kind!r}, got {array.dtype}")
             elif array.dtype.itemsize > {"f": 8, "c": 16}.get(array.dtype.kind, array.dtype.itemsize):
                 # its layout differs between machines
                 problems.append(f"array {spec.name!r}: expected at most double precision, got {array.dtype}")
             if array.ndim != len(spec.dims):
                 dims = "(" + ", ".join(spec.dims) + ")"
-                problems.append(
-                    f"array {spec.name!r}: expected {len(spec.dims)} axes {dims}, got {array.shape}"
-                )
+                problems.append(f"array {spec.name!r}: expected {len(spec.dims)} axes {dims}, got {array.shape}")
                 continue
             for dim, length in zip(spec.dims, array.shape, strict=True):
                 known, owner = lengths.setdefault(dim, (length, spec.name))
                 if known != length:
-                    problems.append(
-                        f"array {spec.name!r}: expected length {known} along {dim!r} as in {owner!r}, "
-                        f"got {length}"
-                    )
+                    problems.append(f"array {spec.name!r}: expected length {known} along {dim!r} as in {owner!r}, got {length}")
         return problems
 
 
@@ -166,11 +153,7 @@ class DamageReport:
     moved_to: Path | None
 
     def __str__(self) -> str:
-        where = (
-            f"set aside as {self.moved_to}"
-            if self.moved_to
-            else "it could not be moved and was left in place"
-        )
+        where = f"set aside as {self.moved_to}" if self.moved_to else "it could not be moved and was left in place"
         return f"{self.path}: not used: {self.reason}; {where}"
 
 
@@ -261,13 +244,9 @@ def checked_record(schema: Schema, record: Record, where: str | Path | None = No
         try:
             attributes[name] = json.loads(json.dumps(value, allow_nan=False))
         except (TypeError, ValueError, RecursionError) as cause:
-            problems.append(
-                f"attribute {name!r}: expected finite numbers, text, bool, None, lists, dicts: {cause}"
-            )
+            problems.append(f"attribute {name!r}: expected finite numbers, text, bool, None, lists, dicts: {cause}")
     if problems:
-        msg = "a record that does not fit its schema was not stored:\n" + "\n".join(
-            f"  - {p}" for p in problems
-        )
+        msg = "a record that does not fit its schema was not stored:\n" + "\n".join(f"  - {p}" for p in problems)
         raise StoreError(msg, path=where)
     return Record(dict(record.arrays), attributes)
 

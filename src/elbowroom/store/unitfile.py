@@ -206,8 +206,7 @@ def check_schema(header: Header, schema: Schema) -> None:
     """Raise :class:`OtherSchema`, saying found and expected, unless the header is of this schema."""
     if (header.schema_name, header.schema_version) != (schema.name, schema.version):
         msg = (
-            f"found schema {header.schema_name} version {header.schema_version}, "
-            f"expected {schema.name} version {schema.version}"
+            f"found schema {header.schema_name} version {header.schema_version}, expected {schema.name} version {schema.version}"
         )
         raise OtherSchema(msg)
 
@@ -260,11 +259,7 @@ def check_written(path: Path, schema: Schema, key: str, record: Record) -> None:
         check_bytes(file, schema, key)
         with _content_of(file) as content:
             # one array at a time: records can be a large part of the memory
-            wrong = [
-                name
-                for name, array in record.arrays.items()
-                if not same_bits(array, _read_array(content[name]))
-            ]
+            wrong = [name for name, array in record.arrays.items() if not same_bits(array, _read_array(content[name]))]
             wrong += [] if _read_attributes(content) == record.attributes else [RESERVED_NAME]
     if wrong:
         msg = f"does not read back as written: {', '.join(wrong)}"

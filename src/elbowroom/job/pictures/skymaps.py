@@ -15,7 +15,7 @@ from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.directions import Directions, azimuth_deg, ludwig3
 from elbowroom.job.beamfields import BeamFields, mean_nominal_phi_rad
 from elbowroom.job.jobfile import Beam
-from elbowroom.job.sheets import HALO, decibels, frequency_text, printable, sheet, shortened, termination_text
+from elbowroom.job.pictures.sheets import HALO, decibels, frequency_text, printable, sheet, shortened, termination_text
 from elbowroom.system.terminations import Termination
 
 if TYPE_CHECKING:

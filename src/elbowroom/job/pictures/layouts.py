@@ -15,7 +15,16 @@ from elbowroom.base.constants import wavelength_of
 from elbowroom.geometry.antennas import Antenna
 from elbowroom.geometry.grounds import FreeSpace
 from elbowroom.geometry.stations import Placed, Station
-from elbowroom.job.sheets import HALO, PORT_COLOURS, band_text, legend_above, printable, sheet, shortened, termination_text
+from elbowroom.job.pictures.sheets import (
+    HALO,
+    PORT_COLOURS,
+    band_text,
+    legend_above,
+    printable,
+    sheet,
+    shortened,
+    termination_text,
+)
 from elbowroom.system.terminations import Termination
 
 if TYPE_CHECKING:

@@ -14,7 +14,7 @@ from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.directions import Directions, azimuth_deg, cut, spherical_basis, unit_vectors
 from elbowroom.job.beamfields import beam_fields, mean_nominal_phi_rad
 from elbowroom.job.jobfile import Beam
-from elbowroom.job.sheets import (
+from elbowroom.job.pictures.sheets import (
     COUPLED,
     DIFFERENCE,
     ISOLATED,
@@ -27,7 +27,7 @@ from elbowroom.job.sheets import (
     shortened,
     termination_text,
 )
-from elbowroom.job.skymaps import COMPONENTS, beam_text, component_size, response_words
+from elbowroom.job.pictures.skymaps import COMPONENTS, beam_text, component_size, response_words
 from elbowroom.radiation.solution import Solution
 from elbowroom.system.terminations import Termination
 
@@ -147,7 +147,7 @@ def draw_cuts(
     floor_db : float, optional
         Lower end of the scale [dB].
     peak : float, optional
-        Magnitude of 0 dB [m], such as `elbowroom.job.skymaps.isolated_peak` of the beam over the whole sky; by default the peak
+        Magnitude of 0 dB [m], such as `skymaps.isolated_peak` of the beam over the whole sky; by default the peak
         of the isolated beam on these cuts.
 
     Returns

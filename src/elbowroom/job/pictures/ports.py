@@ -13,7 +13,7 @@ from matplotlib.ticker import MaxNLocator
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.stations import PortName
-from elbowroom.job.sheets import (
+from elbowroom.job.pictures.sheets import (
     COUPLED,
     ISOLATED,
     band_text,
