@@ -21,10 +21,14 @@ from elbowroom.radiation.patterns import CHUNK_DIRECTIONS, direction_frame, kind
 from elbowroom.system.discretisation import Discretisation
 from elbowroom.system.port_algebra import (
     admittance_from_loaded,
+    admittance_from_scattering,
+    driven_ports,
     impedance_from_loaded,
+    impedance_from_scattering,
     response_matrix,
-    scattering_from_impedance,
     scattering_from_loaded,
+    scattering_of_ports,
+    scattering_renormalised,
 )
 from elbowroom.system.solving import PortCurrents, SolveStatistics
 from elbowroom.system.terminations import Termination, reflection_of
@@ -85,9 +89,152 @@ class Solution:
         reference_ohm : complex or complex (P,), optional
             Reference impedance of every port [ohm].
         """
+        own = scattering_from_loaded(self.coupled.loaded_admittance, self.reference_ohm)
         if np.ndim(reference_ohm) == 0 and complex(reference_ohm) == self.reference_ohm:  # type: ignore[arg-type]
-            return scattering_from_loaded(self.coupled.loaded_admittance, self.reference_ohm)
-        return scattering_from_impedance(self.impedance_matrix(), reference_ohm)
+            return own
+        return scattering_renormalised(own, self.reference_ohm, reference_ohm)
+
+    def port_matrix(
+        self,
+        kind: str = "S",
+        ports: Sequence[int] | np.ndarray | None = None,
+        *,
+        termination: Termination = 100.0,
+        reference_ohm: complex | ArrayLike = 100.0,
+    ) -> ComplexArray:
+        """Return Z, Y or S of some ports while all others are terminated.
+
+        Worked out through scattering parameters, so that terminations may be open or short.
+
+        Parameters
+        ----------
+        kind : "S", "Z" or "Y", optional
+            Which matrix.
+        ports : sequence of int, optional
+            The K ports wanted, each once, in the order of rows and columns; all by default.
+        termination : number, "open", "short" or one of these per port, optional
+            What the other ports see [ohm]; entries of the ports wanted are not looked at, but must be usable.
+        reference_ohm : complex or complex (K,), optional
+            Reference impedances of S [ohm].
+
+        Returns
+        -------
+        complex128 (K, K)
+            [-], [ohm] or [S].
+
+        Raises
+        ------
+        ModelRangeError
+            If the kind is unknown, a port does not exist, is named twice, or none is, or the termination cannot be used.
+        """
+        if kind not in ("S", "Z", "Y"):
+            msg = f"port matrix {kind!r}: expected 'S', 'Z' or 'Y'"
+            raise ModelRangeError(msg)
+        rows = self._port_rows(ports)
+        if rows.size == 0 or np.unique(rows).size < rows.size:
+            msg = "ports: expected one port at least and each once"
+            raise ModelRangeError(msg)
+        whole = scattering_from_loaded(self.coupled.loaded_admittance, self.reference_ohm)
+        reflection = reflection_of(termination, self.discretisation.n_ports, self.reference_ohm)
+        found = scattering_of_ports(whole, rows, reflection)
+        if kind == "Z":
+            return impedance_from_scattering(found, self.reference_ohm)
+        if kind == "Y":
+            return admittance_from_scattering(found, self.reference_ohm)
+        return scattering_renormalised(found, self.reference_ohm, reference_ohm)
+
+    def active_impedance(self, weights: ArrayLike, *, termination: Termination = 100.0) -> ComplexArray:
+        r"""Return what each port shows while all are driven at once, V/I.
+
+        The weights are source waves behind the terminations: port p is driven by the voltage
+        :math:`2 w_p \sqrt{\Re Z_{T,p}}` behind its termination :math:`Z_{T,p}`, so that w_p is the wave it sends.  With open
+        terminations the weights are currents and with shorted ones voltages forced on the ports; ports with zero weight are
+        terminated and couple.
+
+        .. math:: (Z + Z_T) I = V_s, \quad V = Z I, \quad Z_{a,p} = V_p/I_p
+
+        The weights that point a receiving beam (see :meth:`pointing_weights`) point the transmitted one the same way.
+
+        Parameters
+        ----------
+        weights : complex (P,) or (B, P)
+            w.
+        termination : number, "open", "short" or one of these per port, optional
+            What the ports see [ohm].
+
+        Returns
+        -------
+        complex128 (P,) or (B, P)
+            [ohm]; infinite where no current flows, NaN where the weight is zero.
+
+        Raises
+        ------
+        ModelRangeError
+            If weights or termination cannot be used, a driven port's termination has no positive resistance, or driven ports
+            mix open or shorted ones with others.
+        """
+        voltage, current, table = self._driven(weights, termination)
+        driven = table != 0.0
+        flowing = driven & (current != 0.0)
+        found = np.where(driven, complex(np.inf), complex(np.nan))
+        found[flowing] = voltage[flowing] / current[flowing]
+        return found if np.ndim(weights) == 2 else found[0]
+
+    def active_reflection(
+        self, weights: ArrayLike, *, termination: Termination = 100.0, reference_ohm: complex | ArrayLike | None = None
+    ) -> ComplexArray:
+        r"""Return the wave that comes back from each port over the wave sent into it while all are driven at once.
+
+        .. math:: \Gamma_p = \frac{V_p - Z_p^* I_p}{V_p + Z_p I_p}
+
+        with the termination as the reference Z_p by default: then it is the sum over q of S_pq w_q/w_p, with S power waves.
+        What the weights drive is told in :meth:`active_impedance`.
+
+        Parameters
+        ----------
+        weights : complex (P,) or (B, P)
+            w.
+        termination : number, "open", "short" or one of these per port, optional
+            What the ports see [ohm].
+        reference_ohm : complex or complex (P,), optional
+            Reference impedances instead of the terminations [ohm]; needed where driven ports are open or shorted.
+
+        Returns
+        -------
+        complex128 (P,) or (B, P)
+            NaN where the weight is zero.
+
+        Raises
+        ------
+        ModelRangeError
+            As :meth:`active_impedance`, or if a reference has no positive real part.
+        """
+        voltage, current, table = self._driven(weights, termination)
+        count = self.discretisation.n_ports
+        driven = table != 0.0
+        if reference_ohm is None:
+            single = isinstance(termination, str) or np.ndim(termination) == 0
+            seen: list = [termination] * count if single else list(termination)  # type: ignore[arg-type]
+            reference = np.array([complex(np.nan) if isinstance(value, str) else complex(value) for value in seen])
+            if not np.all(reference.real[np.any(driven, axis=0)] > 0.0):
+                msg = "active reflection: driven ports are open or shorted; give reference_ohm, a resistance to refer to"
+                raise ModelRangeError(msg)
+        else:
+            reference = np.broadcast_to(np.asarray(reference_ohm, dtype=complex), (count,))
+            if not np.all(np.isfinite(reference)) or np.any(reference.real <= 0.0):
+                msg = "reference impedance: expected a positive real part"
+                raise ModelRangeError(msg)
+        found = np.full(table.shape, complex(np.nan))
+        sent, back = voltage + reference * current, voltage - reference.conj() * current
+        found[driven] = back[driven] / sent[driven]
+        return found if np.ndim(weights) == 2 else found[0]
+
+    def _driven(self, weights: ArrayLike, termination: Termination) -> tuple[ComplexArray, ComplexArray, ComplexArray]:
+        """Return voltages and currents (B, P) of ports driven by the weights, and these as a table."""
+        table = self._checked_weights(weights)
+        reflection = reflection_of(termination, self.discretisation.n_ports, self.reference_ohm)
+        whole = scattering_from_loaded(self.coupled.loaded_admittance, self.reference_ohm)
+        return *driven_ports(whole, self.reference_ohm, reflection, table), table
 
     def isolated_impedance(self, antenna: int) -> ComplexArray:
         """Return the impedance matrix [ohm] of the ports of one antenna standing alone over the ground."""
