@@ -49,6 +49,11 @@ def test_read__what_an_independent_writer_wrote(tmp_path, n, parameter, form, ve
     np.testing.assert_allclose(data.matrices, expected, rtol=0, atol=1e-11 * np.abs(expected).max())
 
 
+def numbers_of(file):
+    lines = [line.partition("!")[0] for line in file.read_text().splitlines()]
+    return np.array([float(token) for line in lines if not line.startswith("#") for token in line.split()])
+
+
 @pytest.mark.parametrize("n", [1, 2, 3, 5, 9])
 @pytest.mark.parametrize("parameter", ["S", "Z", "Y"])
 @pytest.mark.parametrize("version", [1, 2])
@@ -58,10 +63,16 @@ def test_write__an_independent_reader_reads_the_same(tmp_path, n, parameter, ver
     data = PortMatrices(FREQUENCY, parameter, matrices_of(s, parameter, reference), reference, ("port 1: A001/x",))
     file = tmp_path / f"ours.s{n}p"
     write_touchstone(file, data, version=version)
-    net = skrf.Network(str(file))
-    np.testing.assert_allclose(net.f, FREQUENCY, rtol=1e-14)
-    np.testing.assert_allclose(net.s, s, atol=1e-11)
-    np.testing.assert_allclose(net.z0, np.broadcast_to(reference, net.z0.shape))
+    if (parameter, version) == ("Y", 1):
+        # scikit-rf 2.2 does not read back the normalised admittances that it writes, so its file is compared, number by number
+        net = skrf.Network(frequency=skrf.Frequency.from_f(FREQUENCY, unit="hz"), s=s, z0=100.0)
+        net.write_touchstone("theirs", dir=tmp_path, parameter="Y", r_ref=100.0)
+        np.testing.assert_allclose(numbers_of(file), numbers_of(tmp_path / f"theirs.y{n}p"), rtol=1e-9, atol=1e-12)
+    else:
+        net = skrf.Network(str(file))
+        np.testing.assert_allclose(net.f, FREQUENCY, rtol=1e-14)
+        np.testing.assert_allclose(net.s, s, atol=1e-11)
+        np.testing.assert_allclose(net.z0, np.broadcast_to(reference, net.z0.shape))
     back = read_touchstone(file)
     np.testing.assert_allclose(back.matrices, data.matrices, rtol=1e-15 if version == 1 else 0)
     np.testing.assert_array_equal(back.reference_ohm, reference)
