@@ -15,8 +15,9 @@ from elbowroom.geometry.mesh import Mesh, MeshSettings
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import Wire
 from elbowroom.kernels.quadrature import points_per_element, sample_mesh
-from elbowroom.radiation.patterns import direction_frame, station_patterns
+from elbowroom.radiation.patterns import station_patterns
 from elbowroom.system.discretisation import Discretisation, discretise
+from elbowroom.system.plane_waves import direction_frame
 from elbowroom.system.port_algebra import admittance_from_loaded
 from elbowroom.system.solving import REFERENCE_OHM, solve_isolated
 

@@ -39,7 +39,8 @@ def test_embedded_patterns__retermination_equals_loads_in_the_solve(solution, te
     z = matrix.dense() + rows @ np.diag(load) @ rows.T
     currents = scales[:, None] * np.linalg.solve(z, rows)
     # h = -Z_T times the currents that reach each port.
-    from elbowroom.radiation.patterns import direction_frame, station_patterns
+    from elbowroom.radiation.patterns import station_patterns
+    from elbowroom.system.plane_waves import direction_frame
 
     expected = -load[:, None, None] * station_patterns(d, currents, direction_frame(SKY.theta_rad, SKY.phi_rad))
     found = solution.embedded_patterns(SKY.theta_rad, SKY.phi_rad, termination=termination)

@@ -8,8 +8,10 @@ from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.kernels.grounds import ground_kernels
 from elbowroom.kernels.points_numba import accumulate_phases
-from elbowroom.radiation.patterns import CHUNK_DIRECTIONS, DirectionFrame, kind_vectors
+from elbowroom.radiation.patterns import CHUNK_DIRECTIONS
 from elbowroom.system.discretisation import Discretisation
+from elbowroom.system.plane_waves import DirectionFrame, kind_vectors
+from elbowroom.system.spaces import CurrentSpace, all_unknowns
 
 
 def pointing_weights(
@@ -55,7 +57,12 @@ def pointing_weights(
 
 
 def current_beams(
-    discretisation: Discretisation, currents: ComplexArray, frame: DirectionFrame, *, circumference: bool = True
+    discretisation: Discretisation,
+    currents: ComplexArray,
+    frame: DirectionFrame,
+    *,
+    space: CurrentSpace | None = None,
+    circumference: bool = True,
 ) -> ComplexArray:
     """Return the far field of whole-station current distributions, one a beam.
 
@@ -67,6 +74,8 @@ def current_beams(
         Weighted sums of port currents.
     frame : DirectionFrame
         Directions.
+    space : CurrentSpace, optional
+        What the coordinates are; unknowns by default.
     circumference : bool, optional
         Whether currents fill their tubes.
 
@@ -74,7 +83,7 @@ def current_beams(
     -------
     complex128 (B, D, 2)
     """
-    d = discretisation
+    d, space = discretisation, space or all_unknowns(discretisation)
     ground = ground_kernels(d.station.ground)
     n_beams = currents.shape[1]
     out = np.zeros((n_beams, frame.count, 2), dtype=complex)
@@ -82,15 +91,14 @@ def current_beams(
     amounts = []
     for k in range(len(d.kinds)):
         antennas = d.antennas_of(k)
-        rows = np.concatenate([np.arange(d.unknown_offsets[a], d.unknown_offsets[a + 1]) for a in antennas])
-        # (B, antennas, unknowns of one antenna)
-        amounts.append(np.ascontiguousarray(currents[rows].T).reshape(n_beams, len(antennas), -1))
+        # (B, antennas, coordinates of one antenna)
+        amounts.append(np.ascontiguousarray(currents[space.rows_of(antennas)].T).reshape(n_beams, len(antennas), -1))
     for first in range(0, frame.count, CHUNK_DIRECTIONS):
         rows_d = slice(first, min(first + CHUNK_DIRECTIONS, frame.count))
         part = frame.part(rows_d)
         unit = np.ascontiguousarray(part.unit)
         for k, kind in enumerate(d.kinds):
-            vectors = kind_vectors(kind, ground, part, d.wavenumber, circumference=circumference)
+            vectors = kind_vectors(kind, ground, part, d.wavenumber, circumference=circumference, basis=space.bases[k])
             flat = vectors.reshape(len(vectors), -1)
             place = positions[d.antennas_of(k)]
             for beam in range(n_beams):

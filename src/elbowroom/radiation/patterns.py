@@ -1,156 +1,17 @@
-"""Far fields of the unknowns of one kind of antenna, and of whole stations, in bulk.
-
-For a direction r_hat the receive vector of an unknown is the integral of f(r') exp(+jk r_hat . r') dl' with the ground's
-reflection added: by reciprocity it is both what the unknown radiates (times -jk eta exp(-jkr)/(4 pi r)) and the voltage that
-a plane wave of unit amplitude arriving from r_hat induces along it.
-"""
+"""Far fields of whole stations, in bulk: receive vectors of each kind, phases of each antenna, one matrix product."""
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-
 import numpy as np
-from numpy.typing import ArrayLike
-from scipy.special import j0
 
-from elbowroom.base.arrays import ComplexArray, FloatArray, check_array
-from elbowroom.base.errors import ModelRangeError
-from elbowroom.kernels.grounds import GroundKernels, ground_kernels
-from elbowroom.kernels.points_numba import fill_phases
-from elbowroom.system.discretisation import Discretisation, Kind
+from elbowroom.base.arrays import ComplexArray
+from elbowroom.kernels.grounds import ground_kernels
+from elbowroom.system.discretisation import Discretisation
+from elbowroom.system.plane_waves import DirectionFrame, kind_vectors, phases
+from elbowroom.system.spaces import CurrentSpace, all_unknowns
 
 CHUNK_DIRECTIONS = 1024
 """Directions handled at a time: keeps the work arrays of a chunk in cache and memory use flat."""
-
-
-@dataclass(frozen=True)
-class DirectionFrame:
-    """Directions with what patterns need of them.
-
-    Attributes
-    ----------
-    theta_rad, phi_rad : float64 (D,)
-        Zenith angle, and azimuth from east towards north [rad].
-    unit : float64 (D, 3)
-        Unit vectors towards the sky.
-    """
-
-    theta_rad: FloatArray
-    phi_rad: FloatArray
-    unit: FloatArray
-
-    @property
-    def count(self) -> int:
-        """Number of directions."""
-        return self.theta_rad.size
-
-    def part(self, rows: slice) -> DirectionFrame:
-        """Return some of the directions."""
-        return DirectionFrame(self.theta_rad[rows], self.phi_rad[rows], self.unit[rows])
-
-
-def direction_frame(theta_rad: ArrayLike, phi_rad: ArrayLike) -> DirectionFrame:
-    """Check and flatten directions.
-
-    Parameters
-    ----------
-    theta_rad, phi_rad : array_like
-        Zenith angles (0 to pi) and azimuths from east towards north [rad], of shapes that broadcast.
-
-    Raises
-    ------
-    ModelRangeError
-        If a value is not finite or a zenith angle lies outside 0 to pi.
-    """
-    theta, phi = np.broadcast_arrays(np.asarray(theta_rad, dtype=float), np.asarray(phi_rad, dtype=float))
-    theta = check_array("theta_rad", theta.ravel(), (None,), error=ModelRangeError)
-    phi = check_array("phi_rad", phi.ravel(), (None,), error=ModelRangeError)
-    if theta.size and (theta.min() < 0.0 or theta.max() > np.pi * (1.0 + 1e-12)):
-        msg = f"theta_rad: expected zenith angles from 0 to pi, got {theta.min():g} to {theta.max():g}; degrees?"
-        raise ModelRangeError(msg)
-    s = np.sin(theta)
-    return DirectionFrame(theta, phi, np.stack([s * np.cos(phi), s * np.sin(phi), np.cos(theta)], axis=1))
-
-
-def phases(unit: FloatArray, positions: FloatArray, wavenumber: float) -> ComplexArray:
-    """Return exp(+jk r_hat . r_i), complex128 (A, D)."""
-    out = np.empty((len(positions), len(unit)), dtype=complex)
-    real, imag = np.empty(out.shape), np.empty(out.shape)
-    fill_phases(np.ascontiguousarray(unit), np.ascontiguousarray(positions), wavenumber, real, imag)
-    out.real, out.imag = real, imag
-    return out
-
-
-def _sampled_sums(
-    kind: Kind, frame: DirectionFrame, wavenumber: float, tolerance: float, mirror: bool, circumference: bool
-) -> ComplexArray:
-    """Return (3, D, N): sums of the x, y, z current weights with the phases of (mirrored) points."""
-    sampled = kind.samples(np.inf, wavenumber, tolerance)
-    flip = np.array([1.0, 1.0, -1.0]) if mirror else np.ones(3)
-    unit = np.ascontiguousarray(frame.unit)
-    points = np.ascontiguousarray((sampled.points.T) * flip)
-    parts = np.empty((2, len(points), frame.count))
-    fill_phases(unit, points, wavenumber, parts[0], parts[1])
-    if circumference:
-        # A tube's far field: J0(ka sin psi), psi the angle between the direction and the (mirrored) wire.
-        tangents, index = np.unique(np.column_stack([sampled.tangent * flip, sampled.radius]), axis=0, return_inverse=True)
-        cosine = np.clip(tangents[:, :3] @ unit.T, -1.0, 1.0)
-        parts *= j0(wavenumber * tangents[:, 3:] * np.sqrt(1.0 - cosine**2))[index.ravel()]
-    n = sampled.charge.shape[1]
-    weights = np.concatenate(list(sampled.currents), axis=1)
-    sums = np.swapaxes(parts, 1, 2) @ weights
-    result = np.empty((3, frame.count, n), dtype=complex)
-    for component in range(3):
-        block = sums[..., component * n : (component + 1) * n]
-        result[component].real, result[component].imag = block[0], block[1]
-    return result
-
-
-def kind_vectors(
-    kind: Kind,
-    ground: GroundKernels,
-    frame: DirectionFrame,
-    wavenumber: float,
-    *,
-    tolerance: float = 1e-8,
-    circumference: bool = True,
-) -> ComplexArray:
-    """Return the receive vectors of the unknowns of one kind, its antenna standing at x = y = 0.
-
-    Parameters
-    ----------
-    kind : Kind
-        Design, attitude and height.
-    ground : GroundKernels
-        The ground.
-    frame : DirectionFrame
-        Directions.
-    wavenumber : float
-        [rad/m].
-    tolerance : float, optional
-        Relative accuracy of the quadrature along the wires.
-    circumference : bool, optional
-        Whether the current fills the tube (exact with the near kernel) or its axis.
-
-    Returns
-    -------
-    complex128 (N, D, 2)
-        Components along theta_hat and phi_hat [m].  Below the horizon of a ground the field is zero.
-    """
-    direct = _sampled_sums(kind, frame, wavenumber, tolerance, False, circumference)
-    ct, st = np.cos(frame.theta_rad)[:, None], np.sin(frame.theta_rad)[:, None]
-    cp, sp = np.cos(frame.phi_rad)[:, None], np.sin(frame.phi_rad)[:, None]
-    reflection = ground.reflection(frame.theta_rad, wavenumber)
-    theta = ct * (cp * direct[0] + sp * direct[1]) - st * direct[2]
-    phi = -sp * direct[0] + cp * direct[1]
-    if reflection is not None:
-        image = _sampled_sums(kind, frame, wavenumber, tolerance, True, circumference)
-        gh, ge = reflection[0][:, None], reflection[1][:, None]
-        theta = theta - ge * (ct * (cp * image[0] + sp * image[1]) + st * image[2])
-        phi = phi + gh * (-sp * image[0] + cp * image[1])
-        below = frame.theta_rad > 0.5 * np.pi * (1.0 + 1e-12)
-        theta[below], phi[below] = 0.0, 0.0
-    return np.ascontiguousarray(np.stack([theta.T, phi.T], axis=-1))
 
 
 def station_patterns(
@@ -158,6 +19,7 @@ def station_patterns(
     currents: ComplexArray,
     frame: DirectionFrame,
     *,
+    space: CurrentSpace | None = None,
     circumference: bool = True,
     out: ComplexArray | None = None,
 ) -> ComplexArray:
@@ -168,9 +30,11 @@ def station_patterns(
     discretisation : Discretisation
         The meshed station.
     currents : complex128 (N, P)
-        One column of unknowns a pattern.
+        One column of coordinates a pattern.
     frame : DirectionFrame
         Directions.
+    space : CurrentSpace, optional
+        What the coordinates are; unknowns by default.
     circumference : bool, optional
         See :func:`kind_vectors`.
     out : complex128 (P, D, 2), optional
@@ -181,7 +45,7 @@ def station_patterns(
     complex128 (P, D, 2)
         [m times the unit of the currents]
     """
-    d = discretisation
+    d, space = discretisation, space or all_unknowns(discretisation)
     ground = ground_kernels(d.station.ground)
     n_patterns = currents.shape[1]
     if out is None:
@@ -190,14 +54,14 @@ def station_patterns(
     by_kind = []
     for k in range(len(d.kinds)):
         antennas = d.antennas_of(k)
-        rows = np.concatenate([np.arange(d.unknown_offsets[a], d.unknown_offsets[a + 1]) for a in antennas])
-        by_kind.append((antennas, np.ascontiguousarray(currents[rows].T).reshape(n_patterns, len(antennas), -1)))
+        amounts = np.ascontiguousarray(currents[space.rows_of(antennas)].T)
+        by_kind.append((antennas, amounts.reshape(n_patterns, len(antennas), -1)))
     for first in range(0, frame.count, CHUNK_DIRECTIONS):
         rows_d = slice(first, min(first + CHUNK_DIRECTIONS, frame.count))
         part = frame.part(rows_d)
         total = np.zeros((n_patterns, part.count * 2), dtype=complex)
-        for kind, (antennas, amounts) in zip(d.kinds, by_kind, strict=True):
-            vectors = kind_vectors(kind, ground, part, d.wavenumber, circumference=circumference)
+        for kind, basis, (antennas, amounts) in zip(d.kinds, space.bases, by_kind, strict=True):
+            vectors = kind_vectors(kind, ground, part, d.wavenumber, circumference=circumference, basis=basis)
             turn = phases(part.unit, positions[antennas], d.wavenumber)
             n = vectors.shape[0]
             # A few antennas share one product, so that its inner dimension is long enough for full rate.

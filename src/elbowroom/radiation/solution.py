@@ -17,8 +17,9 @@ from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.stations import PortName, Station
 from elbowroom.kernels.grounds import ground_kernels
 from elbowroom.radiation.beams import current_beams, pointing_weights
-from elbowroom.radiation.patterns import CHUNK_DIRECTIONS, direction_frame, kind_vectors, phases, station_patterns
+from elbowroom.radiation.patterns import CHUNK_DIRECTIONS, station_patterns
 from elbowroom.system.discretisation import Discretisation
+from elbowroom.system.plane_waves import direction_frame, kind_vectors, phases
 from elbowroom.system.port_algebra import (
     admittance_from_loaded,
     admittance_from_scattering,
@@ -31,6 +32,7 @@ from elbowroom.system.port_algebra import (
     scattering_renormalised,
 )
 from elbowroom.system.solving import PortCurrents, SolveStatistics
+from elbowroom.system.spaces import CurrentSpace, all_unknowns
 from elbowroom.system.terminations import Termination, reflection_of
 
 
@@ -50,6 +52,8 @@ class Solution:
         Resistance that loaded every port while solving [ohm].
     statistics : SolveStatistics
         Sizes, residual and times of the solve.
+    space : CurrentSpace, optional
+        Coordinates of the coupled currents; the unknowns by default.  Isolated currents are always unknowns.
     """
 
     discretisation: Discretisation
@@ -57,6 +61,11 @@ class Solution:
     isolated: tuple[PortCurrents, ...]
     reference_ohm: float
     statistics: SolveStatistics
+    space: CurrentSpace = None  # type: ignore[assignment]
+
+    def __post_init__(self) -> None:
+        if self.space is None:
+            object.__setattr__(self, "space", all_unknowns(self.discretisation))
 
     @property
     def station(self) -> Station:
@@ -295,7 +304,7 @@ class Solution:
         """
         frame = direction_frame(theta_rad, phi_rad)
         amounts = self.coupled.currents @ self._response(termination)[self._port_rows(ports)].T
-        return station_patterns(self.discretisation, amounts, frame, circumference=circumference)
+        return station_patterns(self.discretisation, amounts, frame, space=self.space, circumference=circumference)
 
     def isolated_patterns(
         self,
@@ -353,7 +362,7 @@ class Solution:
             Effective length along theta_hat and phi_hat [m].
         """
         frame = direction_frame(theta_rad, phi_rad)
-        beams = current_beams(self.discretisation, self.beam_currents(weights, termination), frame)
+        beams = current_beams(self.discretisation, self.beam_currents(weights, termination), frame, space=self.space)
         return beams if np.ndim(weights) == 2 else beams[0]
 
     def isolated_beam(
