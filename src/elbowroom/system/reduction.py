@@ -12,11 +12,16 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.linalg import cholesky, lu_factor, lu_solve, solve_triangular
 
-from elbowroom.base.arrays import FloatArray
+from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import ModelRangeError
+from elbowroom.geometry.grounds import FreeSpace
 from elbowroom.geometry.mesh import Mesh
 from elbowroom.kernels.basis import overlap_matrix, slope_coefficients
+from elbowroom.system.assembly import PairFiller
+from elbowroom.system.discretisation import Discretisation, attachments
+from elbowroom.system.plane_waves import direction_frame, kind_vectors
 
 
 @dataclass(frozen=True)
@@ -77,3 +82,130 @@ def sky_samples(radius: float, wavenumber: float, whole_sphere: bool) -> tuple[F
         theta += [t] * count
         phi += list(2.0 * np.pi * np.arange(count) / count + t)
     return np.array(theta), np.array(phi)
+
+
+def reduced_bases(
+    discretisation: Discretisation, settings: ReductionSettings, filler: PairFiller, distances: FloatArray, reference_ohm: float
+) -> list[ComplexArray]:
+    """Return the functions of each kind of antenna, one basis (N, n) for all kinds of one design and mesh.
+
+    Parameters
+    ----------
+    discretisation : Discretisation
+        The meshed station, with self blocks.
+    settings : ReductionSettings
+        Accuracy.
+    filler : PairFiller
+        Interactions of unknowns.
+    distances : float64 (A, A)
+        Smallest distances between wires of antennas [m].
+    reference_ohm : float
+        Resistance across every port [ohm].
+    """
+    d = discretisation
+    groups: dict[tuple[int, int], list[int]] = {}
+    for k, kind in enumerate(d.kinds):
+        groups.setdefault((id(kind.antenna), id(kind.mesh)), []).append(k)
+    bases: list[ComplexArray | None] = [None] * len(d.kinds)
+    answers = _KindAnswers(d, reference_ohm)
+    for kinds in groups.values():
+        basis = _basis_of(d, kinds, answers, settings, filler, distances)
+        for k in kinds:
+            bases[k] = basis
+    return [b for b in bases if b is not None]
+
+
+class _KindAnswers:
+    """What antennas of each kind, loaded at their ports and alone over the ground, answer to excitations."""
+
+    def __init__(self, discretisation: Discretisation, reference_ohm: float) -> None:
+        self.discretisation = discretisation
+        self.attached = attachments(discretisation, reference_ohm)
+        self._factors: dict[int, tuple] = {}
+        self._ports: dict[int, ComplexArray] = {}
+
+    def factors(self, kind: int) -> tuple:
+        """Return the LU factors of the kind's own loaded block."""
+        if kind not in self._factors:
+            k = self.discretisation.kinds[kind]
+            self._factors[kind] = lu_factor(k.self_block + self.attached[k.antenna].structure(k.mesh.gap_vectors))
+        return self._factors[kind]
+
+    def to(self, kind: int, excitation: ComplexArray | FloatArray) -> ComplexArray:
+        """Return the currents (N, R) that excitations (N, R) drive."""
+        return lu_solve(self.factors(kind), np.asarray(excitation, dtype=complex))
+
+    def to_ports(self, kind: int) -> ComplexArray:
+        """Return the currents (N, P) of the kind's own port sources."""
+        if kind not in self._ports:
+            k = self.discretisation.kinds[kind]
+            self._ports[kind] = self.to(kind, self.attached[k.antenna].excitations(k.mesh.gap_vectors))
+        return self._ports[kind]
+
+
+def _distinct_blocks(discretisation: Discretisation, kinds: list[int], most: int = 6) -> list[int]:
+    """Return a few kinds of one design whose own blocks differ, evenly taken from them all."""
+    d = discretisation
+    seen: dict[tuple, int] = {}
+    for k in kinds:
+        place = d.station.placed[int(d.antennas_of(k)[0])]
+        level = place.tilt_east_deg == 0.0 and place.tilt_north_deg == 0.0
+        seen.setdefault((round(d.kinds[k].height, 9), None if level else place.attitude), k)
+    found = list(seen.values())
+    return found if len(found) <= most else [found[i] for i in np.linspace(0, len(found) - 1, most).astype(int)]
+
+
+def _basis_of(
+    d: Discretisation,
+    kinds: list[int],
+    answers: _KindAnswers,
+    settings: ReductionSettings,
+    filler: PairFiller,
+    distances: FloatArray,
+) -> ComplexArray:
+    mesh = d.kinds[kinds[0]].mesh
+    root = cholesky(current_weights(mesh, d.wavenumber), lower=False)
+    ends = np.concatenate([mesh.start, mesh.end])
+    radius = 0.5 * float(np.max(np.linalg.norm(ends - ends.mean(axis=0), axis=1))) * 2.0
+    theta, phi = sky_samples(radius, d.wavenumber, isinstance(d.station.ground, FreeSpace))
+    frame = direction_frame(theta, phi)
+    parts: list[ComplexArray] = []
+    for k in _distinct_blocks(d, kinds):
+        ports = root @ answers.to_ports(k)
+        parts.append(ports / np.linalg.norm(ports, axis=0).max())
+        waves = kind_vectors(d.kinds[k], filler.ground, frame, d.wavenumber)
+        answered = root @ answers.to(k, waves.reshape(len(waves), -1))
+        # The strongest plane wave counts as much as a port: patterns need it as well as port quantities need the port.
+        parts.append(answered / np.linalg.norm(answered, axis=0).max())
+    parts += _neighbour_answers(d, kinds, answers, settings, filler, distances, root)
+    left, size, _ = np.linalg.svd(np.concatenate(parts, axis=1), full_matrices=False)
+    cut = settings.cut_factor * np.sqrt(settings.tolerance) * size[0]
+    count = max(answers.to_ports(kinds[0]).shape[1], int(np.count_nonzero(size > cut)))
+    return solve_triangular(root, left[:, :count])
+
+
+def _neighbour_answers(
+    d: Discretisation,
+    kinds: list[int],
+    answers: _KindAnswers,
+    settings: ReductionSettings,
+    filler: PairFiller,
+    distances: FloatArray,
+    root: FloatArray,
+) -> list[ComplexArray]:
+    """Return the currents that the nearest antennas, driven at their ports, induce in antennas of some kinds, in the norm."""
+    mine = np.flatnonzero(np.isin(d.kind_of, kinds))
+    pairs = []
+    for i in mine:
+        others = np.argsort(distances[i])
+        pairs += [(float(distances[i, j]), int(i), int(j)) for j in others[: settings.neighbour_pairs + 1] if j != i]
+    pairs.sort()
+    parts: list[ComplexArray] = []
+    for distance, i, j in pairs[: settings.neighbour_pairs]:
+        level = filler.level_of(distance)
+        block = filler.close_block(j, i) if level < 0 else filler.sampled_blocks(j, np.array([i]), level)[0]
+        source = answers.to_ports(d.kind_of[j])
+        induced = root @ answers.to(d.kind_of[i], -block @ source)
+        own = root @ answers.to_ports(d.kind_of[i])
+        parts.append(induced / np.linalg.norm(own, axis=0).max())
+    return parts

@@ -1,0 +1,160 @@
+"""Interactions between antennas through their skeletons, for functions and for unknowns alike."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from threading import Lock, local
+
+import numpy as np
+
+from elbowroom.base.arrays import AnyComplexArray, ComplexArray, FloatArray
+from elbowroom.base.constants import IMPEDANCE_OF_VACUUM
+from elbowroom.geometry.mesh import Mesh
+from elbowroom.kernels.grounds import GroundKernels, Workspace, ground_kernels
+from elbowroom.system.discretisation import Discretisation
+from elbowroom.system.skeletons import Skeleton, skeleton_of
+
+
+@dataclass(frozen=True)
+class _SkeletonWeights:
+    """Skeleton of one kind with the weights of its functions, in the station frame.
+
+    Attributes
+    ----------
+    points : float64 (3, J)
+        [m]; x and y relative to the antenna's place.
+    source : float64 (J, 8 n)
+        Real parts, then imaginary parts, of the weights of x, y current and charge (3 n each), then of z current (n each).
+    test : complex (n, 4 J)
+        Weights of x, y current, charge (negative), z current of each point, points slowest.
+    """
+
+    points: FloatArray
+    source: FloatArray
+    test: AnyComplexArray
+    count: int
+
+
+class SkeletonInteractions:
+    """Computes blocks between functions of antennas whose wires are farther apart than a smallest distance.
+
+    Parameters
+    ----------
+    discretisation : Discretisation
+        The meshed station.
+    bases : sequence of complex128 (N, n) or None
+        Functions of each kind; ``None`` for the unknowns themselves.
+    skeletons : SkeletonTable
+        Skeletons of each design.
+    """
+
+    def __init__(self, discretisation: Discretisation, bases: Sequence[ComplexArray | None], skeletons: SkeletonTable) -> None:
+        self.discretisation, self.bases, self.skeletons = discretisation, bases, skeletons
+        self.ground: GroundKernels = ground_kernels(discretisation.station.ground)
+        self.positions = discretisation.station.positions
+        probe = self.ground.fill(np.array([[0.0], [0.0], [1.0]]), np.array([[9.0], [0.0], [1.0]]), 1.0, Workspace())
+        self.charge_with_horizontal = probe.charge is probe.horizontal
+        self._weights: dict[tuple[int, int], _SkeletonWeights] = {}
+        self._lock = Lock()
+        self._local = local()
+
+    def weights(self, kind: int, level: int) -> _SkeletonWeights:
+        """Return the skeleton of a kind at a level with the weights of its functions, made once."""
+        key = (kind, level)
+        with self._lock:
+            found = self._weights.get(key)
+            if found is None:
+                found = self._weights[key] = self._made(kind, level)
+        return found
+
+    def _made(self, kind: int, level: int) -> _SkeletonWeights:
+        d, k = self.discretisation, self.discretisation.kinds[kind]
+        skeleton = self.skeletons.of(kind, level)
+        basis = self.bases[kind]
+        currents, charge = skeleton.currents, skeleton.charge
+        if basis is not None:
+            currents, charge = currents @ basis, charge @ basis
+        currents = np.einsum("ij,jqn->iqn", k.orientation, currents)
+        x, y, z = np.sqrt(d.wavenumber * IMPEDANCE_OF_VACUUM / (4.0 * np.pi)) * currents
+        q = np.sqrt(IMPEDANCE_OF_VACUUM / (4.0 * np.pi * d.wavenumber)) * charge
+        level_parts = np.concatenate([x, y, q], axis=1)
+        source = np.concatenate([level_parts.real, level_parts.imag, z.real, z.imag], axis=1)
+        test = np.stack([x, y, -q, z], axis=1).reshape(-1, x.shape[1]).T
+        points = skeleton.points @ k.orientation.T + [0.0, 0.0, k.height]
+        return _SkeletonWeights(
+            np.ascontiguousarray(points.T), np.ascontiguousarray(source), np.ascontiguousarray(test), x.shape[1]
+        )
+
+    def radiated(self, i: int, points: FloatArray, level: int) -> ComplexArray:
+        """Return what the functions of antenna i give at points (3, M) [m]: (M, 4, n), as x, y, charge and z weights meet it."""
+        if not hasattr(self._local, "work"):
+            self._local.work = Workspace()
+        mine = self.weights(self.discretisation.kind_of[i], level)
+        n = mine.count
+        kernels = self.ground.fill(mine.points, points, self.discretisation.wavenumber, self._local.work)
+        level_part = np.swapaxes(kernels.horizontal, 1, 2) @ mine.source[:, : 6 * n]
+        if not self.charge_with_horizontal:
+            charges = np.swapaxes(kernels.charge, 1, 2)
+            for first in (2 * n, 5 * n):
+                level_part[..., first : first + n] = charges @ mine.source[:, first : first + n]
+        upright = np.swapaxes(kernels.vertical, 1, 2) @ mine.source[:, 6 * n :]
+        out = np.empty((points.shape[1], 4, n), dtype=complex)
+        flat = out.reshape(points.shape[1], 4 * n)
+        flat.real[:, : 3 * n] = level_part[0, :, : 3 * n] - level_part[1, :, 3 * n :]
+        flat.imag[:, : 3 * n] = level_part[0, :, 3 * n :] + level_part[1, :, : 3 * n]
+        flat.real[:, 3 * n :] = upright[0, :, :n] - upright[1, :, n:]
+        flat.imag[:, 3 * n :] = upright[0, :, n:] + upright[1, :, :n]
+        return out
+
+    def blocks(self, i: int, others: np.ndarray, level: int) -> list[ComplexArray]:
+        """Return the blocks (n_j, n_i) [ohm] of antenna i with some others, through skeletons of one level."""
+        d = self.discretisation
+        theirs = [self.weights(d.kind_of[j], level) for j in others]
+        counts = [w.points.shape[1] for w in theirs]
+        points = np.concatenate([w.points for w in theirs], axis=1)
+        points[:2] += np.repeat((self.positions[others] - self.positions[i])[:, :2], counts, axis=0).T
+        field = self.radiated(i, points, level)
+        blocks: list[ComplexArray] = []
+        first = 0
+        for w, count in zip(theirs, counts, strict=True):
+            part = field[first : first + count].reshape(4 * count, -1)
+            # Both factors of Z are imaginary: Z = j (sum of kernels).
+            blocks.append(1j * (w.test @ part))
+            first += count
+        return blocks
+
+
+class SkeletonTable:
+    """Skeletons of each design and mesh of a station at each level, made when first needed.
+
+    Parameters
+    ----------
+    discretisation : Discretisation
+        The meshed station.
+    distances_m : tuple of float
+        Smallest distance between wires that each level serves, rising [m].
+    tolerance : float
+        Relative accuracy of the kernel.
+    """
+
+    def __init__(self, discretisation: Discretisation, distances_m: Sequence[float], tolerance: float) -> None:
+        self.discretisation, self.tolerance = discretisation, tolerance
+        self.distances_m = tuple(sorted(distances_m))
+        self._made: dict[tuple[int, int, int], tuple[Mesh, Skeleton]] = {}
+        self._lock = Lock()
+
+    def level_of(self, distance: float) -> int:
+        """Return the level that serves wires at a distance [m]; -1 where none does."""
+        return int(np.searchsorted(self.distances_m, distance, side="right")) - 1
+
+    def of(self, kind: int, level: int) -> Skeleton:
+        """Return the skeleton of a kind's design at a level, in the antenna's own frame."""
+        k = self.discretisation.kinds[kind]
+        key = (id(k.antenna), id(k.mesh), level)
+        with self._lock:
+            if key not in self._made:
+                made = skeleton_of(k.antenna, k.mesh, self.discretisation.wavenumber, self.distances_m[level], self.tolerance)
+                # The mesh is kept so that its identity stays its own.
+                self._made[key] = (k.mesh, made)
+            return self._made[key][1]

@@ -1,0 +1,167 @@
+"""Reduced solution of a station: functions in place of unknowns, skeletons in place of quadrature points, a stated error."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Iterator
+from concurrent.futures import ThreadPoolExecutor
+
+import numpy as np
+
+from elbowroom.base.arrays import ComplexArray, FloatArray
+from elbowroom.system.assembly import (
+    TILE_ORDER,
+    PairFiller,
+    Progress,
+    antenna_distances,
+    available_cores,
+    single_threaded_blas,
+)
+from elbowroom.system.discretisation import Discretisation, attachments
+from elbowroom.system.factorisation import TiledSymmetric
+from elbowroom.system.interactions import SkeletonInteractions, SkeletonTable
+from elbowroom.system.reduction import ReductionSettings, reduced_bases
+from elbowroom.system.solving import REFERENCE_OHM, PortCurrents, SolveStatistics, port_excitations
+from elbowroom.system.spaces import CurrentSpace, reduced_space
+
+BATCH_ANTENNAS = 12
+"""Antennas whose kernels are filled at a time: few enough for the work arrays to stay in cache."""
+
+
+def _batches(others: np.ndarray, levels: np.ndarray) -> Iterator[tuple[int, np.ndarray]]:
+    for level in np.unique(levels):
+        chosen = others[levels == level]
+        for first in range(0, len(chosen), BATCH_ANTENNAS):
+            yield int(level), chosen[first : first + BATCH_ANTENNAS]
+
+
+def assemble_reduced(
+    discretisation: Discretisation,
+    space: CurrentSpace,
+    interactions: SkeletonInteractions,
+    filler: PairFiller,
+    distances: FloatArray,
+    reference_ohm: float,
+    *,
+    dtype: type = np.complex64,
+    progress: Progress | None = None,
+) -> TiledSymmetric:
+    """Return the reduced impedance matrix with every port loaded, in tiles.
+
+    Parameters
+    ----------
+    discretisation : Discretisation
+        The meshed station, with self blocks.
+    space : CurrentSpace
+        Functions of each kind.
+    interactions : SkeletonInteractions
+        Blocks of pairs that are far enough apart.
+    filler : PairFiller
+        Blocks of unknowns of the others.
+    distances : float64 (A, A)
+        Smallest distances between wires [m].
+    reference_ohm : float
+        Resistance across every port [ohm].
+    dtype : type, optional
+        Precision of the matrix.
+    progress : callable, optional
+        Told the stage and the fraction done.
+    """
+    d, n_antennas = discretisation, len(discretisation.station)
+    groups: list[range] = []
+    first = 0
+    for a in range(n_antennas):
+        if space.offsets[a + 1] - space.offsets[first] > TILE_ORDER and a > first:
+            groups.append(range(first, a))
+            first = a
+    groups.append(range(first, n_antennas))
+    matrix = TiledSymmetric([int(space.offsets[g.stop] - space.offsets[g.start]) for g in groups], dtype)
+    group_of = np.repeat(np.arange(len(groups)), [len(g) for g in groups])
+    attached = attachments(d, reference_ohm)
+    levels = np.vectorize(interactions.skeletons.level_of, otypes=[int])(distances)
+
+    def place(i: int, j: int, block: ComplexArray) -> None:
+        tile = matrix.tiles[group_of[j], group_of[i]]
+        top, left = space.offsets[groups[group_of[j]].start], space.offsets[groups[group_of[i]].start]
+        rows, columns = space.of(j), space.of(i)
+        tile[rows.start - top : rows.stop - top, columns.start - left : columns.stop - left] = block
+        if group_of[i] == group_of[j] and i != j:
+            tile[columns.start - left : columns.stop - left, rows.start - top : rows.stop - top] = block.T
+
+    own: dict[int, ComplexArray] = {}
+    for k, kind in enumerate(d.kinds):
+        basis = space.bases[k]
+        loaded = kind.self_block + attached[kind.antenna].structure(kind.mesh.gap_vectors)
+        own[k] = loaded if basis is None else basis.T @ loaded @ basis
+
+    def fill_row(i: int) -> None:
+        place(i, i, own[d.kind_of[i]])
+        others = np.arange(i + 1, n_antennas)
+        for level, chosen in _batches(others, levels[i, others]):
+            if level >= 0:
+                for j, block in zip(chosen, interactions.blocks(i, chosen, level), strict=True):
+                    place(i, int(j), block)
+                continue
+            for j in chosen:
+                full = full_block(d, filler, i, int(j), distances[i, j])
+                place(i, int(j), space.bases[d.kind_of[j]].T @ full @ space.bases[d.kind_of[i]])  # type: ignore[union-attr]
+
+    with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
+        for done, _ in enumerate(pool.map(fill_row, range(n_antennas)), start=1):
+            if progress is not None:
+                progress("assemble", done / n_antennas)
+    return matrix
+
+
+def full_block(discretisation: Discretisation, filler: PairFiller, i: int, j: int, distance: float) -> ComplexArray:
+    """Return the block (N_j, N_i) [ohm] of the unknowns of two antennas."""
+    level = filler.level_of(distance)
+    return filler.close_block(i, j) if level < 0 else filler.sampled_blocks(i, np.array([j]), level)[0]
+
+
+def solve_reduced(
+    discretisation: Discretisation,
+    settings: ReductionSettings | None = None,
+    *,
+    reference_ohm: float = REFERENCE_OHM,
+    progress: Progress | None = None,
+) -> tuple[PortCurrents, CurrentSpace, SolveStatistics]:
+    """Solve a station in a few functions of each antenna."""
+    d, settings = discretisation, settings or ReductionSettings()
+    seconds: dict[str, float] = {}
+    clock = time.perf_counter()
+
+    def lap(stage: str) -> None:
+        nonlocal clock
+        now = time.perf_counter()
+        seconds[stage] = seconds.get(stage, 0.0) + now - clock
+        clock = now
+
+    filler = PairFiller(d)
+    distances = antenna_distances(d)
+    lap("distances")
+    bases = reduced_bases(d, settings, filler, distances, reference_ohm)
+    space = reduced_space(d, bases)
+    lap("functions")
+    table = SkeletonTable(d, settings.skeleton_distances_m, settings.skeleton_factor * settings.tolerance)
+    interactions = SkeletonInteractions(d, space.bases, table)
+    for k in range(len(d.kinds)):
+        for level in range(len(table.distances_m)):
+            interactions.weights(k, level)
+    lap("skeletons")
+    matrix = assemble_reduced(d, space, interactions, filler, distances, reference_ohm, progress=progress)
+    lap("assemble")
+    excitations, own = port_excitations(d, reference_ohm)
+    right = np.zeros((space.size, d.n_ports), dtype=complex)
+    for a, k in enumerate(d.kind_of):
+        right[space.of(a), d.ports_of(a)] = bases[k].T @ excitations[d.unknowns_of(a), d.ports_of(a)]
+    factors = matrix.factorise()
+    lap("factorise")
+    x = factors.solve(right).astype(np.complex128)
+    admittance = own + right.T @ x
+    lap("port excitations")
+    return (
+        PortCurrents(x, 0.5 * (admittance + admittance.T)),
+        space,
+        SolveStatistics("reduced", "single", space.size, d.n_ports, 0.0, seconds=seconds),
+    )
