@@ -10,22 +10,20 @@ from __future__ import annotations
 
 import contextlib
 import csv
-import difflib
 import io
 import math
 import os
-import re
 from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass, field
 from itertools import product
 from pathlib import Path
-from typing import NoReturn
 
 import numpy as np
 
 from elbowroom.base.arrays import FloatArray, check_array
-from elbowroom.base.errors import ExportError, GeometryError, JobFileError
+from elbowroom.base.errors import ExportError, GeometryError
+from elbowroom.geometry.csvtable import counted, fail_table, read_rows
 
 SAME_PLACE_M = 1e-3
 """[m]; two antennas nearer than this are taken for one entered twice."""
@@ -103,7 +101,7 @@ class Layout:
         labels = [f"antenna {i + 1}" for i in range(count)]
         found = [*_text_problems(labels, names, antenna), *_place_problems(labels, names, positions)]
         if found:
-            msg = f"layout: {_counted(len(found), 'problem')}"
+            msg = f"layout: {counted(len(found), 'problem')}"
             raise GeometryError(msg, problems=tuple(f"{labels[i]}: {text}" for i, text in sorted(found)))
 
     def __len__(self) -> int:
@@ -229,44 +227,17 @@ def read_layout(path: str | Path) -> Layout:
         With every problem found and its line number.
     """
     file = Path(path)
-    records, problems = _split_records(_read_text(file))
-    if not records:
-        _fail(file, problems or [(0, "no header line and no antennas")])
-    header_line, header = records[0]
-    fault = _header_fault(header)
-    if fault:  # no column can be told, so checks of the rows would only add noise
-        _fail(file, [*problems, (header_line, fault)])
-    problems += _header_problems(header_line, header)
-    numbers: list[list[float]] = []  # one row for each antenna, NaN where unusable
-    lines, names, antenna = [], [], []
-    for line, cells in records[1:]:
-        if len(cells) != len(header):
-            expected = f"{len(header)} ({', '.join(header)})"
-            problems.append((line, f"{_counted(len(cells), 'cell')} found, {expected} expected"))
-            continue
-        row = dict(zip(header, cells, strict=True))
-        values = []
-        for key, default in _NUMBER_DEFAULTS.items():
-            value, problem = _number(key, row[key]) if key in row else (math.nan if default is None else default, "")
-            values.append(value)
-            if problem:
-                problems.append((line, problem))
-        lines.append(line)
-        numbers.append(values)
-        names.append(row.get("name", ""))
-        antenna.append(row.get("antenna", ""))
-    if len(records) == 1 and all(line <= header_line for line, _ in problems):
-        problems.append((header_line, "no antennas below the header"))
-
-    table = np.array(numbers, dtype=float).reshape(-1, len(_NUMBER_DEFAULTS))
-    labels = [f"line {line}" for line in lines]
-    found = _place_problems(labels, names, table[:, :3])
-    if "name" in header:
+    rows = read_rows(file, "layout", _NUMBER_DEFAULTS, ("name", "antenna"), _REQUIRED)
+    names, antenna = rows.texts["name"], rows.texts["antenna"]
+    labels = [f"line {line}" for line in rows.lines]
+    found = _place_problems(labels, names, rows.numbers[:, :3])
+    if "name" in rows.header:
         found += _text_problems(labels, names, antenna)
-    problems += [(lines[i], text) for i, text in found]
+    problems = [*rows.problems, *((rows.lines[i], text) for i, text in found)]
     if problems:
-        _fail(file, problems)
-    return Layout(tuple(names), table[:, :3], table[:, 3], table[:, 4], table[:, 5], tuple(antenna))
+        fail_table(file, "layout", problems)
+    table = rows.numbers
+    return Layout(names, table[:, :3], table[:, 3], table[:, 4], table[:, 5], antenna)
 
 
 def write_layout(layout: Layout, path: str | Path, header_comment: str = "") -> None:
@@ -303,113 +274,6 @@ def write_layout(layout: Layout, path: str | Path, header_comment: str = "") -> 
             unfinished.unlink()
         msg = f"{path}: cannot write the layout: {getattr(cause, 'strerror', None) or cause}"
         raise ExportError(msg) from cause
-
-
-def _fail(file: Path, problems: list[tuple[int, str]]) -> NoReturn:
-    msg = f"not a usable layout, {_counted(len(problems), 'problem')}"
-    lines = tuple(f"line {line}: {text}" if line else text for line, text in sorted(problems, key=lambda p: p[0]))
-    raise JobFileError(msg, file=file, problems=lines)
-
-
-def _counted(count: int, noun: str) -> str:
-    return f"{count} {noun}{'' if count == 1 else 's'}"
-
-
-def _read_text(file: Path) -> str:
-    try:
-        data = file.read_bytes()
-    except FileNotFoundError:
-        near = difflib.get_close_matches(file.name, _siblings(file), n=1)
-        msg = "no such file" + (f"; did you mean {near[0]!r}?" if near else "")
-        raise JobFileError(msg, file=file) from None
-    except IsADirectoryError:
-        msg = "is a folder; a CSV file expected"
-        raise JobFileError(msg, file=file) from None
-    except (OSError, ValueError) as cause:
-        msg = f"cannot be read: {getattr(cause, 'strerror', None) or cause}"
-        raise JobFileError(msg, file=file) from cause
-    if not data.strip():
-        msg = "the file is empty; a header line and one line for each antenna expected"
-        raise JobFileError(msg, file=file)
-    try:
-        return data.decode("utf-8-sig")
-    except UnicodeDecodeError as cause:
-        line = len(re.findall(rb"\r\n|\n|\r", cause.object[: cause.start])) + 1
-        wide = data[:2] in (b"\xff\xfe", b"\xfe\xff")
-        msg = f"not UTF-8 text (line {line}, byte 0x{cause.object[cause.start]:02x})" + (
-            "; it looks like UTF-16: save it as UTF-8" if wide else "; save it as UTF-8"
-        )
-        raise JobFileError(msg, file=file) from cause
-
-
-def _siblings(file: Path) -> list[str]:
-    try:
-        return [p.name for p in file.parent.iterdir() if p.is_file()]
-    except OSError:
-        return []
-
-
-def _split_records(text: str) -> tuple[list[tuple[int, list[str]]], list[tuple[int, str]]]:
-    """Cells of every line that holds any, with line numbers; and lines whose quoting is broken."""
-    records: list[tuple[int, list[str]]] = []
-    problems: list[tuple[int, str]] = []
-    for number, line in enumerate(re.split(r"\r\n|\n|\r", text), start=1):
-        if not line.strip() or line.lstrip().startswith("#"):
-            continue
-        # each line on its own, so that one open quote cannot swallow the rest of the file;
-        # the empty second line is read only if a quote is still open at the end of the first
-        reader = csv.reader([line + "\n", ""], skipinitialspace=True)
-        try:
-            cells = [cell.strip() for cell in next(reader)]
-        except csv.Error as cause:
-            problems.append((number, f"cannot be split into cells: {cause}"))
-            continue
-        if reader.line_num > 1:
-            problems.append((number, "a double quote is opened and not closed on the same line"))
-        elif any(cells) and not cells[0].startswith("#"):
-            records.append((number, cells))
-    return records, problems
-
-
-def _header_fault(header: list[str]) -> str:
-    if len(header) == 1 and re.search(r"[;\t]", header[0]):
-        separator = "semicolons" if ";" in header[0] else "tabs"
-        return f"cells seem to be separated by {separator}; commas expected"
-    if any(re.fullmatch(r"[-+]?\.?\d[\d.eE+-]*", cell) for cell in header):
-        return f"the header is missing; column names expected first, for example {','.join(_REQUIRED)}"
-    return ""
-
-
-def _header_problems(line: int, header: list[str]) -> list[tuple[int, str]]:
-    problems = []
-    explained = set()
-    for position, cell in enumerate(header, start=1):
-        if cell in _COLUMNS:
-            continue
-        if not cell:
-            problems.append((line, f"column {position} has no name"))
-            continue
-        near = difflib.get_close_matches(cell.lower(), [c for c in _COLUMNS if c not in header], n=1)
-        explained.update(near)
-        hint = f"did you mean {near[0]!r}?" if near else f"known columns: {', '.join(_COLUMNS)}"
-        problems.append((line, f"unknown column {cell!r}; {hint}"))
-    problems += [(line, f"column {key!r} appears {n} times") for key, n in Counter(header).items() if n > 1 and key in _COLUMNS]
-    problems += [(line, f"required column {key!r} is missing") for key in _REQUIRED if key not in header and key not in explained]
-    return problems
-
-
-def _number(key: str, cell: str) -> tuple[float, str]:
-    """Value of a cell, NaN if unusable, and what is wrong with it."""
-    unit = "metres" if key.endswith("_m") else "degrees"
-    if not cell:
-        return math.nan, f"{key} is empty; a number in {unit} expected"
-    try:
-        value = float(cell.replace("_", "?"))  # 1_000 would be a number to Python
-    except ValueError:
-        return math.nan, f"{key} = {cell!r} is not a number; {unit} expected, as in -12.5"
-    if not math.isfinite(value):
-        return math.nan, f"{key} = {cell!r} is not a finite number"
-    return value, ""
 
 
 def _text_problems(labels: Sequence[str], names: Sequence[str], antenna: Sequence[str]) -> list[tuple[int, str]]:
