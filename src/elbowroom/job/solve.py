@@ -17,8 +17,11 @@ from elbowroom.store.keys import content_key
 from elbowroom.store.records import Record, Schema, Store
 from elbowroom.system.assembly import Progress
 from elbowroom.system.discretisation import Discretisation, FarSettings, discretise
+from elbowroom.system.reduction import ReductionSettings
 from elbowroom.system.self_block import NearSettings
 from elbowroom.system.solving import REFERENCE_OHM, PortCurrents, SolveStatistics, mesh_error, solve_direct, solve_isolated
+from elbowroom.system.solving_reduced import solve_reduced
+from elbowroom.system.spaces import CurrentSpace, all_unknowns
 
 MODEL_VERSION = 1
 """Raised whenever a change of the physics or numerics changes solved currents beyond rounding."""
@@ -26,18 +29,28 @@ MODEL_VERSION = 1
 PLACE_STEP_M = 1e-6
 """Places that agree to this are one place in a key: a thousandth of a degree of phase at 350 MHz is 2.4e-6 m."""
 
+SOLVERS = ("auto", "direct", "reduced")
+
+AUTO_DIRECT_UNKNOWNS = 3000
+"""Unknowns up to which ``"auto"`` solves directly: there both take a few seconds, and nothing needs to be estimated."""
+
 CONVENTIONS = (
     "SI units. Time factor exp(+j omega t). Frame: x east, y north, z up, ground surface at z = 0. Unknowns are currents "
-    "along wires, antenna by antenna; column p of currents_per_volt is driven by 1 V behind the reference resistance of "
+    "along wires, antenna by antenna; coordinates are the unknowns, or multiply the functions of each antenna's kind, which are "
+    "columns of unknowns; column p of currents_per_volt is driven by 1 V behind the reference resistance of "
     "port p, every other port loaded with it; port current positive from the first to the second end of the wire. "
     "Results of a model, not a measurement."
 )
 
 SOLUTION_SCHEMA = Schema(
     "station-solution",
-    1,
+    2,
     (
-        ArraySpec("currents_per_volt", ("unknown", "port"), "c", "A/V", "Unknowns driven by each port's source"),
+        ArraySpec("currents_per_volt", ("coordinate", "port"), "c", "A/V", "Currents driven by each port's source"),
+        ArraySpec("coordinate_offset", ("antenna_edge",), "iu", "1", "First coordinate of each antenna, and the end"),
+        ArraySpec("functions", ("function_entry",), "c", "1", "Bases of all kinds one after another, row by row; empty if none"),
+        ArraySpec("functions_shape", ("kind", "row_column"), "iu", "1", "Unknowns and functions of each kind; 0 0 if none"),
+        ArraySpec("kind_of_antenna", ("antenna",), "iu", "1", "Kind of each antenna"),
         ArraySpec("loaded_admittance_s", ("port", "port"), "c", "S", "Port currents for 1 V behind each reference resistance"),
         ArraySpec("isolated_currents_per_volt", ("unknown", "local_port"), "c", "A/V", "The same, every antenna alone"),
         ArraySpec("isolated_loaded_admittance_s", ("port", "local_port"), "c", "S", "Port currents, every antenna alone"),
@@ -139,6 +152,10 @@ def _to_record(solution: Solution, attributes: dict[str, Any]) -> Record:
     return Record(
         {
             "currents_per_volt": solution.coupled.currents,
+            "coordinate_offset": solution.space.offsets,
+            "functions": np.concatenate([np.zeros(0, complex), *(b.ravel() for b in solution.space.bases if b is not None)]),
+            "functions_shape": np.array([(0, 0) if b is None else b.shape for b in solution.space.bases]),
+            "kind_of_antenna": d.kind_of,
             "loaded_admittance_s": solution.coupled.loaded_admittance,
             "isolated_currents_per_volt": isolated_currents,
             "isolated_loaded_admittance_s": isolated_admittance,
@@ -157,6 +174,9 @@ def _to_record(solution: Solution, attributes: dict[str, Any]) -> Record:
             "relative_residual": s.relative_residual,
             "mesh_error": s.mesh_error,
             "seconds": dict(s.seconds),
+            "n_functions": s.n_functions,
+            "pattern_error": s.pattern_error,
+            "port_matrix_error": s.port_matrix_error,
             **attributes,
         },
     )
@@ -182,14 +202,37 @@ def _from_record(record: Record, d: Discretisation) -> Solution:
         relative_residual=float(attributes["relative_residual"]),
         mesh_error=float(attributes["mesh_error"]),
         seconds={k: float(v) for k, v in attributes["seconds"].items()},
+        n_functions=int(attributes["n_functions"]),
+        pattern_error=float(attributes["pattern_error"]),
+        port_matrix_error=float(attributes["port_matrix_error"]),
     )
+    bases: list[np.ndarray | None] = []
+    first = 0
+    for rows, columns in a["functions_shape"]:
+        bases.append(a["functions"][first : first + rows * columns].reshape(rows, columns) if rows else None)
+        first += rows * columns
+    space = CurrentSpace(a["coordinate_offset"], tuple(bases))
     return Solution(
         d,
         PortCurrents(a["currents_per_volt"], a["loaded_admittance_s"]),
         tuple(alone),
         float(attributes["reference_ohm"]),
         statistics,
+        space,
     )
+
+
+def chosen_solver(station: Station, frequency_hz: float, mesh: MeshSettings, solver: str) -> str:
+    """Return ``"direct"`` or ``"reduced"``: what was asked for, or what ``"auto"`` takes for a station of that size."""
+    if solver != "auto":
+        return solver
+    d = discretise(station, frequency_hz, mesh=mesh, self_blocks=False)
+    return "reduced" if d.n_unknowns > AUTO_DIRECT_UNKNOWNS and len(station) > 1 else "direct"
+
+
+def strategy_of(solver: str, precision: str, tolerance: float) -> tuple[str, str]:
+    """Return what a key says of how a station is solved."""
+    return (solver, precision) if solver == "direct" else (solver, f"{tolerance:.6g}")
 
 
 def solve(
@@ -199,6 +242,7 @@ def solve(
     solver: str = "auto",
     mesh: str | MeshSettings = "default",
     precision: str = "mixed",
+    tolerance: float = 1e-4,
     near: NearSettings | None = None,
     far: FarSettings | None = None,
     store: Store | None = None,
@@ -214,11 +258,14 @@ def solve(
     frequency_hz : float
         Frequency [Hz].
     solver : str, optional
-        ``"direct"``, or ``"auto"``, which is the direct solver.
+        ``"direct"`` solves for all unknowns, ``"reduced"`` for a few functions of each antenna within the tolerance, and
+        ``"auto"`` takes the reduced solver from `AUTO_DIRECT_UNKNOWNS` unknowns on.
     mesh : str or MeshSettings, optional
         ``"default"``, ``"refined"`` or settings.
     precision : str, optional
-        ``"mixed"``, ``"double"`` or ``"single"``.
+        Of the direct solver: ``"mixed"``, ``"double"`` or ``"single"``.
+    tolerance : float, optional
+        Of the reduced solver: error of embedded patterns relative to their peaks.
     near, far : optional
         Accuracy of reactions inside and between antennas.
     store : Store, optional
@@ -237,22 +284,28 @@ def solve(
     GeometryError, ModelRangeError, SolveError, StoreError
         See the stages.
     """
-    if solver not in ("auto", "direct"):
-        msg = f"solver {solver!r}: expected 'auto' or 'direct'"
+    if solver not in SOLVERS:
+        msg = f"solver {solver!r}: expected {', '.join(SOLVERS)}"
         raise ModelRangeError(msg)
     settings, near, far = mesh_settings(mesh), near or NearSettings(), far or FarSettings()
+    chosen = chosen_solver(station, frequency_hz, settings, solver)
+    strategy = strategy_of(chosen, precision, tolerance)
     key = ""
     if store is not None:
-        key = solution_key(station, frequency_hz, settings, near, far, ("direct", precision))
+        key = solution_key(station, frequency_hz, settings, near, far, strategy)
         record = store.get(key)
         if record is not None:
             return _from_record(record, discretise(station, frequency_hz, mesh=settings, near=near, far=far, self_blocks=False))
         store.check_writable()
     d = discretise(station, frequency_hz, mesh=settings, near=near, far=far)
     per_kind = solve_isolated(d)
-    coupled, statistics = solve_direct(d, precision=precision, progress=progress)
+    if chosen == "reduced":
+        coupled, space, statistics = solve_reduced(d, ReductionSettings(tolerance), progress=progress)
+    else:
+        coupled, statistics = solve_direct(d, precision=precision, progress=progress)
+        space = all_unknowns(d)
     statistics = replace(statistics, mesh_error=mesh_error(d, per_kind))
-    solution = Solution(d, coupled, tuple(per_kind[k] for k in d.kind_of), REFERENCE_OHM, statistics)
+    solution = Solution(d, coupled, tuple(per_kind[k] for k in d.kind_of), REFERENCE_OHM, statistics, space)
     if store is not None:
         store.put(key, _to_record(solution, attributes or {}))
     return solution

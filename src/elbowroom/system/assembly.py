@@ -170,6 +170,11 @@ class PairFiller:
             first += count
         return blocks
 
+    def block(self, i: int, j: int, distance: float) -> ComplexArray:
+        """Return the block (N_j, N_i) [ohm] of two antennas whose wires are a distance [m] apart."""
+        level = self.level_of(distance)
+        return self.close_block(i, j) if level < 0 else self.sampled_blocks(i, np.array([j]), level)[0]
+
     def close_block(self, i: int, j: int) -> ComplexArray:
         """Return the block (N_j, N_i) [ohm] of two antennas that nearly touch, element by element."""
         d = self.discretisation

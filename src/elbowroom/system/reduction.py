@@ -44,7 +44,7 @@ class ReductionSettings:
     """
 
     tolerance: float = 1e-3
-    cut_factor: float = 0.03
+    cut_factor: float = 0.3
     neighbour_pairs: int = 24
     skeleton_factor: float = 0.05
     skeleton_distances_m: tuple[float, ...] = (0.3, 1.0)
@@ -84,10 +84,46 @@ def sky_samples(radius: float, wavenumber: float, whole_sphere: bool) -> tuple[F
     return np.array(theta), np.array(phi)
 
 
-def reduced_bases(
-    discretisation: Discretisation, settings: ReductionSettings, filler: PairFiller, distances: FloatArray, reference_ohm: float
-) -> list[ComplexArray]:
-    """Return the functions of each kind of antenna, one basis (N, n) for all kinds of one design and mesh.
+@dataclass(frozen=True, eq=False)
+class Candidates:
+    """Functions of one kind in the order of what they carry, before they are cut.
+
+    Attributes
+    ----------
+    functions : complex128 (N, n)
+        Orthonormal in the norm of :func:`current_weights`.
+    carried : float64 (n,)
+        What each carries of the answers, falling, relative to the first.
+    fewest : int
+        Number below which a basis is never cut: its ports.
+    """
+
+    functions: ComplexArray
+    carried: FloatArray
+    fewest: int
+
+    @property
+    def most(self) -> int:
+        """Number of functions there are."""
+        return self.functions.shape[1]
+
+    def count(self, cut: float) -> int:
+        """Return how many carry more than a part of the first."""
+        return max(self.fewest, int(np.count_nonzero(self.carried > cut)))
+
+    def cut(self, cut: float) -> ComplexArray:
+        """Return the functions that carry more than a part of the first, (N, n)."""
+        return np.ascontiguousarray(self.functions[:, : self.count(cut)])
+
+
+def reduced_candidates(
+    discretisation: Discretisation,
+    settings: ReductionSettings,
+    filler: PairFiller,
+    distances: FloatArray,
+    answers: KindAnswers,
+) -> list[Candidates]:
+    """Return the candidates of each kind of antenna, the same for all kinds of one design and mesh.
 
     Parameters
     ----------
@@ -99,23 +135,21 @@ def reduced_bases(
         Interactions of unknowns.
     distances : float64 (A, A)
         Smallest distances between wires of antennas [m].
-    reference_ohm : float
-        Resistance across every port [ohm].
+    answers : KindAnswers
+        What each kind answers to excitations.
     """
     d = discretisation
     groups: dict[tuple[int, int], list[int]] = {}
     for k, kind in enumerate(d.kinds):
         groups.setdefault((id(kind.antenna), id(kind.mesh)), []).append(k)
-    bases: list[ComplexArray | None] = [None] * len(d.kinds)
-    answers = _KindAnswers(d, reference_ohm)
+    found: dict[int, Candidates] = {}
     for kinds in groups.values():
-        basis = _basis_of(d, kinds, answers, settings, filler, distances)
-        for k in kinds:
-            bases[k] = basis
-    return [b for b in bases if b is not None]
+        made = _candidates_of(d, kinds, answers, settings, filler, distances)
+        found |= dict.fromkeys(kinds, made)
+    return [found[k] for k in range(len(d.kinds))]
 
 
-class _KindAnswers:
+class KindAnswers:
     """What antennas of each kind, loaded at their ports and alone over the ground, answer to excitations."""
 
     def __init__(self, discretisation: Discretisation, reference_ohm: float) -> None:
@@ -134,6 +168,12 @@ class _KindAnswers:
     def to(self, kind: int, excitation: ComplexArray | FloatArray) -> ComplexArray:
         """Return the currents (N, R) that excitations (N, R) drive."""
         return lu_solve(self.factors(kind), np.asarray(excitation, dtype=complex))
+
+    def product(self, kind: int, currents: ComplexArray) -> ComplexArray:
+        """Return the kind's own loaded block times currents (N, R)."""
+        k = self.discretisation.kinds[kind]
+        vectors, ports = k.mesh.gap_vectors, self.attached[k.antenna]
+        return np.asarray(k.self_block @ currents + vectors.T @ (ports.loading @ (vectors @ currents)))
 
     def to_ports(self, kind: int) -> ComplexArray:
         """Return the currents (N, P) of the kind's own port sources."""
@@ -155,14 +195,14 @@ def _distinct_blocks(discretisation: Discretisation, kinds: list[int], most: int
     return found if len(found) <= most else [found[i] for i in np.linspace(0, len(found) - 1, most).astype(int)]
 
 
-def _basis_of(
+def _candidates_of(
     d: Discretisation,
     kinds: list[int],
-    answers: _KindAnswers,
+    answers: KindAnswers,
     settings: ReductionSettings,
     filler: PairFiller,
     distances: FloatArray,
-) -> ComplexArray:
+) -> Candidates:
     mesh = d.kinds[kinds[0]].mesh
     root = cholesky(current_weights(mesh, d.wavenumber), lower=False)
     ends = np.concatenate([mesh.start, mesh.end])
@@ -179,15 +219,16 @@ def _basis_of(
         parts.append(answered / np.linalg.norm(answered, axis=0).max())
     parts += _neighbour_answers(d, kinds, answers, settings, filler, distances, root)
     left, size, _ = np.linalg.svd(np.concatenate(parts, axis=1), full_matrices=False)
-    cut = settings.cut_factor * np.sqrt(settings.tolerance) * size[0]
-    count = max(answers.to_ports(kinds[0]).shape[1], int(np.count_nonzero(size > cut)))
-    return solve_triangular(root, left[:, :count])
+    # Rounding leaves nothing of use below this.
+    useful = int(np.count_nonzero(size > 1e-12 * size[0]))
+    functions = solve_triangular(root, left[:, :useful])
+    return Candidates(functions, size[:useful] / size[0], min(useful, answers.to_ports(kinds[0]).shape[1]))
 
 
 def _neighbour_answers(
     d: Discretisation,
     kinds: list[int],
-    answers: _KindAnswers,
+    answers: KindAnswers,
     settings: ReductionSettings,
     filler: PairFiller,
     distances: FloatArray,
@@ -195,15 +236,13 @@ def _neighbour_answers(
 ) -> list[ComplexArray]:
     """Return the currents that the nearest antennas, driven at their ports, induce in antennas of some kinds, in the norm."""
     mine = np.flatnonzero(np.isin(d.kind_of, kinds))
-    pairs = []
-    for i in mine:
-        others = np.argsort(distances[i])
-        pairs += [(float(distances[i, j]), int(i), int(j)) for j in others[: settings.neighbour_pairs + 1] if j != i]
-    pairs.sort()
+    pairs: list[tuple[float, int, int]] = []
+    for a in mine:
+        nearest = np.argsort(distances[a])[: settings.neighbour_pairs + 1]
+        pairs += [(float(distances[a, b]), int(a), int(b)) for b in nearest if b != a]
     parts: list[ComplexArray] = []
-    for distance, i, j in pairs[: settings.neighbour_pairs]:
-        level = filler.level_of(distance)
-        block = filler.close_block(j, i) if level < 0 else filler.sampled_blocks(j, np.array([i]), level)[0]
+    for distance, i, j in sorted(pairs)[: settings.neighbour_pairs]:
+        block = filler.block(j, i, distance)
         source = answers.to_ports(d.kind_of[j])
         induced = root @ answers.to(d.kind_of[i], -block @ source)
         own = root @ answers.to_ports(d.kind_of[i])

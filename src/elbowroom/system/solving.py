@@ -49,6 +49,11 @@ class SolveStatistics:
         Largest relative change of an isolated antenna's port admittance when its mesh is refined.
     seconds : dict
         Wall time of each stage [s].
+    n_functions : int
+        Functions that stood for the unknowns in a reduced solve; 0 otherwise.
+    pattern_error, port_matrix_error : float
+        Stated error of a reduced solve against the full one on the same mesh: of embedded patterns relative to their peaks,
+        and of the port matrix relative to its norm; zero where all unknowns were solved for.
     """
 
     strategy: str
@@ -58,6 +63,9 @@ class SolveStatistics:
     relative_residual: float
     mesh_error: float = float("nan")
     seconds: dict[str, float] = field(default_factory=dict)
+    n_functions: int = 0
+    pattern_error: float = 0.0
+    port_matrix_error: float = 0.0
 
 
 @dataclass(frozen=True)

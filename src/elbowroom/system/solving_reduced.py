@@ -20,12 +20,19 @@ from elbowroom.system.assembly import (
 from elbowroom.system.discretisation import Discretisation, attachments
 from elbowroom.system.factorisation import TiledSymmetric
 from elbowroom.system.interactions import SkeletonInteractions, SkeletonTable
-from elbowroom.system.reduction import ReductionSettings, reduced_bases
+from elbowroom.system.reduction import KindAnswers, ReductionSettings, reduced_candidates
+from elbowroom.system.reduction_error import reduction_error
 from elbowroom.system.solving import REFERENCE_OHM, PortCurrents, SolveStatistics, port_excitations
 from elbowroom.system.spaces import CurrentSpace, reduced_space
 
 BATCH_ANTENNAS = 12
 """Antennas whose kernels are filled at a time: few enough for the work arrays to stay in cache."""
+
+SINGLE_TOLERANCE = 3e-5
+"""Tolerance from which the reduced matrix is kept and factored in single precision."""
+
+MOST_ATTEMPTS = 4
+"""Times that functions are added before an error above the tolerance is left as stated."""
 
 
 def _batches(others: np.ndarray, levels: np.ndarray) -> Iterator[tuple[int, np.ndarray]]:
@@ -103,7 +110,7 @@ def assemble_reduced(
                     place(i, int(j), block)
                 continue
             for j in chosen:
-                full = full_block(d, filler, i, int(j), distances[i, j])
+                full = filler.block(i, int(j), distances[i, j])
                 place(i, int(j), space.bases[d.kind_of[j]].T @ full @ space.bases[d.kind_of[i]])  # type: ignore[union-attr]
 
     with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
@@ -113,12 +120,6 @@ def assemble_reduced(
     return matrix
 
 
-def full_block(discretisation: Discretisation, filler: PairFiller, i: int, j: int, distance: float) -> ComplexArray:
-    """Return the block (N_j, N_i) [ohm] of the unknowns of two antennas."""
-    level = filler.level_of(distance)
-    return filler.close_block(i, j) if level < 0 else filler.sampled_blocks(i, np.array([j]), level)[0]
-
-
 def solve_reduced(
     discretisation: Discretisation,
     settings: ReductionSettings | None = None,
@@ -126,7 +127,31 @@ def solve_reduced(
     reference_ohm: float = REFERENCE_OHM,
     progress: Progress | None = None,
 ) -> tuple[PortCurrents, CurrentSpace, SolveStatistics]:
-    """Solve a station in a few functions of each antenna."""
+    """Solve a station in a few functions of each antenna, and state the error.
+
+    Where the stated error exceeds the tolerance, more functions are taken and the station is solved again.
+
+    Parameters
+    ----------
+    discretisation : Discretisation
+        The meshed station, with self blocks.
+    settings : ReductionSettings, optional
+        Accuracy.
+    reference_ohm : float, optional
+        Resistance across every port [ohm].
+    progress : callable, optional
+        Told the stage and the fraction done.
+
+    Returns
+    -------
+    PortCurrents, CurrentSpace, SolveStatistics
+        Currents in the coordinates of the space.
+
+    Raises
+    ------
+    SolveError
+        If the reduced matrix is singular or not finite.
+    """
     d, settings = discretisation, settings or ReductionSettings()
     seconds: dict[str, float] = {}
     clock = time.perf_counter()
@@ -137,31 +162,54 @@ def solve_reduced(
         seconds[stage] = seconds.get(stage, 0.0) + now - clock
         clock = now
 
-    filler = PairFiller(d)
-    distances = antenna_distances(d)
-    lap("distances")
-    bases = reduced_bases(d, settings, filler, distances, reference_ohm)
-    space = reduced_space(d, bases)
-    lap("functions")
+    filler, distances, answers = PairFiller(d), antenna_distances(d), KindAnswers(d, reference_ohm)
     table = SkeletonTable(d, settings.skeleton_distances_m, settings.skeleton_factor * settings.tolerance)
-    interactions = SkeletonInteractions(d, space.bases, table)
-    for k in range(len(d.kinds)):
-        for level in range(len(table.distances_m)):
-            interactions.weights(k, level)
-    lap("skeletons")
-    matrix = assemble_reduced(d, space, interactions, filler, distances, reference_ohm, progress=progress)
-    lap("assemble")
+    candidates = reduced_candidates(d, settings, filler, distances, answers)
     excitations, own = port_excitations(d, reference_ohm)
-    right = np.zeros((space.size, d.n_ports), dtype=complex)
-    for a, k in enumerate(d.kind_of):
-        right[space.of(a), d.ports_of(a)] = bases[k].T @ excitations[d.unknowns_of(a), d.ports_of(a)]
-    factors = matrix.factorise()
-    lap("factorise")
-    x = factors.solve(right).astype(np.complex128)
-    admittance = own + right.T @ x
-    lap("port excitations")
+    lap("functions")
+    cut = settings.cut_factor * np.sqrt(settings.tolerance)
+    for attempt in range(MOST_ATTEMPTS):
+        bases = [c.cut(cut) for c in candidates]
+        space = reduced_space(d, bases)
+        interactions = SkeletonInteractions(d, space.bases, table)
+        for k in range(len(d.kinds)):
+            for level in range(len(table.distances_m)):
+                interactions.weights(k, level)
+        lap("skeletons")
+        # Single precision leaves about 1e-6 of a pattern, which a tighter tolerance would see.
+        dtype = np.complex64 if settings.tolerance >= SINGLE_TOLERANCE else np.complex128
+        matrix = assemble_reduced(d, space, interactions, filler, distances, reference_ohm, dtype=dtype, progress=progress)
+        lap("assemble")
+        right = np.zeros((space.size, d.n_ports), dtype=complex)
+        for a, k in enumerate(d.kind_of):
+            right[space.of(a), d.ports_of(a)] = bases[k].T @ excitations[d.unknowns_of(a), d.ports_of(a)]
+        if progress is not None:
+            progress("factorise", 0.0)
+        factors = matrix.factorise()
+        lap("factorise")
+        x = factors.solve(right).astype(np.complex128)
+        admittance = own + right.T @ x
+        lap("port excitations")
+        error = reduction_error(d, space, interactions, filler, distances, answers, x, excitations)
+        lap("error estimate")
+        everything = all(c.count(cut) == c.most for c in candidates)
+        if error.pattern <= settings.tolerance or everything or attempt == MOST_ATTEMPTS - 1:
+            break
+        cut *= min(0.5, 0.5 * np.sqrt(settings.tolerance / error.pattern))
+    if progress is not None:
+        progress("port excitations", 1.0)
     return (
         PortCurrents(x, 0.5 * (admittance + admittance.T)),
         space,
-        SolveStatistics("reduced", "single", space.size, d.n_ports, 0.0, seconds=seconds),
+        SolveStatistics(
+            "reduced",
+            "single" if dtype is np.complex64 else "double",
+            d.n_unknowns,
+            d.n_ports,
+            error.residual,
+            seconds=seconds,
+            n_functions=space.size,
+            pattern_error=error.pattern,
+            port_matrix_error=error.port_matrix,
+        ),
     )
