@@ -42,7 +42,7 @@ def _fields(run: JobRun, step_deg: float | None = None) -> Iterator[BeamFields]:
 
     directions = hemisphere_grid(step_deg or run.job.sky_step_deg)
     for frequency in run.frequencies_hz:
-        yield beam_fields(run.solution(frequency), run.job.beams, directions, run.termination)
+        yield beam_fields(run.solution(frequency), run.job.beams, directions, run.termination_at(frequency))
 
 
 def _show_comparison(rows: list[BeamComparison], screen: Screen, path: Path) -> None:
@@ -166,7 +166,7 @@ class _Pictures:
         path = self.folder / picture_name("layout")
         self._wrote(
             draw_layout(
-                self.run.station, path, title=job.title, frequencies_hz=self.run.frequencies_hz, termination=self.run.termination
+                self.run.station, path, title=job.title, frequencies_hz=self.run.frequencies_hz, termination=self.run.loads
             )
         )
 

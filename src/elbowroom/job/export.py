@@ -183,10 +183,10 @@ def export_hdf5(
     -----
     Datasets: ``frequency_hz`` (F), ``theta_rad`` (T), ``phi_rad`` (H), ``component`` (2), ``coupled_beam`` and ``isolated_beam``
     (F, B, T, H, 2) complex, ``weight`` (F, B, P) complex, ``beam_name`` and ``beam_port`` (B), ``pointing_theta_rad`` and
-    ``pointing_phi_rad`` (B), ``nominal_phi_rad`` (B), ``port_name`` (P), ``port_nominal_phi_rad`` (P), ``termination_ohm`` (P,
-    text), ``antenna_name`` (A), ``antenna_position_m`` (A, 3), ``relative_residual`` and ``mesh_error`` (F); with element
-    patterns ``embedded_pattern`` and ``isolated_pattern`` (F, P, T, H, 2) complex.  Every dataset has a ``unit``; axes are HDF5
-    dimension scales.  The phase centre of every pattern is the station's origin.
+    ``pointing_phi_rad`` (B), ``nominal_phi_rad`` (B), ``port_name`` (P), ``port_nominal_phi_rad`` (P), ``termination_ohm``
+    (F, P) text, ``antenna_name`` (A), ``antenna_position_m`` (A, 3), ``relative_residual`` and
+    ``mesh_error`` (F); with element patterns ``embedded_pattern`` and ``isolated_pattern`` (F, P, T, H, 2) complex.  Every
+    dataset has a ``unit``; axes are HDF5 dimension scales.  The phase centre of every pattern is the station's origin.
     """
     settings = settings or TableSettings()
     with written_whole(path) as temporary, h5py.File(temporary, "w", libver=("earliest", "v110")) as file:
@@ -236,7 +236,7 @@ class _TableWriter:
                 self._make(name, values, unit, text).dims[0].attach_scale(file["beam_name"])
             for name, text in (("coupled_beam", "Coupled beams"), ("isolated_beam", "Isolated beams")):
                 self._field(name, "beam_name", len(beams), text)
-        self._station(first.solution, first.termination)
+        self._station(first.solution)
 
     def _make(self, name: str, values: np.ndarray, unit: str, text: str) -> h5py.Dataset:
         made = self.file.create_dataset(name, data=values)
@@ -255,24 +255,29 @@ class _TableWriter:
         for position, scale in enumerate(("frequency_hz", axis, "theta_rad", "phi_rad", "component")):
             made.dims[position].attach_scale(self.file[scale])
 
-    def _station(self, solution: Solution, termination: Termination) -> None:
+    def _over_frequency(self, name: str, axes: tuple[str, ...], unit: str, text: str, **kind: Any) -> None:
+        """Make a dataset over frequency and some axes that are there already."""
+        shape = (self.n_frequencies, *(self.file[axis].size for axis in axes))
+        made = self.file.create_dataset(name, shape, **kind)
+        made.attrs.update({"unit": unit, "description": text})
+        for position, scale in enumerate(("frequency_hz", *axes)):
+            made.dims[position].attach_scale(self.file[scale])
+
+    def _station(self, solution: Solution) -> None:
         """Write what does not change over frequency."""
         station = solution.station
         count = len(station.port_names)
         self._axis("port_name", _text([str(n) for n in station.port_names]), "1", "Ports as antenna/port")
-        for name, values, unit, text in (
-            ("port_nominal_phi_rad", station.port_nominal_phi_rad, "rad", "Co-polarisation of each port at zenith"),
-            ("termination_ohm", _text(_termination_text(termination, count)), "ohm", "What each port sees, as text"),
-        ):
-            self._make(name, values, unit, text).dims[0].attach_scale(self.file["port_name"])
+        nominal = self._make(
+            "port_nominal_phi_rad", station.port_nominal_phi_rad, "rad", "Co-polarisation of each port at zenith"
+        )
+        nominal.dims[0].attach_scale(self.file["port_name"])
+        self._over_frequency("termination_ohm", ("port_name",), "ohm", "What each port sees, as text", dtype=h5py.string_dtype())
         self._make("antenna_position_m", station.positions, "m", "East, north, up of each antenna")
         self._make("antenna_name", _text([p.name for p in station]), "1", "Names of the antennas")
         if self.beams:
-            shape = (self.n_frequencies, len(self.beams), count)
-            made = self.file.create_dataset("weight", shape, dtype=np.complex128, fillvalue=np.complex128(np.nan))
-            made.attrs.update({"unit": "1", "description": "Weight of each port in each beam"})
-            for position, scale in enumerate(("frequency_hz", "beam_name", "port_name")):
-                made.dims[position].attach_scale(self.file[scale])
+            kind = {"dtype": np.complex128, "fillvalue": np.complex128(np.nan)}
+            self._over_frequency("weight", ("beam_name", "port_name"), "1", "Weight of each port in each beam", **kind)
         if self.settings.elements:
             self._field("embedded_pattern", "port_name", count, "Embedded element patterns")
             self._field("isolated_pattern", "port_name", count, "Isolated element patterns")
@@ -290,6 +295,7 @@ class _TableWriter:
         file["frequency_hz"][index] = solution.frequency_hz
         file["relative_residual"][index] = solution.statistics.relative_residual
         file["mesh_error"][index] = solution.statistics.mesh_error
+        file["termination_ohm"][index] = _termination_text(termination, len(solution.port_names))
         phi = directions.phi_rad
         if ready.beams:
             nominal = mean_nominal_phi_rad(solution.station, ready.weights)

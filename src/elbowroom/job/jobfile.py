@@ -18,9 +18,22 @@ shift_north_m``
 ``[band] frequency_hz``          list of frequencies [Hz], in any order; they are solved in rising order
 ``[band] start_hz, stop_hz,      instead of the list: start, start + step, ... up to stop, stop included if a
 step_hz``                        whole number of steps away [Hz]
+``[station] as_built``           CSV file of offsets from the layout, added before turn and shift (see
+                                 `elbowroom.geometry.offsets`); none by default
+``[station.damage] missing``     antennas whose structure is absent
+``[station.damage] open,         antennas, or ports named antenna/port, that are dead: their structure stays and
+shorted, amplifier_off``         couples, they weigh 0 in every beam; these go before ``[termination]``
 ``[termination] impedance_ohm``  what every port sees: ohms, ``[resistance, reactance]``, ``"open"`` or
                                  ``"short"``; 100 by default
-``[termination.ports] "A1/x"``   the same for one port, named antenna/port
+``[termination] file``           instead: a one-port Touchstone file, interpolated linearly in the real and the
+                                 imaginary part of its reflection coefficient, never outside its range
+``[termination] circuit``        instead: ``"series"`` or ``"parallel"``, of ``resistance_ohm``,
+                                 ``inductance_h`` and ``capacitance_f``, one at least
+``[termination]                  whether the resistance of this table may be negative; a warning then
+allow_negative_resistance``
+``[termination.antennas] NAME``  the same for one antenna: a value, or a table of the keys above
+``[termination.ports] "A1/x"``   the same for one port, named antenna/port; goes before its antenna's
+``[termination] amplifier_off``  the same for ports whose amplifier is off
 ``[solver] method``              ``"auto"`` or ``"direct"``
 ``[solver] mesh``                ``"default"`` or ``"refined"``
 ``[solver] precision``           ``"mixed"``, ``"double"`` or ``"single"``
@@ -38,20 +51,24 @@ step_hz``                        whole number of steps away [Hz]
 
 from __future__ import annotations
 
-import math
 from collections import Counter
-from dataclasses import dataclass
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
-from elbowroom.base.arrays import FloatArray
-from elbowroom.base.errors import JobFileError
+from elbowroom.base.errors import GeometryError, JobFileError
 from elbowroom.geometry.antennas import Antenna
 from elbowroom.geometry.grounds import FreeSpace, Ground, PerfectGround
 from elbowroom.geometry.layouts import Layout, read_layout
-from elbowroom.geometry.stations import Placed, Station, turned
+from elbowroom.geometry.offsets import Offsets, displaced, read_offsets
+from elbowroom.geometry.stations import PortName
 from elbowroom.job.antennafile import read_antenna
-from elbowroom.job.jobtables import SECTIONS, BeamTable, OnePort, StationTable
+from elbowroom.job.damage import AMPLIFIER_OFF, Damage, read_damage
+from elbowroom.job.jobmodel import Beam as Beam
+from elbowroom.job.jobmodel import Job as Job
+from elbowroom.job.jobmodel import azimuth_to_phi_deg as azimuth_to_phi_deg
+from elbowroom.job.jobtables import SECTIONS, BeamTable, StationTable
+from elbowroom.job.jobterminations import LoadReader, Terminations
 from elbowroom.job.tomlfile import counted, fail, key_path, near_miss, read_toml, shown, validate_table
 
 SCHEMA = 1
@@ -60,195 +77,7 @@ SCHEMA = 1
 _GROUNDS: dict[str, Ground] = {"perfect": PerfectGround(), "free-space": FreeSpace()}
 
 
-def azimuth_to_phi_deg(azimuth_deg: float) -> float:
-    """Return the angle phi, east through north, 0 to 360 [deg], of a compass azimuth, north through east [deg]."""
-    phi = math.fmod(90.0 - azimuth_deg, 360.0)
-    phi = phi + 360.0 if phi < 0.0 else phi
-    return 0.0 if phi >= 360.0 else phi
-
-
 _TOP_KEYS = ("schema", "title", *SECTIONS, "beam")
-
-
-@dataclass(frozen=True)
-class Beam:
-    """One beam to form: which ports, and where it points.
-
-    Attributes
-    ----------
-    name : str
-        Name, unique in the job.
-    port : str
-        Port of each antenna that is added up.
-    zenith_angle_deg, azimuth_deg : float
-        Pointing; azimuth from north through east [deg].
-    antennas : tuple of str or None
-        Antennas in the beam; None means all that have the port.
-    delay_step_s : float or None
-        Step of the delays [s].
-    """
-
-    name: str
-    port: str
-    zenith_angle_deg: float = 0.0
-    azimuth_deg: float = 0.0
-    antennas: tuple[str, ...] | None = None
-    delay_step_s: float | None = None
-
-    @property
-    def phi_deg(self) -> float:
-        """Pointing as an angle from east towards north [deg]."""
-        return azimuth_to_phi_deg(self.azimuth_deg)
-
-    @property
-    def direction_rad(self) -> tuple[float, float]:
-        """Pointing as (theta, phi) [rad]."""
-        return math.radians(self.zenith_angle_deg), math.radians(self.phi_deg)
-
-    def amplitudes(self, station: Station) -> FloatArray:
-        """Return 1 for each port in the beam and 0 for the others, (P,)."""
-        import numpy as np
-
-        chosen = None if self.antennas is None else set(self.antennas)
-        return np.array([float(n.port == self.port and (chosen is None or n.antenna in chosen)) for n in station.port_names])
-
-
-@dataclass(frozen=True)
-class Job:
-    """A job file, checked, with the files it names read and every default filled in.
-
-    Attributes
-    ----------
-    path : Path
-        The job file.
-    text : str
-        The job file as given.
-    title : str
-        A line for people.
-    layout_path : Path
-        The layout file.
-    layout : Layout
-        Antenna places as in the file, before turn and shift.
-    designs : dict of str to Antenna
-        Designs by name in the layout's ``antenna`` column; ``""`` is the default one.
-    antenna_paths : dict of str to Path
-        Their files.
-    ground : Ground
-        What the station stands on.
-    turn_deg, shift_east_m, shift_north_m : float
-        Turn, then shift, of the whole station [deg], [m].
-    frequencies_hz : tuple of float
-        Frequencies in rising order [Hz].
-    termination : float, complex, "open" or "short"
-        What ports see [ohm] unless named below.
-    termination_of_port : dict
-        Exceptions by ``antenna/port``.
-    solver, mesh, precision : str
-        Settings of :func:`elbowroom.job.solve.solve`.
-    beams : tuple of Beam
-        Beams in the order of the file.
-    sky_step_deg : float
-        Step of maps [deg].
-    store_folder, output_folder : Path
-        Where results go.
-    """
-
-    path: Path
-    text: str
-    title: str
-    layout_path: Path
-    layout: Layout
-    designs: dict[str, Antenna]
-    antenna_paths: dict[str, Path]
-    ground: Ground
-    turn_deg: float
-    shift_east_m: float
-    shift_north_m: float
-    frequencies_hz: tuple[float, ...]
-    termination: OnePort
-    termination_of_port: dict[str, OnePort]
-    solver: str
-    mesh: str
-    precision: str
-    beams: tuple[Beam, ...]
-    sky_step_deg: float
-    store_folder: Path
-    output_folder: Path
-
-    def station(self) -> Station:
-        """Return the station: the layout's antennas, turned and shifted, on their ground."""
-        layout = self.layout
-        placed = [
-            turned(
-                Placed(
-                    self.designs[layout.antenna[i]],
-                    tuple(float(v) for v in layout.positions[i]),  # type: ignore[arg-type]
-                    float(layout.rotation_deg[i]),
-                    float(layout.tilt_east_deg[i]),
-                    float(layout.tilt_north_deg[i]),
-                    layout.names[i],
-                ),
-                self.turn_deg,
-                self.shift_east_m,
-                self.shift_north_m,
-            )
-            for i in range(len(layout))
-        ]
-        return Station(placed, self.ground)
-
-    def termination_values(self, station: Station | None = None) -> list[OnePort]:
-        """Return what each port sees, in the order of the station's ports."""
-        names = (station or self.station()).port_names
-        return [self.termination_of_port.get(str(name), self.termination) for name in names]
-
-    def resolved_lines(self) -> list[str]:
-        """Return every setting as a ``key = value`` line, defaults included, to be shown before work starts."""
-        f, counts = self.frequencies_hz, Counter(self.layout.antenna)
-        if len(f) <= 6:
-            band = ", ".join(f"{v:.10g}" for v in f)
-        else:
-            band = f"{f[0]:.10g}, {f[1]:.10g}, ..., {f[-1]:.10g}"
-        lines = [
-            f"job = {self.path}",
-            f"title = {self.title}",
-            f"station.layout = {self.layout_path} ({counted(len(self.layout), 'antenna')})",
-        ]
-        for name, path in self.antenna_paths.items():
-            design = self.designs[name]
-            ports = ", ".join(p.name for p in design.ports)
-            key = f"station.antennas.{name}" if name else "station.antenna"
-            lines.append(f"{key} = {path} ({design.name!r}, ports {ports}; {counted(counts[name], 'antenna')})")
-        lines += [
-            f"station.ground = {self.ground.name}",
-            f"station.turn_deg = {self.turn_deg:.10g}",
-            f"station.shift_east_m = {self.shift_east_m:.10g}",
-            f"station.shift_north_m = {self.shift_north_m:.10g}",
-            f"band.frequency_hz = {band} ({len(f)} in all)",
-            f"termination.impedance_ohm = {_ohms(self.termination)}",
-            *(f"termination.ports.{k} = {_ohms(v)}" for k, v in self.termination_of_port.items()),
-            f"solver.method = {self.solver}",
-            f"solver.mesh = {self.mesh}",
-            f"solver.precision = {self.precision}",
-        ]
-        for b in self.beams:
-            who = "all antennas with the port" if b.antennas is None else counted(len(b.antennas), "antenna")
-            delays = "exact delays" if b.delay_step_s is None else f"delays in steps of {b.delay_step_s:g} s"
-            lines.append(
-                f"beam.{b.name} = port {b.port}, zenith angle {b.zenith_angle_deg:g} deg, azimuth {b.azimuth_deg:g} deg "
-                f"(phi {b.phi_deg:g} deg), {who}, {delays}"
-            )
-        return [
-            *lines,
-            f"sky.step_deg = {self.sky_step_deg:.10g}",
-            f"store.folder = {self.store_folder}",
-            f"output.folder = {self.output_folder}",
-        ]
-
-
-def _ohms(value: OnePort) -> str:
-    if isinstance(value, complex):
-        return f"[{value.real:.10g}, {value.imag:.10g}]"
-    return value if isinstance(value, str) else f"{value:.10g}"
 
 
 def read_job(path: str | Path) -> Job:
@@ -293,6 +122,8 @@ def read_job(path: str | Path) -> Job:
             parts[key] = validate_table(model, table.get(key, {}), problems, (key,))
     beams = _beams(table.get("beam", []), problems)
     folder = file.parent
+    offsets: Offsets | None = None
+    damage, terminations = Damage(), Terminations()
     station_table = parts.get("station")
     layout: Layout | None = None
     designs: dict[str, Antenna] | None = None
@@ -301,9 +132,17 @@ def read_job(path: str | Path) -> Job:
         layout, designs, antenna_paths = _station_files(folder, station_table, problems)
     if layout is not None and designs is not None:
         port_names = {n: [p.name for p in designs[d].ports] for n, d in zip(layout.names, layout.antenna, strict=True)}
+        assert station_table is not None
+        offsets = _offsets(folder, station_table, layout, problems)
+        damage = read_damage(station_table.damage, port_names, problems)
         if parts.get("termination") is not None:
-            _check_ports(parts["termination"].ports, port_names, problems)
+            band = parts.get("band")
+            reader = LoadReader(folder, () if band is None else band.frequencies(), problems)
+            terminations = reader.terminations(parts["termination"], port_names)
+            if AMPLIFIER_OFF in damage.ports.values() and parts["termination"].amplifier_off is None:
+                problems.append("termination.amplifier_off: required key is missing beside station.damage.amplifier_off")
         _check_beams(beams, port_names, problems)
+        beams = _alive(beams, port_names, damage, problems)
     if problems or layout is None or designs is None or station_table is None:
         fail(file, "job file", problems)
     return Job(
@@ -319,8 +158,7 @@ def read_job(path: str | Path) -> Job:
         shift_east_m=station_table.shift_east_m,
         shift_north_m=station_table.shift_north_m,
         frequencies_hz=parts["band"].frequencies(),
-        termination=parts["termination"].impedance_ohm,
-        termination_of_port=parts["termination"].ports,
+        terminations=terminations,
         solver=parts["solver"].method,
         mesh=parts["solver"].mesh,
         precision=parts["solver"].precision,
@@ -328,6 +166,9 @@ def read_job(path: str | Path) -> Job:
         sky_step_deg=parts["sky"].step_deg,
         store_folder=folder / parts["store"].folder,
         output_folder=folder / parts["output"].folder,
+        as_built_path=None if station_table.as_built is None else folder / station_table.as_built,
+        offsets=offsets,
+        damage=damage,
     )
 
 
@@ -399,12 +240,41 @@ def _station_files(
     return layout, designs if whole else None, {n: folder / f for n, (_, f) in named.items()}
 
 
-def _check_ports(ports: dict[str, OnePort], port_names: dict[str, list[str]], problems: list[str]) -> None:
-    known = [f"{a}/{p}" for a, names in port_names.items() for p in names]
-    known_set = set(known)
-    for name in ports:
-        if name not in known_set:
-            problems.append(f"{key_path('termination', 'ports', name)}: no such port; {near_miss(name, known, 'ports')}")
+def _offsets(folder: Path, table: StationTable, layout: Layout, problems: list[str]) -> Offsets | None:
+    """Return the offsets of the antennas, after making sure that the layout can take them."""
+    if table.as_built is None:
+        return None
+    try:
+        offsets = read_offsets(folder / table.as_built)
+    except JobFileError as cause:
+        problems.append(f"station.as_built: {str(cause).splitlines()[0]}")
+        problems.extend(f"station.as_built: {p}" for p in cause.problems)
+        return None
+    known = set(layout.names)
+    unknown = [name for name in offsets.names if name not in known]
+    problems.extend(f"station.as_built: no antenna {name!r}; {near_miss(name, layout.names, 'antennas')}" for name in unknown)
+    if unknown:
+        return None
+    try:
+        displaced(layout, offsets)
+    except GeometryError as cause:
+        problems.extend(f"station.as_built: {p}" for p in cause.problems)
+        return None
+    return offsets
+
+
+def _alive(
+    beams: list[tuple[int, Beam]], port_names: dict[str, list[str]], damage: Damage, problems: list[str]
+) -> list[tuple[int, Beam]]:
+    """Return the beams without dead ports; one of which nothing is left is a problem."""
+    beams = [(i, replace(beam, left_out=frozenset(damage.ports))) for i, beam in beams]
+    missing = set(damage.missing)
+    names = [PortName(antenna, port) for antenna, ports in port_names.items() for port in ports]
+    for i, beam in beams:
+        asked = [name for name in names if beam.asks_for(name)]
+        if asked and not any(beam.adds_up(name) and name.antenna not in missing for name in asked):
+            problems.append(f"beam[{i}]: all its antennas are dead or missing (station.damage)")
+    return beams
 
 
 def _check_beams(beams: list[tuple[int, Beam]], port_names: dict[str, list[str]], problems: list[str]) -> None:

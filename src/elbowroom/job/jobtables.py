@@ -9,7 +9,7 @@ import math
 from collections import Counter
 from typing import Annotated, Any, Literal
 
-from pydantic import AfterValidator, Field, model_validator
+from pydantic import AfterValidator, Field, ValidationInfo, model_validator
 
 from elbowroom.job.tomlfile import Table, near_miss, shown
 
@@ -37,7 +37,7 @@ def _frequency(value: float) -> float:
     raise ValueError(msg)
 
 
-def _impedance(value: Any) -> OnePort:
+def _impedance(value: Any, *, negative: bool = False) -> OnePort:
     expected = 'expected ohms, [resistance, reactance] in ohms, "open" or "short"'
     if isinstance(value, str):
         if value in ("open", "short"):
@@ -54,10 +54,26 @@ def _impedance(value: Any) -> OnePort:
     if not all(math.isfinite(p) for p in parts):
         msg = f'{shown(value)} is not finite; use "open" for an open port'
         raise ValueError(msg)
-    if parts[0] < 0.0:
+    if parts[0] < 0.0 and not negative:
         msg = f"{shown(value)}: a resistance of {parts[0]:g} ohm is negative; a passive termination expected"
         raise ValueError(msg)
     return complex(parts[0], parts[1]) if len(parts) == 2 else float(parts[0])
+
+
+def _negative_meant(info: ValidationInfo) -> bool:
+    return bool(info.data.get("allow_negative_resistance"))
+
+
+def _table_impedance(value: Any, info: ValidationInfo) -> OnePort:
+    return _impedance(value, negative=_negative_meant(info))
+
+
+def _table_resistance(value: float, info: ValidationInfo) -> float:
+    return float(_impedance(value, negative=_negative_meant(info)).real)  # type: ignore[union-attr]
+
+
+def _value_or_table(value: Any) -> Any:
+    return value if isinstance(value, dict) else _impedance(value)
 
 
 def _step_divides(value: float) -> float:
@@ -76,8 +92,18 @@ def _plain_name(value: str) -> str:
 
 
 _Hertz = Annotated[float, AfterValidator(_frequency)]
-_Ohms = Annotated[Any, AfterValidator(_impedance)]
 _FileName = Annotated[str, Field(min_length=1)]
+_ValueOrTable = Annotated[Any, AfterValidator(_value_or_table)]
+"""A termination as a value, or as a table that `LoadTable` describes."""
+
+
+class DamageTable(Table):
+    """What is broken: antennas by name, ports as antenna/port."""
+
+    missing: list[str] = Field(default_factory=list)
+    open: list[str] = Field(default_factory=list)
+    shorted: list[str] = Field(default_factory=list)
+    amplifier_off: list[str] = Field(default_factory=list)
 
 
 class StationTable(Table):
@@ -90,6 +116,8 @@ class StationTable(Table):
     turn_deg: float = 0.0
     shift_east_m: float = 0.0
     shift_north_m: float = 0.0
+    as_built: _FileName | None = None
+    damage: DamageTable = Field(default_factory=DamageTable)
 
 
 class BandTable(Table):
@@ -150,11 +178,45 @@ class BandTable(Table):
         return tuple(sorted(values))
 
 
-class TerminationTable(Table):
-    """What ports see."""
+class LoadTable(Table):
+    """What a port sees: a value, a one-port file, or a circuit."""
 
-    impedance_ohm: _Ohms = 100.0
-    ports: dict[str, _Ohms] = Field(default_factory=dict)
+    # first, because the values below are judged by it
+    allow_negative_resistance: bool = False
+    impedance_ohm: Annotated[Any, AfterValidator(_table_impedance)] = None
+    file: _FileName | None = None
+    circuit: Literal["series", "parallel"] | None = None
+    resistance_ohm: Annotated[float, AfterValidator(_table_resistance)] | None = None
+    inductance_h: Annotated[float, Field(gt=0.0)] | None = None
+    capacitance_f: Annotated[float, Field(gt=0.0)] | None = None
+
+    @model_validator(mode="after")
+    def _one_way(self) -> LoadTable:
+        parts = [key for key in ("resistance_ohm", "inductance_h", "capacitance_f") if getattr(self, key) is not None]
+        whole = [key for key in ("impedance_ohm", "file", "circuit") if getattr(self, key) is not None]
+        if len(whole) > 1:
+            msg = f"{' and '.join(whole)} are given; expected one of impedance_ohm, file and circuit"
+            raise ValueError(msg)
+        if parts and self.circuit is None:
+            msg = f'circuit = "series" or "parallel" is missing beside {parts[0]}'
+            if whole:
+                msg = f"{parts[0]} is given beside {whole[0]}; expected one or the other"
+            raise ValueError(msg)
+        if self.circuit is not None and not parts:
+            msg = f'circuit = "{self.circuit}": resistance_ohm, inductance_h or capacitance_f expected'
+            raise ValueError(msg)
+        if self.circuit == "parallel" and self.resistance_ohm == 0.0:
+            msg = 'resistance_ohm = 0 in parallel is a short circuit; expected impedance_ohm = "short" if it is meant'
+            raise ValueError(msg)
+        return self
+
+
+class TerminationTable(LoadTable):
+    """What ports see, and exceptions."""
+
+    antennas: dict[str, _ValueOrTable] = Field(default_factory=dict)
+    ports: dict[str, _ValueOrTable] = Field(default_factory=dict)
+    amplifier_off: _ValueOrTable = None
 
 
 class SolverTable(Table):

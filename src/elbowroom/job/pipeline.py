@@ -11,10 +11,12 @@ from elbowroom.base.errors import ElbowroomError, GeometryError, JobFileError
 from elbowroom.geometry.stations import Station
 from elbowroom.job.checks import Problem, check_station
 from elbowroom.job.jobfile import Job
+from elbowroom.job.jobtables import OnePort
 from elbowroom.job.plan import Prediction, predict_station, refuse_if_too_large, total
 from elbowroom.job.solve import SOLUTION_SCHEMA, solution_key, solve
 from elbowroom.store import Hdf5Store
 from elbowroom.store.records import DamageReport
+from elbowroom.system.terminations import Load
 
 if TYPE_CHECKING:
     from elbowroom.radiation.solution import Solution
@@ -93,13 +95,18 @@ class JobRun:
         self.store = Hdf5Store(job.store_folder, SOLUTION_SCHEMA, **options)
 
     @property
-    def termination(self) -> list:
-        """What every port sees [ohm], in the order of the ports."""
-        return self.job.termination_values(self.station)
+    def loads(self) -> list[Load]:
+        """What every port sees at every frequency [ohm], in the order of the ports."""
+        return self.job.loads(self.station)
+
+    def termination_at(self, frequency_hz: float) -> list[OnePort]:
+        """Return what every port sees at a frequency [Hz]: ohms, ``"open"`` or ``"short"``, in the order of the ports."""
+        return self.job.termination_values(self.station, frequency_hz)
 
     def problems(self) -> list[Problem]:
-        """Return what is wrong or doubtful in the model; nothing is solved."""
-        return check_station(self.station, self.frequencies_hz, self.job.mesh)
+        """Return what is wrong or doubtful in the model and its terminations; nothing is solved."""
+        found = check_station(self.station, self.frequencies_hz, self.job.mesh)
+        return [*found, *(Problem("warning", text) for text in self.job.terminations.doubts())]
 
     def plan(self) -> list[Unit]:
         """Return the units of the job, which the store has, and what the others take."""

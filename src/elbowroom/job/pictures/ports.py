@@ -183,8 +183,9 @@ def draw_impedance(
             msg = f"no antenna has a port {name!r}; there are {', '.join(known)}"
             raise ModelRangeError(msg)
     frequencies = np.array([item.frequency_hz for item in every]) / 1e6
+    constant = all(item.termination == every[0].termination for item in every)
     caption = [
-        termination_text(every[0].termination),
+        termination_text(every[0].termination) if constant else "terminations change over frequency",
         "coupled: in the station, all other ports terminated; isolated: the antenna alone over the same ground",
         "change: |Z coupled / Z isolated - 1|",
     ]
