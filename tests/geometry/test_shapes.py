@@ -19,8 +19,9 @@ from elbowroom.geometry.shapes import (
 )
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.job.checks import check_station
-from elbowroom.radiation.patterns import direction_frame, station_patterns
+from elbowroom.radiation.patterns import station_patterns
 from elbowroom.system.discretisation import discretise
+from elbowroom.system.plane_waves import direction_frame
 from elbowroom.system.port_algebra import impedance_from_loaded
 from elbowroom.system.solving import REFERENCE_OHM, solve_isolated
 
