@@ -8,7 +8,8 @@ Either one of the parametric shapes::
     height_m = 0.50
     wire_radius_m = 0.006
 
-or wires, ports, loads and the network between them one by one:
+(there are ``dipole``, ``crossed-dipoles``, ``folded-dipole``, ``bow-tie``, ``polygonal-loop``, ``monopole`` and ``log-periodic``;
+`elbowroom.geometry.shapes` tells their keys), or wires, ports, loads and the network between them one by one:
 
 ================================= ==========================================================================
 key                               meaning
