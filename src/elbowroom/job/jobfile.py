@@ -67,7 +67,7 @@ from elbowroom.job.damage import AMPLIFIER_OFF, Damage, read_damage
 from elbowroom.job.jobmodel import Beam as Beam
 from elbowroom.job.jobmodel import Job as Job
 from elbowroom.job.jobmodel import azimuth_to_phi_deg as azimuth_to_phi_deg
-from elbowroom.job.jobtables import SECTIONS, BeamTable, StationTable
+from elbowroom.job.jobtables import SECTIONS, BeamTable, DamageTable, StationTable
 from elbowroom.job.jobterminations import LoadReader, Terminations
 from elbowroom.job.tomlfile import counted, fail, key_path, near_miss, read_toml, shown, validate_table
 
@@ -134,7 +134,9 @@ def read_job(path: str | Path) -> Job:
         port_names = {n: [p.name for p in designs[d].ports] for n, d in zip(layout.names, layout.antenna, strict=True)}
         assert station_table is not None
         offsets = _offsets(folder, station_table, layout, problems)
-        damage = read_damage(station_table.damage, port_names, problems)
+        damage_table = validate_table(DamageTable, station_table.damage, problems, ("station", "damage"))
+        if damage_table is not None:
+            damage = read_damage(damage_table, port_names, problems)
         if parts.get("termination") is not None:
             band = parts.get("band")
             reader = LoadReader(folder, () if band is None else band.frequencies(), problems)
@@ -269,6 +271,8 @@ def _alive(
     """Return the beams without dead ports; one of which nothing is left is a problem."""
     beams = [(i, replace(beam, left_out=frozenset(damage.ports))) for i, beam in beams]
     missing = set(damage.missing)
+    if missing >= set(port_names):
+        return beams  # told already
     names = [PortName(antenna, port) for antenna, ports in port_names.items() for port in ports]
     for i, beam in beams:
         asked = [name for name in names if beam.asks_for(name)]

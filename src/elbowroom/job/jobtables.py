@@ -117,7 +117,8 @@ class StationTable(Table):
     shift_east_m: float = 0.0
     shift_north_m: float = 0.0
     as_built: _FileName | None = None
-    damage: DamageTable = Field(default_factory=DamageTable)
+    damage: dict[str, Any] = Field(default_factory=dict)
+    """A `DamageTable`, looked into once antennas are known."""
 
 
 class BandTable(Table):
