@@ -15,7 +15,9 @@ from elbowroom.geometry.shapes import log_periodic
 from elbowroom.geometry.shapes.log_periodic import two_wire_impedance, two_wire_spacing
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import segment_distances, wire_end_points
+from elbowroom.radiation.patterns import station_patterns
 from elbowroom.system.discretisation import discretise
+from elbowroom.system.plane_waves import direction_frame
 from elbowroom.system.port_algebra import impedance_from_loaded
 from elbowroom.system.solving import REFERENCE_OHM, solve_isolated
 
@@ -220,6 +222,26 @@ def test_feeders__booms_act_as_the_network_of_their_impedance(frequency, end):
     straight = [replace(line, crossed=False) for line in fed_by_lines.network.lines]
     wrong = replace_network(fed_by_lines, replace(fed_by_lines.network, lines=straight))
     assert abs(reflection(wrong) - network) > 0.4
+
+
+def test_feeders__have_one_polarity_and_one_direction():
+    """They respond alike, to a tenth at the zenith, and less than half as well from the nadir."""
+    reference = two_wire_impedance(0.008, 0.0005)
+    found = []
+    for feeder in ({"feeder_impedance_ohm": reference}, {"feeder": "wires", "boom_spacing_m": 0.008, "boom_radius_m": 0.0005}):
+        antenna = log_periodic(**FIVE | {"crossed": True}, **feeder, end_resistance_ohm=300.0)
+        d = discretise(Station([Placed(antenna)], FreeSpace()), 160e6, mesh=COARSE)
+        currents = solve_isolated(d)[0].currents
+        # along phi = 0, theta_hat at the zenith is x and phi_hat is y
+        found.append(station_patterns(d, currents, direction_frame(np.array([0.0, np.pi]), np.array([0.0, 0.0]))))
+    network, booms = found
+    largest = np.abs(network).max()
+    np.testing.assert_allclose(booms[:, 0], network[:, 0], rtol=0, atol=0.1 * largest)
+    for pattern in found:
+        for port in (0, 1):
+            assert abs(pattern[port, 0, port]) > 0.9 * largest
+            assert abs(pattern[port, 0, 1 - port]) < 0.1 * largest
+            assert np.abs(pattern[port, 1]).max() < 0.5 * largest
 
 
 @pytest.mark.parametrize(
