@@ -20,7 +20,8 @@ from elbowroom.job.beamfields import beam_weights
 from elbowroom.job.jobmodel import Beam
 from elbowroom.job.pipeline import JobRun, UnitProgress
 from elbowroom.job.tomlfile import near_miss
-from elbowroom.job.touchstone import PortMatrices, write_touchstone
+from elbowroom.job.touchstone import PortMatrices, ports_by_name
+from elbowroom.job.touchstonewriter import write_touchstone
 
 ABOUT_FILE = (
     "Results of a model, not a measurement. Time factor exp(+j omega t). Ports of the station that are not in this file are "
@@ -137,7 +138,7 @@ def write_port_matrices(
     path : str or Path
         The file, its name ending in ``.s2p`` and the like with the number of ports; version 2 may also end in ``.ts``.
     version : 1 or 2, optional
-        Of the form; see :func:`elbowroom.job.touchstone.write_touchstone`.
+        Of the form; see :func:`elbowroom.job.touchstonewriter.write_touchstone`.
 
     Raises
     ------
@@ -147,9 +148,8 @@ def write_port_matrices(
         If the name does not fit the number of ports, or the file cannot be written.
     """
     count = len(port_indices(run.station, ports))
-    suffix = Path(path).suffix.lower()
     # before anything is solved for it
-    if suffix not in {f".{kind}{count}p" for kind in "syz"} and not (version == 2 and suffix == ".ts"):
+    if ports_by_name(Path(path)) != count and not (version == 2 and Path(path).suffix.lower() == ".ts"):
         msg = f"cannot write {path}: the name must end in .s{count}p, as there are {count} ports"
         raise ExportError(msg)
     found = port_matrices(run, parameter, ports, reference_ohm=reference_ohm, progress=progress)

@@ -1,7 +1,7 @@
-"""Touchstone files, the open text form of port matrices over frequency: versions 1 and 2, any number of ports.
+"""Reading Touchstone files, the open text form of port matrices over frequency: versions 1 and 2, any number of ports.
 
 - `PortMatrices`: what such a file holds
-- `read_touchstone`, `write_touchstone`: from and to a file
+- `read_touchstone`: from a file; `elbowroom.job.touchstonewriter` writes them
 - `reflection_from_file`: a one-port file as a termination
 
 The form is that of "Touchstone File Format Specification", version 1.1 (2002) and version 2.0 (2009), IBIS Open Forum; read from
@@ -20,8 +20,7 @@ from typing import NoReturn
 import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
-from elbowroom.base.errors import ExportError, JobFileError
-from elbowroom.job.files import written_whole
+from elbowroom.base.errors import JobFileError
 from elbowroom.job.tomlfile import counted, near_miss
 from elbowroom.system.terminations import SampledReflection
 
@@ -219,7 +218,8 @@ class _Reader:
         return table[:, 0] * options.unit, values
 
 
-def _ports_by_name(path: Path) -> int | None:
+def ports_by_name(path: Path) -> int | None:
+    """Return how many ports a file has by its name, as ``.s2p``; None if that does not say."""
     found = re.fullmatch(r"\.[syz](\d{1,4})p", path.suffix.lower())
     return int(found[1]) if found else None
 
@@ -287,7 +287,7 @@ def _read_version_1(reader: _Reader, ports: int | None) -> PortMatrices:
     data = [entry for entry in reader.lines[1:] if not entry[1].startswith("#")]
     if not data:
         reader.fail("no data below the option line", line)
-    named, numbered = _ports_by_name(reader.file), _ports_by_numbers(data)
+    named, numbered = ports_by_name(reader.file), _ports_by_numbers(data)
     n = named or numbered or ports
     if not n:
         reader.fail("the number of ports is told neither by the name (.s1p, .s2p, ...) nor by the numbers of the first frequency")
@@ -363,7 +363,7 @@ def _read_version_2(reader: _Reader) -> PortMatrices:
     options_line, text, _ = part("#")
     options = reader.options(options_line, text)
     n = whole_number("number of ports")
-    named = _ports_by_name(reader.file)
+    named = ports_by_name(reader.file)
     if named is not None and named != n:
         reader.fail(f"[Number of Ports] {n}, but the name says {named}", parts["number of ports"][0])
     if "mixed-mode order" in parts:
@@ -454,84 +454,3 @@ def reflection_from_file(path: str | Path, *, allow_negative_resistance: bool = 
         file.name,
         allow_negative_resistance,
     )
-
-
-def write_touchstone(path: str | Path, data: PortMatrices, *, version: int = 1) -> None:
-    """Write port matrices as a Touchstone file, real and imaginary parts to the last digit, frequencies in Hz.
-
-    Parameters
-    ----------
-    path : str or Path
-        The file; it appears under this name only when complete.  Its name must end in ``.s2p`` and the like, with the
-        number of ports; version 2 may also end in ``.ts``.
-    data : PortMatrices
-        What to write; comments go above the data.
-    version : 1 or 2, optional
-        Version 1 has a single reference resistance and Z and Y normalised to it; version 2 has one a port and plain ohms.
-
-    Raises
-    ------
-    ExportError
-        If name, version or numbers do not fit, or the file cannot be written.
-    """
-    target = Path(path)
-    frequency, matrices = np.asarray(data.frequency_hz, dtype=float), np.asarray(data.matrices, dtype=complex)
-    reference = np.asarray(data.reference_ohm, dtype=float)
-    fault = _writing_fault(target, data.parameter, frequency, matrices, reference, version)
-    if fault:
-        msg = f"cannot write {target}: {fault}"
-        raise ExportError(msg)
-    n = matrices.shape[1]
-    comments = [f"! {' '.join(line.split())}" for comment in data.comments for line in comment.splitlines()]
-    option = f"# Hz {data.parameter} RI R {float(reference[0])!r}"
-    if version == 1:
-        scale = {"S": 1.0, "Z": 1.0 / reference[0], "Y": reference[0]}[data.parameter]
-        head, foot, matrices = [*comments, option], [], matrices * scale
-        if n == 2:
-            matrices = matrices.transpose(0, 2, 1)
-    else:
-        head = [
-            *comments,
-            "[Version] 2.0",
-            option,
-            f"[Number of Ports] {n}",
-            *(["[Two-Port Data Order] 12_21"] if n == 2 else []),
-            f"[Number of Frequencies] {frequency.size}",
-            "[Reference] " + " ".join(repr(float(r)) for r in reference),
-            "[Matrix Format] Full",
-            "[Network Data]",
-        ]
-        foot = ["[End]"]
-    with written_whole(target) as temporary, temporary.open("w", encoding="ascii", errors="replace", newline="\n") as file:
-        file.writelines(line + "\n" for line in head)
-        for f, matrix in zip(frequency, matrices, strict=True):
-            # a row a line, four pairs at most; two ports share a line
-            rows = [matrix.ravel()] if n <= 2 else [row[k : k + 4] for row in matrix for k in range(0, n, 4)]
-            for i, row in enumerate(rows):
-                numbers = " ".join(f"{float(v.real)!r} {float(v.imag)!r}" for v in row)
-                file.write((f"{float(f)!r} " if i == 0 else "  ") + numbers + "\n")
-        file.writelines(line + "\n" for line in foot)
-
-
-def _writing_fault(
-    target: Path, parameter: str, frequency: FloatArray, matrices: ComplexArray, reference: FloatArray, version: int
-) -> str:
-    if version not in (1, 2):
-        return f"version {version!r}: expected 1 or 2"
-    if parameter not in PARAMETERS:
-        return f"parameter {parameter!r}: expected S, Y or Z"
-    n = matrices.shape[1] if matrices.ndim == 3 else 0
-    if n == 0 or matrices.shape != (frequency.size, n, n) or reference.shape != (n,) or frequency.size == 0:
-        return (
-            f"expected matrices (F, P, P), F frequencies and P references, got {matrices.shape}, {frequency.shape} "
-            f"and {reference.shape}"
-        )
-    if not all(np.all(np.isfinite(each)) for each in (frequency, matrices, reference)) or np.any(reference <= 0.0):
-        return "expected finite numbers and positive reference resistances"
-    if frequency[0] < 0.0 or np.any(np.diff(frequency) <= 0.0):
-        return "expected frequencies of zero or more that rise"
-    if _ports_by_name(target) != n and not (version == 2 and target.suffix.lower() == ".ts"):
-        return f"the name must end in .{parameter.lower()}{n}p or .s{n}p, as the file has {counted(n, 'port')}"
-    if version == 1 and np.any(reference != reference[0]):
-        return "ports refer to different resistances, which only version 2 can say"
-    return ""
