@@ -109,7 +109,7 @@ def test_terminations__port_before_antenna_before_all(folder):
         np.testing.assert_allclose(np.array([found[0], *found[2:]]), expected, rtol=1e-13)
     lines = job.resolved_lines()
     for expected in (
-        "termination = lna.s1p (5e+07 to 2e+08 Hz, 3 samples)",
+        "termination = lna.s1p (50 to 200 MHz, 3 samples)",
         "termination.antennas.A2 = 200 ohm + 1e-07 H + 2e-12 F in parallel",
         "termination.antennas.B1 = [30, 5]",
         "termination.ports.A2/y = 75",

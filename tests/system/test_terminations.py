@@ -130,5 +130,5 @@ def test_text__says_the_parts():
     assert load_text(SeriesCircuit(50.0, 1e-7, 1e-11)) == "50 ohm + 1e-07 H + 1e-11 F in series"
     assert load_text(SeriesCircuit()) == "0 ohm in series"
     assert load_text(ParallelCircuit(50.0)) == "50 ohm in parallel"
-    assert load_text(SampledReflection((1e8, 2e8), (0, 0), 50.0, "a.s1p")) == "a.s1p (1e+08 to 2e+08 Hz, 2 samples)"
+    assert load_text(SampledReflection((1e8, 2e8), (0, 0), 50.0, "a.s1p")) == "a.s1p (100 to 200 MHz, 2 samples)"
     assert (load_text(75.0), load_text(75 + 2j), load_text("open")) == ("75", "[75, 2]", "open")

@@ -277,8 +277,8 @@ class SampledReflection:
 
     def __str__(self) -> str:
         """Return name, range and number of samples in words."""
-        low, high = self.frequency_hz[0], self.frequency_hz[-1]
-        return f"{self.name} ({low:.6g} to {high:.6g} Hz, {len(self.frequency_hz)} samples)"
+        low, high = self.frequency_hz[0] / 1e6, self.frequency_hz[-1] / 1e6
+        return f"{self.name} ({low:.6g} to {high:.6g} MHz, {len(self.frequency_hz)} samples)"
 
 
 Circuit = SeriesCircuit | ParallelCircuit | SampledReflection
