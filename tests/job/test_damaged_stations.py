@@ -1,9 +1,11 @@
 """Jobs with terminations over frequency, damage, antennas as built and mixed designs: what is solved, what is not, and beams."""
 
+import contextlib
+
 import numpy as np
 import pytest
 
-from elbowroom.base.errors import JobFileError, ModelRangeError
+from elbowroom.base.errors import ElbowroomError, JobFileError, ModelRangeError
 from elbowroom.geometry.directions import hemisphere_grid
 from elbowroom.geometry.stations import PortName, Station
 from elbowroom.job import solve as solve_module
@@ -209,6 +211,8 @@ def test_damage__a_dead_port_goes_before_its_termination(folder):
         ("", 'circuit = "series"\nresistance_ohm = -5', "termination.resistance_ohm: -5.0: a resistance of -5 ohm is negative"),
         ("", 'circuit = "series"\ncapacitance_f = 0', "termination.capacitance_f = 0: expected a number above 0"),
         ("", 'circuit = "series"\ninductance_h = nan', "termination.inductance_h = nan: expected a finite number"),
+        ("", 'circuit = "series"\ninductance_h = 50', "termination.inductance_h = 50: expected a number below 0.01"),
+        ("", 'circuit = "parallel"\ncapacitance_f = 2', "termination.capacitance_f = 2: expected a number below 0.001"),
         ("", 'circuit = "parallel"\nresistance_ohm = 0', "is a short circuit"),
         ("", "[termination.antennas]\nA22 = 50", "termination.antennas.A22: no such antenna; did you mean 'A2'?"),
         ("", '[termination.ports]\n"A1/x" = { fiel = "lna.s1p" }', "termination.ports.\"A1/x\".fiel: unknown key; did you mean 'file'?"),
@@ -228,6 +232,30 @@ def test_bad_jobs__name_key_found_and_expected(folder, damage, termination, expe
     problems = faults(folder, damage=f"[station.damage]\n{damage}" if damage else "", termination=termination)
     assert any(expected in p for p in problems), problems
     assert len(problems) == 1
+
+
+def test_random_damage_of_the_file__never_raises_anything_else(folder):
+    (folder / "built.csv").write_text("name,offset_east_m\nA2,0.02\n")
+    whole = (
+        JOB.replace("# as-built", 'as_built = "built.csv"')
+        .replace("# damage", '[station.damage]\nmissing = ["B1"]\nopen = ["A2/x"]\namplifier_off = ["A1/y"]')
+        .replace("# termination", TERMINATIONS)
+    )
+    rng = np.random.default_rng(11)
+    letters = list("[]{}=\"'#.,\n 1-aex/")
+    usable = 0
+    for _ in range(200):
+        text = list(whole)
+        for _ in range(rng.integers(1, 4)):
+            place = int(rng.integers(len(text)))
+            text[place : place + int(rng.integers(0, 3))] = letters[int(rng.integers(len(letters)))]
+        (folder / "job.toml").write_text("".join(text))
+        with contextlib.suppress(ElbowroomError):  # anything else fails the test
+            job = read_job(folder / "job.toml")
+            job.resolved_lines()
+            job.termination_values()
+            usable += 1
+    assert 0 < usable < 200
 
 
 def test_negative_resistance__is_let_in_on_request_and_warned_of(folder):

@@ -210,7 +210,10 @@ class Job:
             [Hz]; the lowest of the job by default.
         """
         frequency = self.frequencies_hz[0] if frequency_hz is None else frequency_hz
-        return [termination_at(load, frequency) for load in self.loads(station)]
+        loads = self.loads(station)
+        # many ports share one load; told apart by identity, as comparing long files costs more than reading them off
+        values = {id(load): termination_at(load, frequency) for load in {id(load): load for load in loads}.values()}
+        return [values[id(load)] for load in loads]
 
     def as_designed(self) -> Job:
         """Return the job with every antenna where the layout puts it, present and alive; terminations stay."""

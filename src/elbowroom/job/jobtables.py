@@ -188,8 +188,9 @@ class LoadTable(Table):
     file: _FileName | None = None
     circuit: Literal["series", "parallel"] | None = None
     resistance_ohm: Annotated[float, AfterValidator(_table_resistance)] | None = None
-    inductance_h: Annotated[float, Field(gt=0.0)] | None = None
-    capacitance_f: Annotated[float, Field(gt=0.0)] | None = None
+    # what lies beyond is nanohenries or picofarads given for henries or farads
+    inductance_h: Annotated[float, Field(gt=0.0, lt=0.01)] | None = None
+    capacitance_f: Annotated[float, Field(gt=0.0, lt=0.001)] | None = None
 
     @model_validator(mode="after")
     def _one_way(self) -> LoadTable:

@@ -81,7 +81,7 @@ class LoadReader:
     folder : Path
         Where relative paths count from.
     frequencies_hz : sequence of float
-        Frequencies at which every load must be known [Hz].
+        Rising frequencies at which every load must be known [Hz].
     problems : list of str
         Lengthened by a line for each problem.
     """
@@ -157,7 +157,7 @@ class LoadReader:
             return None
         load = self._read[path, active]
         try:
-            for frequency in self.frequencies_hz:
+            for frequency in (*self.frequencies_hz[:1], *self.frequencies_hz[-1:]):
                 load.reflection_at(frequency)
         except ModelRangeError as cause:
             self.problems.append(f"{key}: {cause}; [band] asks for it")
