@@ -241,6 +241,11 @@ BAD = [
     (monopole, ON_RADIALS, {"radials": -3}, "radials -3: expected a whole number of at least 0"),
     (monopole, ON_RADIALS, {"radial_droop_deg": 90.0}, "radial_droop_deg 90 must lie between -80 and 80"),
     (monopole, ON_RADIALS, {"radial_droop_deg": 80.0, "radial_length_m": 0.9}, "raise height_m or lessen radial_droop_deg"),
+    (dipole, DIPOLE, {"half_length_m": None}, "half_length_m None must be positive"),
+    (folded_dipole, FOLDED, {"separation_m": 0.03}, "separation_m 0.03 has no effect without crossed = true"),
+    (bow_tie, BOW_TIE, {"separation_m": 0.03}, "separation_m 0.03 has no effect without crossed = true"),
+    (monopole, MONOPOLE, {"radial_length_m": 0.5}, "radial_length_m 0.5 has no effect without radials"),
+    (monopole, MONOPOLE, {"radial_droop_deg": 10.0}, "radial_droop_deg 10.0 has no effect without radials"),
     (monopole, ON_RADIALS, {"radials": 400}, "400 radials touch over their whole length"),
 ]  # fmt: skip
 

@@ -264,6 +264,7 @@ def test_feeders__have_one_polarity_and_one_direction():
         (NETWORK, {"height_m": float("nan")}, "height_m nan must be positive"),
         (NETWORK, {"offset_m": 0.0}, "offset_m 0.0 must be positive"),
         (NETWORK, {"offset_m": 0.005}, "come within 0.005 m of one another, less than the sum of their radii .* change offset_m"),
+        (NETWORK, {"offset_m": 0.05, "crossed": False}, "offset_m 0.05 has no effect without crossed = true"),
         (NETWORK, {"feeder": "coax"}, "feeder 'coax': expected 'network' or 'wires'"),
         (NETWORK, {"feeder_impedance_ohm": None}, "either feeder_impedance_ohm, or boom_spacing_m and boom_radius_m"),
         (NETWORK, {"boom_spacing_m": 0.03}, "either feeder_impedance_ohm, or boom_spacing_m and boom_radius_m"),

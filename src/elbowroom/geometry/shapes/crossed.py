@@ -6,7 +6,13 @@ import numpy as np
 
 from elbowroom.base.errors import GeometryError
 from elbowroom.geometry.antennas import Antenna, Port
-from elbowroom.geometry.shapes.parts import CLEARANCE_RADII, check_between, check_clear, check_positive
+from elbowroom.geometry.shapes.parts import (
+    CLEARANCE_RADII,
+    check_between,
+    check_clear,
+    check_positive,
+    check_positive_if_given,
+)
 from elbowroom.geometry.wires import Wire
 
 
@@ -60,10 +66,10 @@ def crossed_dipoles(
         If an arm would reach below the origin, a number makes no shape, naming its key, or wires touch.
     """
     radius = wire_radius_m
-    check_positive(
-        name, arm_length_m=arm_length_m, height_m=height_m, wire_radius_m=radius, feed_length_m=feed_length_m, gap_m=gap_m,
-        separation_m=separation_m, mast_radius_m=mast_radius_m,
-    )  # fmt: skip
+    check_positive(name, arm_length_m=arm_length_m, height_m=height_m, wire_radius_m=radius)
+    check_positive_if_given(
+        name, feed_length_m=feed_length_m, gap_m=gap_m, separation_m=separation_m, mast_radius_m=mast_radius_m
+    )
     check_between(name, -80.0, 80.0, droop_deg=droop_deg)
     feed = 12.0 * radius if feed_length_m is None else feed_length_m
     separation = CLEARANCE_RADII * radius if separation_m is None else separation_m

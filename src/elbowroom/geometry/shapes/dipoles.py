@@ -11,7 +11,9 @@ from elbowroom.geometry.shapes.parts import (
     check_above_origin,
     check_between,
     check_clear,
+    check_not_given,
     check_positive,
+    check_positive_if_given,
     quarter_turned,
 )
 from elbowroom.geometry.wires import Wire
@@ -54,7 +56,8 @@ def dipole(
     GeometryError
         If a number makes no shape, naming its key, or the wire reaches down to the origin.
     """
-    check_positive(name, half_length_m=half_length_m, height_m=height_m, wire_radius_m=wire_radius_m, gap_m=gap_m)
+    check_positive(name, half_length_m=half_length_m, height_m=height_m, wire_radius_m=wire_radius_m)
+    check_positive_if_given(name, gap_m=gap_m)
     reach = np.array([0.0, 0.0, half_length_m]) if upright else np.array([half_length_m, 0.0, 0.0])
     middle = np.array([0.0, 0.0, height_m])
     wires = [Wire(tuple(middle - reach), tuple(middle + reach), wire_radius_m, conductivity_s_per_m)]
@@ -116,8 +119,11 @@ def folded_dipole(
     second = wire_radius_m if second_radius_m is None else second_radius_m
     check_positive(
         name, half_length_m=half_length_m, height_m=height_m, spacing_m=spacing_m, wire_radius_m=wire_radius_m,
-        second_radius_m=second, separation_m=separation_m, gap_m=gap_m,
+        second_radius_m=second,
     )  # fmt: skip
+    check_positive_if_given(name, separation_m=separation_m, gap_m=gap_m)
+    if not crossed:
+        check_not_given(name, "without crossed = true", separation_m=separation_m)
     if spacing_m <= wire_radius_m + second:
         msg = (
             f"antenna {name!r}: spacing_m {spacing_m:g} lets the two conductors touch; more than {wire_radius_m + second:g} "
@@ -187,10 +193,10 @@ def bow_tie(
     GeometryError
         If a number makes no shape, naming its key, or wires touch.
     """
-    check_positive(
-        name, half_length_m=half_length_m, height_m=height_m, wire_radius_m=wire_radius_m, feed_length_m=feed_length_m,
-        separation_m=separation_m, gap_m=gap_m,
-    )  # fmt: skip
+    check_positive(name, half_length_m=half_length_m, height_m=height_m, wire_radius_m=wire_radius_m)
+    check_positive_if_given(name, feed_length_m=feed_length_m, separation_m=separation_m, gap_m=gap_m)
+    if not crossed:
+        check_not_given(name, "without crossed = true", separation_m=separation_m)
     check_between(name, 5.0, 150.0, flare_deg=flare_deg)
     feed = 12.0 * wire_radius_m if feed_length_m is None else feed_length_m
     if feed >= 2.0 * half_length_m:

@@ -17,7 +17,9 @@ from elbowroom.geometry.shapes.parts import (
     check_between,
     check_choice,
     check_clear,
+    check_not_given,
     check_positive,
+    check_positive_if_given,
     quarter_turned,
 )
 from elbowroom.geometry.wires import Wire
@@ -171,7 +173,10 @@ def log_periodic(
     Both feeders give the same antenna as the spacing of the booms vanishes: at 332 ohm the reflections at their ports differ by
     0.03 for a spacing of a hundredth of a wavelength, and by half of that at half the spacing (`tests`).
     """
-    check_positive(name, height_m=height_m, wire_radius_m=wire_radius_m, gap_m=gap_m, offset_m=offset_m)
+    check_positive(name, height_m=height_m, wire_radius_m=wire_radius_m)
+    check_positive_if_given(name, gap_m=gap_m, offset_m=offset_m)
+    if not crossed:
+        check_not_given(name, "without crossed = true", offset_m=offset_m)
     check_choice(name, ("network", "wires"), feeder=feeder)
     half_lengths, positions = _elements(
         name, tau, sigma, longest_half_length_m, shortest_half_length_m, elements, half_lengths_m, positions_m
@@ -243,7 +248,8 @@ def _elements(
         raise GeometryError(msg)
     check_between(name, 0.5, 0.995, tau=tau)
     check_between(name, 0.01, 1.0, sigma=sigma)
-    check_positive(name, longest_half_length_m=longest, shortest_half_length_m=shortest)
+    check_positive(name, longest_half_length_m=longest)
+    check_positive_if_given(name, shortest_half_length_m=shortest)
     if shortest is not None:
         if shortest >= longest:
             msg = f"antenna {name!r}: shortest_half_length_m {shortest:g} must lie below longest_half_length_m {longest:g}"
@@ -284,9 +290,10 @@ def _feeder(
     stub: float | None,
     resistance: float | None,
 ) -> _Feeder:
-    check_positive(
-        name, feeder_impedance_ohm=impedance, boom_spacing_m=spacing, boom_radius_m=radius, velocity_factor=velocity_factor,
-        stub_length_m=stub, end_resistance_ohm=resistance,
+    check_positive(name, velocity_factor=velocity_factor)
+    check_positive_if_given(
+        name, feeder_impedance_ohm=impedance, boom_spacing_m=spacing, boom_radius_m=radius, stub_length_m=stub,
+        end_resistance_ohm=resistance,
     )  # fmt: skip
     if velocity_factor > 1.0:
         msg = f"antenna {name!r}: velocity_factor {velocity_factor:g} must be at most 1"

@@ -8,7 +8,7 @@ import numpy as np
 
 from elbowroom.base.errors import GeometryError
 from elbowroom.geometry.antennas import Antenna, Port
-from elbowroom.geometry.shapes.parts import check_above_origin, check_choice, check_count, check_positive
+from elbowroom.geometry.shapes.parts import check_above_origin, check_choice, check_count, check_positive, check_positive_if_given
 from elbowroom.geometry.wires import Wire
 
 
@@ -58,9 +58,8 @@ def polygonal_loop(
     """
     check_count(name, 3, sides=sides)
     check_choice(name, ("level", "vertical"), plane=plane)
-    check_positive(
-        name, circumference_m=circumference_m, side_m=side_m, height_m=height_m, wire_radius_m=wire_radius_m, gap_m=gap_m
-    )
+    check_positive(name, height_m=height_m, wire_radius_m=wire_radius_m)
+    check_positive_if_given(name, circumference_m=circumference_m, side_m=side_m, gap_m=gap_m)
     if (circumference_m is None) == (side_m is None):
         msg = f"antenna {name!r}: expected either circumference_m or side_m"
         raise GeometryError(msg)

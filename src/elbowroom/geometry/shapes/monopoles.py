@@ -6,7 +6,15 @@ import numpy as np
 
 from elbowroom.base.errors import GeometryError
 from elbowroom.geometry.antennas import Antenna, Port
-from elbowroom.geometry.shapes.parts import check_above_origin, check_between, check_clear, check_count, check_positive
+from elbowroom.geometry.shapes.parts import (
+    check_above_origin,
+    check_between,
+    check_clear,
+    check_count,
+    check_not_given,
+    check_positive,
+    check_positive_if_given,
+)
 from elbowroom.geometry.wires import Wire
 
 
@@ -57,10 +65,8 @@ def monopole(
     GeometryError
         If a number makes no shape, naming its key, or radials touch or reach down to the origin.
     """
-    check_positive(
-        name, length_m=length_m, wire_radius_m=wire_radius_m, radial_length_m=radial_length_m,
-        radial_radius_m=radial_radius_m, gap_m=gap_m,
-    )  # fmt: skip
+    check_positive(name, length_m=length_m, wire_radius_m=wire_radius_m)
+    check_positive_if_given(name, radial_length_m=radial_length_m, radial_radius_m=radial_radius_m, gap_m=gap_m)
     check_count(name, 0, radials=radials)
     check_between(name, -80.0, 80.0, radial_droop_deg=radial_droop_deg)
     check_between(name, 0.0, 1e6, height_m=height_m)
@@ -71,6 +77,15 @@ def monopole(
         need = "without radials the foot stands on the ground: height_m = 0" if radials == 0 else "radials need height_m above 0"
         msg = f"antenna {name!r}: height_m {height_m:g} with {radials} radials; {need}"
         raise GeometryError(msg)
+    if radials == 0:
+        droop_given = radial_droop_deg or None
+        check_not_given(
+            name,
+            "without radials",
+            radial_length_m=radial_length_m,
+            radial_radius_m=radial_radius_m,
+            radial_droop_deg=droop_given,
+        )
     foot = (0.0, 0.0, height_m)
     wires = [Wire(foot, (0.0, 0.0, height_m + length_m), wire_radius_m, conductivity_s_per_m)]
     length = length_m if radial_length_m is None else radial_length_m

@@ -7,6 +7,7 @@ from numbers import Real
 
 import numpy as np
 
+from elbowroom.base.arrays import FloatArray
 from elbowroom.base.errors import GeometryError
 from elbowroom.geometry.wires import Wire, segment_distances, wire_end_points
 
@@ -14,20 +15,33 @@ CLEARANCE_RADII = 8.0
 """Distance of axes in radii that shapes keep where none is given: nearer, charge is no longer even round the wires."""
 
 
-def check_positive(antenna: str, **values: float | None) -> None:
-    """Raise GeometryError for the first value that is neither None nor a positive finite number, naming its key."""
+def check_positive(antenna: str, **values: float) -> None:
+    """Raise GeometryError for the first value that is not a positive finite number, naming its key."""
     for key, value in values.items():
-        if value is not None and not (_is_number(value) and 0.0 < value < np.inf):
+        if not (_is_number(value) and 0.0 < value < np.inf):
             msg = f"antenna {antenna!r}: {key} {value!r} must be positive and finite"
             raise GeometryError(msg)
 
 
-def check_between(antenna: str, low: float, high: float, **values: float | None) -> None:
-    """Raise GeometryError for the first value that is neither None nor a number from low to high, naming its key."""
+def check_positive_if_given(antenna: str, **values: float | None) -> None:
+    """Raise GeometryError for the first value that is neither None nor a positive finite number, naming its key."""
+    check_positive(antenna, **{key: value for key, value in values.items() if value is not None})
+
+
+def check_between(antenna: str, low: float, high: float, **values: float) -> None:
+    """Raise GeometryError for the first value that is not a number from low to high, naming its key."""
     for key, value in values.items():
-        if value is not None and not (_is_number(value) and low <= value <= high):
+        if not (_is_number(value) and low <= value <= high):
             found = f"{value:g}" if _is_number(value) else repr(value)
             msg = f"antenna {antenna!r}: {key} {found} must lie between {low:g} and {high:g}"
+            raise GeometryError(msg)
+
+
+def check_not_given(antenna: str, reason: str, **values: float | None) -> None:
+    """Raise GeometryError if any value is given that would have no effect, naming its key and the reason."""
+    for key, value in values.items():
+        if value is not None:
+            msg = f"antenna {antenna!r}: {key} {value!r} has no effect {reason}"
             raise GeometryError(msg)
 
 
@@ -72,10 +86,8 @@ def check_clear(antenna: str, wires: Sequence[Wire], advice: str) -> None:
     radius = np.array([w.radius for w in wires])
     total = radius[:, None] + radius[None]
     distance = segment_distances(start[:, None], end[:, None], start[None], end[None])
-    same = 1e-9 * max(w.length for w in wires)
-    joined = np.zeros(total.shape, dtype=bool)
-    for point in (start, end):
-        joined |= segment_distances(point[:, None], point[:, None] + [0.0, 0.0, same], start[None], end[None]) <= 2.0 * same
+    same = 1e-9 * max(float(np.abs(start).max()), float(np.abs(end).max()))
+    joined = (_distances_to_wires(start, start, end) <= same) | (_distances_to_wires(end, start, end) <= same)
     joined |= joined.T
     for i, j in np.argwhere(np.triu((distance < total * (1.0 - 1e-9)) & ~joined, 1)):
         msg = (
@@ -83,6 +95,14 @@ def check_clear(antenna: str, wires: Sequence[Wire], advice: str) -> None:
             f"their radii ({total[i, j]:.4g} m); {advice}"
         )
         raise GeometryError(msg)
+
+
+def _distances_to_wires(points: FloatArray, start: FloatArray, end: FloatArray) -> FloatArray:
+    """Return the distance (N, W) of each point (N, 3) from each wire's axis (W, 3)."""
+    along = end - start
+    away = points[:, None] - start[None]
+    share = np.clip(np.sum(away * along, axis=-1) / np.sum(along * along, axis=-1), 0.0, 1.0)
+    return np.asarray(np.linalg.norm(away - share[..., None] * along, axis=-1))
 
 
 def quarter_turned(wires: Sequence[Wire], drop: float) -> list[Wire]:
