@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from threading import Lock, local
 
@@ -12,6 +13,7 @@ from elbowroom.base.arrays import AnyComplexArray, ComplexArray, FloatArray
 from elbowroom.base.constants import IMPEDANCE_OF_VACUUM
 from elbowroom.geometry.mesh import Mesh
 from elbowroom.kernels.grounds import GroundKernels, Workspace, ground_kernels
+from elbowroom.system.assembly import available_cores, single_threaded_blas
 from elbowroom.system.discretisation import Discretisation
 from elbowroom.system.skeletons import Skeleton, skeleton_of
 
@@ -59,14 +61,25 @@ class SkeletonInteractions:
         self._lock = Lock()
         self._local = local()
 
+    def prepare(self) -> None:
+        """Make all skeletons and weights now, in threads."""
+        d, table = self.discretisation, self.skeletons
+        designs = {(id(kind.antenna), id(kind.mesh)): k for k, kind in enumerate(d.kinds)}
+        levels = range(len(table.distances_m))
+        with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
+            list(pool.map(lambda pair: table.of(*pair), [(k, level) for k in designs.values() for level in levels]))
+            list(pool.map(lambda pair: self.weights(*pair), [(k, level) for k in range(len(d.kinds)) for level in levels]))
+
     def weights(self, kind: int, level: int) -> _SkeletonWeights:
         """Return the skeleton of a kind at a level with the weights of its functions, made once."""
         key = (kind, level)
         with self._lock:
             found = self._weights.get(key)
-            if found is None:
-                found = self._weights[key] = self._made(kind, level)
-        return found
+        if found is not None:
+            return found
+        made = self._made(kind, level)
+        with self._lock:
+            return self._weights.setdefault(key, made)
 
     def _made(self, kind: int, level: int) -> _SkeletonWeights:
         d, k = self.discretisation, self.discretisation.kinds[kind]
@@ -153,8 +166,10 @@ class SkeletonTable:
         k = self.discretisation.kinds[kind]
         key = (id(k.antenna), id(k.mesh), level)
         with self._lock:
-            if key not in self._made:
-                made = skeleton_of(k.antenna, k.mesh, self.discretisation.wavenumber, self.distances_m[level], self.tolerance)
+            found = self._made.get(key)
+        if found is None:
+            made = skeleton_of(k.antenna, k.mesh, self.discretisation.wavenumber, self.distances_m[level], self.tolerance)
+            with self._lock:
                 # The mesh is kept so that its identity stays its own.
-                self._made[key] = (k.mesh, made)
-            return self._made[key][1]
+                found = self._made.setdefault(key, (k.mesh, made))
+        return found[1]

@@ -17,6 +17,7 @@ from elbowroom.geometry.grounds import FreeSpace
 from elbowroom.kernels.grounds import Workspace, ground_kernels
 from elbowroom.system.assembly import PairFiller, available_cores, single_threaded_blas
 from elbowroom.system.discretisation import Discretisation
+from elbowroom.system.factorisation import Factors
 from elbowroom.system.interactions import SkeletonInteractions
 from elbowroom.system.plane_waves import direction_frame, kind_vectors, phases
 from elbowroom.system.reduction import KindAnswers, sky_samples
@@ -25,11 +26,11 @@ from elbowroom.system.spaces import CurrentSpace
 SAFETY = 2.0
 """Stated over measured error: ports that were not looked at may be worse than those that were."""
 
-SAMPLED_ANTENNAS = 10
+SAMPLED_ANTENNAS = 8
 """Antennas whose ports are looked at, those with the nearest neighbours among them."""
 
-WHOLE_ROWS = 2
-"""Antennas at which skeletons are held against all quadrature points."""
+WHOLE_PAIRS = 8
+"""Pairs at which skeletons are held against all quadrature points: those nearest to where each level begins to serve."""
 
 
 @dataclass(frozen=True)
@@ -71,6 +72,7 @@ def reduction_error(
     answers: KindAnswers,
     coordinates: ComplexArray,
     excitations: FloatArray | ComplexArray,
+    factors: Factors,
 ) -> ReductionError:
     """Return the stated error of a reduced solution.
 
@@ -92,6 +94,8 @@ def reduction_error(
         The solution.
     excitations : (N, P)
         Right-hand sides of the unknowns.
+    factors : Factors
+        Of the reduced matrix: they tell what its rounding does to all antennas together.
     """
     d = discretisation
     sample = sampled_antennas(distances)
@@ -101,8 +105,13 @@ def reduction_error(
     correction = np.empty(residual.shape, dtype=complex)
     for a, k in enumerate(d.kind_of):
         correction[d.unknowns_of(a)] = answers.to(k, residual[d.unknowns_of(a)])
-    pattern = float(np.max(_relative_fields(d, correction, currents)))
-    skeleton = _skeleton_error(d, interactions, filler, distances, answers, currents, sample[:WHOLE_ROWS])
+    left = np.empty((space.size, len(ports)), dtype=complex)
+    for a, k in enumerate(d.kind_of):
+        basis, part = space.bases[k], residual[d.unknowns_of(a)]
+        left[space.of(a)] = part if basis is None else basis.T @ part
+    rounding = space.unknowns(d, factors.solve(left).astype(np.complex128))
+    pattern = float(np.max(np.sum(_relative_fields(d, [correction, rounding], currents), axis=0)))
+    skeleton = _skeleton_error(d, interactions, filler, distances, answers)
     admittance = excitations[:, ports].T @ currents
     port_matrix = np.linalg.norm(residual.T @ correction) / np.linalg.norm(admittance)
     size = np.linalg.norm(currents, axis=0)
@@ -165,14 +174,19 @@ def _product(
                 theirs = np.concatenate([b[0] for b in batch], axis=1)
                 weights = np.concatenate([b[1] for b in batch])
                 kernels = ground.fill(points, theirs, d.wavenumber, work)
-                r = columns
-                # Weights: x, y, charge, z currents, first all real parts, then all imaginary parts.
-                field = np.empty((points.shape[1], 4, r), dtype=complex)
-                for c, kernel in ((0, kernels.horizontal), (1, kernels.horizontal), (2, kernels.charge), (3, kernels.vertical)):
-                    real, imag = weights[:, c * r : (c + 1) * r], weights[:, (c + 4) * r : (c + 5) * r]
-                    field[:, c].real = kernel[0] @ real - kernel[1] @ imag
-                    field[:, c].imag = kernel[0] @ imag + kernel[1] @ real
-                total += 1j * (mine.test @ field.reshape(-1, r))
+                # Real parts of all weights first, then imaginary parts; x, y, charge, z currents in each half.
+                field = np.empty((points.shape[1], 4, columns), dtype=complex)
+                for c, kernel in enumerate((kernels.horizontal, kernels.horizontal, kernels.charge, kernels.vertical)):
+                    if c == 1:
+                        continue
+                    own = slice(c * columns, (c + 2 if c == 0 else c + 1) * columns)
+                    mixed = slice(own.start + 4 * columns, own.stop + 4 * columns)
+                    real, imag = weights[:, own], weights[:, mixed]
+                    part = field[:, c : own.stop // columns].reshape(points.shape[1], -1)
+                    part.real = kernel[0] @ real - kernel[1] @ imag
+                    part.imag = kernel[0] @ imag + kernel[1] @ real
+                    field[:, c : own.stop // columns] = part.reshape(points.shape[1], -1, columns)
+                total += 1j * (mine.test @ field.reshape(-1, columns))
         out[d.unknowns_of(i)] = total
 
     with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
@@ -180,8 +194,8 @@ def _product(
     return out
 
 
-def _relative_fields(d: Discretisation, correction: ComplexArray, currents: ComplexArray) -> FloatArray:
-    """Return the largest far field of corrections (N, R) over that of the currents, (R,), over directions of the whole sky."""
+def _relative_fields(d: Discretisation, corrections: list[ComplexArray], currents: ComplexArray) -> FloatArray:
+    """Return the largest far field of some corrections (N, R) over that of the currents, (C, R), over the whole sky."""
     theta, phi = sky_samples(4.0 / d.wavenumber, d.wavenumber, isinstance(d.station.ground, FreeSpace))
     if not isinstance(d.station.ground, FreeSpace):
         # Level and upright currents have their nulls at the horizon and the zenith; neither end is left out.
@@ -193,7 +207,7 @@ def _relative_fields(d: Discretisation, correction: ComplexArray, currents: Comp
     phi = np.concatenate([phi, rng.uniform(0.0, 2.0 * np.pi, more)])
     frame = direction_frame(theta, phi)
     ground = ground_kernels(d.station.ground)
-    both = np.concatenate([correction, currents], axis=1)
+    both = np.concatenate([*corrections, currents], axis=1)
     total = np.zeros((both.shape[1], frame.count * 2), dtype=complex)
     positions = np.ascontiguousarray(d.station.positions * [1.0, 1.0, 0.0])
     for k, kind in enumerate(d.kinds):
@@ -203,8 +217,8 @@ def _relative_fields(d: Discretisation, correction: ComplexArray, currents: Comp
         for a, turned in zip(antennas, turn, strict=True):
             total += both[d.unknowns_of(a)].T @ (vectors * turned[None, :, None]).reshape(len(vectors), -1)
     size = np.sqrt(np.sum(np.abs(total.reshape(both.shape[1], frame.count, 2)) ** 2, axis=-1)).max(axis=1)
-    half = correction.shape[1]
-    return size[:half] / size[half:]
+    split = size.reshape(len(corrections) + 1, -1)
+    return np.asarray(split[:-1] / split[-1])
 
 
 def _skeleton_error(
@@ -213,24 +227,35 @@ def _skeleton_error(
     filler: PairFiller,
     distances: FloatArray,
     answers: KindAnswers,
-    currents: ComplexArray,
-    rows: np.ndarray,
 ) -> float:
-    """Return the error of patterns that skeletons cause, from the whole rows of some antennas."""
+    """Return the error of patterns that skeletons cause, from the pairs for which they are worst.
+
+    What a skeleton gets wrong falls with distance from where its level begins, so these pairs stand above all others; what each
+    antenna gets wrong by all its neighbours adds up by chance, as the errors at different antennas do.
+    """
     fine = SkeletonInteractions(d, (None,) * len(d.kinds), interactions.skeletons)
-    worst = 0.0
-    for i in rows:
-        off = np.zeros((currents[d.unknowns_of(i)].shape), dtype=complex)
-        for j in range(len(d.station)):
-            level = interactions.skeletons.level_of(distances[i, j])
-            if j == i or level < 0:
-                continue
-            low, high = min(int(i), j), max(int(i), j)
-            full = filler.block(low, high, distances[i, j])
-            short = fine.blocks(low, np.array([high]), level)[0]
-            off += ((full - short) if low == j else (full - short).T) @ currents[d.unknowns_of(j)]
-        correction = answers.to(d.kind_of[i], off)
-        # Errors at different antennas add up by chance.
-        share = np.linalg.norm(correction, axis=0) / np.linalg.norm(currents, axis=0)
-        worst = max(worst, float(np.max(share)))
-    return worst * np.sqrt(len(d.station))
+    n = len(d.station)
+    first, second = np.triu_indices(n, 1)
+    levels = np.vectorize(interactions.skeletons.level_of, otypes=[int])(distances[first, second]) if n > 1 else np.zeros(0, int)
+    chosen: list[tuple[int, int, int, int]] = []
+    for level in np.unique(levels[levels >= 0]):
+        here = np.flatnonzero(levels == level)
+        nearest = here[np.argsort(distances[first[here], second[here]], kind="stable")]
+        most = max(1, WHOLE_PAIRS // len(interactions.skeletons.distances_m))
+        chosen += [(int(first[q]), int(second[q]), int(level), len(here)) for q in nearest[:most]]
+
+    def share(pair: tuple[int, int, int, int]) -> tuple[int, float, int]:
+        i, j, level, count = pair
+        off = filler.block(i, j, distances[i, j]) - fine.blocks(i, np.array([j]), level)[0]
+        sizes = []
+        for a, b, block in ((j, i, off), (i, j, off.T)):
+            mine, theirs = answers.to_ports(d.kind_of[a]), answers.to_ports(d.kind_of[b])
+            sizes.append(np.linalg.norm(answers.to(d.kind_of[a], block @ theirs)) / np.linalg.norm(mine))
+        return level, float(max(sizes)), count
+
+    total: dict[int, tuple[float, int]] = {}
+    with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
+        for level, size, count in pool.map(share, chosen):
+            total[level] = (max(size, total.get(level, (0.0, 0))[0]), count)
+    # Pairs of a level are spread over n antennas, and a pattern gathers the errors at all of them.
+    return float(np.sqrt(sum(size**2 * count / n for size, count in total.values())))

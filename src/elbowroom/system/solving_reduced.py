@@ -164,7 +164,9 @@ def solve_reduced(
 
     filler, distances, answers = PairFiller(d), antenna_distances(d), KindAnswers(d, reference_ohm)
     table = SkeletonTable(d, settings.skeleton_distances_m, settings.skeleton_factor * settings.tolerance)
-    candidates = reduced_candidates(d, settings, filler, distances, answers)
+    with single_threaded_blas():
+        # Matrices of one antenna: threads of BLAS would cost more than they save.
+        candidates = reduced_candidates(d, settings, filler, distances, answers)
     excitations, own = port_excitations(d, reference_ohm)
     lap("functions")
     cut = settings.cut_factor * np.sqrt(settings.tolerance)
@@ -172,9 +174,7 @@ def solve_reduced(
         bases = [c.cut(cut) for c in candidates]
         space = reduced_space(d, bases)
         interactions = SkeletonInteractions(d, space.bases, table)
-        for k in range(len(d.kinds)):
-            for level in range(len(table.distances_m)):
-                interactions.weights(k, level)
+        interactions.prepare()
         lap("skeletons")
         # Single precision leaves about 1e-6 of a pattern, which a tighter tolerance would see.
         dtype = np.complex64 if settings.tolerance >= SINGLE_TOLERANCE else np.complex128
@@ -190,7 +190,7 @@ def solve_reduced(
         x = factors.solve(right).astype(np.complex128)
         admittance = own + right.T @ x
         lap("port excitations")
-        error = reduction_error(d, space, interactions, filler, distances, answers, x, excitations)
+        error = reduction_error(d, space, interactions, filler, distances, answers, x, excitations, factors)
         lap("error estimate")
         everything = all(c.count(cut) == c.most for c in candidates)
         if error.pattern <= settings.tolerance or everything or attempt == MOST_ATTEMPTS - 1:
