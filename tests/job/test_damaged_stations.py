@@ -95,7 +95,7 @@ def test_terminations__port_before_antenna_before_all(folder):
     sampled = job.terminations.every
     assert isinstance(sampled, SampledReflection)
     circuit = ParallelCircuit(200.0, 1e-7, 2e-12)
-    assert job.loads() == [sampled, "open", circuit, 75.0, 30 + 5j]
+    assert job.port_terminations() == [sampled, "open", circuit, 75.0, 30 + 5j]
     assert job.terminations.amplifier_off == SeriesCircuit(20.0, 0.0, 3e-12)
     run = JobRun(job)
     for frequency in run.frequencies_hz:
@@ -118,6 +118,11 @@ def test_terminations__port_before_antenna_before_all(folder):
         "termination.amplifier_off = 20 ohm + 3e-12 F in series",
     ):
         assert expected in lines
+
+
+def test_terminations__zero_ohm_is_zero_and_nothing_is_a_hundred(folder):
+    assert job_of(folder, termination="impedance_ohm = 0\n[termination.antennas]\nA1 = 0").termination_values() == [0.0] * 5
+    assert job_of(folder, termination='[termination.ports]\n"A1/x" = 5').termination_values() == [5.0, *[100.0] * 4]
 
 
 def test_terminations__changing_an_amplifier_or_what_is_dead_solves_nothing_again(folder, solves):
@@ -180,8 +185,8 @@ def test_damage__dead_antennas_have_no_weight_and_still_couple(folder):
 def test_damage__a_dead_port_goes_before_its_termination(folder):
     parts = TERMINATIONS + '"A1/x" = 12\n'
     job = job_of(folder, termination=parts, damage='[station.damage]\namplifier_off = ["A1/x"]\nshorted = ["A2/y"]')
-    assert job.loads()[0] == job.terminations.amplifier_off
-    assert job.loads()[3] == "short"
+    assert job.port_terminations()[0] == job.terminations.amplifier_off
+    assert job.port_terminations()[3] == "short"
     assert job.terminations.of(PortName("A1", "x")) == 12.0
 
 
@@ -310,7 +315,7 @@ def test_as_designed__is_whole_again(folder):
     job = job_of(folder, damage='[station.damage]\nmissing = ["B1"]\nopen = ["A2"]')
     back = job.as_designed()
     assert [p.name for p in back.station()] == ["A1", "A2", "B1"]
-    assert back.loads() == [100.0] * 5
+    assert back.port_terminations() == [100.0] * 5
     assert back.beams[0].amplitudes(back.station()).tolist() == [1, 0, 1, 0, 1]
     assert not any("damage" in line or "without" in line for line in back.resolved_lines())
 

@@ -13,8 +13,8 @@ from elbowroom.system.terminations import (
     ParallelCircuit,
     SampledReflection,
     SeriesCircuit,
-    load_text,
     negative_resistance,
+    port_termination_text,
     reflection_of,
     termination_at,
 )
@@ -127,8 +127,12 @@ def test_bad_values__are_refused(make, match):
 
 
 def test_text__says_the_parts():
-    assert load_text(SeriesCircuit(50.0, 1e-7, 1e-11)) == "50 ohm + 1e-07 H + 1e-11 F in series"
-    assert load_text(SeriesCircuit()) == "0 ohm in series"
-    assert load_text(ParallelCircuit(50.0)) == "50 ohm in parallel"
-    assert load_text(SampledReflection((1e8, 2e8), (0, 0), 50.0, "a.s1p")) == "a.s1p (100 to 200 MHz, 2 samples)"
-    assert (load_text(75.0), load_text(75 + 2j), load_text("open")) == ("75", "[75, 2]", "open")
+    assert port_termination_text(SeriesCircuit(50.0, 1e-7, 1e-11)) == "50 ohm + 1e-07 H + 1e-11 F in series"
+    assert port_termination_text(SeriesCircuit()) == "0 ohm in series"
+    assert port_termination_text(ParallelCircuit(50.0)) == "50 ohm in parallel"
+    assert port_termination_text(SampledReflection((1e8, 2e8), (0, 0), 50.0, "a.s1p")) == "a.s1p (100 to 200 MHz, 2 samples)"
+    assert (port_termination_text(75.0), port_termination_text(75 + 2j), port_termination_text("open")) == (
+        "75",
+        "[75, 2]",
+        "open",
+    )

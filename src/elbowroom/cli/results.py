@@ -166,7 +166,11 @@ class _Pictures:
         path = self.folder / picture_name("layout")
         self._wrote(
             draw_layout(
-                self.run.station, path, title=job.title, frequencies_hz=self.run.frequencies_hz, termination=self.run.loads
+                self.run.station,
+                path,
+                title=job.title,
+                frequencies_hz=self.run.frequencies_hz,
+                termination=self.run.port_terminations,
             )
         )
 

@@ -68,7 +68,7 @@ from elbowroom.job.jobmodel import Beam as Beam
 from elbowroom.job.jobmodel import Job as Job
 from elbowroom.job.jobmodel import azimuth_to_phi_deg as azimuth_to_phi_deg
 from elbowroom.job.jobtables import SECTIONS, BeamTable, DamageTable, StationTable
-from elbowroom.job.jobterminations import LoadReader, Terminations
+from elbowroom.job.jobterminations import TerminationReader, Terminations
 from elbowroom.job.tomlfile import counted, fail, key_path, near_miss, read_toml, shown, validate_table
 
 SCHEMA = 1
@@ -139,7 +139,7 @@ def read_job(path: str | Path) -> Job:
             damage = read_damage(damage_table, port_names, problems)
         if parts.get("termination") is not None:
             band = parts.get("band")
-            reader = LoadReader(folder, () if band is None else band.frequencies(), problems)
+            reader = TerminationReader(folder, () if band is None else band.frequencies(), problems)
             terminations = reader.terminations(parts["termination"], port_names)
             if AMPLIFIER_OFF in damage.ports.values() and parts["termination"].amplifier_off is None:
                 problems.append("termination.amplifier_off: required key is missing beside station.damage.amplifier_off")

@@ -1,6 +1,6 @@
 """Jobs: a job file in memory, checked, with the files it names read and every default filled in.
 
-- `Job`: what to solve; its station, loads and the lines that say every setting
+- `Job`: what to solve; its station, terminations and the lines that say every setting
 - `Beam`: one beam to form
 """
 
@@ -23,7 +23,7 @@ from elbowroom.job.damage import AMPLIFIER_OFF, OPEN, SHORTED, Damage
 from elbowroom.job.jobtables import OnePort
 from elbowroom.job.jobterminations import Terminations
 from elbowroom.job.tomlfile import counted
-from elbowroom.system.terminations import Load, termination_at
+from elbowroom.system.terminations import PortTermination, termination_at
 
 
 def azimuth_to_phi_deg(azimuth_deg: float) -> float:
@@ -153,12 +153,12 @@ class Job:
     damage: Damage = field(default_factory=Damage)
 
     @property
-    def termination(self) -> Load:
+    def termination(self) -> PortTermination:
         """What ports see that are not named [ohm]."""
         return self.terminations.every
 
     @property
-    def termination_of_port(self) -> dict[str, Load]:
+    def termination_of_port(self) -> dict[str, PortTermination]:
         """Exceptions by ``antenna/port``."""
         return self.terminations.of_port
 
@@ -185,11 +185,11 @@ class Job:
         ]
         return Station(placed, self.ground)
 
-    def loads(self, station: Station | None = None) -> list[Load]:
+    def port_terminations(self, station: Station | None = None) -> list[PortTermination]:
         """Return what each port sees at every frequency, in the order of the station's ports; damage included."""
-        return [self._load(name) for name in (station or self.station()).port_names]
+        return [self._termination_of(name) for name in (station or self.station()).port_names]
 
-    def _load(self, name: PortName) -> Load:
+    def _termination_of(self, name: PortName) -> PortTermination:
         state = self.damage.state(name)
         if state is None:
             return self.terminations.of(name)
@@ -210,10 +210,11 @@ class Job:
             [Hz]; the lowest of the job by default.
         """
         frequency = self.frequencies_hz[0] if frequency_hz is None else frequency_hz
-        loads = self.loads(station)
-        # many ports share one load; told apart by identity, as comparing long files costs more than reading them off
-        values = {id(load): termination_at(load, frequency) for load in {id(load): load for load in loads}.values()}
-        return [values[id(load)] for load in loads]
+        terminations = self.port_terminations(station)
+        # many ports share one termination; told apart by identity, as comparing long files costs more than reading them off
+        different = {id(termination): termination for termination in terminations}
+        values = {key: termination_at(termination, frequency) for key, termination in different.items()}
+        return [values[id(termination)] for termination in terminations]
 
     def as_designed(self) -> Job:
         """Return the job with every antenna where the layout puts it, present and alive; terminations stay."""

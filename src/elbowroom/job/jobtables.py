@@ -94,7 +94,7 @@ def _plain_name(value: str) -> str:
 _Hertz = Annotated[float, AfterValidator(_frequency)]
 _FileName = Annotated[str, Field(min_length=1)]
 _ValueOrTable = Annotated[Any, AfterValidator(_value_or_table)]
-"""A termination as a value, or as a table that `LoadTable` describes."""
+"""A termination as a value, or as a table that `PortTerminationTable` describes."""
 
 
 class DamageTable(Table):
@@ -179,7 +179,7 @@ class BandTable(Table):
         return tuple(sorted(values))
 
 
-class LoadTable(Table):
+class PortTerminationTable(Table):
     """What a port sees: a value, a one-port file, or a circuit."""
 
     # first, because the values below are judged by it
@@ -193,7 +193,7 @@ class LoadTable(Table):
     capacitance_f: Annotated[float, Field(gt=0.0, lt=0.001)] | None = None
 
     @model_validator(mode="after")
-    def _one_way(self) -> LoadTable:
+    def _one_way(self) -> PortTerminationTable:
         parts = [key for key in ("resistance_ohm", "inductance_h", "capacitance_f") if getattr(self, key) is not None]
         whole = [key for key in ("impedance_ohm", "file", "circuit") if getattr(self, key) is not None]
         if len(whole) > 1:
@@ -213,7 +213,7 @@ class LoadTable(Table):
         return self
 
 
-class TerminationTable(LoadTable):
+class TerminationTable(PortTerminationTable):
     """What ports see, and exceptions."""
 
     antennas: dict[str, _ValueOrTable] = Field(default_factory=dict)

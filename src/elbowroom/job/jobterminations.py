@@ -1,4 +1,4 @@
-"""What ``[termination]`` of a job file says, with the files it names read: from tables to loads."""
+"""What ``[termination]`` of a job file says, with the files it names read: from tables to terminations."""
 
 from __future__ import annotations
 
@@ -8,17 +8,17 @@ from pathlib import Path
 
 from elbowroom.base.errors import JobFileError, ModelRangeError
 from elbowroom.geometry.stations import PortName
-from elbowroom.job.jobtables import LoadTable, OnePort, TerminationTable
+from elbowroom.job.jobtables import OnePort, PortTerminationTable, TerminationTable
 from elbowroom.job.tomlfile import key_path, near_miss, validate_table
 from elbowroom.job.touchstone import reflection_from_file
 from elbowroom.system.terminations import (
     ActiveImpedance,
-    Load,
     ParallelCircuit,
+    PortTermination,
     SampledReflection,
     SeriesCircuit,
-    load_text,
     negative_resistance,
+    port_termination_text,
 )
 
 ORDINARY_OHM = 100.0
@@ -31,57 +31,61 @@ class Terminations:
 
     Attributes
     ----------
-    every : Load
+    every : PortTermination
         What all ports see that are not named.
-    of_antenna, of_port : dict of str to Load
+    of_antenna, of_port : dict of str to PortTermination
         Exceptions by antenna, and by ``antenna/port``, which go before those by antenna.
-    amplifier_off : Load or None
+    amplifier_off : PortTermination or None
         What a port sees whose amplifier is off.
     """
 
-    every: Load = ORDINARY_OHM
-    of_antenna: dict[str, Load] = field(default_factory=dict)
-    of_port: dict[str, Load] = field(default_factory=dict)
-    amplifier_off: Load | None = None
+    every: PortTermination = ORDINARY_OHM
+    of_antenna: dict[str, PortTermination] = field(default_factory=dict)
+    of_port: dict[str, PortTermination] = field(default_factory=dict)
+    amplifier_off: PortTermination | None = None
 
-    def of(self, name: PortName) -> Load:
+    def of(self, name: PortName) -> PortTermination:
         """Return what a port sees while nothing is broken."""
         return self.of_port.get(str(name), self.of_antenna.get(name.antenna, self.every))
 
-    def named(self) -> dict[str, Load]:
-        """Return every load by its key in the job file."""
-        loads = {"termination": self.every}
-        loads |= {f"termination.antennas.{name}": load for name, load in self.of_antenna.items()}
-        loads |= {f"termination.ports.{name}": load for name, load in self.of_port.items()}
+    def named(self) -> dict[str, PortTermination]:
+        """Return every termination by its key in the job file."""
+        terminations = {"termination": self.every}
+        terminations |= {f"termination.antennas.{name}": termination for name, termination in self.of_antenna.items()}
+        terminations |= {f"termination.ports.{name}": termination for name, termination in self.of_port.items()}
         if self.amplifier_off is not None:
-            loads["termination.amplifier_off"] = self.amplifier_off
-        return loads
+            terminations["termination.amplifier_off"] = self.amplifier_off
+        return terminations
 
     def lines(self) -> list[str]:
         """Return it as ``key = value`` lines."""
         named = self.named()
         plain = not isinstance(self.every, SeriesCircuit | ParallelCircuit | SampledReflection)
         first = "termination.impedance_ohm" if plain else "termination"
-        return [f"{first if key == 'termination' else key} = {load_text(load)}" for key, load in named.items()]
+        return [
+            f"{first if key == 'termination' else key} = {port_termination_text(termination)}"
+            for key, termination in named.items()
+        ]
 
     def doubts(self) -> list[str]:
         """Return what is to be warned of."""
         return [
-            f"{key} = {load_text(load)}: the resistance is negative; whether the station then oscillates is not looked at"
-            for key, load in self.named().items()
-            if negative_resistance(load)
+            f"{key} = {port_termination_text(termination)}: the resistance is negative; "
+            "whether the station then oscillates is not looked at"
+            for key, termination in self.named().items()
+            if negative_resistance(termination)
         ]
 
 
-class LoadReader:
-    """Turns values and tables into loads, adding what is wrong to the problems of a job file.
+class TerminationReader:
+    """Turns values and tables into terminations, adding what is wrong to the problems of a job file.
 
     Parameters
     ----------
     folder : Path
         Where relative paths count from.
     frequencies_hz : sequence of float
-        Rising frequencies at which every load must be known [Hz].
+        Rising frequencies at which every termination must be known [Hz].
     problems : list of str
         Lengthened by a line for each problem.
     """
@@ -96,42 +100,43 @@ class LoadReader:
         of_antenna = self._named("antennas", table.antennas, list(port_names), "antenna")
         of_port = self._named("ports", table.ports, ports, "port")
         off = table.amplifier_off
+        every = self._from_table(table, ("termination",))
         return Terminations(
-            self._from_table(table, ("termination",)) or ORDINARY_OHM,
+            ORDINARY_OHM if every is None else every,
             of_antenna,
             of_port,
-            None if off is None else self._load(off, ("termination", "amplifier_off")),
+            None if off is None else self._one(off, ("termination", "amplifier_off")),
         )
 
-    def _named(self, key: str, entries: dict[str, OnePort | dict], known: list[str], noun: str) -> dict[str, Load]:
-        loads: dict[str, Load] = {}
+    def _named(self, key: str, entries: dict[str, OnePort | dict], known: list[str], noun: str) -> dict[str, PortTermination]:
+        terminations: dict[str, PortTermination] = {}
         known_set = set(known)
         for name, entry in entries.items():
             if name not in known_set:
                 hint = near_miss(name, known, noun + "s")
                 self.problems.append(f"{key_path('termination', key, name)}: no such {noun}; {hint}")
                 continue
-            load = self._load(entry, ("termination", key, name))
-            if load is not None:
-                loads[name] = load
-        return loads
+            termination = self._one(entry, ("termination", key, name))
+            if termination is not None:
+                terminations[name] = termination
+        return terminations
 
-    def _load(self, entry: OnePort | dict, where: tuple[str, ...]) -> Load | None:
+    def _one(self, entry: OnePort | dict, where: tuple[str, ...]) -> PortTermination | None:
         if not isinstance(entry, dict):
             return entry
-        table = validate_table(LoadTable, entry, self.problems, where)
+        table = validate_table(PortTerminationTable, entry, self.problems, where)
         if table is None:
             return None
-        load = self._from_table(table, where)
-        if load is None and table.file is None:
+        termination = self._from_table(table, where)
+        if termination is None and table.file is None:
             self.problems.append(
                 f"{key_path(*where)}: an empty table; expected impedance_ohm, file, or circuit with resistance_ohm, inductance_h "
                 "or capacitance_f"
             )
-        return load
+        return termination
 
-    def _from_table(self, table: LoadTable, where: tuple[str, ...]) -> Load | None:
-        """Return the load of a table; None if it names none or its file cannot be used."""
+    def _from_table(self, table: PortTerminationTable, where: tuple[str, ...]) -> PortTermination | None:
+        """Return the termination of a table; None if it names none or its file cannot be used."""
         active = table.allow_negative_resistance
         if table.file is not None:
             return self._from_file(self.folder / table.file, active, where)
@@ -144,7 +149,7 @@ class LoadReader:
             return ActiveImpedance(value)
         return value
 
-    def _from_file(self, path: Path, active: bool, where: tuple[str, ...]) -> Load | None:
+    def _from_file(self, path: Path, active: bool, where: tuple[str, ...]) -> PortTermination | None:
         key = key_path(*where, "file")
         try:
             if (path, active) not in self._read:
@@ -155,11 +160,11 @@ class LoadReader:
         except ModelRangeError as cause:
             self.problems.append(f"{key}: {cause}; allow_negative_resistance = true lets it in")
             return None
-        load = self._read[path, active]
+        termination = self._read[path, active]
         try:
             for frequency in (*self.frequencies_hz[:1], *self.frequencies_hz[-1:]):
-                load.reflection_at(frequency)
+                termination.reflection_at(frequency)
         except ModelRangeError as cause:
             self.problems.append(f"{key}: {cause}; [band] asks for it")
             return None
-        return load
+        return termination

@@ -16,7 +16,7 @@ from elbowroom.job.plan import Prediction, predict_station, refuse_if_too_large,
 from elbowroom.job.solve import SOLUTION_SCHEMA, solution_key, solve
 from elbowroom.store import Hdf5Store
 from elbowroom.store.records import DamageReport
-from elbowroom.system.terminations import Load
+from elbowroom.system.terminations import PortTermination
 
 if TYPE_CHECKING:
     from elbowroom.radiation.solution import Solution
@@ -95,9 +95,9 @@ class JobRun:
         self.store = Hdf5Store(job.store_folder, SOLUTION_SCHEMA, **options)
 
     @property
-    def loads(self) -> list[Load]:
+    def port_terminations(self) -> list[PortTermination]:
         """What every port sees at every frequency [ohm], in the order of the ports."""
-        return self.job.loads(self.station)
+        return self.job.port_terminations(self.station)
 
     def termination_at(self, frequency_hz: float) -> list[OnePort]:
         """Return what every port sees at a frequency [Hz]: ohms, ``"open"`` or ``"short"``, in the order of the ports."""

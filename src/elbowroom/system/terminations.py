@@ -2,7 +2,7 @@
 
 - `reflection_of`: terminations at one frequency as reflection coefficients against a reference
 - `SeriesCircuit`, `ParallelCircuit`, `SampledReflection`: terminations that change with frequency
-- `termination_at`, `negative_resistance`, `load_text`: one of any kind at a frequency, whether it is passive, and in words
+- `termination_at`, `negative_resistance`, `port_termination_text`: one of any kind at a frequency, whether active, and in words
 """
 
 from __future__ import annotations
@@ -284,16 +284,16 @@ class SampledReflection:
 Circuit = SeriesCircuit | ParallelCircuit | SampledReflection
 """Terminations that change with frequency."""
 
-Load = complex | float | str | Circuit
+PortTermination = complex | float | str | Circuit
 """What one port sees at every frequency: ohms, ``"open"``, ``"short"`` or a `Circuit`."""
 
 
-def termination_at(load: Load, frequency_hz: float) -> complex | float | str:
+def termination_at(termination: PortTermination, frequency_hz: float) -> complex | float | str:
     """Return what a port sees at one frequency: ohms, ``"open"`` or ``"short"``, as `reflection_of` takes it.
 
     Parameters
     ----------
-    load : number, "open", "short" or Circuit
+    termination : number, "open", "short" or Circuit
         What it sees at every frequency.
     frequency_hz : float
         [Hz].
@@ -303,27 +303,27 @@ def termination_at(load: Load, frequency_hz: float) -> complex | float | str:
     ModelRangeError
         If nothing is known at that frequency.
     """
-    if not isinstance(load, SeriesCircuit | ParallelCircuit | SampledReflection):
-        return load
-    impedance = load.impedance(frequency_hz)
+    if not isinstance(termination, SeriesCircuit | ParallelCircuit | SampledReflection):
+        return termination
+    impedance = termination.impedance(frequency_hz)
     if math.isinf(impedance.real):
         return "open"
     if impedance == 0.0:
         return "short"
-    return ActiveImpedance(impedance) if load.allow_negative_resistance else impedance
+    return ActiveImpedance(impedance) if termination.allow_negative_resistance else impedance
 
 
-def negative_resistance(load: Load) -> bool:
-    """Return whether a load gives power away at any frequency it is known at."""
-    if isinstance(load, SampledReflection):
-        return bool(np.max(np.abs(load.reflection)) > 1.0)
-    if isinstance(load, SeriesCircuit | ParallelCircuit):
-        return load.resistance_ohm is not None and load.resistance_ohm < 0.0
-    return not isinstance(load, str) and complex(load).real < 0.0
+def negative_resistance(termination: PortTermination) -> bool:
+    """Return whether a termination gives power away at any frequency it is known at."""
+    if isinstance(termination, SampledReflection):
+        return bool(np.max(np.abs(termination.reflection)) > 1.0)
+    if isinstance(termination, SeriesCircuit | ParallelCircuit):
+        return termination.resistance_ohm is not None and termination.resistance_ohm < 0.0
+    return not isinstance(termination, str) and complex(termination).real < 0.0
 
 
-def load_text(load: Load) -> str:
-    """Return a load in words: ``100``, ``[75, 20]``, ``open``, or a circuit's parts; numbers in ohm."""
-    if isinstance(load, complex):
-        return f"[{load.real:.10g}, {load.imag:.10g}]"
-    return f"{load:.10g}" if isinstance(load, float | int) else str(load)
+def port_termination_text(termination: PortTermination) -> str:
+    """Return a termination in words: ``100``, ``[75, 20]``, ``open``, or a circuit's parts; numbers in ohm."""
+    if isinstance(termination, complex):
+        return f"[{termination.real:.10g}, {termination.imag:.10g}]"
+    return f"{termination:.10g}" if isinstance(termination, float | int) else str(termination)

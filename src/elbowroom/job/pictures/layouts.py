@@ -25,7 +25,7 @@ from elbowroom.job.pictures.sheets import (
     shortened,
     termination_text,
 )
-from elbowroom.system.terminations import Load, Termination
+from elbowroom.system.terminations import PortTermination, Termination
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -41,7 +41,7 @@ def draw_layout(
     *,
     title: str = "",
     frequencies_hz: Sequence[float] = (),
-    termination: Termination | Sequence[Load] | None = None,
+    termination: Termination | Sequence[PortTermination] | None = None,
 ) -> Path:
     """Draw a station as seen from above, and one antenna of each design from the side.
 
@@ -56,7 +56,7 @@ def draw_layout(
     frequencies_hz : sequence of float, optional
         Frequencies of the job [Hz]; the spacing is told in wavelengths at the lowest and the highest one.
     termination : optional
-        What the ports see [ohm], or loads that change over frequency.
+        What the ports see [ohm], or terminations that change over frequency.
 
     Returns
     -------

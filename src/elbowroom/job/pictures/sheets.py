@@ -30,7 +30,7 @@ from numpy.typing import ArrayLike
 from elbowroom.base.arrays import FloatArray
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.job.files import written_whole
-from elbowroom.system.terminations import Load, ParallelCircuit, SampledReflection, SeriesCircuit, Termination
+from elbowroom.system.terminations import ParallelCircuit, PortTermination, SampledReflection, SeriesCircuit, Termination
 
 NOT_MEASURED = "model, not a measurement"
 """Said at the foot of every picture."""
@@ -235,7 +235,7 @@ def _safe(text: str) -> str:
     return f"{kept}-{mark}" if kept else mark
 
 
-def one_termination_text(value: Load) -> str:
+def one_termination_text(value: PortTermination) -> str:
     """Return what one port sees in words, as ``100 ohm``, ``75 + 20j ohm`` or the parts of a circuit."""
     if isinstance(value, str | SeriesCircuit | ParallelCircuit | SampledReflection):
         return str(value)
@@ -245,7 +245,7 @@ def one_termination_text(value: Load) -> str:
     return f"{number.real:.6g} {'-' if number.imag < 0.0 else '+'} {abs(number.imag):.6g}j ohm"
 
 
-def termination_text(termination: Termination | Sequence[Load]) -> str:
+def termination_text(termination: Termination | Sequence[PortTermination]) -> str:
     """Return what the ports see in words: one value, or the commonest one and how many ports see another."""
     values = [termination] if isinstance(termination, str) or np.ndim(termination) == 0 else list(termination)  # type: ignore[arg-type]
     counts = Counter(one_termination_text(value) for value in values)  # type: ignore[arg-type]
