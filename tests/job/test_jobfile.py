@@ -251,7 +251,7 @@ def test_turned__is_the_product_of_rotations(folder, tilt):
         # solver
         ('mesh = "refined"', 'mesh = "fine"', "solver.mesh = \"fine\": expected"),
         ('precision = "double"', 'precision = "doubel"', "did you mean 'double'?"),
-        ('precision = "double"', 'method = "reduced"', "solver.method = \"reduced\": expected"),
+        ('precision = "double"', 'method = "reduce"', "solver.method = \"reduce\": expected"),
         # beams
         ('name = "east"', 'name = "up"', "beam[1].name = \"up\": already the name of beam[0]"),
         ('name = "east"', 'name = "a/b"', "beam[1].name: \"a/b\": expected a name without slashes"),

@@ -60,6 +60,7 @@ MEANINGS = {
     "antenna_spread_db": "rms of the antennas' embedded patterns about their mean, in the direction pointed at, below that mean",
     "relative_residual": "of the linear system that was solved",
     "mesh_error": "relative change of an isolated antenna's port admittance on a finer mesh",
+    "pattern_error": "of embedded patterns relative to their peaks, against solving for all unknowns of the same mesh",
 }
 
 
@@ -99,6 +100,7 @@ class BeamComparison:
     antenna_spread_db: float
     relative_residual: float
     mesh_error: float
+    pattern_error: float
 
 
 def decibels(power_ratio: float) -> float:
@@ -381,6 +383,7 @@ def compare_beams(fields_: BeamFields) -> list[BeamComparison]:
                 antenna_spread_db=_antenna_spread_db(fields_, index),
                 relative_residual=statistics.relative_residual,
                 mesh_error=statistics.mesh_error,
+                pattern_error=statistics.pattern_error,
             )
         )
     return rows

@@ -130,7 +130,8 @@ def table_head(title: str, job_text: str, settings: TableSettings) -> dict[str, 
         "coupled": "weighted sum of embedded element patterns: every port of the station terminated, all antennas coupled",
         "isolated": "weighted sum of isolated element patterns: each antenna alone at its place, same ground and termination",
         "stated_error": "relative_residual of the linear system; mesh_error: relative change of an isolated antenna's port "
-        "admittance on a finer mesh; the wires' own approximations are of the order of (ka)^2",
+        "admittance on a finer mesh; pattern_error: of embedded patterns relative to their peaks, against solving for all "
+        "unknowns of that mesh, 0 where that was done; the wires' own approximations are of the order of (ka)^2",
         "job_file": job_text,
     }
 
@@ -184,9 +185,10 @@ def export_hdf5(
     Datasets: ``frequency_hz`` (F), ``theta_rad`` (T), ``phi_rad`` (H), ``component`` (2), ``coupled_beam`` and ``isolated_beam``
     (F, B, T, H, 2) complex, ``weight`` (F, B, P) complex, ``beam_name`` and ``beam_port`` (B), ``pointing_theta_rad`` and
     ``pointing_phi_rad`` (B), ``nominal_phi_rad`` (B), ``port_name`` (P), ``port_nominal_phi_rad`` (P), ``termination_ohm``
-    (F, P) text, ``antenna_name`` (A), ``antenna_position_m`` (A, 3), ``relative_residual`` and
-    ``mesh_error`` (F); with element patterns ``embedded_pattern`` and ``isolated_pattern`` (F, P, T, H, 2) complex.  Every
-    dataset has a ``unit``; axes are HDF5 dimension scales.  The phase centre of every pattern is the station's origin.
+    (F, P) text, ``antenna_name`` (A), ``antenna_position_m`` (A, 3), ``relative_residual``,
+    ``mesh_error`` and ``pattern_error`` (F); with element patterns ``embedded_pattern`` and ``isolated_pattern``
+    (F, P, T, H, 2) complex.  Every dataset has a ``unit``; axes are HDF5 dimension scales.
+    The phase centre of every pattern is the station's origin.
     """
     settings = settings or TableSettings()
     with written_whole(path) as temporary, h5py.File(temporary, "w", libver=("earliest", "v110")) as file:
@@ -221,6 +223,7 @@ class _TableWriter:
         for name, text in (
             ("relative_residual", "Of the linear system"),
             ("mesh_error", "Relative change of an isolated antenna's admittance on a finer mesh"),
+            ("pattern_error", "Of embedded patterns relative to their peaks, by solving in fewer functions than unknowns"),
         ):
             made = self._make(name, np.full(n_frequencies, np.nan), "1", text)
             made.dims[0].attach_scale(file["frequency_hz"])
@@ -295,6 +298,7 @@ class _TableWriter:
         file["frequency_hz"][index] = solution.frequency_hz
         file["relative_residual"][index] = solution.statistics.relative_residual
         file["mesh_error"][index] = solution.statistics.mesh_error
+        file["pattern_error"][index] = solution.statistics.pattern_error
         file["termination_ohm"][index] = _termination_text(termination, len(solution.port_names))
         phi = directions.phi_rad
         if ready.beams:
@@ -369,7 +373,7 @@ def export_csv(
             writer.writerows(_csv_rows(each, settings))
             s = each.solution.statistics
             file.write(f"# at {each.solution.frequency_hz:.12g} Hz: relative_residual {s.relative_residual:.3g}, ")
-            file.write(f"mesh_error {s.mesh_error:.3g}\n")
+            file.write(f"mesh_error {s.mesh_error:.3g}, pattern_error {s.pattern_error:.3g}\n")
         if count == 0:
             msg = "nothing to export: no frequency is solved"
             raise ExportError(msg)

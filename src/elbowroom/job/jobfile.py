@@ -34,9 +34,10 @@ allow_negative_resistance``
 ``[termination.antennas] NAME``  the same for one antenna: a value, or a table of the keys above
 ``[termination.ports] "A1/x"``   the same for one port, named antenna/port; goes before its antenna's
 ``[termination] amplifier_off``  the same for ports whose amplifier is off
-``[solver] method``              ``"auto"`` or ``"direct"``
+``[solver] method``              ``"direct"``, ``"reduced"``, or ``"auto"``: reduced for large stations
 ``[solver] mesh``                ``"default"`` or ``"refined"``
-``[solver] precision``           ``"mixed"``, ``"double"`` or ``"single"``
+``[solver] precision``           of the direct method: ``"mixed"``, ``"double"`` or ``"single"``
+``[solver] tolerance``           of the reduced method: error of embedded patterns relative to their peaks; 1e-4 by default
 ``[[beam]] name``                name, unique in the job
 ``[[beam]] port``                name of the port of each antenna that the beam adds up
 ``[[beam]] zenith_angle_deg``    pointing, 0 to 90 [deg]; 0 by default
@@ -164,6 +165,7 @@ def read_job(path: str | Path) -> Job:
         solver=parts["solver"].method,
         mesh=parts["solver"].mesh,
         precision=parts["solver"].precision,
+        tolerance=parts["solver"].tolerance,
         beams=tuple(b for _, b in beams),
         sky_step_deg=parts["sky"].step_deg,
         store_folder=folder / parts["store"].folder,

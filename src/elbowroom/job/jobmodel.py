@@ -144,6 +144,7 @@ class Job:
     solver: str
     mesh: str
     precision: str
+    tolerance: float
     beams: tuple[Beam, ...]
     sky_step_deg: float
     store_folder: Path
@@ -250,6 +251,7 @@ class Job:
             f"solver.method = {self.solver}",
             f"solver.mesh = {self.mesh}",
             f"solver.precision = {self.precision}",
+            f"solver.tolerance = {self.tolerance:g}",
         ]
         for b in self.beams:
             who = "all antennas with the port" if b.antennas is None else counted(len(b.antennas), "antenna")

@@ -224,9 +224,10 @@ class TerminationTable(PortTerminationTable):
 class SolverTable(Table):
     """How to solve."""
 
-    method: Literal["auto", "direct"] = "auto"
+    method: Literal["auto", "direct", "reduced"] = "auto"
     mesh: Literal["default", "refined"] = "default"
     precision: Literal["mixed", "double", "single"] = "mixed"
+    tolerance: Annotated[float, Field(ge=1e-6, le=0.1)] = 1e-4
 
 
 class BeamTable(Table):

@@ -12,8 +12,8 @@ from elbowroom.geometry.stations import Station
 from elbowroom.job.checks import Problem, check_station
 from elbowroom.job.jobfile import Job
 from elbowroom.job.jobtables import OnePort
-from elbowroom.job.plan import Prediction, predict_station, refuse_if_too_large, total
-from elbowroom.job.solve import SOLUTION_SCHEMA, solution_key, solve
+from elbowroom.job.plan import Prediction, predict_reduced, predict_station, refuse_if_too_large, total
+from elbowroom.job.solve import SOLUTION_SCHEMA, chosen_solver, solution_key, solve, strategy_of
 from elbowroom.store import Hdf5Store
 from elbowroom.store.records import DamageReport
 from elbowroom.system.terminations import PortTermination
@@ -91,6 +91,7 @@ class JobRun:
             self.frequencies_hz = tuple(k for k in job.frequencies_hz if any(abs(f - k) < 0.5 for f in frequencies_hz))
         else:
             self.frequencies_hz = job.frequencies_hz
+        self._solvers: dict[float, str] = {}
         options = {} if report is None else {"report": report}
         self.store = Hdf5Store(job.store_folder, SOLUTION_SCHEMA, **options)
 
@@ -110,7 +111,7 @@ class JobRun:
 
     def plan(self) -> list[Unit]:
         """Return the units of the job, which the store has, and what the others take."""
-        predictions = predict_station(self.station, self.frequencies_hz, self.job.mesh, self.job.precision)
+        predictions = [self._predicted(f) for f in self.frequencies_hz]
         units = []
         for frequency, prediction in zip(self.frequencies_hz, predictions, strict=True):
             key = self.key(frequency)
@@ -129,8 +130,21 @@ class JobRun:
             mesh_settings(self.job.mesh),
             NearSettings(),
             FarSettings(),
-            ("direct", self.job.precision),
+            strategy_of(self.solver_at(frequency_hz), self.job.precision, self.job.tolerance),
         )
+
+    def solver_at(self, frequency_hz: float) -> str:
+        """Return the solver of a frequency [Hz]: ``"direct"`` or ``"reduced"``."""
+        from elbowroom.geometry.mesh import mesh_settings
+
+        if frequency_hz not in self._solvers:
+            self._solvers[frequency_hz] = chosen_solver(self.station, frequency_hz, mesh_settings(self.job.mesh), self.job.solver)
+        return self._solvers[frequency_hz]
+
+    def _predicted(self, frequency_hz: float) -> Prediction:
+        if self.solver_at(frequency_hz) == "reduced":
+            return predict_reduced(self.station, frequency_hz, self.job.mesh, self.job.tolerance)
+        return predict_station(self.station, [frequency_hz], self.job.mesh, self.job.precision)[0]
 
     def path_of(self, frequency_hz: float) -> Path:
         """Return the store's file of the unit at a frequency [Hz]."""
@@ -172,6 +186,7 @@ class JobRun:
             solver=self.job.solver,
             mesh=self.job.mesh,
             precision=self.job.precision,
+            tolerance=self.job.tolerance,
             store=self.store,
             attributes={"title": self.job.title, "job_file": self.job.text},
             progress=tell,
