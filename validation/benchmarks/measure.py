@@ -1,6 +1,7 @@
 """Figures that are promised, measured in one run and printed as ratios.
 
-Run ``python validation/benchmarks/measure.py`` for all, or name some: ``kernel mesh station patterns commands``.  Absolute
+Run ``python validation/benchmarks/measure.py`` for all, or name some: ``kernel mesh station patterns commands``; the reduced
+solver and log-periodic antennas have ``measure_reduced.py``.  Absolute
 times on a shared machine are not evidence; the two sides of each ratio are timed in turn in the same process.
 """
 
@@ -12,33 +13,21 @@ import shutil
 import subprocess
 import sys
 import time
-from collections.abc import Callable
 
 import numpy as np
 from numba import njit
+from stations import benchmark_antenna, benchmark_station, best_of
 
 from elbowroom.base.constants import SPEED_OF_LIGHT
 from elbowroom.geometry.antennas import Antenna, Port
-from elbowroom.geometry.arrangements import random_disc
 from elbowroom.geometry.directions import hemisphere_grid
 from elbowroom.geometry.grounds import PerfectGround
 from elbowroom.geometry.mesh import MeshSettings, build_mesh, mesh_settings
-from elbowroom.geometry.shapes import crossed_dipoles
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import Wire
 from elbowroom.kernels.points import free_kernel
 from elbowroom.kernels.points_numba import fill_free
 from elbowroom.system.self_block import NearSettings, free_self_block
-
-
-def best_of(action: Callable[[], object], repeats: int = 3) -> float:
-    """Return the shortest of some wall times of an action [s]."""
-    best = math.inf
-    for _ in range(repeats):
-        start = time.perf_counter()
-        action()
-        best = min(best, time.perf_counter() - start)
-    return best
 
 
 @njit(error_model="numpy", nogil=True)
@@ -112,20 +101,6 @@ def mesh() -> None:
             print(f"mesh {name}: benchmark antenna at {frequency / 1e6:g} MHz, {s.n_unknowns} unknowns, error {s.mesh_error:.1e}")
 
 
-def benchmark_antenna() -> Antenna:
-    """Return the crossed drooping dipoles of the benchmarks."""
-    return crossed_dipoles(
-        arm_length_m=0.6, height_m=0.9, wire_radius_m=0.003, droop_deg=40.0, feed_length_m=0.1, separation_m=0.04
-    )
-
-
-def benchmark_station(count: int = 256) -> Station:
-    """Return 256 antennas in a 35 m disc, closest pair 1.4 m."""
-    layout = random_disc(count, 17.5 * math.sqrt(count / 256), 1.4, 1)
-    antenna = benchmark_antenna()
-    return Station([Placed(antenna, tuple(p)) for p in layout.positions], PerfectGround())
-
-
 def station(count: int = 256, frequency_hz: float = 150e6) -> None:
     """Whole direct solve with beams against an in-place LAPACK factorisation of the same order; target 2.5."""
     from scipy.linalg import get_lapack_funcs
@@ -133,10 +108,10 @@ def station(count: int = 256, frequency_hz: float = 150e6) -> None:
     from elbowroom.job.solve import solve
 
     made = benchmark_station(count)
-    solve(benchmark_station(4), frequency_hz)
+    solve(benchmark_station(4), frequency_hz, solver="direct")
     sky = hemisphere_grid(1.0)
     start = time.perf_counter()
-    solution = solve(made, frequency_hz)
+    solution = solve(made, frequency_hz, solver="direct")
     solved = time.perf_counter()
     weights = solution.pointing_weights(0.0, 0.0, port="x")
     solution.beam(weights, sky.theta_rad, sky.phi_rad)
