@@ -405,3 +405,54 @@ def test_words__terminations_frequencies_and_texts():
     assert frequency_text(110.25e6) == "110.25 MHz"
     assert printable("a\u5929\x07b") == "a\u25a1\u25a1b"
     assert shortened("abcdef", 4) == "abc\u2026"
+
+
+def test_draw_element_spread__dead_ports_and_other_units_stay_out(solution, tmp_path, monkeypatch):
+    asked = []
+    whole = type(solution).embedded_patterns
+
+    def watched(self, *arguments, **options):
+        asked.append(list(options["ports"]))
+        return whole(self, *arguments, **options)
+
+    monkeypatch.setattr(type(solution), "embedded_patterns", watched)
+    names = [str(n) for n in solution.port_names]
+    x = [i for i, n in enumerate(names) if n.endswith("/x")]
+    live = np.ones(len(names), dtype=bool)
+    live[x[2]] = False
+    seen = [100.0] * len(names)
+    seen[x[2]] = seen[x[4]] = "short"
+    looks_drawn(draw_element_spread(solution, "x", tmp_path / "live.png", step_deg=15.0, termination=seen, taking_part=live))
+    # x[2] is dead; x[4] answers with a current and the others with voltages
+    assert asked == [[i for i in x if i not in (x[2], x[4])]] * 2
+    with pytest.raises(ModelRangeError, match="no port 'x' takes part"):
+        draw_element_spread(solution, "x", tmp_path / "n.png", taking_part=np.zeros(len(names)))
+    with pytest.raises(ModelRangeError, match="one for each of 14 ports"):
+        draw_element_spread(solution, "x", tmp_path / "n.png", taking_part=[True])
+
+
+@pytest.mark.parametrize("frequencies", [1, 2])
+def test_draw_impedance__reflections_above_one_are_not_cut_off(frequencies, tmp_path, monkeypatch):
+    """Behind a termination of negative resistance: |(Z - Z_T*)/(Z + Z_T)| exceeds 1."""
+    from elbowroom.job.pictures import ports as module
+    from elbowroom.system.terminations import ActiveImpedance
+
+    made = [port_impedances(solve(cluster(2), f), [ActiveImpedance(-20.0), 50.0, 50.0, 50.0]) for f in (140e6, 150e6)]
+    figures = []
+
+    def kept(*arguments, **options):
+        from contextlib import contextmanager
+
+        @contextmanager
+        def manager():
+            with sheet(*arguments, **options) as figure:
+                yield figure
+                figures.append(figure)
+
+        return manager()
+
+    monkeypatch.setattr(module, "sheet", kept)
+    looks_drawn(draw_impedance(made[:frequencies], tmp_path / "z.png", ports=["x"]))
+    largest = max(item.coupled_reflection.max() for item in made[:frequencies])
+    assert largest > 1.05
+    assert figures[0].axes[3].get_ylim()[1] >= largest

@@ -8,6 +8,7 @@ from elbowroom.base.constants import SPEED_OF_LIGHT
 from elbowroom.base.errors import GeometryError, SolveError
 from elbowroom.geometry.antennas import Antenna, Port
 from elbowroom.geometry.networks import Branch, FeedPoint, Line, Network, Stub, Transformer
+from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import Wire
 from elbowroom.system.networks import attach_ports
 
@@ -219,3 +220,35 @@ def test_resonance_without_loss__is_refused_with_its_frequency():
 def test_networks__that_cannot_be__are_refused(make, words):
     with pytest.raises(GeometryError, match=words):
         make()
+
+
+def test_nearest_gap__is_the_electrically_nearest_behind_the_network():
+    """A port at a free node; paths by hand: 2 m / 0.5 = 4 m to g0, 1 m + 1.5 m = 2.5 m over a free node to g2."""
+    lines = [Line("in", "g0", 50.0, 2.0, velocity_factor=0.5), Line("in", "mid", 50.0, 1.0), Line("mid", "g2", 50.0, 1.5)]
+    feeds = [FeedPoint(f"g{i}", i) for i in range(3)]
+
+    def nearest(*more, **elements):
+        network = Network((*lines, *more), **elements)
+        antenna = Antenna("three", rungs(3), [Port("x", node="in")], feeds=feeds, network=network)
+        assert antenna.port_gaps[0] == antenna.gaps[antenna.nearest_gap(antenna.ports[0])]
+        return antenna.nearest_gap(antenna.ports[0])
+
+    far = Line("g0", "g1", 50.0, 9.0)
+    assert nearest(far) == 2
+    assert nearest(Line("in", "g1", 50.0, 2.4)) == 1
+    # branches in series and transformers take no time; a branch across a node leads nowhere
+    assert nearest(far, branches=(Branch("mid", "g1", resistance_ohm=5.0),)) == 1
+    assert nearest(far, transformers=(Transformer("in", "g0", 2.0),)) == 0
+    assert nearest(far, branches=(Branch("in", capacitance_f=1e-12),)) == 2
+    # a port with its own gap, or at a feed's node, looks into that one
+    own = Antenna("own", rungs(2), [Port("x", 0), Port("y", node="g")], feeds=[FeedPoint("g", 1)],
+                  network=Network((Line("x", "g", 50.0, 1.0),)))  # fmt: skip
+    assert [own.nearest_gap(port) for port in own.ports] == [0, 1]
+
+
+def test_nearest_gap__gives_a_port_behind_a_network_its_azimuth():
+    wires = [Wire((-0.4, 0.0, 1.0), (0.4, 0.0, 1.0), 0.002), Wire((0.0, -0.4, 1.1), (0.0, 0.4, 1.1), 0.002)]
+    feeds = [FeedPoint("a", 0), FeedPoint("b", 1)]
+    network = Network((Line("in", "b", 50.0, 0.2), Line("b", "a", 50.0, 0.2)))
+    antenna = Antenna("far", wires, [Port("p", node="in")], feeds=feeds, network=network)
+    assert Station([Placed(antenna)]).port_nominal_phi_rad[0] == pytest.approx(np.pi / 2)

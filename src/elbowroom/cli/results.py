@@ -190,9 +190,10 @@ class _Pictures:
             cuts = self.folder / picture_name("cuts", beam.name, frequency)
             peak = isolated_peak(fields, index)
             self._wrote(draw_cuts(solution, beam, cuts, termination=seen, title=title, component=self.component, peak=peak))
+        taking_part = (fields.weights != 0.0).any(axis=0)
         for port in sorted({beam.port for beam in fields.beams}):
             spread = self.folder / picture_name("antennas", port, frequency)
-            self._wrote(draw_element_spread(solution, port, spread, termination=seen, title=title))
+            self._wrote(draw_element_spread(solution, port, spread, termination=seen, title=title, taking_part=taking_part))
 
     def finish(self) -> None:
         """Draw what runs over frequency."""

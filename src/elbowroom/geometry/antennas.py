@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, field
+from math import inf
 
 from elbowroom.base.errors import GeometryError
 from elbowroom.geometry.networks import FeedPoint, Network, resolve_nodes
@@ -210,13 +211,19 @@ class Antenna:
 
     @property
     def port_gaps(self) -> tuple[Gap, ...]:
-        """Gap of each port: its own, or the design's first where a network lies between."""
+        """Gap of each port: its own, or the electrically nearest one where a network lies between."""
         return tuple(self.gaps[self.nearest_gap(p)] for p in self.ports)
 
     def nearest_gap(self, port: Port) -> int:
-        """Return the index of the gap that a port looks into; 0 if a network lies between."""
+        """Return the index of the gap that a port looks into, or of the electrically nearest one behind its network.
+
+        Lines are as long as a wave takes to pass them; branches and transformers take no time.  Gaps equally near, or a port
+        that no path leads away from, give the first of the design's gaps.
+        """
         node = port.name if port.node is None else port.node
-        return self.nodes.index(node) if node in self.nodes[: len(self.gaps)] else 0
+        distance = self.network.distances(node)
+        reached = [distance.get(gap, inf) for gap in self.nodes[: len(self.gaps)]]
+        return reached.index(min(reached))
 
     def port_index(self, name: str) -> int:
         """Return the index of the port of that name; raise GeometryError when there is none."""

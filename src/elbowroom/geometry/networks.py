@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections import Counter
 from dataclasses import dataclass, fields
+from heapq import heappop, heappush
 
 import numpy as np
 
@@ -202,6 +203,37 @@ class Network:
         for branch in self.branches:
             found += [branch.start] if branch.end is None else [branch.start, branch.end]
         return found
+
+    def distances(self, node: str) -> dict[str, float]:
+        """Return how far the nodes that can be reached from one are from it, by the shortest path.
+
+        Parameters
+        ----------
+        node : str
+            Where paths begin.
+
+        Returns
+        -------
+        dict of str to float
+            Length of lines over their velocity factor, added up [m]; branches and transformers have none.
+        """
+        steps: dict[str, list[tuple[str, float]]] = {}
+        joins = [(line.start, line.end, line.length_m / line.velocity_factor) for line in self.lines]
+        joins += [(one.start, one.end, 0.0) for one in self.transformers]
+        joins += [(branch.start, branch.end, 0.0) for branch in self.branches if branch.end is not None]
+        for start, end, length in joins:
+            steps.setdefault(start, []).append((end, length))
+            steps.setdefault(end, []).append((start, length))
+        settled: dict[str, float] = {}
+        open_ends = [(0.0, node)]
+        while open_ends:
+            far, here = heappop(open_ends)
+            if here in settled:
+                continue
+            settled[here] = far
+            for there, length in steps.get(here, []):
+                heappush(open_ends, (far + length, there))
+        return settled
 
 
 def resolve_nodes(antenna: str, gaps: list[str], ports_at: list[str], network: Network) -> tuple[str, ...]:

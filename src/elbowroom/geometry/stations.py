@@ -207,8 +207,8 @@ class Station:
     def port_nominal_phi_rad(self) -> FloatArray:
         """Direction of each port's co-polarisation at zenith, (P,), from east towards north [rad].
 
-        The nominal azimuth of the design's port, or else that of the wire that carries its gap (the design's first gap, if
-        the port looks into a network), turned with the antenna; 0 for a vertical wire.
+        The nominal azimuth of the design's port, or else that of the wire that carries its gap (the electrically nearest gap,
+        if the port looks into a network), turned with the antenna; 0 for a vertical wire.
         """
         angles = []
         for placed in self.placed:

@@ -25,8 +25,8 @@ key                               meaning
 ``[[port]] position``             middle of the gap as a fraction of the wire's length; 0.5 by default
 ``[[port]] gap_m``                width of the gap [m]; the wire's diameter by default
 ``[[port]] node``                 instead of ``wire``: the node of the network that the port looks into
-``[[port]] nominal_azimuth_deg``  co-polarisation at zenith, from east towards north [deg]; along the wire by
-                                  default; to be stated for a port at a node that is no gap
+``[[port]] nominal_azimuth_deg``  co-polarisation at zenith, from east towards north [deg]; by default along the wire,
+                                  or that of the electrically nearest gap for a port at a node that is no gap
 ``[[load]] wire, position``       as for a port; ``position`` is required
 ``[[load]] resistance_ohm``       series resistance [ohm]; 0 by default
 ``[[load]] inductance_h``         series inductance [H]; 0 by default

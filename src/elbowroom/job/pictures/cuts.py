@@ -8,6 +8,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
+from numpy.typing import ArrayLike
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import ModelRangeError
@@ -216,6 +217,7 @@ def draw_element_spread(
     title: str = "",
     step_deg: float = 1.0,
     floor_db: float = -40.0,
+    taking_part: ArrayLike | None = None,
 ) -> Path:
     """Draw the embedded element patterns of one port of every antenna over two vertical planes.
 
@@ -238,6 +240,8 @@ def draw_element_spread(
         Step of the zenith angle [deg]; must divide 90.
     floor_db : float, optional
         Lower end of the scale [dB].
+    taking_part : bool (P,), optional
+        Which ports of the station have weight in a beam; the others are left out, as dead ones should be.  All by default.
 
     Returns
     -------
@@ -247,15 +251,31 @@ def draw_element_spread(
     Raises
     ------
     ModelRangeError
-        If no antenna has a port of that name.
+        If no antenna has a port of that name, or none of them takes part.
     ExportError
         If the file cannot be written.
+
+    Notes
+    -----
+    Shorted ports answer with currents and others with voltages; where both take part, the commoner kind is drawn, and the
+    caption says how many are left out.
     """
     names = solution.port_names
-    rows = [i for i, n in enumerate(names) if n.port == port]
-    if not rows:
+    every = [i for i, n in enumerate(names) if n.port == port]
+    if not every:
         msg = f"no antenna has a port {port!r}; there are {', '.join(dict.fromkeys(n.port for n in names))}"
         raise ModelRangeError(msg)
+    live = np.ones(len(names), dtype=bool) if taking_part is None else np.asarray(taking_part, dtype=bool)
+    if live.shape != (len(names),):
+        msg = f"taking_part: expected one for each of {len(names)} ports, got shape {live.shape}"
+        raise ModelRangeError(msg)
+    rows = [i for i in every if live[i]]
+    if not rows:
+        msg = f"no port {port!r} takes part in a beam; nothing to draw"
+        raise ModelRangeError(msg)
+    shorted = [i for i in rows if response_words(termination, [i])[1] != "m"]
+    if 0 < len(shorted) < len(rows):
+        rows = shorted if 2 * len(shorted) > len(rows) else [i for i in rows if i not in shorted]
     planes = principal_planes(0.0, 0.0, step_deg)
     angles = [(plane.directions.theta_rad, plane.directions.phi_rad) for plane in planes]
     embedded = [solution.embedded_patterns(*each, termination=termination, ports=rows) for each in angles]
@@ -269,6 +289,9 @@ def draw_element_spread(
         "difference: of the complex patterns of each antenna",
         f"lower values are drawn at {floor_db:g} dB",
     ]
+    left_out = len(every) - len(rows)
+    if left_out:
+        caption.append(f"left out: {left_out} without weight, or shorted while others are not")
     number = f"{len(rows)} antenna{'' if len(rows) == 1 else 's'}"
     details = [title, f"port {shortened(port, 24)} of {number}", frequency_text(solution.frequency_hz)]
     with sheet(path, "How different are the antennas", details, caption, size=(12.0, 8.2)) as figure:

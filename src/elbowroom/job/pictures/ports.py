@@ -50,7 +50,8 @@ class PortImpedances:
     coupled_ohm, isolated_ohm : complex128 (P,)
         Impedance at each port, all others terminated: in the station, and with its antenna alone over the same ground.
     coupled_reflection, isolated_reflection : float64 (P,)
-        Amplitude of the power wave that the port's termination reflects, 0 (matched) to 1.
+        Amplitude of the power wave that the port's termination reflects: 0 (matched) to 1, and above where the port or the
+        termination has a negative resistance.
     """
 
     frequency_hz: float
@@ -220,10 +221,14 @@ def draw_impedance(
             _widen(row[0], 1e-3 * float(np.abs(isolated).max()))
             _widen(row[1], 1e-3 * float(np.abs(isolated).max()))
             row[2].set_ylim(0.0, max(1.08 * float(change.max()), 0.01))
+            # Above 1 a port gives power away, as one next to a termination of negative resistance may.
+            largest = max(float(reflected.max()), float(alone.max()))
             if len(every) > 1:
-                row[3].set_ylim(0.0, 1.0)
-            else:
+                row[3].set_ylim(0.0, 1.0 if largest <= 1.0 + 1e-9 else 1.05 * largest)
+            elif largest <= 1.0 + 1e-9:
                 row[3].set_ylim(top=min(row[3].get_ylim()[1], 1.01))
+            if largest > 1.0 + 1e-9:
+                row[3].axhline(1.0, color="0.4", lw=0.9, ls=":", zorder=0)
         legend_above(figure, *legend_of(panels[0]))
     return Path(path)
 
