@@ -95,7 +95,8 @@ def skeleton_of(antenna: Antenna, mesh: Mesh, wavenumber: float, distance: float
     distance : float
         Smallest distance from the wires [m].
     tolerance : float
-        Relative accuracy of the kernel.
+        Relative accuracy of the kernel in the mean over the proxy points; single points at just the smallest distance may be
+        tens of times worse.
 
     References
     ----------
