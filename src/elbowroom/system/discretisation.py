@@ -308,10 +308,11 @@ def discretise(
             level = placed.tilt_east_deg == 0.0 and placed.tilt_north_deg == 0.0
             image_key = (mesh_key, height, None if level else placed.attitude)
             if image_key not in images:
-                images[image_key] = image_self_block(
+                # Kinds that are turned only share one block, and whatever is made from it.
+                images[image_key] = block + image_self_block(
                     made, frequency_hz, near, height, np.eye(3) if level else placed.orientation, image_counts
                 )
-            block = block + images[image_key]
+            block = images[image_key]
         kind_of[a] = index_of[key] = len(kinds)
         kinds.append(Kind(placed.antenna, made, placed.orientation, height, block))
 

@@ -63,12 +63,11 @@ class SkeletonInteractions:
 
     def prepare(self) -> None:
         """Make all skeletons and weights now, in threads."""
-        d, table = self.discretisation, self.skeletons
-        designs = {(id(kind.antenna), id(kind.mesh)): k for k, kind in enumerate(d.kinds)}
-        levels = range(len(table.distances_m))
+        levels = range(len(self.skeletons.distances_m))
+        self.skeletons.prepare()
         with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
-            list(pool.map(lambda pair: table.of(*pair), [(k, level) for k in designs.values() for level in levels]))
-            list(pool.map(lambda pair: self.weights(*pair), [(k, level) for k in range(len(d.kinds)) for level in levels]))
+            pairs = [(k, level) for k in range(len(self.discretisation.kinds)) for level in levels]
+            list(pool.map(lambda pair: self.weights(*pair), pairs))
 
     def weights(self, kind: int, level: int) -> _SkeletonWeights:
         """Return the skeleton of a kind at a level with the weights of its functions, made once."""
@@ -161,6 +160,12 @@ class SkeletonTable:
         """Return the level that serves wires at a distance [m]; -1 where none does."""
         return int(np.searchsorted(self.distances_m, distance, side="right")) - 1
 
+    def prepare(self) -> None:
+        """Make all skeletons now, in threads."""
+        kinds = {(id(kind.antenna), id(kind.mesh)): k for k, kind in enumerate(self.discretisation.kinds)}
+        with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
+            list(pool.map(lambda pair: self.of(*pair), [(k, v) for k in kinds.values() for v in range(len(self.distances_m))]))
+
     def of(self, kind: int, level: int) -> Skeleton:
         """Return the skeleton of a kind's design at a level, in the antenna's own frame."""
         k = self.discretisation.kinds[kind]
@@ -173,3 +178,55 @@ class SkeletonTable:
                 # The mesh is kept so that its identity stays its own.
                 found = self._made.setdefault(key, (k.mesh, made))
         return found[1]
+
+    def points(self, antenna: int, level: int) -> FloatArray:
+        """Return the skeleton points of an antenna in the station frame, (3, J) [m]."""
+        d = self.discretisation
+        kind, place = d.kinds[d.kind_of[antenna]], d.station.placed[antenna].position
+        own = self.of(int(d.kind_of[antenna]), level).points
+        return np.ascontiguousarray((own @ kind.orientation.T + [place[0], place[1], kind.height]).T)
+
+    def gathered(self, antenna: int, level: int, currents: ComplexArray) -> ComplexArray:
+        """Return what currents (N, R) of an antenna are on its skeleton: x, y, charge, z weights (J, 4, R)."""
+        d = self.discretisation
+        kind, skeleton = d.kinds[d.kind_of[antenna]], self.of(int(d.kind_of[antenna]), level)
+        current, charge = self._factors()
+        along = np.einsum("ij,jqr->iqr", current * kind.orientation, skeleton.currents @ currents)
+        return np.stack([along[0], along[1], charge * (skeleton.charge @ currents), along[2]], axis=1)
+
+    def tested(self, antenna: int, level: int, field: ComplexArray) -> ComplexArray:
+        """Return what fields (J, 4, R) at an antenna's skeleton induce along its unknowns, (N, R) [V]."""
+        d = self.discretisation
+        kind, skeleton = d.kinds[d.kind_of[antenna]], self.of(int(d.kind_of[antenna]), level)
+        current, charge = self._factors()
+        along = np.einsum("ij,qir->jqr", current * kind.orientation, field[:, [0, 1, 3]])
+        induced = skeleton.currents[0].T @ along[0] - charge * (skeleton.charge.T @ field[:, 2])
+        for axis in (1, 2):
+            induced += skeleton.currents[axis].T @ along[axis]
+        # Both factors of Z are imaginary: Z = j (sum of kernels).
+        return np.asarray(1j * induced)
+
+    def _factors(self) -> tuple[float, float]:
+        k = self.discretisation.wavenumber
+        return float(np.sqrt(k * IMPEDANCE_OF_VACUUM / (4.0 * np.pi))), float(np.sqrt(IMPEDANCE_OF_VACUUM / (4.0 * np.pi * k)))
+
+
+def carried_field(
+    ground: GroundKernels, points: FloatArray, sources: FloatArray, weights: ComplexArray, wavenumber: float, work: Workspace
+) -> ComplexArray:
+    """Return the fields (M, 4, R) at points (3, M) of weights (J, 4, R) at sources (3, J), in x, y, charge and z."""
+    kernels = ground.fill(points, sources, wavenumber, work)
+    columns = weights.shape[2]
+    out = np.empty((points.shape[1], 4, columns), dtype=complex)
+    together = kernels.charge is kernels.horizontal
+    parts = ((0, 3, kernels.horizontal), (3, 4, kernels.vertical))
+    if not together:
+        parts = ((0, 2, kernels.horizontal), (2, 3, kernels.charge), (3, 4, kernels.vertical))  # type: ignore[assignment]
+    for first, last, kernel in parts:
+        some = weights[:, first:last].reshape(len(weights), -1)
+        real, imag = np.ascontiguousarray(some.real), np.ascontiguousarray(some.imag)
+        field = np.empty((points.shape[1], real.shape[1]), dtype=complex)
+        field.real = kernel[0] @ real - kernel[1] @ imag
+        field.imag = kernel[0] @ imag + kernel[1] @ real
+        out[:, first:last] = field.reshape(points.shape[1], last - first, columns)
+    return out

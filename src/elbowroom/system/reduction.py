@@ -19,8 +19,10 @@ from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.grounds import FreeSpace
 from elbowroom.geometry.mesh import Mesh
 from elbowroom.kernels.basis import overlap_matrix, slope_coefficients
+from elbowroom.kernels.grounds import Workspace
 from elbowroom.system.assembly import PairFiller
 from elbowroom.system.discretisation import Discretisation, attachments
+from elbowroom.system.interactions import SkeletonTable, carried_field
 from elbowroom.system.plane_waves import direction_frame, kind_vectors
 
 
@@ -44,10 +46,10 @@ class ReductionSettings:
     """
 
     tolerance: float = 1e-3
-    cut_factor: float = 0.3
+    cut_factor: float = 0.13
     neighbour_pairs: int = 24
     skeleton_factor: float = 0.05
-    skeleton_distances_m: tuple[float, ...] = (0.3, 1.0)
+    skeleton_distances_m: tuple[float, ...] = (0.1, 0.3, 1.0)
 
     def __post_init__(self) -> None:
         if not 1e-6 <= self.tolerance <= 0.1:
@@ -84,6 +86,10 @@ def sky_samples(radius: float, wavenumber: float, whole_sphere: bool) -> tuple[F
     return np.array(theta), np.array(phi)
 
 
+ALIKE = 0.8
+"""Ratio from which two functions carry about the same."""
+
+
 @dataclass(frozen=True, eq=False)
 class Candidates:
     """Functions of one kind in the order of what they carry, before they are cut.
@@ -108,8 +114,14 @@ class Candidates:
         return self.functions.shape[1]
 
     def count(self, cut: float) -> int:
-        """Return how many carry more than a part of the first."""
-        return max(self.fewest, int(np.count_nonzero(self.carried > cut)))
+        """Return how many carry more than a part of the first; functions that carry about the same stay together.
+
+        Polarisations of one antenna come in pairs, and half a pair serves one of them and not the other.
+        """
+        count = max(self.fewest, int(np.count_nonzero(self.carried > cut)))
+        while count < self.most and self.carried[count] > ALIKE * self.carried[count - 1]:
+            count += 1
+        return count
 
     def cut(self, cut: float) -> ComplexArray:
         """Return the functions that carry more than a part of the first, (N, n)."""
@@ -122,6 +134,7 @@ def reduced_candidates(
     filler: PairFiller,
     distances: FloatArray,
     answers: KindAnswers,
+    table: SkeletonTable,
 ) -> list[Candidates]:
     """Return the candidates of each kind of antenna, the same for all kinds of one design and mesh.
 
@@ -137,6 +150,8 @@ def reduced_candidates(
         Smallest distances between wires of antennas [m].
     answers : KindAnswers
         What each kind answers to excitations.
+    table : SkeletonTable
+        Skeletons, by which neighbours are heard.
     """
     d = discretisation
     groups: dict[tuple[int, int], list[int]] = {}
@@ -144,7 +159,7 @@ def reduced_candidates(
         groups.setdefault((id(kind.antenna), id(kind.mesh)), []).append(k)
     found: dict[int, Candidates] = {}
     for kinds in groups.values():
-        made = _candidates_of(d, kinds, answers, settings, filler, distances)
+        made = _candidates_of(d, kinds, answers, settings, filler, distances, table)
         found |= dict.fromkeys(kinds, made)
     return [found[k] for k in range(len(d.kinds))]
 
@@ -160,10 +175,12 @@ class KindAnswers:
 
     def factors(self, kind: int) -> tuple:
         """Return the LU factors of the kind's own loaded block."""
-        if kind not in self._factors:
-            k = self.discretisation.kinds[kind]
-            self._factors[kind] = lu_factor(k.self_block + self.attached[k.antenna].structure(k.mesh.gap_vectors))
-        return self._factors[kind]
+        k = self.discretisation.kinds[kind]
+        # Kinds that are turned only share their block.
+        key = id(k.self_block)
+        if key not in self._factors:
+            self._factors[key] = lu_factor(k.self_block + self.attached[k.antenna].structure(k.mesh.gap_vectors))
+        return self._factors[key]
 
     def to(self, kind: int, excitation: ComplexArray | FloatArray) -> ComplexArray:
         """Return the currents (N, R) that excitations (N, R) drive."""
@@ -177,10 +194,11 @@ class KindAnswers:
 
     def to_ports(self, kind: int) -> ComplexArray:
         """Return the currents (N, P) of the kind's own port sources."""
-        if kind not in self._ports:
-            k = self.discretisation.kinds[kind]
-            self._ports[kind] = self.to(kind, self.attached[k.antenna].excitations(k.mesh.gap_vectors))
-        return self._ports[kind]
+        k = self.discretisation.kinds[kind]
+        key = id(k.self_block)
+        if key not in self._ports:
+            self._ports[key] = self.to(kind, self.attached[k.antenna].excitations(k.mesh.gap_vectors))
+        return self._ports[key]
 
 
 def _distinct_blocks(discretisation: Discretisation, kinds: list[int], most: int = 6) -> list[int]:
@@ -202,6 +220,7 @@ def _candidates_of(
     settings: ReductionSettings,
     filler: PairFiller,
     distances: FloatArray,
+    table: SkeletonTable,
 ) -> Candidates:
     mesh = d.kinds[kinds[0]].mesh
     root = cholesky(current_weights(mesh, d.wavenumber), lower=False)
@@ -217,7 +236,7 @@ def _candidates_of(
         answered = root @ answers.to(k, waves.reshape(len(waves), -1))
         # The strongest plane wave counts as much as a port: patterns need it as well as port quantities need the port.
         parts.append(answered / np.linalg.norm(answered, axis=0).max())
-    parts += _neighbour_answers(d, kinds, answers, settings, filler, distances, root)
+    parts += _neighbour_answers(d, kinds, answers, settings, filler, distances, root, table)
     left, size, _ = np.linalg.svd(np.concatenate(parts, axis=1), full_matrices=False)
     # Rounding leaves nothing of use below this.
     useful = int(np.count_nonzero(size > 1e-12 * size[0]))
@@ -233,6 +252,7 @@ def _neighbour_answers(
     filler: PairFiller,
     distances: FloatArray,
     root: FloatArray,
+    table: SkeletonTable,
 ) -> list[ComplexArray]:
     """Return the currents that the nearest antennas, driven at their ports, induce in antennas of some kinds, in the norm."""
     mine = np.flatnonzero(np.isin(d.kind_of, kinds))
@@ -241,10 +261,16 @@ def _neighbour_answers(
         nearest = np.argsort(distances[a])[: settings.neighbour_pairs + 1]
         pairs += [(float(distances[a, b]), int(a), int(b)) for b in nearest if b != a]
     parts: list[ComplexArray] = []
+    work = Workspace()
     for distance, i, j in sorted(pairs)[: settings.neighbour_pairs]:
-        block = filler.block(j, i, distance)
-        source = answers.to_ports(d.kind_of[j])
-        induced = root @ answers.to(d.kind_of[i], -block @ source)
-        own = root @ answers.to_ports(d.kind_of[i])
+        source, level = answers.to_ports(int(d.kind_of[j])), table.level_of(distance)
+        if level < 0:
+            excitation: ComplexArray = filler.block(j, i, distance) @ source
+        else:
+            weights, points = table.gathered(j, level, source), table.points(i, level)
+            field = carried_field(filler.ground, points, table.points(j, level), weights, d.wavenumber, work)
+            excitation = table.tested(i, level, field)
+        induced = root @ answers.to(int(d.kind_of[i]), -excitation)
+        own = root @ answers.to_ports(int(d.kind_of[i]))
         parts.append(induced / np.linalg.norm(own, axis=0).max())
     return parts

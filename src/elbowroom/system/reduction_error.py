@@ -18,7 +18,7 @@ from elbowroom.kernels.grounds import Workspace, ground_kernels
 from elbowroom.system.assembly import PairFiller, available_cores, single_threaded_blas
 from elbowroom.system.discretisation import Discretisation
 from elbowroom.system.factorisation import Factors
-from elbowroom.system.interactions import SkeletonInteractions
+from elbowroom.system.interactions import SkeletonInteractions, SkeletonTable, carried_field
 from elbowroom.system.plane_waves import direction_frame, kind_vectors, phases
 from elbowroom.system.reduction import KindAnswers, sky_samples
 from elbowroom.system.spaces import CurrentSpace
@@ -29,7 +29,7 @@ SAFETY = 2.0
 SAMPLED_ANTENNAS = 8
 """Antennas whose ports are looked at, those with the nearest neighbours among them."""
 
-WHOLE_PAIRS = 8
+WHOLE_PAIRS = 6
 """Pairs at which skeletons are held against all quadrature points: those nearest to where each level begins to serve."""
 
 
@@ -73,6 +73,7 @@ def reduction_error(
     coordinates: ComplexArray,
     excitations: FloatArray | ComplexArray,
     factors: Factors,
+    skeleton: float,
 ) -> ReductionError:
     """Return the stated error of a reduced solution.
 
@@ -96,6 +97,8 @@ def reduction_error(
         Right-hand sides of the unknowns.
     factors : Factors
         Of the reduced matrix: they tell what its rounding does to all antennas together.
+    skeleton : float
+        Error that skeletons cause, from :func:`skeleton_error`.
     """
     d = discretisation
     sample = sampled_antennas(distances)
@@ -103,17 +106,20 @@ def reduction_error(
     currents = space.unknowns(d, coordinates[:, ports])
     residual = excitations[:, ports] - _product(d, interactions, filler, distances, answers, currents)
     correction = np.empty(residual.shape, dtype=complex)
-    for a, k in enumerate(d.kind_of):
-        correction[d.unknowns_of(a)] = answers.to(k, residual[d.unknowns_of(a)])
+    with single_threaded_blas():
+        for a, k in enumerate(d.kind_of):
+            correction[d.unknowns_of(a)] = answers.to(k, residual[d.unknowns_of(a)])
     left = np.empty((space.size, len(ports)), dtype=complex)
     for a, k in enumerate(d.kind_of):
         basis, part = space.bases[k], residual[d.unknowns_of(a)]
         left[space.of(a)] = part if basis is None else basis.T @ part
     rounding = space.unknowns(d, factors.solve(left).astype(np.complex128))
     pattern = float(np.max(np.sum(_relative_fields(d, [correction, rounding], currents), axis=0)))
-    skeleton = _skeleton_error(d, interactions, filler, distances, answers)
     admittance = excitations[:, ports].T @ currents
-    port_matrix = np.linalg.norm(residual.T @ correction) / np.linalg.norm(admittance)
+    # Functions are tested by themselves, so that currents and residual react on one another by rounding alone; what is left out
+    # reacts with the residual.
+    reaction = np.linalg.norm(currents.T @ residual) + np.linalg.norm(residual.T @ correction)
+    port_matrix = reaction / np.linalg.norm(admittance)
     size = np.linalg.norm(currents, axis=0)
     worst = float(np.max(np.linalg.norm(correction, axis=0) / size))
     return ReductionError(SAFETY * (pattern + skeleton), SAFETY * float(port_matrix) + skeleton, worst)
@@ -128,35 +134,15 @@ def _product(
     currents: ComplexArray,
 ) -> ComplexArray:
     """Return the loaded matrix of all unknowns times currents (N, R), other antennas through their skeletons."""
-    n_antennas, ground, columns = len(d.station), ground_kernels(d.station.ground), currents.shape[1]
-    levels = np.vectorize(interactions.skeletons.level_of, otypes=[int])(distances)
-    fine = SkeletonInteractions(d, (None,) * len(d.kinds), interactions.skeletons)
-    positions = d.station.positions
+    n_antennas, ground, table = len(d.station), ground_kernels(d.station.ground), interactions.skeletons
+    levels = np.vectorize(table.level_of, otypes=[int])(distances)
     out = np.empty_like(currents)
-    # Sources of every antenna at every level: its currents gathered on its skeleton.
-    sources: dict[tuple[int, int], tuple[FloatArray, FloatArray]] = {}
-
-    def source(j: int, level: int) -> tuple[FloatArray, FloatArray]:
-        key = (j, level)
-        if key not in sources:
-            w = fine.weights(d.kind_of[j], level)
-            n, mine = w.count, currents[d.unknowns_of(j)]
-            parts = [(w.source[:, c * n : (c + 1) * n] + 1j * w.source[:, (c + 3) * n : (c + 4) * n]) @ mine for c in range(3)]
-            parts.append((w.source[:, 6 * n : 7 * n] + 1j * w.source[:, 7 * n :]) @ mine)
-            flat = np.concatenate(parts, axis=1)
-            points = w.points.copy()
-            points[:2] += positions[j, :2, None]
-            sources[key] = (points, np.concatenate([flat.real, flat.imag], axis=1))
-        return sources[key]
-
-    for level in range(len(interactions.skeletons.distances_m)):
-        for j in range(n_antennas):
-            if (levels[:, j] == level).any():
-                source(j, level)
+    # Every antenna's currents gathered on its skeleton, at each level at which another antenna hears it.
+    heard = [(j, level) for level in range(len(table.distances_m)) for j in range(n_antennas) if (levels[:, j] == level).any()]
 
     def row(i: int) -> None:
         work = Workspace()
-        total = answers.product(d.kind_of[i], currents[d.unknowns_of(i)])
+        total = answers.product(int(d.kind_of[i]), currents[d.unknowns_of(i)])
         others = np.flatnonzero(np.arange(n_antennas) != i)
         for level in np.unique(levels[i, others]):
             chosen = others[levels[i, others] == level]
@@ -166,30 +152,19 @@ def _product(
                     block = filler.block(low, high, distances[i, j])
                     total += (block if low == j else block.T) @ currents[d.unknowns_of(j)]
                 continue
-            mine = fine.weights(d.kind_of[i], int(level))
-            points = mine.points.copy()
-            points[:2] += positions[i, :2, None]
+            points = table.points(i, int(level))
+            field: ComplexArray | float = 0.0
             for first in range(0, len(chosen), 16):
-                batch = [source(int(j), int(level)) for j in chosen[first : first + 16]]
+                batch = [sources[int(j), int(level)] for j in chosen[first : first + 16]]
                 theirs = np.concatenate([b[0] for b in batch], axis=1)
                 weights = np.concatenate([b[1] for b in batch])
-                kernels = ground.fill(points, theirs, d.wavenumber, work)
-                # Real parts of all weights first, then imaginary parts; x, y, charge, z currents in each half.
-                field = np.empty((points.shape[1], 4, columns), dtype=complex)
-                for c, kernel in enumerate((kernels.horizontal, kernels.horizontal, kernels.charge, kernels.vertical)):
-                    if c == 1:
-                        continue
-                    own = slice(c * columns, (c + 2 if c == 0 else c + 1) * columns)
-                    mixed = slice(own.start + 4 * columns, own.stop + 4 * columns)
-                    real, imag = weights[:, own], weights[:, mixed]
-                    part = field[:, c : own.stop // columns].reshape(points.shape[1], -1)
-                    part.real = kernel[0] @ real - kernel[1] @ imag
-                    part.imag = kernel[0] @ imag + kernel[1] @ real
-                    field[:, c : own.stop // columns] = part.reshape(points.shape[1], -1, columns)
-                total += 1j * (mine.test @ field.reshape(-1, columns))
+                field = field + carried_field(ground, points, theirs, weights, d.wavenumber, work)
+            total += table.tested(i, int(level), field)  # type: ignore[arg-type]
         out[d.unknowns_of(i)] = total
 
     with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
+        gathered = pool.map(lambda key: table.gathered(key[0], key[1], currents[d.unknowns_of(key[0])]), heard)
+        sources = {key: (table.points(*key), weights) for key, weights in zip(heard, gathered, strict=True)}
         list(pool.map(row, range(n_antennas)))
     return out
 
@@ -221,9 +196,9 @@ def _relative_fields(d: Discretisation, corrections: list[ComplexArray], current
     return np.asarray(split[:-1] / split[-1])
 
 
-def _skeleton_error(
-    d: Discretisation,
-    interactions: SkeletonInteractions,
+def skeleton_error(
+    discretisation: Discretisation,
+    table: SkeletonTable,
     filler: PairFiller,
     distances: FloatArray,
     answers: KindAnswers,
@@ -233,24 +208,27 @@ def _skeleton_error(
     What a skeleton gets wrong falls with distance from where its level begins, so these pairs stand above all others; what each
     antenna gets wrong by all its neighbours adds up by chance, as the errors at different antennas do.
     """
-    fine = SkeletonInteractions(d, (None,) * len(d.kinds), interactions.skeletons)
+    d, ground = discretisation, ground_kernels(discretisation.station.ground)
     n = len(d.station)
     first, second = np.triu_indices(n, 1)
-    levels = np.vectorize(interactions.skeletons.level_of, otypes=[int])(distances[first, second]) if n > 1 else np.zeros(0, int)
+    levels = np.vectorize(table.level_of, otypes=[int])(distances[first, second]) if n > 1 else np.zeros(0, int)
     chosen: list[tuple[int, int, int, int]] = []
     for level in np.unique(levels[levels >= 0]):
         here = np.flatnonzero(levels == level)
         nearest = here[np.argsort(distances[first[here], second[here]], kind="stable")]
-        most = max(1, WHOLE_PAIRS // len(interactions.skeletons.distances_m))
+        most = max(1, WHOLE_PAIRS // len(table.distances_m))
         chosen += [(int(first[q]), int(second[q]), int(level), len(here)) for q in nearest[:most]]
 
     def share(pair: tuple[int, int, int, int]) -> tuple[int, float, int]:
         i, j, level, count = pair
-        off = filler.block(i, j, distances[i, j]) - fine.blocks(i, np.array([j]), level)[0]
+        full = filler.block(i, j, distances[i, j])
         sizes = []
-        for a, b, block in ((j, i, off), (i, j, off.T)):
-            mine, theirs = answers.to_ports(d.kind_of[a]), answers.to_ports(d.kind_of[b])
-            sizes.append(np.linalg.norm(answers.to(d.kind_of[a], block @ theirs)) / np.linalg.norm(mine))
+        for a, b, block in ((j, i, full), (i, j, full.T)):
+            mine, theirs = answers.to_ports(int(d.kind_of[a])), answers.to_ports(int(d.kind_of[b]))
+            weights, points = table.gathered(b, level, theirs), table.points(a, level)
+            field = carried_field(ground, points, table.points(b, level), weights, d.wavenumber, Workspace())
+            off = block @ theirs - table.tested(a, level, field)
+            sizes.append(np.linalg.norm(answers.to(int(d.kind_of[a]), off)) / np.linalg.norm(mine))
         return level, float(max(sizes)), count
 
     total: dict[int, tuple[float, int]] = {}

@@ -4,13 +4,13 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 
 import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import SolveError
-from elbowroom.geometry.mesh import MESHES
+from elbowroom.geometry.mesh import finer_mesh
 from elbowroom.geometry.stations import Station
 from elbowroom.system.assembly import Progress, assemble
 from elbowroom.system.discretisation import Discretisation, attachments, discretise
@@ -147,8 +147,7 @@ def solve_isolated(discretisation: Discretisation, reference_ohm: float = REFERE
 def mesh_error(discretisation: Discretisation, isolated: list[PortCurrents]) -> float:
     """Return how far the mesh leaves each design's port admittance from that of a finer mesh, alone over the ground.
 
-    The finer mesh is the ``refined`` setting, or one order higher with half the elements at ends and gaps where that is what
-    is used already; its own error is several times smaller, so that the change stands for the error.
+    The finer mesh is that of :func:`elbowroom.geometry.mesh.finer_mesh`.
 
     Parameters
     ----------
@@ -162,14 +161,7 @@ def mesh_error(discretisation: Discretisation, isolated: list[PortCurrents]) -> 
     float
         Largest |Y - Y_fine| / |Y_fine| over the designs (Frobenius norms).
     """
-    used, refined = discretisation.mesh, MESHES["refined"]
-    if used.order < refined.order:
-        finer = refined
-    else:
-        finer = replace(
-            used, order=min(used.order + 1, 8), end_radii=0.5 * used.end_radii, gap_radii=0.5 * used.gap_radii,
-            floor_wavelengths=0.5 * used.floor_wavelengths,
-        )  # fmt: skip
+    finer = finer_mesh(discretisation.mesh)
     worst = 0.0
     seen: list[object] = []
     for k, kind in enumerate(discretisation.kinds):

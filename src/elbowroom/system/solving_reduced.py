@@ -21,7 +21,7 @@ from elbowroom.system.discretisation import Discretisation, attachments
 from elbowroom.system.factorisation import TiledSymmetric
 from elbowroom.system.interactions import SkeletonInteractions, SkeletonTable
 from elbowroom.system.reduction import KindAnswers, ReductionSettings, reduced_candidates
-from elbowroom.system.reduction_error import reduction_error
+from elbowroom.system.reduction_error import reduction_error, skeleton_error
 from elbowroom.system.solving import REFERENCE_OHM, PortCurrents, SolveStatistics, port_excitations
 from elbowroom.system.spaces import CurrentSpace, reduced_space
 
@@ -96,10 +96,13 @@ def assemble_reduced(
             tile[columns.start - left : columns.stop - left, rows.start - top : rows.stop - top] = block.T
 
     own: dict[int, ComplexArray] = {}
+    made: dict[int, ComplexArray] = {}
     for k, kind in enumerate(d.kinds):
-        basis = space.bases[k]
-        loaded = kind.self_block + attached[kind.antenna].structure(kind.mesh.gap_vectors)
-        own[k] = loaded if basis is None else basis.T @ loaded @ basis
+        basis, key = space.bases[k], id(kind.self_block)
+        if key not in made:
+            loaded = kind.self_block + attached[kind.antenna].structure(kind.mesh.gap_vectors)
+            made[key] = loaded if basis is None else basis.T @ loaded @ basis
+        own[k] = made[key]
 
     def fill_row(i: int) -> None:
         place(i, i, own[d.kind_of[i]])
@@ -166,7 +169,8 @@ def solve_reduced(
     table = SkeletonTable(d, settings.skeleton_distances_m, settings.skeleton_factor * settings.tolerance)
     with single_threaded_blas():
         # Matrices of one antenna: threads of BLAS would cost more than they save.
-        candidates = reduced_candidates(d, settings, filler, distances, answers)
+        candidates = reduced_candidates(d, settings, filler, distances, answers, table)
+    skeleton: float | None = None
     excitations, own = port_excitations(d, reference_ohm)
     lap("functions")
     cut = settings.cut_factor * np.sqrt(settings.tolerance)
@@ -190,7 +194,9 @@ def solve_reduced(
         x = factors.solve(right).astype(np.complex128)
         admittance = own + right.T @ x
         lap("port excitations")
-        error = reduction_error(d, space, interactions, filler, distances, answers, x, excitations, factors)
+        if skeleton is None:
+            skeleton = skeleton_error(d, table, filler, distances, answers)
+        error = reduction_error(d, space, interactions, filler, distances, answers, x, excitations, factors, skeleton)
         lap("error estimate")
         everything = all(c.count(cut) == c.most for c in candidates)
         if error.pattern <= settings.tolerance or everything or attempt == MOST_ATTEMPTS - 1:
