@@ -19,7 +19,7 @@ from elbowroom.job.compare import (
     FLOOR_DB,
     MEANINGS,
     BeamComparison,
-    _refined_peak,
+    refined_peak,
     compare_beams,
     decibels,
     half_power_width_deg,
@@ -78,11 +78,11 @@ def test_main_lobe__stops_at_the_null_around_it_and_crosses_the_zenith():
 
 
 @pytest.mark.parametrize(("theta", "phi"), [(0.0, 0.0), (0.55, 2.1), (0.031, 4.0), (1.2, -1.0)])
-def test_refined_peak__lies_between_grid_points(theta, phi):
+def testrefined_peak__lies_between_grid_points(theta, phi):
     grid = hemisphere_grid(2.0)
     true = unit_vectors(theta + 0.006 if theta else 0.0, phi + 0.007 if theta else 0.0)
     power = np.exp(-4 * np.log(2) * (np.arccos(np.clip(grid.unit_vectors() @ true, -1, 1)) / np.radians(30.0)) ** 2)
-    _, peak = _refined_peak(power, grid)
+    _, peak = refined_peak(power, grid)
     assert np.degrees(np.arccos(np.clip(peak @ true, -1, 1))) < 0.05
 
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, field
-from math import inf
+from math import hypot, inf
 
 from elbowroom.base.errors import GeometryError
 from elbowroom.geometry.networks import FeedPoint, Network, resolve_nodes
@@ -224,6 +224,12 @@ class Antenna:
         distance = self.network.distances(node)
         reached = [distance.get(gap, inf) for gap in self.nodes[: len(self.gaps)]]
         return reached.index(min(reached))
+
+    def has_level_polarisation(self, port: int) -> bool:
+        """Return whether a port, by index, has a direction of co-polarisation at the zenith, as upright wires have not."""
+        wire = self.wires[self.port_gaps[port].wire]
+        across = hypot(wire.end[0] - wire.start[0], wire.end[1] - wire.start[1])
+        return self.ports[port].nominal_azimuth_deg is not None or across > 1e-6 * wire.length
 
     def port_index(self, name: str) -> int:
         """Return the index of the port of that name; raise GeometryError when there is none."""

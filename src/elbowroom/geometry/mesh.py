@@ -97,6 +97,21 @@ def mesh_settings(mesh: str | MeshSettings) -> MeshSettings:
     return MESHES[mesh]
 
 
+def finer_mesh(settings: MeshSettings) -> MeshSettings:
+    """Return a mesh whose error is several times smaller, so that the change of a result stands for its error.
+
+    That is the ``refined`` setting, or one order higher with half the elements at ends and gaps where ``refined``, or an order
+    as high, is used already.
+    """
+    refined = MESHES["refined"]
+    if settings.order < refined.order:
+        return refined
+    return replace(
+        settings, order=min(settings.order + 1, 8), end_radii=0.5 * settings.end_radii, gap_radii=0.5 * settings.gap_radii,
+        floor_wavelengths=0.5 * settings.floor_wavelengths,
+    )  # fmt: skip
+
+
 def one_order_up(settings: MeshSettings) -> MeshSettings:
     """Return the same mesh with the next order: the nested pair that error estimates compare."""
     return replace(settings, order=settings.order + 1)

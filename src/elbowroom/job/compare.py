@@ -178,12 +178,12 @@ def half_power_width_deg(angle_deg: FloatArray, power: FloatArray) -> float:
     return float(sum(sides))
 
 
-def _refined_peak(power: FloatArray, directions: Directions) -> tuple[int, np.ndarray]:
-    """Return the index of the largest grid point and the unit vector of the peak between grid points.
+def refined_peak(power: FloatArray, directions: Directions, best: int | None = None) -> tuple[int, np.ndarray]:
+    """Return the index of the largest grid point, or the one given, and the unit vector of the peak between grid points.
 
     A paraboloid in the two direction cosines across the grid's peak is fitted to the points within three steps.
     """
-    best = int(np.argmax(power))
+    best = int(np.argmax(power)) if best is None else best
     unit = directions.unit_vectors()
     centre = unit[best]
     rows, _ = directions.shape or (1, len(directions))
@@ -262,7 +262,7 @@ def _shape(fields_: BeamFields, index: int, which: str, nominal: float) -> _Shap
     d = fields_.directions
     field = getattr(fields_, which)[index]
     power = total_power(field)
-    best, peak = _refined_peak(power, d)
+    best, peak = refined_peak(power, d)
     lobe = main_lobe(power.reshape(d.shape), best).ravel()
     outside = ~lobe
     weights = d.weights_sr
