@@ -147,9 +147,8 @@ def test_folder__whose_parent_is_a_file__is_refused(command, job, what):
     outcome = command("run", job, "--quiet")
     refused(outcome, 6 if what == "store" else 7, "taken")
     assert (job.parent / "taken").read_text() == "a file"
-    if what == "results":
-        # what was solved is kept
-        assert list((job.parent / "store").rglob("*.h5"))
+    # told before anything is solved in vain
+    assert not list(job.parent.rglob("*.h5"))
 
 
 def stored(job):
@@ -209,6 +208,8 @@ def test_frequency__that_the_job_has_not__is_refused(command, job):
 def test_export__with_options_that_do_not_fit__is_refused(command, job):
     assert command("solve", job, "--quiet").code == 0
     refused(command("export", job, "--step-deg", 7), 3, "divides 90")
+    refused(command("export", job, "--step-deg", 0), 2, "0.05")
+    refused(command("export", job, "--step-deg", "1e-9"), 2, "0.05")
     refused(command("export", job, "--format", "csv", "--elements"), 7, "HDF5 only")
     refused(command("export", job, "--format", "fits"), 2, "fits")
 
@@ -256,3 +257,86 @@ def test_stored_file__opens_with_plain_h5py(command, job):
         names: list[str] = []
         file.visit(names.append)
         assert any(name.endswith("loaded_admittance_s") for name in names)
+
+
+@pytest.mark.parametrize("victim", ["job.toml", "layout.csv", "antenna.toml", "store/x.h5"])
+@pytest.mark.parametrize("verb", ["compare", "export"])
+def test_results__never_go_over_the_job_s_own_files(command, job, victim, verb):
+    assert command("solve", job, "--quiet").code == 0
+    target = job.parent / victim
+    before = target.read_bytes() if target.exists() else None
+    refused(command(verb, job, "--output", target), 7, victim.split("/")[-1])
+    assert (target.read_bytes() if target.exists() else None) == before
+
+
+def test_results__never_replace_what_is_no_plain_file(command, job, tmp_path):
+    import os
+    import stat
+
+    assert command("solve", job, "--quiet").code == 0
+    pipe = tmp_path / "pipe"
+    os.mkfifo(pipe)
+    refused(command("export", job, "--output", pipe), 7, "pipe")
+    assert stat.S_ISFIFO(pipe.stat().st_mode)
+    refused(command("export", job, "--output", tmp_path), 7, "folder")
+
+
+def test_layout__over_a_file__needs_to_be_told(command, tmp_path):
+    target = tmp_path / "l.csv"
+    target.write_text("mine")
+    arguments = ("layout", "grid", target, "--columns", 2, "--rows", 2, "--spacing-m", 2)
+    refused(command(*arguments), 2, "--replace")
+    assert target.read_text() == "mine"
+    assert command(*arguments, "--replace").code == 0
+    assert "--spacing-m 2" in target.read_text()
+    refused(command("layout", "grid", tmp_path / "m.csv", "--columns", 100000, "--rows", 100000, "--spacing-m", 2), 2, "at most")
+    refused(command("layout", "disc", tmp_path / "m.csv", "--rings", "1,6"), 2, "--rings has no meaning")
+
+
+def test_job__with_frequencies_a_tenth_of_a_hertz_apart__is_refused(command, job, change):
+    change(job, "[110e6]", "[110e6, 110000000.1]")
+    refused(command("inspect", job), 2, "differ by less than 1 Hz")
+
+
+@pytest.mark.parametrize("key", ["turn_deg = 0.0", "shift_east_m = 0.0"])
+def test_station__turned_or_shifted_beyond_reason__is_refused(command, job, change, key):
+    change(job, key, key.replace("0.0", "1e12"))
+    refused(command("inspect", job), 2, key.split()[0])
+
+
+def test_beam__over_ports_of_many_directions__is_doubted(command, job, change):
+    change(job.parent / "layout.csv", "1.387,-0.367,0.0,0.0", "1.387,-0.367,0.0,75.0")
+    outcome = command("inspect", job)
+    assert outcome.code == 0
+    assert "directions lie up to" in outcome.out
+
+
+def test_truncated_unit__is_told_by_commands_that_need_it(command, job):
+    assert command("solve", job, "--quiet").code == 0
+    path = stored(job)
+    path.write_bytes(path.read_bytes()[:500])
+    refused(command("compare", job), 6, "damaged")
+
+
+def test_flipped_bit__is_told_by_commands_that_need_it_and_nothing_is_solved(command, job):
+    assert command("solve", job, "--quiet").code == 0
+    path = stored(job)
+    content = bytearray(path.read_bytes())
+    content[len(content) // 2] ^= 1
+    path.write_bytes(content)
+    refused(command("compare", job), 6, "damaged")
+
+
+def test_output_folder__that_is_a_file__is_told_before_anything_is_solved(command, job, change):
+    change(job, 'folder = "results"', 'folder = "layout.csv"')
+    refused(command("run", job), 7, "layout.csv")
+    assert not (job.parent / "store").exists()
+
+
+@pytest.mark.parametrize(("closed", "code"), [("stdout", 0), ("full", 7)])
+def test_screen__closed_or_full__leaves_no_trace_back(job, closed, code):
+    arguments = f"{sys.executable} -m elbowroom inspect {job}"
+    tail = ">&-" if closed == "stdout" else "> /dev/full"
+    done = subprocess.run(["bash", "-c", f"{arguments} {tail}"], capture_output=True, text=True, check=False)
+    assert "Traceback" not in done.stderr
+    assert done.returncode == code

@@ -190,3 +190,25 @@ def test_second_run__compiles_nothing(job):
 def test_readable_numbers():
     assert [readable_bytes(n) for n in (10, 2048, 5 << 20, 3 << 30)] == ["10 B", "2.0 KiB", "5.0 MiB", "3.00 GiB"]
     assert [readable_seconds(n) for n in (12.34, 600, 7200)] == ["12.3 s", "10.0 min", "2.0 h"]
+
+
+def test_tables__keep_their_units_and_fit_narrow_screens(command, job, monkeypatch):
+    assert command("solve", job, "--quiet").code == 0
+    wide = command("compare", job)
+    assert "[deg]" in wide.out
+    assert "[dB]" in wide.out
+    monkeypatch.setenv("COLUMNS", "50")
+    narrow = command("compare", job)
+    assert "peak shift [deg]: " in narrow.out
+    assert max(map(len, narrow.out.splitlines())) < 250
+
+
+def test_terminated_run__says_so(job):
+    process = subprocess.Popen(
+        [sys.executable, "-m", "elbowroom", "run", str(job)], stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
+    )
+    process.stdout.readline()
+    process.terminate()
+    _, err = process.communicate(timeout=60)
+    assert process.returncode == 143
+    assert "terminated" in err

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import sys
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -116,8 +117,50 @@ def require_stored(run: JobRun) -> None:
     missing = [f for f in run.frequencies_hz if run.key(f) not in run.store]
     if missing:
         shown = ", ".join(f"{f / 1e6:g} MHz" for f in missing[:5]) + (", ..." if len(missing) > 5 else "")
+        broken = sum(run.path_of(f).exists() for f in missing)
+        damaged = f"; {broken} of their files in the store are damaged" if broken else ""
         msg = (
-            f"{len(missing)} of {len(run.frequencies_hz)} frequencies are not solved yet ({shown}); "
+            f"{len(missing)} of {len(run.frequencies_hz)} frequencies are not solved yet ({shown}){damaged}; "
             f"'elbowroom solve {run.job.path}' solves them, 'elbowroom run' does everything"
         )
         raise StoreError(msg, path=run.job.store_folder)
+
+
+def checked_output(run: JobRun, path: Path) -> Path:
+    """Return where a file may be written: not over the job's own files, nor into its store.
+
+    Raises
+    ------
+    ExportError
+        Naming what stands there.
+    """
+    from elbowroom.base.errors import ExportError
+
+    target, job = path.resolve(), run.job
+    own = [job.path, job.layout_path, *job.antenna_paths.values(), *([job.as_built_path] if job.as_built_path else [])]
+    if any(target == Path(p).resolve() for p in own):
+        msg = f"cannot write {path}: it is a file of the job itself"
+        raise ExportError(msg)
+    if target.is_relative_to(job.store_folder.resolve()):
+        msg = f"cannot write {path}: it lies in the job's store"
+        raise ExportError(msg)
+    return path
+
+
+def checked_folder(folder: Path) -> Path:
+    """Return a folder for results that can be made, so that nothing is worked out in vain; nothing is made yet.
+
+    Raises
+    ------
+    ExportError
+        If a file stands in its way, or nothing can be written there.
+    """
+    from elbowroom.base.errors import ExportError
+
+    place = folder.absolute()
+    while not place.exists() and place != place.parent:
+        place = place.parent
+    if not place.is_dir() or not os.access(place, os.W_OK):
+        msg = f"cannot write into {folder}: {place} {'cannot be written' if place.is_dir() else 'is a file'}"
+        raise ExportError(msg)
+    return folder

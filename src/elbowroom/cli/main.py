@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import os
+import signal
 import sys
 from pathlib import Path
 from typing import Any
@@ -9,11 +11,17 @@ from typing import Any
 import click
 
 from elbowroom import __version__
-from elbowroom.base.errors import ElbowroomError
+from elbowroom.base.errors import ElbowroomError, ExportError
+from elbowroom.cli.antenna import antenna
 from elbowroom.cli.common import FREQUENCIES, JOB, exit_on, make_screen, modes, open_job, solve_all
 from elbowroom.cli.results import compare, draw, export, run
 
 INTERRUPTED_EXIT_CODE = 130
+TERMINATED_EXIT_CODE = 143
+CLOSED_PIPE_EXIT_CODE = 141
+
+MOST_ANTENNAS = 20_000
+"""Of a layout that is made here: far more than any station that can be solved."""
 
 
 @click.group(
@@ -55,13 +63,34 @@ def start(folder: Path, template: str) -> None:
 @click.option("--turn", default="0", show_default=True, help="Turn of every antenna [deg], or 'random'.")
 @click.option("--seed", type=int, default=1, show_default=True, help="Seed of everything random.")
 @click.option("--antenna", default="", help="Design named in the antenna column.")
+@click.option("--replace", is_flag=True, help="Write over FILE if it exists.")
 def layout(
     kind: str, file: Path, count: int | None, radius_m: float | None, spacing_m: float | None, ring_counts: str | None,
-    columns: int | None, rows: int | None, arms: int | None, turn: str, seed: int, antenna: str,
+    columns: int | None, rows: int | None, arms: int | None, turn: str, seed: int, antenna: str, replace: bool,
 ) -> None:  # fmt: skip
     """Make a layout of KIND and write it to FILE as CSV."""
     from elbowroom.geometry import arrangements
     from elbowroom.geometry.layouts import closest_spacing, diameter, write_layout
+
+    if file.exists() and not replace:
+        msg = f"{file} exists already; another name, or --replace, is needed"
+        raise click.UsageError(msg)
+    uses = {
+        "disc": ("count", "radius_m", "spacing_m"), "rings": ("rings", "spacing_m"), "spiral": ("count", "radius_m", "arms"),
+        "grid": ("columns", "rows", "spacing_m"),
+    }[kind]  # fmt: skip
+    given = {
+        "count": count, "radius_m": radius_m, "spacing_m": spacing_m, "rings": ring_counts, "columns": columns, "rows": rows,
+        "arms": arms,
+    }  # fmt: skip
+    for name, value in given.items():
+        if value is not None and name not in uses:
+            msg = f"--{name.replace('_', '-')} has no meaning for a {kind}"
+            raise click.UsageError(msg)
+    numbers = [int(n) for n in (count, (columns or 0) * (rows or 0)) if n]
+    if numbers and max(numbers) > MOST_ANTENNAS:
+        msg = f"{max(numbers)} antennas: expected at most {MOST_ANTENNAS}"
+        raise click.UsageError(msg)
 
     def need(**options: Any) -> None:
         absent = [name for name, value in options.items() if value is None]
@@ -92,7 +121,8 @@ def layout(
     else:
         need(columns=columns, rows=rows, spacing_m=spacing_m)
         made = arrangements.grid(columns, rows, spacing_m, seed=seed, **common)  # type: ignore[arg-type]
-    write_layout(made, file, header_comment=f"made by elbowroom layout {kind}, seed {seed}")
+    described = " ".join(f"--{name.replace('_', '-')} {value}" for name, value in given.items() if value is not None)
+    write_layout(made, file, header_comment=f"made by elbowroom layout {kind} {described} --seed {seed} --turn {turn}")
     spacing = f", closest pair {closest_spacing(made):.4g} m" if len(made) > 1 else ""
     click.echo(f"wrote {file}: {len(made)} antennas, {diameter(made):.4g} m across{spacing}")
 
@@ -117,7 +147,8 @@ def inspect(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> N
     errors = [p for p in problems if p.severity == "error"]
     if screen.mode != "json":
         for problem in problems:
-            screen.out.print(f"{problem.severity}: {problem.text}", markup=False)
+            where = screen.error if problem.severity == "error" else screen.out
+            where.print(f"{problem.severity}: {problem.text}", markup=False)
         if not problems:
             screen.say("no problems found in the model")
     if not errors:
@@ -160,18 +191,33 @@ def solve(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> Non
     exit_on(failures)
 
 
-for _command in (compare, draw, export, run):
+for _command in (antenna, compare, draw, export, run):
     cli.add_command(_command)
+
+
+class _Terminated(BaseException):
+    """The process was asked to end."""
+
+
+def _terminated(number: int, frame: object) -> None:
+    raise _Terminated
 
 
 def main() -> None:
     """Run a command; say what is wrong in one message and end with the code of its kind."""
+    for name in ("stdout", "stderr"):
+        if getattr(sys, name) is None:  # closed by whoever started us
+            setattr(sys, name, open(os.devnull, "w"))
+    signal.signal(signal.SIGTERM, _terminated)
     try:
         code = cli.main(standalone_mode=False)
         sys.exit(code if isinstance(code, int) else 0)
     except click.ClickException as error:
         error.show()
         sys.exit(error.exit_code)
+    except _Terminated:
+        click.echo("terminated: what was finished is in the store, and the next run goes on from there", err=True)
+        sys.exit(TERMINATED_EXIT_CODE)
     except (click.Abort, KeyboardInterrupt):
         click.echo("interrupted: what was finished is in the store, and the next run goes on from there", err=True)
         sys.exit(INTERRUPTED_EXIT_CODE)
@@ -181,7 +227,11 @@ def main() -> None:
     except BrokenPipeError:
         # The reader of our output has gone; nothing more can be said to it.
         sys.stderr.close()
-        sys.exit(1)
+        sys.exit(CLOSED_PIPE_EXIT_CODE)
+    except OSError as error:
+        # Whatever concerns files of jobs, stores and results has been said above; this is the screen.
+        click.echo(f"error: cannot write to the screen or read a file: {error}", err=True)
+        sys.exit(ExportError.exit_code)
 
 
 if __name__ == "__main__":

@@ -9,7 +9,18 @@ from typing import TYPE_CHECKING
 
 import click
 
-from elbowroom.cli.common import FREQUENCIES, JOB, exit_on, make_screen, modes, open_job, require_stored, solve_all
+from elbowroom.cli.common import (
+    FREQUENCIES,
+    JOB,
+    checked_folder,
+    checked_output,
+    exit_on,
+    make_screen,
+    modes,
+    open_job,
+    require_stored,
+    solve_all,
+)
 
 if TYPE_CHECKING:
     from elbowroom.cli.screen import Screen
@@ -19,15 +30,17 @@ if TYPE_CHECKING:
     from elbowroom.job.pipeline import JobRun
 
 COMPARISON_FILE = "comparison.csv"
+SMALLEST_STEP_DEG = 0.05
 TABLE_FILES = {"hdf5": "beams.h5", "csv": "beams.csv"}
 
 SHOWN = {
     "peak [dB]": "peak_change_db",
+    "peak off pointing [deg]": "coupled_peak_offset_deg",
     "peak shift [deg]": "peak_shift_deg",
     "width up [deg]": "coupled_width_up_deg",
-    "isolated": "isolated_width_up_deg",
+    "isolated width up [deg]": "isolated_width_up_deg",
     "sidelobe [dB]": "coupled_sidelobe_db",
-    "isolated ": "isolated_sidelobe_db",
+    "isolated sidelobe [dB]": "isolated_sidelobe_db",
     "largest difference [dB]": "largest_difference_db",
     "main lobe shape [dB]": "main_lobe_shape_difference_db",
     "antenna spread [dB]": "antenna_spread_db",
@@ -40,9 +53,9 @@ def _fields(run: JobRun, step_deg: float | None = None) -> Iterator[BeamFields]:
     from elbowroom.geometry.directions import hemisphere_grid
     from elbowroom.job.beamfields import beam_fields
 
-    directions = hemisphere_grid(step_deg or run.job.sky_step_deg)
+    directions = hemisphere_grid(run.job.sky_step_deg if step_deg is None else step_deg)
     for frequency in run.frequencies_hz:
-        yield beam_fields(run.solution(frequency), run.job.beams, directions, run.termination_at(frequency))
+        yield beam_fields(run.stored_solution(frequency), run.job.beams, directions, run.termination_at(frequency))
 
 
 def _show_comparison(rows: list[BeamComparison], screen: Screen, path: Path) -> None:
@@ -53,9 +66,15 @@ def _show_comparison(rows: list[BeamComparison], screen: Screen, path: Path) -> 
     for row in rows:
         screen.emit("comparison", **{k: None if isinstance(v, float) and math.isnan(v) else v for k, v in asdict(row).items()})
     screen.say(
-        "peak: coupled over isolated; shape: what is left in the main lobe after the best complex factor; "
-        "spread: of the antennas' patterns where the beam points"
+        "peak: coupled over isolated; widths: at half power, of the lobe at the peak, up through the zenith; shape: what is left "
+        "in the main lobe after the best complex factor; spread: of the antennas' patterns where the beam points"
     )
+    away = [r for r in rows if r.coupled_peak_offset_deg > 0.5 * max(r.coupled_width_up_deg, r.coupled_width_across_deg, 1.0)]
+    for r in away:
+        screen.warn(
+            f"beam {r.beam!r} at {r.frequency_hz / 1e6:g} MHz peaks {r.coupled_peak_offset_deg:.0f} deg from where it points; "
+            "its widths and lobe figures are those of the lobe at the peak"
+        )
     screen.wrote(path, "all figures and what they mean")
 
 
@@ -78,7 +97,7 @@ def compare(job: Path, frequencies_hz: tuple[float, ...], output: Path | None, m
     screen = make_screen(mode)
     run_ = open_job(job, frequencies_hz, screen)
     require_stored(run_)
-    path = output or run_.job.output_folder / COMPARISON_FILE
+    path = checked_output(run_, output or run_.job.output_folder / COMPARISON_FILE)
     rows = [row for fields in _fields(run_) for row in compare_beams(fields)]
     _write_comparison(run_, rows, path)
     _show_comparison(rows, screen, path)
@@ -89,7 +108,11 @@ def compare(job: Path, frequencies_hz: tuple[float, ...], output: Path | None, m
 @FREQUENCIES
 @click.option("--format", "format_", type=click.Choice(["hdf5", "csv"]), default="hdf5", show_default=True, help="Kind of file.")
 @click.option("--output", type=click.Path(path_type=Path), help="By default beams.h5 or beams.csv in the job's output folder.")
-@click.option("--step-deg", type=float, help="Step of the grid of directions [deg], dividing 90; that of the job by default.")
+@click.option(
+    "--step-deg",
+    type=click.FloatRange(SMALLEST_STEP_DEG, 90.0),
+    help="Step of the grid of directions [deg], dividing 90; that of the job by default.",
+)
 @click.option(
     "--components", type=click.Choice(["theta-phi", "co-cross"]), default="theta-phi", show_default=True,
     help="Field components; co-cross is Ludwig's third definition.",
@@ -115,7 +138,7 @@ def export(
     run_ = open_job(job, frequencies_hz, screen)
     settings = TableSettings(components, normalisation, elements, single)
     require_stored(run_)
-    path = output or run_.job.output_folder / TABLE_FILES[format_]
+    path = checked_output(run_, output or run_.job.output_folder / TABLE_FILES[format_])
     about = {"settings": settings, "title": run_.job.title, "job_text": run_.job.text}
     if format_ == "hdf5":
         export_hdf5(path, _fields(run_, step_deg), len(run_.frequencies_hz), **about)  # type: ignore[arg-type]
@@ -218,7 +241,7 @@ def draw(
     """Draw a solved JOB: layout, port impedance over frequency, all-sky maps, cuts, and how much the antennas differ."""
     screen = make_screen(mode)
     run_ = open_job(job, frequencies_hz, screen)
-    folder = output or run_.job.output_folder
+    folder = checked_folder(output or run_.job.output_folder)
     if not layout_only:
         require_stored(run_)
     pictures = _Pictures(run_, folder, screen, _drawn_frequencies(run_, frequencies_hz, screen), component)
@@ -244,6 +267,7 @@ def run(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> None:
 
     screen = make_screen(mode)
     run_ = open_job(job, frequencies_hz, screen)
+    checked_folder(run_.job.output_folder)
     solved, failures = solve_all(run_, screen)
     if not solved:
         exit_on(failures)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import os
 import sys
 import time
 from collections.abc import Sequence
@@ -13,6 +14,7 @@ from typing import Any, ClassVar
 from rich.console import Console
 from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn, TimeRemainingColumn
 from rich.table import Table
+from rich.text import Text
 
 
 def readable_bytes(count: float) -> str:
@@ -52,7 +54,7 @@ class Screen:
 
     def __init__(self, mode: str = "normal") -> None:
         self.mode = mode
-        width = None if sys.stdout.isatty() else 140
+        width = None if sys.stdout.isatty() or "COLUMNS" in os.environ else 140
         self.out = Console(highlight=False, soft_wrap=True, width=width)
         self.error = Console(stderr=True, highlight=False, soft_wrap=True)
 
@@ -83,10 +85,23 @@ class Screen:
         made = Table(title=title, title_justify="left")
         for index, column in enumerate(columns):
             numeric = bool(rows) and all(_is_number(row[index]) for row in rows)
-            made.add_column(column, justify="right" if numeric else "left", overflow="fold")
-        for row in rows:
-            made.add_row(*[f"{cell:.6g}" if isinstance(cell, float) else str(cell) for cell in row])
-        self.out.print(made)
+            # Text, not markup: square brackets are units.
+            made.add_column(Text(column), justify="right" if numeric else "left", overflow="fold")
+        texts = [[f"{cell:.6g}" if isinstance(cell, float) else str(cell) for cell in row] for row in rows]
+        for row in texts:
+            made.add_row(*map(Text, row))
+        needed = sum(
+            max([max(map(len, column.split()), default=1), *(len(r[i]) for r in texts)]) + 3 for i, column in enumerate(columns)
+        )
+        if needed < self.out.width:
+            self.out.print(made)
+            return
+        # Too narrow for a table that can be read: one line a number.
+        self.out.print(title, markup=False)
+        for row in texts:
+            self.out.print()
+            for column, cell in zip(columns, row, strict=True):
+                self.out.print(f"  {column}: {cell}", markup=False)
 
 
 class SolveProgress:

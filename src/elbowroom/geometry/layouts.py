@@ -290,8 +290,8 @@ def _text_problems(labels: Sequence[str], names: Sequence[str], antenna: Sequenc
         first.setdefault(name, i)
         for what, text in (("name", name), ("antenna", design)):
             # such text would come back changed from a file
-            if not text.isprintable() or text != text.strip() or (what == "name" and text.startswith("#")):
-                problems.append((i, f"{what} {text!r} has unprintable characters, outer spaces or a leading '#'"))
+            if not text.isprintable() or text != text.strip() or (what == "name" and (text.startswith("#") or "/" in text)):
+                problems.append((i, f"{what} {text!r} has unprintable characters, outer spaces, a slash or a leading '#'"))
     return problems
 
 

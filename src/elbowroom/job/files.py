@@ -33,6 +33,9 @@ def written_whole(path: str | Path) -> Iterator[Path]:
     """
     target = Path(path)
     temporary = target.with_name(f".{target.name}.{os.getpid()}.part")
+    if target.exists() and not target.is_file():
+        msg = f"cannot write {target}: {'a folder' if target.is_dir() else 'no plain file'} stands there"
+        raise ExportError(msg)
     try:
         target.parent.mkdir(parents=True, exist_ok=True)
         yield temporary

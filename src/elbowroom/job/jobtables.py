@@ -11,10 +11,14 @@ from typing import Annotated, Any, Literal
 
 from pydantic import AfterValidator, Field, ValidationInfo, model_validator
 
+from elbowroom.geometry.layouts import LARGEST_COORDINATE_M
 from elbowroom.job.tomlfile import Table, near_miss, shown
 
 LOWEST_HZ, HIGHEST_HZ = 1e6, 1e9
 """Frequencies outside are taken for a wrong unit: antennas of metres are made for 50 to 350 MHz."""
+
+CLOSEST_FREQUENCIES_HZ = 1.0
+"""Files and pictures tell frequencies apart to the hertz."""
 
 MOST_FREQUENCIES = 100_000
 
@@ -113,9 +117,9 @@ class StationTable(Table):
     antenna: _FileName | None = None
     antennas: dict[str, _FileName] = Field(default_factory=dict)
     ground: Literal["perfect", "free-space"] = "perfect"
-    turn_deg: float = 0.0
-    shift_east_m: float = 0.0
-    shift_north_m: float = 0.0
+    turn_deg: Annotated[float, Field(ge=-360.0, le=360.0)] = 0.0
+    shift_east_m: Annotated[float, Field(ge=-LARGEST_COORDINATE_M, le=LARGEST_COORDINATE_M)] = 0.0
+    shift_north_m: Annotated[float, Field(ge=-LARGEST_COORDINATE_M, le=LARGEST_COORDINATE_M)] = 0.0
     as_built: _FileName | None = None
     damage: dict[str, Any] = Field(default_factory=dict)
     """A `DamageTable`, looked into once antennas are known."""
@@ -176,7 +180,12 @@ class BandTable(Table):
         if twice:
             msg = f"frequency_hz: {', '.join(f'{v:g}' for v in twice[:5])} Hz appears more than once"
             raise ValueError(msg)
-        return tuple(sorted(values))
+        rising = tuple(sorted(values))
+        for low, high in zip(rising, rising[1:], strict=False):
+            if high - low < CLOSEST_FREQUENCIES_HZ:
+                msg = f"frequency_hz: {low:.10g} and {high:.10g} Hz differ by less than {CLOSEST_FREQUENCIES_HZ:g} Hz"
+                raise ValueError(msg)
+        return rising
 
 
 class PortTerminationTable(Table):

@@ -7,6 +7,8 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+import numpy as np
+
 from elbowroom.base.errors import ElbowroomError, GeometryError, JobFileError
 from elbowroom.geometry.stations import Station
 from elbowroom.job.checks import Problem, check_station
@@ -20,6 +22,9 @@ from elbowroom.system.terminations import PortTermination
 
 if TYPE_CHECKING:
     from elbowroom.radiation.solution import Solution
+
+DIFFERENT_DIRECTIONS_DEG = 10.0
+"""Spread of port directions in a beam from which a warning is given; ports of one polarisation differ by far less."""
 
 UnitProgress = Callable[[float, str, float], None]
 """Told the frequency [Hz], the stage and the fraction of it that is done."""
@@ -107,7 +112,25 @@ class JobRun:
     def problems(self) -> list[Problem]:
         """Return what is wrong or doubtful in the model and its terminations; nothing is solved."""
         found = check_station(self.station, self.frequencies_hz, self.job.mesh)
-        return [*found, *(Problem("warning", text) for text in self.job.terminations.doubts())]
+        doubts = [*self.job.terminations.doubts(), *self._beam_doubts()]
+        return [*found, *(Problem("warning", text) for text in doubts)]
+
+    def _beam_doubts(self) -> list[str]:
+        """Return which beams add up ports that point in different directions."""
+        doubts = []
+        for beam in self.job.beams:
+            ports = beam.amplitudes(self.station) > 0.0
+            angles = self.station.port_nominal_phi_rad[ports]
+            if not angles.size:
+                continue
+            mean = np.angle(np.exp(1j * angles).sum())
+            spread = float(np.degrees(np.abs(np.angle(np.exp(1j * (angles - mean)))).max()))
+            if spread > DIFFERENT_DIRECTIONS_DEG:
+                doubts.append(
+                    f"beam {beam.name!r} adds up ports {beam.port!r} whose directions lie up to {spread:.0f} deg from their "
+                    "mean; their polarisations differ and the beam may not form"
+                )
+        return doubts
 
     def plan(self) -> list[Unit]:
         """Return the units of the job, which the store has, and what the others take."""
@@ -169,9 +192,23 @@ class JobRun:
         units = self.plan()
         missing = [u for u in units if not u.stored]
         if missing:
-            refuse_if_too_large(total([u.prediction for u in missing]), folder=self.job.store_folder)
             self.store.check_writable()
+            refuse_if_too_large(total([u.prediction for u in missing]), folder=self.job.store_folder)
         return units
+
+    def stored_solution(self, frequency_hz: float) -> Solution:
+        """Return the solution at a frequency [Hz] from the store; solve nothing.
+
+        Raises
+        ------
+        StoreError
+            If the store does not hold it whole.
+        """
+        found = solve(
+            self.station, frequency_hz, solver=self.job.solver, mesh=self.job.mesh, precision=self.job.precision,
+            tolerance=self.job.tolerance, store=self.store, only_stored=True,
+        )  # fmt: skip
+        return found
 
     def solution(self, frequency_hz: float, progress: UnitProgress | None = None) -> Solution:
         """Return the solution at a frequency [Hz], from the store or solved now and stored."""

@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 
 from elbowroom.base.arrays import ArraySpec
-from elbowroom.base.errors import ModelRangeError
+from elbowroom.base.errors import ModelRangeError, StoreError
 from elbowroom.geometry.antennas import Antenna
 from elbowroom.geometry.mesh import MeshSettings, mesh_settings
 from elbowroom.geometry.stations import Station, orientation_matrix
@@ -248,6 +248,7 @@ def solve(
     store: Store | None = None,
     attributes: dict[str, Any] | None = None,
     progress: Progress | None = None,
+    only_stored: bool = False,
 ) -> Solution:
     """Solve a station at one frequency, or fetch what was solved before.
 
@@ -274,6 +275,8 @@ def solve(
         Stored beside the result, for the reader of the file.
     progress : callable, optional
         Told the stage and the fraction done.
+    only_stored : bool, optional
+        Whether to raise rather than solve what the store does not hold.
 
     Returns
     -------
@@ -296,7 +299,11 @@ def solve(
         record = store.get(key)
         if record is not None:
             return _from_record(record, discretise(station, frequency_hz, mesh=settings, near=near, far=far, self_blocks=False))
-        store.check_writable()
+        if not only_stored:
+            store.check_writable()
+    if only_stored:
+        msg = f"{frequency_hz / 1e6:g} MHz is not in the store, or its file is damaged; solve it first"
+        raise StoreError(msg)
     d = discretise(station, frequency_hz, mesh=settings, near=near, far=far)
     per_kind = solve_isolated(d)
     if chosen == "reduced":
