@@ -9,6 +9,7 @@ than the tolerance asks for.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -162,6 +163,41 @@ def reduced_candidates(
         made = _candidates_of(d, kinds, answers, settings, filler, distances, table)
         found |= dict.fromkeys(kinds, made)
     return [found[k] for k in range(len(d.kinds))]
+
+
+def enriched(discretisation: Discretisation, candidates: Sequence[Candidates], corrections: ComplexArray) -> list[Candidates]:
+    """Return candidates that also hold what a solution in them was found to miss.
+
+    Antennas that nearly touch excite one another by fields that neither ports nor plane waves nor driven neighbours make.
+
+    Parameters
+    ----------
+    discretisation : Discretisation
+        The meshed station.
+    candidates : sequence of Candidates
+        One for each kind, shared by the kinds of a design.
+    corrections : complex128 (N, R)
+        Currents left out; the largest of them counts as much as a port.
+    """
+    d = discretisation
+    groups: dict[int, list[int]] = {}
+    for k, candidate in enumerate(candidates):
+        groups.setdefault(id(candidate), []).append(k)
+    missed: list[tuple[list[int], FloatArray, ComplexArray]] = []
+    for kinds in groups.values():
+        root = cholesky(current_weights(d.kinds[kinds[0]].mesh, d.wavenumber), lower=False)
+        mine = [corrections[d.unknowns_of(int(a))] for a in np.flatnonzero(np.isin(d.kind_of, kinds))]
+        missed.append((kinds, root, root @ np.concatenate(mine, axis=1)))
+    largest = max(np.linalg.norm(part, axis=0).max() for _, _, part in missed)
+    found: dict[int, Candidates] = {}
+    for kinds, root, part in missed:
+        old = candidates[kinds[0]]
+        known = (root @ old.functions) * old.carried
+        left, size, _ = np.linalg.svd(np.concatenate([known, part / largest], axis=1), full_matrices=False)
+        useful = int(np.count_nonzero(size > 1e-12 * size[0]))
+        made = Candidates(solve_triangular(root, left[:, :useful]), size[:useful] / size[0], min(useful, old.fewest))
+        found |= dict.fromkeys(kinds, made)
+    return [found[k] for k in range(len(candidates))]
 
 
 class KindAnswers:

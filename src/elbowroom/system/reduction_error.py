@@ -1,8 +1,9 @@
 """How far a reduced solution is from the full one on the same mesh, from its residual on all unknowns.
 
 For the ports of some antennas the residual of the full system is worked out everywhere, and each antenna's own block turns it
-into the currents that the functions left out.  Their far field against the embedded pattern's peak is the pattern error; their
-reaction with the residual is the error of the port matrix.  What the skeletons themselves cost is measured on whole rows.
+into the currents that the functions left out; what these do to the other antennas is answered by the reduced station.  The far
+field of both against the embedded pattern's peak is the pattern error; their reaction with the residual is the error of the port
+matrix.  What the skeletons themselves cost is measured on whole rows.
 """
 
 from __future__ import annotations
@@ -29,6 +30,9 @@ SAFETY = 2.0
 SAMPLED_ANTENNAS = 8
 """Antennas whose ports are looked at, those with the nearest neighbours among them."""
 
+LOUD = 0.1
+"""Part of the largest correction of an antenna from which its effect on the others is followed."""
+
 WHOLE_PAIRS = 6
 """Pairs at which skeletons are held against all quadrature points: those nearest to where each level begins to serve."""
 
@@ -45,11 +49,14 @@ class ReductionError:
         Of the loaded admittance, relative to its norm over the sampled ports.
     residual : float
         Largest correction of an antenna's currents over the currents of the port.
+    corrections : complex128 (N, R)
+        Currents that the functions left out, for the sampled ports, as each antenna's own block answers the residual.
     """
 
     pattern: float
     port_matrix: float
     residual: float
+    corrections: ComplexArray
 
 
 def sampled_antennas(distances: FloatArray, count: int = SAMPLED_ANTENNAS) -> np.ndarray:
@@ -104,17 +111,25 @@ def reduction_error(
     sample = sampled_antennas(distances)
     ports = np.concatenate([np.arange(d.ports_of(a).start, d.ports_of(a).stop) for a in sample])
     currents = space.unknowns(d, coordinates[:, ports])
-    residual = excitations[:, ports] - _product(d, interactions, filler, distances, answers, currents)
+    own = np.concatenate([answers.product(int(k), currents[d.unknowns_of(a)]) for a, k in enumerate(d.kind_of)])
+    everyone = np.ones(len(d.station), dtype=bool)
+    residual = excitations[:, ports] - own - _from_others(d, interactions, filler, distances, currents, everyone)
     correction = np.empty(residual.shape, dtype=complex)
+    strength = np.empty((len(d.station), len(ports)))
     with single_threaded_blas():
         for a, k in enumerate(d.kind_of):
-            correction[d.unknowns_of(a)] = answers.to(k, residual[d.unknowns_of(a)])
+            correction[d.unknowns_of(a)] = answers.to(int(k), residual[d.unknowns_of(a)])
+            strength[a] = np.linalg.norm(correction[d.unknowns_of(a)], axis=0)
+    # What the corrections do to other antennas, and rounding, is answered by the station in its functions.
+    loud = (strength > LOUD * strength.max(axis=0)).any(axis=1)
+    induced = residual - _from_others(d, interactions, filler, distances, correction, loud)
     left = np.empty((space.size, len(ports)), dtype=complex)
     for a, k in enumerate(d.kind_of):
-        basis, part = space.bases[k], residual[d.unknowns_of(a)]
+        basis, part = space.bases[k], induced[d.unknowns_of(a)]
         left[space.of(a)] = part if basis is None else basis.T @ part
-    rounding = space.unknowns(d, factors.solve(left).astype(np.complex128))
-    pattern = float(np.max(np.sum(_relative_fields(d, [correction, rounding], currents), axis=0)))
+    answered = correction
+    correction = answered + space.unknowns(d, factors.solve(left).astype(np.complex128))
+    pattern = float(np.max(_relative_fields(d, correction, currents)))
     admittance = excitations[:, ports].T @ currents
     # Functions are tested by themselves, so that currents and residual react on one another by rounding alone; what is left out
     # reacts with the residual.
@@ -122,28 +137,30 @@ def reduction_error(
     port_matrix = reaction / np.linalg.norm(admittance)
     size = np.linalg.norm(currents, axis=0)
     worst = float(np.max(np.linalg.norm(correction, axis=0) / size))
-    return ReductionError(SAFETY * (pattern + skeleton), SAFETY * float(port_matrix) + skeleton, worst)
+    return ReductionError(SAFETY * (pattern + skeleton), SAFETY * float(port_matrix) + skeleton, worst, answered)
 
 
-def _product(
+def _from_others(
     d: Discretisation,
     interactions: SkeletonInteractions,
     filler: PairFiller,
     distances: FloatArray,
-    answers: KindAnswers,
     currents: ComplexArray,
+    sounding: np.ndarray,
 ) -> ComplexArray:
-    """Return the loaded matrix of all unknowns times currents (N, R), other antennas through their skeletons."""
+    """Return the matrix of all unknowns without own blocks times the currents (N, R) of some antennas, through skeletons."""
     n_antennas, ground, table = len(d.station), ground_kernels(d.station.ground), interactions.skeletons
     levels = np.vectorize(table.level_of, otypes=[int])(distances)
     out = np.empty_like(currents)
     # Every antenna's currents gathered on its skeleton, at each level at which another antenna hears it.
-    heard = [(j, level) for level in range(len(table.distances_m)) for j in range(n_antennas) if (levels[:, j] == level).any()]
+    everywhere = range(len(table.distances_m))
+    heard = [(int(j), level) for level in everywhere for j in np.flatnonzero(sounding) if (levels[:, j] == level).any()]
 
     def row(i: int) -> None:
         work = Workspace()
-        total = answers.product(int(d.kind_of[i]), currents[d.unknowns_of(i)])
-        others = np.flatnonzero(np.arange(n_antennas) != i)
+        own = d.unknowns_of(i)
+        total = np.zeros((own.stop - own.start, currents.shape[1]), dtype=complex)
+        others = np.flatnonzero(sounding & (np.arange(n_antennas) != i))
         for level in np.unique(levels[i, others]):
             chosen = others[levels[i, others] == level]
             if level < 0:
@@ -160,7 +177,7 @@ def _product(
                 weights = np.concatenate([b[1] for b in batch])
                 field = field + carried_field(ground, points, theirs, weights, d.wavenumber, work)
             total += table.tested(i, int(level), field)  # type: ignore[arg-type]
-        out[d.unknowns_of(i)] = total
+        out[own] = total
 
     with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
         gathered = pool.map(lambda key: table.gathered(key[0], key[1], currents[d.unknowns_of(key[0])]), heard)
@@ -169,8 +186,8 @@ def _product(
     return out
 
 
-def _relative_fields(d: Discretisation, corrections: list[ComplexArray], currents: ComplexArray) -> FloatArray:
-    """Return the largest far field of some corrections (N, R) over that of the currents, (C, R), over the whole sky."""
+def _relative_fields(d: Discretisation, correction: ComplexArray, currents: ComplexArray) -> FloatArray:
+    """Return the largest far field of corrections (N, R) over that of the currents, (R,), over the whole sky."""
     theta, phi = sky_samples(4.0 / d.wavenumber, d.wavenumber, isinstance(d.station.ground, FreeSpace))
     if not isinstance(d.station.ground, FreeSpace):
         # Level and upright currents have their nulls at the horizon and the zenith; neither end is left out.
@@ -178,11 +195,12 @@ def _relative_fields(d: Discretisation, corrections: list[ComplexArray], current
     rng = np.random.default_rng(theta.size)
     # Directions by chance beside the regular ones: the far field of a whole station has far finer structure.
     more = 160
-    theta = np.concatenate([theta, np.arccos(rng.uniform(0.0, 1.0, more))])
+    lowest = -1.0 if isinstance(d.station.ground, FreeSpace) else 0.0
+    theta = np.concatenate([theta, np.arccos(rng.uniform(lowest, 1.0, more))])
     phi = np.concatenate([phi, rng.uniform(0.0, 2.0 * np.pi, more)])
     frame = direction_frame(theta, phi)
     ground = ground_kernels(d.station.ground)
-    both = np.concatenate([*corrections, currents], axis=1)
+    both = np.concatenate([correction, currents], axis=1)
     total = np.zeros((both.shape[1], frame.count * 2), dtype=complex)
     positions = np.ascontiguousarray(d.station.positions * [1.0, 1.0, 0.0])
     for k, kind in enumerate(d.kinds):
@@ -192,8 +210,8 @@ def _relative_fields(d: Discretisation, corrections: list[ComplexArray], current
         for a, turned in zip(antennas, turn, strict=True):
             total += both[d.unknowns_of(a)].T @ (vectors * turned[None, :, None]).reshape(len(vectors), -1)
     size = np.sqrt(np.sum(np.abs(total.reshape(both.shape[1], frame.count, 2)) ** 2, axis=-1)).max(axis=1)
-    split = size.reshape(len(corrections) + 1, -1)
-    return np.asarray(split[:-1] / split[-1])
+    split = size.reshape(2, -1)
+    return np.asarray(split[0] / split[1])
 
 
 def skeleton_error(

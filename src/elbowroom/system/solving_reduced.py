@@ -20,7 +20,7 @@ from elbowroom.system.assembly import (
 from elbowroom.system.discretisation import Discretisation, attachments
 from elbowroom.system.factorisation import TiledSymmetric
 from elbowroom.system.interactions import SkeletonInteractions, SkeletonTable
-from elbowroom.system.reduction import KindAnswers, ReductionSettings, reduced_candidates
+from elbowroom.system.reduction import KindAnswers, ReductionSettings, enriched, reduced_candidates
 from elbowroom.system.reduction_error import reduction_error, skeleton_error
 from elbowroom.system.solving import REFERENCE_OHM, PortCurrents, SolveStatistics, port_excitations
 from elbowroom.system.spaces import CurrentSpace, reduced_space
@@ -198,9 +198,12 @@ def solve_reduced(
             skeleton = skeleton_error(d, table, filler, distances, answers)
         error = reduction_error(d, space, interactions, filler, distances, answers, x, excitations, factors, skeleton)
         lap("error estimate")
-        everything = all(c.count(cut) == c.most for c in candidates)
-        if error.pattern <= settings.tolerance or everything or attempt == MOST_ATTEMPTS - 1:
+        complete = all(c.count(cut) == len(c.functions) for c in candidates)
+        if error.pattern <= settings.tolerance or complete or attempt == MOST_ATTEMPTS - 1:
             break
+        if attempt > 0 or all(c.count(cut) == c.most for c in candidates):
+            # More of the same functions did not do: those that were missed join them.
+            candidates = enriched(d, candidates, error.corrections)
         cut *= min(0.5, 0.5 * np.sqrt(settings.tolerance / error.pattern))
     if progress is not None:
         progress("port excitations", 1.0)
