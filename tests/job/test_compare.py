@@ -19,11 +19,11 @@ from elbowroom.job.compare import (
     FLOOR_DB,
     MEANINGS,
     BeamComparison,
-    refined_peak,
     compare_beams,
     decibels,
     half_power_width_deg,
     main_lobe,
+    refined_peak,
     total_power,
     write_comparison,
 )

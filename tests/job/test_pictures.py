@@ -456,3 +456,39 @@ def test_draw_impedance__reflections_above_one_are_not_cut_off(frequencies, tmp_
     largest = max(item.coupled_reflection.max() for item in made[:frequencies])
     assert largest > 1.05
     assert figures[0].axes[3].get_ylim()[1] >= largest
+
+
+def test_draw_antenna__of_two_ports_over_a_ground_and_of_one_with_a_network_in_free_space(tmp_path):
+    from elbowroom.geometry.antennas import Load
+    from elbowroom.geometry.networks import Branch, FeedPoint, Line, Network
+    from elbowroom.job.oneantenna import alone, antenna_figures, pattern_cuts, solve_alone
+    from elbowroom.job.pictures import antenna as pictures
+
+    wires = [Wire((-0.4, 0.0, z), (0.4, 0.0, z), 0.002) for z in (1.0, 1.2)]
+    network = Network(
+        (Line("in", "a", 80.0, 0.1), Line("a", "b", 80.0, 0.2, crossed=True)), branches=(Branch("b", resistance_ohm=99.0),)
+    )
+    fed = Antenna(
+        "fed $x$", wires, [Port("p\x07", node="in")], [Load(0, 0.2, 5.0)], [FeedPoint("a", 0), FeedPoint("b", 1)], network
+    )
+    for name, station, frequencies in (
+        ("two", alone(crossed(), PerfectGround()), (80e6, 150e6)),
+        ("one", alone(fed), (150e6,)),
+        ("mast", alone(dipole(height=1.0), PerfectGround()), (150e6,)),
+    ):
+        solved = [solve_alone(station, f) for f in frequencies]
+        rows = [row for s in solved for row in antenna_figures(s, solve_alone(station, s.frequency_hz, "refined"))]
+        cuts = [cut for s in solved for cut in pattern_cuts(s, step_deg=5.0)]
+        looks_drawn(pictures.draw_antenna(station, tmp_path / f"{name}v.png", title=name, frequencies_hz=frequencies))
+        looks_drawn(pictures.draw_antenna_impedance(rows, tmp_path / f"{name}z.png", termination=75 - 20j))
+        looks_drawn(pictures.draw_antenna_gain(rows, tmp_path / f"{name}g.png", title=name, free_space=name == "one"))
+        looks_drawn(pictures.draw_antenna_cuts(cuts, tmp_path / f"{name}c.png", title=name))
+        looks_drawn(pictures.draw_antenna_convergence(rows, tmp_path / f"{name}d.png", title=name))
+    for draw in (
+        pictures.draw_antenna_impedance,
+        pictures.draw_antenna_gain,
+        pictures.draw_antenna_convergence,
+        pictures.draw_antenna_cuts,
+    ):
+        with pytest.raises(ModelRangeError, match="one "):
+            draw([], tmp_path / "none.png")

@@ -1,4 +1,7 @@
-"""Pictures, all of them: stations (`layouts`), ports (`ports`), skies (`skymaps`), cuts (`cuts`), on `sheets`."""
+"""Pictures, all of them, on `sheets`.
+
+Stations (`layouts`), ports (`ports`), ports driven at once (`active`), skies (`skymaps`), cuts (`cuts`), one antenna (`antenna`).
+"""
 
 from elbowroom.job.pictures.cuts import draw_cuts as draw_cuts
 from elbowroom.job.pictures.cuts import draw_element_spread as draw_element_spread

@@ -75,7 +75,7 @@ def draw_layout(
     caption = [band_text(frequencies_hz), "east and north from the reference point of the layout"]
     if termination is not None:
         caption.append(termination_text(termination))
-    colours = _port_colours(station)
+    colours = port_colours(station)
     shown = station.designs[:_MOST_DESIGNS]
     radii = sorted({wire.radius * 1e3 for design in station.designs for wire in design.wires})
     caption.append(f"wire radius {radii[0]:.3g}" + (f" to {radii[-1]:.3g} mm" if len(radii) > 1 else " mm"))
@@ -87,12 +87,12 @@ def draw_layout(
     with sheet(path, "Station layout", details, caption, size=(12.0, 8.0)) as figure:
         grid = figure.add_gridspec(len(views), 2, width_ratios=(1.75, 1.0))
         plan = figure.add_subplot(grid[:, 0])
-        handles = _draw_plan(plan, station, colours, pair)
+        handles = draw_from_above(plan, station, colours, pair)
         legend_above(figure, handles, [str(handle.get_label()) for handle in handles])
         plan.set_title("seen from above", loc="left")
         for row, (design, direction) in enumerate(views):
             axes = figure.add_subplot(grid[row, 1])
-            _draw_side(axes, station, design, direction, colours, len(views))
+            draw_from_side(axes, station, design, direction, colours, len(views))
     return Path(path)
 
 
@@ -128,7 +128,7 @@ def _spacing_text(
     return f"closest pair {names}: {spacing:.3g} m{waves}; diameter {diameter:.3g} m"
 
 
-def _port_colours(station: Station) -> dict[str, str]:
+def port_colours(station: Station) -> dict[str, str]:
     """Return a colour for each port name, in order of first use."""
     names = dict.fromkeys(n.port for n in station.port_names)
     return {name: PORT_COLOURS[i % len(PORT_COLOURS)] for i, name in enumerate(names)}
@@ -139,7 +139,15 @@ def _wire_ends(placed: Placed) -> FloatArray:
     return placed.to_station(np.array([(w.start, w.end) for w in placed.antenna.wires]))
 
 
-def _draw_plan(axes: Axes, station: Station, colours: dict[str, str], pair: tuple[int, int] | None) -> list[Line2D]:
+def draw_from_above(
+    axes: Axes,
+    station: Station,
+    colours: dict[str, str],
+    pair: tuple[int, int] | None = None,
+    *,
+    named: bool = True,
+) -> list[Line2D]:
+    """Draw wires and ports as seen from above, and return what a legend needs; the closest pair is marked if given."""
     wires = [_wire_ends(placed) for placed in station]
     flat = np.concatenate(wires)[:, :, :2]
     few = len(station) <= _NAMED_ANTENNAS
@@ -163,7 +171,7 @@ def _draw_plan(axes: Axes, station: Station, colours: dict[str, str], pair: tupl
     if pair is not None:
         axes.plot(*station.positions[list(pair), :2].T, "-", color=_MARK, lw=1.2, zorder=4)
         axes.plot(*station.positions[list(pair), :2].T, "o", ms=11 if few else 8, mfc="none", mec=_MARK, mew=1.1, zorder=4)
-    if few:
+    if few and named:
         for placed, own in zip(station, reach, strict=True):
             # At 45 degrees between the arms of a crossed antenna there is room.
             where = np.asarray(placed.position[:2]) + 0.25 * own * np.array([1.0, -1.0])
@@ -219,8 +227,35 @@ def _port_places(station: Station) -> tuple[FloatArray, np.ndarray]:
     return np.array(places), np.array(level)
 
 
-def _draw_side(axes: Axes, station: Station, design: Antenna, direction: str, colours: dict[str, str], rows: int) -> None:
-    """Draw the first antenna of a design as seen from the south or the east, with its gaps and the ground."""
+def draw_from_side(
+    axes: Axes,
+    station: Station,
+    design: Antenna,
+    direction: str,
+    colours: dict[str, str],
+    rows: int = 1,
+    *,
+    named: bool = True,
+) -> None:
+    """Draw the first antenna of a design as seen from the south or the east, with its gaps and the ground.
+
+    Parameters
+    ----------
+    axes : Axes
+        Where to.
+    station : Station
+        That has the antenna.
+    design : Antenna
+        Which.
+    direction : "south" or "east"
+        Where it is seen from.
+    colours : dict of str to str
+        Of ports by name.
+    rows : int, optional
+        How many of these panels lie on top of one another.
+    named : bool, optional
+        Whether its title names antenna and design.
+    """
     placed = next(p for p in station if p.antenna is design or p.antenna == design)
     ends = _wire_ends(placed)
     # From the south east lies on the right, from the east north does.
@@ -244,6 +279,9 @@ def _draw_side(axes: Axes, station: Station, design: Antenna, direction: str, co
             textcoords="offset points", ha="left" if i % 2 == 0 else "right", va="center",
             color=colours[port.name], fontweight="bold", zorder=5,
         )  # fmt: skip
+    for gap in design.gaps[len(design.gaps) - len(design.feeds) :]:
+        middle = placed.to_station(design.wires[gap.wire].point(0.5 * (gap.low + gap.high)))
+        axes.plot(middle[across] - offset, middle[2], "o", ms=3, mfc="white", mec="0.2", mew=0.9, zorder=3)
     for gap in design.load_gaps:
         middle = placed.to_station(design.wires[gap.wire].point(0.5 * (gap.low + gap.high)))
         axes.plot(middle[across] - offset, middle[2], "D", ms=5, color="0.1", zorder=4)
@@ -260,6 +298,7 @@ def _draw_side(axes: Axes, station: Station, design: Antenna, direction: str, co
     axes.set_aspect("equal", anchor="W")
     which = printable(shortened(placed.name, 14)) + (f", one of {count}" if count > 1 else "")
     space = "" if grounded else " in free space"
-    axes.set_title(f"{printable(shortened(design.name, 24))}{space}, from the {direction} ({which})", loc="left", fontsize=9)
+    name = f"{printable(shortened(design.name, 24))}{space}, from the {direction} ({which})"
+    axes.set_title(name if named else f"from the {direction}{space}", loc="left", fontsize=9 if named else None)
     axes.set_xlabel(f"{'east' if direction == 'south' else 'north'} of its centre [m]")
     axes.set_ylabel("height [m]")

@@ -1,0 +1,117 @@
+"""One antenna alone from the command line: what it writes and says, and what it refuses."""
+
+import csv
+import json
+
+import pytest
+
+DIPOLE = 'shape = "dipole"\nhalf_length_m = 0.45\nheight_m = 0.8\nwire_radius_m = 0.003\nconductivity_s_per_m = 1e6\n'
+LOG_PERIODIC = """shape = "log-periodic"
+height_m = 1.2
+wire_radius_m = 0.002
+tau = 0.8
+sigma = 0.1
+longest_half_length_m = 0.45
+elements = 3
+feeder_impedance_ohm = 120.0
+"""
+PICTURES = ["view", "impedance", "gain", "cuts", "convergence"]
+
+
+@pytest.fixture
+def file(tmp_path):
+    path = tmp_path / "rod.toml"
+    path.write_text(DIPOLE)
+    return path
+
+
+def table(path):
+    return list(csv.DictReader(line for line in path.read_text().splitlines() if not line.startswith("#")))
+
+
+def test_antenna__over_a_ground_writes_table_and_pictures(command, file):
+    outcome = command("antenna", file, "--start-hz", 140e6, "--stop-hz", 160e6, "--step-hz", 10e6)
+    assert outcome.code == 0, outcome.all
+    results = file.parent / "results"
+    assert {p.name for p in results.iterdir()} == {"antenna_rod.csv", *(f"antenna-{name}_rod.png" for name in PICTURES)}
+    rows = table(results / "antenna_rod.csv")
+    assert [float(r["frequency_hz"]) for r in rows] == [140e6, 150e6, 160e6]
+    assert all(0.9 < float(r["radiation_efficiency"]) < 0.999 for r in rows)
+    assert all(r["front_to_back_db"] == "nan" and 0.0 < float(r["impedance_change"]) < 0.05 for r in rows)
+    assert "not a measurement" in outcome.out
+    assert "(3 of 3)" in outcome.out
+    for name in PICTURES:
+        assert f"antenna-{name}_rod.png" in outcome.out.replace("\n", "")
+
+
+def test_antenna__log_periodic_in_free_space_as_json(command, tmp_path):
+    path = tmp_path / "log.toml"
+    path.write_text(LOG_PERIODIC)
+    options = ("--ground", "free-space", "--frequency-hz", 200e6, "--frequency-hz", 170e6, "--no-convergence", "--json")
+    outcome = command("antenna", path, *options, "--output", tmp_path / "out", "--termination", "90-5j", "--mesh", "default")
+    assert outcome.code == 0, outcome.all
+    lines = [json.loads(line) for line in outcome.out.splitlines()]
+    found = [line for line in lines if line["kind"] == "figures"]
+    assert [(f["frequency_hz"], f["port"]) for f in found] == [(170e6, "x"), (170e6, "y"), (200e6, "x"), (200e6, "y")]
+    # it looks at the sky, and x and y are one antenna
+    assert all(f["front_to_back_db"] > 3.0 and f["impedance_change"] is None for f in found)
+    assert found[0]["resistance_ohm"] == pytest.approx(found[1]["resistance_ohm"], rel=1e-9)
+    written = [line["path"] for line in lines if line["kind"] == "file"]
+    assert len(written) == 5
+    assert not any("convergence" in path for path in written)
+
+
+def test_antenna__height_and_quiet(command, file):
+    low, high = (
+        command("antenna", file, "--frequency-hz", 150e6, "--height-m", h, "--no-convergence", "--quiet", "--output", file.parent / str(h))
+        for h in (0.0, 0.5)
+    )  # fmt: skip
+    assert low.code == high.code == 0
+    assert "unknowns" not in low.out
+    values = [float(table(file.parent / str(h) / "antenna_rod.csv")[0]["resistance_ohm"]) for h in (0.0, 0.5)]
+    assert abs(values[0] - values[1]) > 1.0
+
+
+@pytest.mark.parametrize(
+    ("options", "code", "words"),
+    [
+        ((), 2, ("no frequencies", "--frequency-hz")),
+        (("--frequency-hz", 150e6, "--start-hz", 1e8), 2, ("start_hz",)),
+        (("--start-hz", 1e8, "--stop-hz", 2e8), 2, ("step_hz", "missing")),
+        (("--start-hz", 2e8, "--stop-hz", 1e8, "--step-hz", 1e6), 2, ("stop_hz",)),
+        (("--frequency-hz", 150), 2, ("150", "Hz")),
+        (("--frequency-hz", "nan"), 2, ("nan",)),
+        (("--frequency-hz", 150e6, "--termination", "open"), 2, ("open", "positive resistance")),
+        (("--frequency-hz", 150e6, "--termination", "-50"), 2, ("-50", "positive resistance")),
+        (("--frequency-hz", 150e6, "--termination", "nan"), 2, ("nan", "positive resistance")),
+        (("--frequency-hz", 150e6, "--height-m", "nan"), 2, ("--height-m",)),
+        (("--frequency-hz", 150e6, "--height-m", -0.9), 3, ("cannot be modelled", "below the ground")),
+        (("--frequency-hz", 2.1e9), 2, ("2.1e+09 Hz",)),
+        (("--frequency-hz", 150e6, "--ground", "sand"), 2, ("sand", "perfect")),
+    ],
+)
+def test_antenna__bad_options_are_named(command, file, options, code, words):
+    outcome = command("antenna", file, *options)
+    assert outcome.code == code, outcome.all
+    assert "Traceback" not in outcome.all
+    for word in words:
+        assert word in outcome.err, outcome.err
+    assert not (file.parent / "results").exists()
+
+
+def test_antenna__bad_files_are_named(command, file):
+    gone = command("antenna", file.with_name("gone.toml"), "--frequency-hz", 150e6)
+    assert (gone.code, "gone.toml" in gone.err) == (2, True)
+    file.write_text(DIPOLE.replace("half_length_m", "half_lenght_m"))
+    wrong = command("antenna", file, "--frequency-hz", 150e6)
+    assert wrong.code == 2
+    assert "half_lenght_m" in wrong.err
+    assert "half_length_m" in wrong.err
+    file.write_text(DIPOLE.replace("0.003", "0.03"))
+    thick = command("antenna", file, "--frequency-hz", 300e6)
+    assert thick.code == 3
+    assert "0.03 wavelengths" in thick.err
+    file.write_text(DIPOLE)
+    (file.parent / "file").write_text("")
+    nowhere = command("antenna", file, "--frequency-hz", 150e6, "--no-convergence", "--output", file.parent / "file")
+    assert nowhere.code == 7
