@@ -202,7 +202,7 @@ def test_mesh_that_cannot_be_made_or_is_too_fine():
     # elements of 2 mm: longer than this radius
     (problem,) = found(dipole(radius=0.001), mesh=fine)
     assert problem.startswith("warning: antenna 'dipole': ")
-    assert "unknowns at 150 MHz, more than 600" in problem
+    assert "unknowns at 150 MHz, more than 1500" in problem
 
 
 def test_errors_come_first():
@@ -282,3 +282,12 @@ def test_mesh_statistics__count_what_the_solver_makes():
         assert s["shortest_element_radii"] == pytest.approx(
             (lengths / np.concatenate([k.mesh.radius for k in d.kinds])).min(), rel=1e-12
         )
+
+
+def test_wire__just_above_a_perfect_ground__is_doubted():
+    low = Antenna("low", [Wire((-0.4, 0, 0.005), (0.4, 0, 0.005), 0.004)], [Port("x", 0)])
+    problems = check_station(Station([Placed(low)], PerfectGround()), [100e6])
+    assert any("5 mm above the ground, 2.5 radii from its image" in p.text for p in problems)
+    high = Antenna("high", [Wire((-0.4, 0, 0.02), (0.4, 0, 0.02), 0.004)], [Port("x", 0)])
+    assert not any("its image" in p.text for p in check_station(Station([Placed(high)], PerfectGround()), [100e6]))
+    assert not any("its image" in p.text for p in check_station(Station([Placed(low)], FreeSpace()), [100e6]))

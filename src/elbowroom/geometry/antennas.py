@@ -73,6 +73,14 @@ class Load:
     capacitance_f: float | None = None
     gap: float | None = None
 
+    def __post_init__(self) -> None:
+        bounds = {"resistance_ohm": (0.0, 1e12), "inductance_h": (0.0, 1e3), "capacitance_f": (1e-21, 1e3)}
+        for key, (low, high) in bounds.items():
+            value = getattr(self, key)
+            if value is not None and not low <= float(value) <= high:
+                msg = f"load on wire {self.wire}: {key} {value!r}: expected {low:g} to {high:g}"
+                raise GeometryError(msg)
+
     def impedance(self, angular_frequency: float) -> complex:
         """Return the impedance [ohm] at an angular frequency [rad/s]."""
         value = complex(self.resistance_ohm, angular_frequency * self.inductance_h)

@@ -10,6 +10,9 @@ import numpy as np
 from elbowroom.base.arrays import FloatArray, check_array
 from elbowroom.base.errors import GeometryError
 
+LARGEST_CONDUCTIVITY, LARGEST_PERMEABILITY = 1e12, 1e7
+"""Far beyond any metal, and small enough for every formula to stay finite [S/m], [-]."""
+
 
 @dataclass(frozen=True)
 class Wire:
@@ -56,11 +59,16 @@ class Wire:
                 "the thin-wire model needs a radius below half the length"
             )
             raise GeometryError(msg)
-        if self.conductivity is not None and not 0.0 < float(self.conductivity) < np.inf:
-            msg = f"wire conductivity {self.conductivity!r} S/m: must be positive and finite, or left out for a perfect conductor"
+        if self.conductivity is not None and not 0.0 < float(self.conductivity) <= LARGEST_CONDUCTIVITY:
+            msg = (
+                f"wire conductivity {self.conductivity!r} S/m: must be positive and at most {LARGEST_CONDUCTIVITY:g}, "
+                "or left out for a perfect conductor"
+            )
             raise GeometryError(msg)
-        if not 0.0 < float(self.relative_permeability) < np.inf:
-            msg = f"wire relative_permeability {self.relative_permeability!r}: must be positive and finite"
+        if not 0.0 < float(self.relative_permeability) <= LARGEST_PERMEABILITY:
+            msg = (
+                f"wire relative_permeability {self.relative_permeability!r}: must be positive and at most {LARGEST_PERMEABILITY:g}"
+            )
             raise GeometryError(msg)
 
     @property

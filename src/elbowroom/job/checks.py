@@ -15,7 +15,7 @@ from elbowroom.base.arrays import FloatArray
 from elbowroom.base.constants import wavelength_of
 from elbowroom.base.errors import GeometryError, ModelRangeError
 from elbowroom.geometry.antennas import Antenna
-from elbowroom.geometry.grounds import PerfectGround
+from elbowroom.geometry.grounds import FreeSpace, PerfectGround
 from elbowroom.geometry.layouts import SAME_PLACE_M
 from elbowroom.geometry.mesh import Mesh, MeshSettings, build_mesh, mesh_settings
 from elbowroom.geometry.stations import Placed, Station
@@ -37,8 +37,9 @@ Two parallel wires of radius a at distance d have the capacitance pi eps / arcos
 SHORT_WIRE_RADII = 10.0
 """Length below which a wire is hardly thin; common practice, no source."""
 
-MOST_UNKNOWNS_OF_ANTENNA = 600
-"""Unknowns of one antenna above which a tile of the matrix is a single antenna and time grows fast."""
+MOST_UNKNOWNS_OF_ANTENNA = 1500
+"""Unknowns of one antenna above which its own block takes longer than all else; log-periodic antennas of 2 x 10 dipoles
+have about 600."""
 
 
 @dataclass(frozen=True)
@@ -96,6 +97,7 @@ def check_station(station: Station, frequencies_hz: Sequence[float], mesh: str |
     ground_problems = list(_ground(station))
     problems += ground_problems
     if not any(p.severity == "error" for p in ground_problems):
+        problems += _near_ground(station)
         problems += _elements(station, frequencies_hz, settings)
     return sorted(problems, key=lambda p: p.severity != "error")
 
@@ -184,6 +186,32 @@ def _meshes(station: Station, wavelength: float, settings: MeshSettings) -> Iter
         groups[key] = (first, ends, count + 1)
     for placed, ends, count in groups.values():
         yield placed, build_mesh(placed.antenna, wavelength, settings, ends), count
+
+
+def _near_ground(station: Station) -> Iterator[Problem]:
+    """Wires so low over a conducting ground that their image is as near as another wire that would be doubted."""
+    from elbowroom.system.discretisation import GROUND_CONTACT_M
+
+    if isinstance(station.ground, FreeSpace):
+        return
+    told: set[tuple[int, float]] = set()
+    for placed in station:
+        key = (id(placed.antenna), placed.position[2])
+        if key in told:
+            continue
+        for index, wire in enumerate(placed.antenna.wires):
+            height = placed.to_station(np.array([wire.start, wire.end]))[:, 2]
+            lowest = float(height.min())
+            # An end on the ground is joined to its image; what counts there is how steeply the wire leaves.
+            if lowest <= GROUND_CONTACT_M or 2.0 * lowest >= PROXIMITY_RADII * wire.radius:
+                continue
+            told.add(key)
+            yield Problem(
+                "warning",
+                f"antenna {placed.name!r} ({placed.antenna.name!r}), wire {index}: {lowest * 1e3:.3g} mm above the ground, "
+                f"{2.0 * lowest / wire.radius:.2g} radii from its image; below {PROXIMITY_RADII:g} the current is no longer even "
+                "around the wire",
+            )
 
 
 def _same_place(station: Station) -> Iterator[Problem]:
