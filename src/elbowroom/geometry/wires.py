@@ -67,7 +67,8 @@ class Wire:
             raise GeometryError(msg)
         if not 0.0 < float(self.relative_permeability) <= LARGEST_PERMEABILITY:
             msg = (
-                f"wire relative_permeability {self.relative_permeability!r}: must be positive and at most {LARGEST_PERMEABILITY:g}"
+                f"wire relative_permeability {self.relative_permeability!r}: must be positive and at most "
+                f"{LARGEST_PERMEABILITY:g}"
             )
             raise GeometryError(msg)
 

@@ -194,6 +194,32 @@ class SkeletonTable:
         along = np.einsum("ij,jqr->iqr", current * kind.orientation, skeleton.currents @ currents)
         return np.stack([along[0], along[1], charge * (skeleton.charge @ currents), along[2]], axis=1)
 
+    def gathered_all(self, antennas: np.ndarray, level: int, currents: ComplexArray) -> list[ComplexArray]:
+        """Return what currents (N of the station, R) are on the skeletons of some antennas, each (J, 4, R).
+
+        Antennas of one design share their products, which are then large enough to be fast.
+        """
+        d = self.discretisation
+        current, charge = self._factors()
+        alike: dict[int, list[int]] = {}
+        for position, a in enumerate(antennas):
+            alike.setdefault(id(self.of(int(d.kind_of[a]), level)), []).append(position)
+        out: list[ComplexArray] = [np.empty((0, 4, 0), dtype=complex)] * len(antennas)
+        for positions in alike.values():
+            skeleton = self.of(int(d.kind_of[antennas[positions[0]]]), level)
+            stacked = np.concatenate([currents[d.unknowns_of(int(antennas[q]))] for q in positions], axis=1)
+            n_points, columns = skeleton.n_points, currents.shape[1]
+            weights = np.concatenate([skeleton.currents.reshape(3 * n_points, -1), skeleton.charge])
+            product = (weights @ stacked).reshape(4, n_points, len(positions), columns)
+            for number, q in enumerate(positions):
+                orientation = d.kinds[d.kind_of[antennas[q]]].orientation
+                made = np.empty((n_points, 4, columns), dtype=complex)
+                along = np.einsum("ij,jqr->qir", current * orientation, product[:3, :, number])
+                made[:, [0, 1, 3]] = along
+                made[:, 2] = charge * product[3, :, number]
+                out[q] = made
+        return out
+
     def tested(self, antenna: int, level: int, field: ComplexArray) -> ComplexArray:
         """Return what fields (J, 4, R) at an antenna's skeleton induce along its unknowns, (N, R) [V]."""
         d = self.discretisation

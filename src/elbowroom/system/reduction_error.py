@@ -153,8 +153,11 @@ def _from_others(
     levels = np.vectorize(table.level_of, otypes=[int])(distances)
     out = np.empty_like(currents)
     # Every antenna's currents gathered on its skeleton, at each level at which another antenna hears it.
-    everywhere = range(len(table.distances_m))
-    heard = [(int(j), level) for level in everywhere for j in np.flatnonzero(sounding) if (levels[:, j] == level).any()]
+    sources: dict[tuple[int, int], tuple[FloatArray, ComplexArray]] = {}
+    for level in range(len(table.distances_m)):
+        heard = np.array([j for j in np.flatnonzero(sounding) if (levels[:, j] == level).any()], dtype=int)
+        for j, weights in zip(heard, table.gathered_all(heard, level, currents), strict=True):
+            sources[int(j), level] = (table.points(int(j), level), weights)
 
     def row(i: int) -> None:
         work = Workspace()
@@ -180,8 +183,6 @@ def _from_others(
         out[own] = total
 
     with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
-        gathered = pool.map(lambda key: table.gathered(key[0], key[1], currents[d.unknowns_of(key[0])]), heard)
-        sources = {key: (table.points(*key), weights) for key, weights in zip(heard, gathered, strict=True)}
         list(pool.map(row, range(n_antennas)))
     return out
 
