@@ -1,5 +1,7 @@
 """Functions in place of unknowns: their norm, their order, the spaces they span, and the settings that are refused."""
 
+from concurrent.futures import ThreadPoolExecutor
+
 import numpy as np
 import pytest
 
@@ -8,7 +10,7 @@ from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.grounds import FreeSpace, PerfectGround
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.system.discretisation import discretise
-from elbowroom.system.reduction import Candidates, ReductionSettings, current_weights, sky_samples
+from elbowroom.system.reduction import Candidates, KindAnswers, ReductionSettings, current_weights, sky_samples
 from elbowroom.system.solving_reduced import solve_reduced
 from elbowroom.system.spaces import all_unknowns, reduced_space
 from helpers import FREQUENCY_HZ, cluster, crossed, dipole
@@ -127,3 +129,15 @@ def test_bases__finer_tolerances_take_more_functions(ground):
     d = discretise(cluster(3, ground=isinstance(ground, PerfectGround)), FREQUENCY_HZ)
     counts = [solve_reduced(d, ReductionSettings(t))[2].n_functions for t in (1e-2, 1e-3, 1e-5)]
     assert counts[0] < counts[1] < counts[2] < d.n_unknowns
+
+
+def test_answers__are_the_same_from_several_threads():
+    # LAPACK's wrapper changes the pivots it is given while it works: shared ones once ended in corrupted memory.
+    d = discretise(Station([Placed(crossed())], PerfectGround()), FREQUENCY_HZ)
+    answers = KindAnswers(d, 100.0)
+    excitation = random_complex(d.n_unknowns, 2)
+    expected = answers.to(0, excitation)
+    np.testing.assert_allclose(answers.product(0, expected), excitation, atol=1e-9 * np.abs(excitation).max())
+    with ThreadPoolExecutor(4) as pool:
+        for found in pool.map(lambda _: answers.to(0, excitation), range(200)):
+            np.testing.assert_array_equal(found, expected)

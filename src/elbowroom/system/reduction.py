@@ -220,7 +220,9 @@ class KindAnswers:
 
     def to(self, kind: int, excitation: ComplexArray | FloatArray) -> ComplexArray:
         """Return the currents (N, R) that excitations (N, R) drive."""
-        return lu_solve(self.factors(kind), np.asarray(excitation, dtype=complex))
+        factors, pivots = self.factors(kind)
+        # LAPACK's wrapper counts the pivots up and down in place while it works: threads need copies of their own.
+        return lu_solve((factors, pivots.copy()), np.asarray(excitation, dtype=complex))
 
     def product(self, kind: int, currents: ComplexArray) -> ComplexArray:
         """Return the kind's own loaded block times currents (N, R)."""
