@@ -14,6 +14,7 @@ from elbowroom import __version__
 from elbowroom.base.errors import ElbowroomError, ExportError
 from elbowroom.cli.antenna import antenna
 from elbowroom.cli.common import FREQUENCIES, JOB, exit_on, make_screen, modes, open_job, solve_all
+from elbowroom.cli.ports import ports
 from elbowroom.cli.results import compare, draw, export, run
 
 INTERRUPTED_EXIT_CODE = 130
@@ -191,7 +192,7 @@ def solve(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> Non
     exit_on(failures)
 
 
-for _command in (antenna, compare, draw, export, run):
+for _command in (antenna, compare, draw, export, ports, run):
     cli.add_command(_command)
 
 

@@ -2,11 +2,13 @@
 
 - `port_matrices`, `write_port_matrices`: Z, Y or S of any set of ports, as arrays or as a Touchstone file
 - `active_ports`, `pointings`: what ports show while all are driven at once, over frequency and pointing
+- `write_active_ports`: that as a table
 """
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+import csv
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -17,6 +19,7 @@ from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import ExportError, ModelRangeError
 from elbowroom.geometry.stations import PortName, Station
 from elbowroom.job.beamfields import beam_weights
+from elbowroom.job.files import written_whole
 from elbowroom.job.jobmodel import Beam
 from elbowroom.job.pipeline import JobRun, UnitProgress
 from elbowroom.job.tomlfile import near_miss
@@ -184,6 +187,16 @@ class ActivePorts:
     impedance_ohm: ComplexArray
     reflection: ComplexArray
 
+    def returned_power(self) -> FloatArray:
+        """Return the part of the power sent into the driven ports of each beam that comes back to them, (F, B).
+
+        The sum of |reflection x weight|^2 over that of |weight|^2; waves that ports without weight take are not counted.  It
+        is a part of power where reflections refer to the terminations, which are the sources' impedances.
+        """
+        sent = np.abs(self.weights) ** 2
+        back = np.where(sent > 0.0, np.abs(np.where(sent > 0.0, self.reflection, 0.0)) ** 2 * sent, 0.0)
+        return np.asarray(back.sum(axis=-1) / sent.sum(axis=-1))
+
 
 def pointings(beam: Beam, zenith_angle_deg: ArrayLike, azimuth_deg: ArrayLike) -> list[Beam]:
     """Return a beam pointed in several directions.
@@ -251,3 +264,55 @@ def active_ports(
     return ActivePorts(
         np.array(run.frequencies_hz), run.station.port_names, chosen, np.array(weights), np.array(impedance), np.array(reflection)
     )
+
+
+ACTIVE_COLUMNS = {
+    "frequency_hz": "frequency",
+    "beam": "name of the beam whose weights drive the ports",
+    "zenith_angle_deg": "where it points: zenith angle",
+    "azimuth_deg": "where it points: azimuth, north through east",
+    "antenna": "antenna",
+    "port": "port; those without weight in the beam are terminated and left out",
+    "active_resistance_ohm": "real part of V/I while all ports of the beam are driven at once; inf where no current flows",
+    "active_reactance_ohm": "imaginary part",
+    "active_reflection": "magnitude of the power wave that comes back over the one sent; above 1 where a port gives power away",
+    "active_reflection_phase_deg": "its phase",
+}
+
+
+def write_active_ports(active: ActivePorts, path: str | Path, head: Iterable[str] = ()) -> None:
+    """Write active impedances and reflections as CSV, under ``#`` lines that say what each column means.
+
+    Parameters
+    ----------
+    active : ActivePorts
+        What to write; ports without weight are left out.
+    path : str or Path
+        The file.
+    head : iterable of str, optional
+        Further lines about the job.
+
+    Raises
+    ------
+    ExportError
+        If the file cannot be written.
+    """
+    with written_whole(path) as temporary, temporary.open("w", newline="", encoding="utf-8") as file:
+        for line in (
+            *head,
+            "Ports driven at once.  Results of a model, not a measurement.",
+            "Weights are source waves behind the terminations: a port is driven by 2 w sqrt(Re Z_T) behind its termination Z_T.",
+            *(f"{name}: {meaning}" for name, meaning in ACTIVE_COLUMNS.items()),
+        ):
+            file.write(f"# {' '.join(line.split())}\n")
+        writer = csv.writer(file, lineterminator="\n")
+        writer.writerow(ACTIVE_COLUMNS)
+        for f, frequency in enumerate(active.frequency_hz):
+            for b, beam in enumerate(active.beams):
+                pointing = [f"{beam.zenith_angle_deg:.9g}", f"{beam.azimuth_deg:.9g}"]
+                for p in np.flatnonzero(active.weights[f, b]):
+                    z, gamma, name = active.impedance_ohm[f, b, p], active.reflection[f, b, p], active.port_names[p]
+                    numbers = (z.real, z.imag, abs(gamma), np.degrees(np.angle(gamma)))
+                    writer.writerow(
+                        [f"{frequency:.9g}", beam.name, *pointing, name.antenna, name.port, *(f"{v:.9g}" for v in numbers)]
+                    )

@@ -400,9 +400,8 @@ def draw_antenna_cuts(
             if cut.plane == plane
         }
         caption.append(f"{plane}: angles positive towards azimuth {', '.join(towards.values())}")
-    with sheet(
-        path, "Patterns of the antenna", [title, band_text(frequencies)], caption, size=(max(4.0 + 3.2 * len(frequencies), 8.6), 9.6)
-    ) as figure:
+    size = (max(4.0 + 3.2 * len(frequencies), 8.6), 9.6)
+    with sheet(path, "Patterns of the antenna", [title, band_text(frequencies)], caption, size=size) as figure:
         panels = figure.subplots(3, len(frequencies), squeeze=False, sharex=True, sharey="col")
         for column, frequency in zip(panels.T, frequencies, strict=True):
             here = [cut for cut in cuts if cut.frequency_hz == frequency]
