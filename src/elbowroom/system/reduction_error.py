@@ -30,8 +30,8 @@ SAFETY = 2.0
 SAMPLED_ANTENNAS = 8
 """Antennas whose ports are looked at, those with the nearest neighbours among them."""
 
-LOUD = 0.1
-"""Part of the largest correction of an antenna from which its effect on the others is followed."""
+FOLLOWED_ANTENNAS = 24
+"""Antennas, those with the largest corrections, whose effect on the others is followed."""
 
 WHOLE_PAIRS = 6
 """Pairs at which skeletons are held against all quadrature points: those nearest to where each level begins to serve."""
@@ -121,7 +121,9 @@ def reduction_error(
             correction[d.unknowns_of(a)] = answers.to(int(k), residual[d.unknowns_of(a)])
             strength[a] = np.linalg.norm(correction[d.unknowns_of(a)], axis=0)
     # What the corrections do to other antennas, and rounding, is answered by the station in its functions.
-    loud = (strength > LOUD * strength.max(axis=0)).any(axis=1)
+    share = (strength / np.maximum(strength.max(axis=0), np.finfo(float).tiny)).max(axis=1)
+    loud = np.zeros(len(share), dtype=bool)
+    loud[np.argsort(-share, kind="stable")[:FOLLOWED_ANTENNAS]] = True
     induced = residual - _from_others(d, interactions, filler, distances, correction, loud)
     left = np.empty((space.size, len(ports)), dtype=complex)
     for a, k in enumerate(d.kind_of):
