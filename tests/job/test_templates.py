@@ -37,11 +37,30 @@ def test_templates__explain_every_key(name):
     assert [key for key in keys if key not in text] == []
 
 
-def test_demo__package_data_and_demo_data_are_the_same():
-    files = template_files("demo")
-    assert sorted(files) == sorted(p.name for p in DEMO.iterdir())
-    for name, data in files.items():
-        assert (DEMO / name).read_bytes() == data, name
+@pytest.mark.parametrize(("name", "folder"), [("demo", DEMO), ("log-periodic", DEMO / "log-periodic")])
+def test_demo__package_data_and_demo_data_are_the_same(name, folder):
+    files = template_files(name)
+    assert sorted(files) == sorted(p.name for p in folder.iterdir() if p.is_file())
+    for file, data in files.items():
+        assert (folder / file).read_bytes() == data, file
+
+
+def test_log_periodic__is_the_station_that_its_files_say():
+    job = read_job(DEMO / "log-periodic" / "job.toml")
+    assert job.frequencies_hz == (80e6, 160e6, 250e6, 350e6)
+    again = random_disc(16, radius_m=4.5, minimum_spacing_m=1.6, seed=11)
+    assert np.abs(job.layout.positions - again.positions).max() <= 0.5e-3 * (1 + 1e-9)
+    antenna = job.station().placed[0].antenna
+    assert (len(antenna.wires), len(antenna.network.lines), [p.name for p in antenna.ports]) == (20, 18, ["x", "y"])
+    # no wire of one antenna reaches into the circle of another, however both are turned
+    reach = max(np.hypot(*end[:2]) for wire in antenna.wires for end in (wire.start, wire.end))
+    offsets = job.layout.positions[:, None] - job.layout.positions[None]
+    distance = np.linalg.norm(offsets, axis=2) + 100.0 * np.eye(16)
+    assert distance.min() >= 1.6 - 1e-3
+    assert 2.0 * reach < 1.53
+    heights = sorted({wire.start[2] for wire in antenna.wires})
+    assert 0.7 < heights[0] < 0.75
+    assert heights[-1] == 1.95
 
 
 def test_demo__is_the_station_that_its_readme_says():

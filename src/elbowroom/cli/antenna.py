@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
-from elbowroom.cli.common import make_screen, modes
+from elbowroom.cli.common import checked_folder, make_screen, modes
 
 if TYPE_CHECKING:
     from elbowroom.cli.screen import Screen
@@ -100,8 +100,8 @@ def antenna(
 
     screen = make_screen(mode)
     design = read_antenna(file)
+    folder = checked_folder(output or file.parent / "results")
     station = alone(design, PerfectGround() if ground == "perfect" else FreeSpace(), height_m=height_m)
-    folder = output or file.parent / "results"
     about = [
         f"antenna {design.name!r} from {file}; ports {', '.join(p.name for p in design.ports)}",
         f"ground {ground}, origin at {height_m:g} m, every port terminated with {_text(termination)} ohm, mesh {mesh}",

@@ -41,7 +41,10 @@ def cli() -> None:
 
 @cli.command()
 @click.argument("folder", type=click.Path(path_type=Path))
-@click.option("--template", default="small", show_default=True, help="'small' (seven antennas) or 'demo' (a whole station).")
+@click.option(
+    "--template", default="small", show_default=True,
+    help="'small' (seven antennas), 'demo' (a whole station) or 'log-periodic' (16 log-periodic antennas, 80 to 350 MHz).",
+)  # fmt: skip
 def start(folder: Path, template: str) -> None:
     """Write a job, an antenna and a layout into FOLDER, ready to run and to be changed."""
     from elbowroom.job.templates import write_template

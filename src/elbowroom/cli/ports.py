@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 import click
 
-from elbowroom.cli.common import FREQUENCIES, JOB, make_screen, modes, open_job, require_stored
+from elbowroom.cli.common import FREQUENCIES, JOB, checked_folder, checked_output, make_screen, modes, open_job, require_stored
 
 if TYPE_CHECKING:
     from elbowroom.cli.screen import Screen
@@ -72,10 +72,10 @@ def ports(
     rows = port_indices(run.station, wanted)
     pointed = _pointed(run, scan_beam) if scan_azimuth_deg is not None else None
     scanned = _scan_frequency(run, scan_frequency_hz) if scan_azimuth_deg is not None else 0.0
+    folder = checked_folder(output or run.job.output_folder)
     require_stored(run)
-    folder = output or run.job.output_folder
     version = int(touchstone_version)
-    path = folder / f"ports_{matrix}{'.ts' if version == 2 else f'.s{len(rows)}p'}"
+    path = checked_output(run, folder / f"ports_{matrix}{'.ts' if version == 2 else f'.s{len(rows)}p'}")
     write_port_matrices(run, path, matrix, wanted, reference_ohm=_reference(reference_ohm), version=version)
     others = len(run.station.port_names) - len(rows)
     ending = f", {others} other{'s' if others > 1 else ''} terminated as the job says" if others else ""

@@ -1,6 +1,7 @@
 """Starting points: folders with a job, an antenna and a layout that run as they are.
 
-The files are package data below ``template_files``; those of ``demo`` also lie in the repository's ``demo_data``.
+The files are package data below ``template_files``; those of ``demo`` also lie in the repository's ``demo_data``, and those of
+``log-periodic`` in its folder of that name.
 """
 
 from __future__ import annotations
@@ -13,6 +14,7 @@ from elbowroom.base.errors import ExportError, JobFileError
 TEMPLATES = {
     "small": "seven antennas, two frequencies, a few seconds",
     "demo": "an invented station of 240 antennas, five frequencies from 60 to 300 MHz, minutes per frequency",
+    "log-periodic": "an invented station of 16 log-periodic antennas, four frequencies from 80 to 350 MHz, minutes",
 }
 """What there is to start from, and what it is."""
 
