@@ -117,7 +117,9 @@ def test_job_without_beams__is_solved_and_drawn(command, job):
     assert "impedance.png" in {p.name for p in (job.parent / "results").iterdir()}
 
 
-@pytest.mark.parametrize("verb", ["", "start", "layout", "inspect", "antenna", "solve", "compare", "export", "draw", "ports", "run"])
+@pytest.mark.parametrize(
+    "verb", ["", "start", "layout", "inspect", "antenna", "solve", "compare", "export", "draw", "ports", "run"]
+)
 def test_help__says_what_the_command_does(command, verb):
     outcome = command(*([verb] if verb else []), "--help")
     assert outcome.code == 0
