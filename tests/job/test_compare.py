@@ -102,7 +102,12 @@ def test_compare__of_identical_beams__finds_no_difference(pair):
 
 def test_compare__a_beam_scaled_by_a_complex_factor__keeps_its_shape(pair):
     fields_ = beam_fields(pair, [Beam("up", "x")], SKY, 100.0)
-    (row,) = compare_beams(replace(fields_, coupled=(0.5 + 0.5j) * fields_.isolated))
+    scaled = SimpleNamespace(
+        beam=lambda *a, **k: (0.5 + 0.5j) * pair.isolated_beam(*a, **k), isolated_beam=pair.isolated_beam,
+        embedded_patterns=pair.isolated_patterns, station=pair.station, discretisation=pair.discretisation,
+        frequency_hz=pair.frequency_hz, statistics=pair.statistics,
+    )  # fmt: skip
+    (row,) = compare_beams(replace(fields_, solution=scaled, coupled=(0.5 + 0.5j) * fields_.isolated))
     assert row.main_lobe_shape_difference_db < -200.0
     assert row.peak_change_db == pytest.approx(10 * np.log10(0.5), abs=1e-9)
     # |1 - (0.5 + 0.5j)| of the peak
@@ -190,3 +195,20 @@ def test_write_comparison__below_a_file__names_the_path_and_leaves_nothing(rows,
 
 def test_total_power__adds_both_components():
     assert total_power(np.array([[3.0 + 4.0j, 0.0], [1.0, 1j]])) == pytest.approx([25.0, 2.0])
+
+
+def test_compare__narrow_beams_on_a_coarse_sky__are_not_misjudged():
+    """24 dipoles over 35 m at 350 MHz, pointed between grid points: levels settle as the grid that was handed in is refined."""
+    rng = np.random.default_rng(5)
+    places = rng.uniform(-17.5, 17.5, (60, 2))
+    places = places[np.hypot(*places.T) < 17.5][:24]
+    station = Station([Placed(level_dipole(height=0.3, half=0.2), (x, y, 0.0)) for x, y in places], ground=PerfectGround())
+    solution = solve(station, 350e6)
+    beams = [Beam("between", "x", 30.5, 49.5)]
+    coarse, fine = (compare_beams(beam_fields(solution, beams, hemisphere_grid(step), 100.0))[0] for step in (1.0, 0.25))
+    assert coarse.sky_step_deg < 0.5
+    assert coarse.coupled_peak_m == pytest.approx(fine.coupled_peak_m, rel=1e-4)
+    assert coarse.coupled_width_up_deg == pytest.approx(fine.coupled_width_up_deg, abs=0.01)
+    assert coarse.coupled_directivity_db == pytest.approx(fine.coupled_directivity_db, abs=0.05)
+    assert coarse.coupled_sidelobe_db == pytest.approx(fine.coupled_sidelobe_db, abs=0.3)
+    assert coarse.coupled_peak_offset_deg < 0.2

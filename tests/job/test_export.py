@@ -21,7 +21,7 @@ from elbowroom.job.solve import solve
 
 SKY = hemisphere_grid(15.0)
 BEAMS = (Beam("up", "x"), Beam("low", "y", 35.0, 20.0))
-SEEN = [100.0, "open", 75.0 + 20.0j, "short"]
+SEEN = [100.0, "open", 75.0 + 20.0j, 30.0]
 
 
 def crossed():
@@ -49,7 +49,7 @@ def test_hdf5__read_with_plain_h5py__is_what_was_computed(tables, tmp_path):
         assert file["frequency_hz"][:] == pytest.approx([100e6, 150e6])
         assert list(file["beam_name"].asstr()) == ["up", "low"]
         assert list(file["port_name"].asstr()) == ["A001/x", "A001/y", "A002/x", "A002/y"]
-        assert file["termination_ohm"].asstr()[:].tolist() == [["100 +0j", "open", "75 +20j", "short"]] * 2
+        assert file["termination_ohm"].asstr()[:].tolist() == [["100 +0j", "open", "75 +20j", "30 +0j"]] * 2
         assert [d[0].name for d in file["termination_ohm"].dims] == ["/frequency_hz", "/port_name"]
         assert file["pointing_theta_rad"][1] == pytest.approx(np.radians(35.0))
         # azimuth 20 deg, north through east, is 70 deg from east towards north

@@ -6,7 +6,7 @@ import pytest
 from elbowroom.base.errors import StoreError
 from elbowroom.geometry.directions import hemisphere_grid
 from elbowroom.geometry.grounds import PerfectGround
-from elbowroom.geometry.stations import Placed, Station
+from elbowroom.geometry.stations import Placed, Station, turned
 from elbowroom.job import solve as solve_module
 from elbowroom.job.solve import SOLUTION_SCHEMA, solve
 from elbowroom.store import Hdf5Store, MemoryStore
@@ -114,3 +114,31 @@ def test_solve__an_unwritable_store_is_refused_before_the_work(tmp_path, solves)
     with pytest.raises(StoreError, match="file"):
         solve(cluster(1), FREQUENCY_HZ, store=Hdf5Store(tmp_path / "file" / "store", SOLUTION_SCHEMA))
     assert not solves
+
+
+def test_key__tells_a_second_port_at_one_node(tmp_path):
+    from elbowroom.geometry.antennas import Antenna, Port
+    from elbowroom.geometry.wires import Wire
+
+    wires = [Wire((0, 0, 0.5), (0, 0, 1.5), 0.002)]
+    one, two = Antenna("a", wires, [Port("p", 0)]), Antenna("a", wires, [Port("p", 0), Port("r", node="p")])
+    store = MemoryStore(SOLUTION_SCHEMA)
+    assert solve(Station([Placed(one)]), 150e6, store=store).impedance_matrix().shape == (1, 1)
+    assert solve(Station([Placed(two)]), 150e6, store=store).coupled.loaded_admittance.shape == (2, 2)
+
+
+@pytest.mark.parametrize("solver", ["direct", "reduced"])
+def test_stored_solution__of_a_copy_whose_turns_are_written_otherwise__is_used_or_made_again(solver):
+    design = crossed()
+    first = Station(
+        [Placed(design, (0, 0, 0), rotation_deg=-10.0), Placed(design, (2, 0, 0), rotation_deg=350.0)], PerfectGround()
+    )
+    turn = 33.3
+    second = Station([turned(p, turn) for p in first], PerfectGround())
+    store = MemoryStore(SOLUTION_SCHEMA)
+    a, b = solve(first, 150e6, store=store, solver=solver), solve(second, 150e6, store=store, solver=solver)
+    np.testing.assert_allclose(a.impedance_matrix(), b.impedance_matrix(), atol=1e-6)
+    theta, phi = np.full(5, 0.7), np.linspace(0.0, 6.0, 5)
+    one = a.embedded_patterns(theta, phi)
+    other = b.embedded_patterns(theta, phi + np.deg2rad(turn))
+    np.testing.assert_allclose(np.abs(one), np.abs(other), atol=1e-6)

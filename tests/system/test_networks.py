@@ -252,3 +252,13 @@ def test_nearest_gap__gives_a_port_behind_a_network_its_azimuth():
     network = Network((Line("in", "b", 50.0, 0.2), Line("b", "a", 50.0, 0.2)))
     antenna = Antenna("far", wires, [Port("p", node="in")], feeds=feeds, network=network)
     assert Station([Placed(antenna)]).port_nominal_phi_rad[0] == pytest.approx(np.pi / 2)
+
+
+def test_ports__that_look_into_gaps_in_another_order__are_not_swapped():
+    wires = [Wire((-0.4, 0, 1.0), (0.4, 0, 1.0), 0.002), Wire((-0.2, 2, 1.0), (0.2, 2, 1.0), 0.002)]
+    antenna = Antenna("two", wires, [Port("p", node="f"), Port("q", 1)], feeds=[FeedPoint("f", 0)])
+    # gaps: that of port q first, then the feed
+    assert antenna.nodes == ("q", "f")
+    found = attach_ports(antenna, 100e6, REFERENCE)
+    np.testing.assert_allclose(found.transfer, [[0, 1], [1, 0]], atol=1e-12)
+    np.testing.assert_allclose(found.loading, REFERENCE * np.eye(2), atol=1e-9)

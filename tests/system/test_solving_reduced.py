@@ -103,5 +103,7 @@ def test_reduced__finer_tolerance_is_nearer():
     station = cluster(4)
     direct = solve(station, 350e6, solver="direct", precision="double")
     errors = [pattern_errors(direct, solve(station, 350e6, solver="reduced", tolerance=t)).max() for t in (1e-2, 1e-3, 1e-5)]
-    assert errors[0] > 3.0 * errors[1] > 9.0 * errors[2]
+    # functions are dropped in pairs, so that neighbouring tolerances may come out nearly alike; a thousandfold one may not
+    assert errors[0] > errors[1] > 9.0 * errors[2]
+    assert all(e < t for e, t in zip(errors, (1e-2, 1e-3, 1e-5), strict=True))
     assert errors[2] < 1e-5

@@ -74,12 +74,13 @@ def solve_all(run: JobRun, screen: Screen) -> tuple[list[float], list]:
             reduced = s.strategy == "reduced"
             rows.append(
                 [frequency / 1e6, state, s.strategy, s.n_unknowns, s.n_functions if reduced else "", s.n_ports,
-                 f"{s.relative_residual:.1e}", f"{s.mesh_error:.1e}", f"{s.pattern_error:.1e}" if reduced else "",
-                 readable_seconds(total)]
+                 "" if reduced else f"{s.relative_residual:.1e}", f"{s.mesh_error:.1e}",
+                 f"{s.pattern_error:.1e}" if reduced else "", readable_seconds(total)]
             )  # fmt: skip
             screen.emit(
                 "unit", frequency_hz=frequency, state=state, solver=s.strategy, unknowns=s.n_unknowns, functions=s.n_functions,
-                ports=s.n_ports, relative_residual=s.relative_residual, mesh_error=s.mesh_error, pattern_error=s.pattern_error,
+                ports=s.n_ports, relative_residual=None if reduced else s.relative_residual,
+                mesh_error=s.mesh_error, pattern_error=s.pattern_error,
                 port_matrix_error=s.port_matrix_error, seconds=total, file=str(run.path_of(frequency)),
             )  # fmt: skip
     if rows:
@@ -91,7 +92,7 @@ def solve_all(run: JobRun, screen: Screen) -> tuple[list[float], list]:
         )  # fmt: skip
         screen.say("residual: of the linear system; mesh error: change of an isolated antenna's admittance on a finer mesh;")
         screen.say(
-            "pattern error: of embedded patterns relative to their peaks, against solving for all unknowns of the same mesh"
+            "pattern error: of embedded patterns (100-ohm ports) relative to their peaks, against all unknowns of the mesh"
         )
     for failure in failures:
         screen.error.print(f"failed at {failure.frequency_hz / 1e6:g} MHz: {failure.error}", markup=False)

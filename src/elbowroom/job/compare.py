@@ -15,13 +15,16 @@ import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import JobFileError
-from elbowroom.geometry.directions import Directions, ludwig3, unit_vectors
+from elbowroom.geometry.directions import Directions, hemisphere_grid, ludwig3, unit_vectors
 from elbowroom.geometry.grounds import FreeSpace
-from elbowroom.job.beamfields import BeamFields, mean_nominal_phi_rad
+from elbowroom.job.beamfields import BeamFields, beam_fields, mean_nominal_phi_rad
 from elbowroom.job.files import written_whole
 
 CUT_STEP_DEG = 0.05
 """Step of the great circles on which half-power widths are read; the crossing itself is interpolated."""
+
+LOBE_PART, FINEST_STEP_DEG = 0.3, 0.1
+"""Step of the sky as a part of wavelength over extent of a beam's antennas, and the finest that is taken [deg]."""
 
 FLOOR_DB = -300.0
 """Level that stands for a field of exactly nothing."""
@@ -58,9 +61,11 @@ MEANINGS = {
     "main_lobe_difference_db": "largest |coupled - isolated| within half power of the isolated peak, below that peak",
     "main_lobe_shape_difference_db": "the same after the best complex factor on the isolated beam, as gain calibration finds",
     "antenna_spread_db": "rms of the antennas' embedded patterns about their mean, in the direction pointed at, below that mean",
-    "relative_residual": "of the linear system that was solved",
+    "sky_step_deg": "step of the sky on which lobes were looked for and means were taken; peaks are searched between its points",
+    "relative_residual": "of the linear system that was solved; nan where fewer functions than unknowns were solved for",
     "mesh_error": "relative change of an isolated antenna's port admittance on a finer mesh",
-    "pattern_error": "of embedded patterns relative to their peaks, against solving for all unknowns of the same mesh",
+    "pattern_error": "of embedded patterns with 100-ohm terminations relative to their peaks, against solving for all unknowns "
+    "of the mesh",
 }
 
 
@@ -98,6 +103,7 @@ class BeamComparison:
     main_lobe_difference_db: float
     main_lobe_shape_difference_db: float
     antenna_spread_db: float
+    sky_step_deg: float
     relative_residual: float
     mesh_error: float
     pattern_error: float
@@ -258,11 +264,56 @@ class _Shape:
     cross_polar_db: float
 
 
+def resolving_step_deg(fields_: BeamFields) -> float:
+    """Return a step [deg] of the sky on which lobes of the beams are not missed: that of the fields, or a finer one.
+
+    A filled aperture of extent D has a half-power width of about lambda/D (any antenna handbook); a third of it is asked for.
+    """
+    rows, _ = fields_.directions.shape or (2, 1)
+    given = 90.0 / max(rows - 1, 1)
+    taking_part = np.any(fields_.weights != 0.0, axis=0)
+    places = fields_.solution.station.port_positions[taking_part]
+    extent = float(np.linalg.norm(np.ptp(places, axis=0))) if len(places) else 0.0
+    wavelength = 2.0 * np.pi / fields_.solution.discretisation.wavenumber
+    needed = max(float(np.degrees(LOBE_PART * wavelength / max(extent, 1e-3))), FINEST_STEP_DEG)
+    return given if given <= needed else 90.0 / np.ceil(90.0 / needed)
+
+
+def _searched_peak(fields_: BeamFields, index: int, which: str, start: np.ndarray) -> tuple[float, np.ndarray]:
+    """Return the largest power near a direction and where it is, from the field itself on ever finer patches."""
+    evaluate = fields_.solution.beam if which == "coupled" else fields_.solution.isolated_beam
+    grounded = not isinstance(fields_.solution.station.ground, FreeSpace)
+    rows, _ = fields_.directions.shape or (2, 1)
+    reach = np.pi / 2.0 / max(rows - 1, 1)
+    offsets = np.linspace(-1.0, 1.0, 7)
+    best, at = -1.0, start
+    for _ in range(4):
+        first = np.cross(at, np.eye(3)[int(np.argmin(np.abs(at)))])
+        first /= np.linalg.norm(first)
+        second = np.cross(at, first)
+        patch = at + reach * (offsets[:, None, None] * first + offsets[None, :, None] * second)
+        points = np.concatenate([at[None], patch.reshape(-1, 3)])
+        points /= np.linalg.norm(points, axis=1)[:, None]
+        if grounded:
+            points = points[points[:, 2] >= -1e-12]
+        theta = np.arctan2(np.hypot(points[:, 0], points[:, 1]), points[:, 2])
+        phi = np.arctan2(points[:, 1], points[:, 0])
+        found = total_power(evaluate(fields_.weights[index], theta, phi, termination=fields_.termination))
+        top = int(np.argmax(found))
+        # Rounding moves no peak.
+        if found[top] > found[0] * (1.0 + 1e-9):
+            at = points[top]
+        best = float(found[top])
+        reach *= 0.25
+    return best, at
+
+
 def _shape(fields_: BeamFields, index: int, which: str, nominal: float) -> _Shape:
     d = fields_.directions
     field = getattr(fields_, which)[index]
     power = total_power(field)
-    best, peak = refined_peak(power, d)
+    best, rough = refined_peak(power, d)
+    peak_power, peak = _searched_peak(fields_, index, which, rough)
     lobe = main_lobe(power.reshape(d.shape), best).ravel()
     outside = ~lobe
     weights = d.weights_sr
@@ -273,17 +324,18 @@ def _shape(fields_: BeamFields, index: int, which: str, nominal: float) -> _Shap
         below = evaluate(fields_.weights[index], np.pi - d.theta_rad, d.phi_rad, termination=fields_.termination)
         integral += float(total_power(below) @ weights)
     co, cross = ludwig3(field[:, 0], field[:, 1], d.phi_rad, nominal)
-    within = power >= 0.5 * power[best]
+    within = power >= 0.5 * peak_power
+    within[best] = True
     up, across = _widths(fields_, index, peak, which)
     far = float(power[outside] @ weights[outside] / weights[outside].sum()) if outside.any() else 0.0
     return _Shape(
-        float(power[best]),
+        peak_power,
         peak,
         up,
         across,
-        decibels(float(power[outside].max() / power[best])) if outside.any() else float("nan"),
-        decibels(far / float(power[best])) if outside.any() else float("nan"),
-        decibels(4.0 * np.pi * float(power[best]) / integral),
+        decibels(float(power[outside].max() / peak_power)) if outside.any() else float("nan"),
+        decibels(far / peak_power) if outside.any() else float("nan"),
+        decibels(4.0 * np.pi * peak_power / integral),
         decibels(float(np.max(np.abs(cross[within]) ** 2) / np.max(np.abs(co[within]) ** 2))),
     )
 
@@ -326,6 +378,11 @@ def compare_beams(fields_: BeamFields) -> list[BeamComparison]:
     if not fields_.beams:
         msg = "the job has no [[beam]] to compare; add one that names a port"
         raise JobFileError(msg)
+    step_deg = resolving_step_deg(fields_)
+    if step_deg < 0.999 * 90.0 / (d.shape[0] - 1):
+        fields_ = beam_fields(fields_.solution, fields_.beams, hemisphere_grid(step_deg), fields_.termination)
+        d = fields_.directions
+    assert d.weights_sr is not None
     nominal_phi_rad = mean_nominal_phi_rad(fields_.solution.station, fields_.weights)
     rows = []
     for index, beam in enumerate(fields_.beams):
@@ -338,7 +395,8 @@ def compare_beams(fields_: BeamFields) -> list[BeamComparison]:
         difference = total_power(coupled - isolated)
         worst = int(np.argmax(difference))
         power = total_power(isolated)
-        lobe = power >= 0.5 * power.max()
+        lobe = power >= 0.5 * i.peak_power
+        lobe[int(np.argmax(power))] = True
         inside = isolated[lobe].ravel()
         factor = np.vdot(inside, coupled[lobe].ravel()) / np.vdot(inside, inside)
         shape_difference = total_power(coupled[lobe] - factor * isolated[lobe]) / abs(factor) ** 2
@@ -381,6 +439,7 @@ def compare_beams(fields_: BeamFields) -> list[BeamComparison]:
                 main_lobe_difference_db=decibels(float(difference[lobe].max()) / i.peak_power),
                 main_lobe_shape_difference_db=decibels(float(shape_difference.max()) / i.peak_power),
                 antenna_spread_db=_antenna_spread_db(fields_, index),
+                sky_step_deg=step_deg,
                 relative_residual=statistics.relative_residual,
                 mesh_error=statistics.mesh_error,
                 pattern_error=statistics.pattern_error,

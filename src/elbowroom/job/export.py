@@ -130,8 +130,8 @@ def table_head(title: str, job_text: str, settings: TableSettings) -> dict[str, 
         "coupled": "weighted sum of embedded element patterns: every port of the station terminated, all antennas coupled",
         "isolated": "weighted sum of isolated element patterns: each antenna alone at its place, same ground and termination",
         "stated_error": "relative_residual of the linear system; mesh_error: relative change of an isolated antenna's port "
-        "admittance on a finer mesh; pattern_error: of embedded patterns relative to their peaks, against solving for all "
-        "unknowns of that mesh, 0 where that was done; the wires' own approximations are of the order of (ka)^2",
+        "admittance on a finer mesh; pattern_error: of embedded patterns with 100-ohm terminations relative to their peaks, against "
+        "solving for all unknowns of that mesh, 0 where that was done; the wires' own approximations are of the order of (ka)^2",
         "job_file": job_text,
     }
 
@@ -221,7 +221,7 @@ class _TableWriter:
         self._axis("phi_rad", phi, "rad", "Angles from east towards north")
         self._axis("component", _text(settings.component_names), "1", "Components of the fields")
         for name, text in (
-            ("relative_residual", "Of the linear system"),
+            ("relative_residual", "Of the linear system; nan where fewer functions than unknowns were solved for"),
             ("mesh_error", "Relative change of an isolated antenna's admittance on a finer mesh"),
             ("pattern_error", "Of embedded patterns relative to their peaks, by solving in fewer functions than unknowns"),
         ):

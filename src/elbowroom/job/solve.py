@@ -65,7 +65,8 @@ SOLUTION_SCHEMA = Schema(
 def _network_inputs(antenna: Antenna) -> dict[str, Any]:
     """Return what connects gaps and ports, with numbers for the names of nodes; nothing if each port has its own gap."""
     number = {name: i for i, name in enumerate(antenna.nodes)}
-    if not antenna.network and not antenna.feeds:
+    port_nodes = [number[n] for n in antenna.port_nodes]
+    if not antenna.network and port_nodes == list(range(len(antenna.gaps))):
         return {}
     elements: dict[str, Any] = {}
     for group in fields(antenna.network):
@@ -73,7 +74,7 @@ def _network_inputs(antenna: Antenna) -> dict[str, Any]:
             {f.name: number.get(getattr(e, f.name), getattr(e, f.name)) for f in fields(e)}
             for e in getattr(antenna.network, group.name)
         ]
-    return {"port_nodes": [number[n] for n in antenna.port_nodes], "network": elements}
+    return {"port_nodes": port_nodes, "network": elements}
 
 
 def _design_inputs(antenna: Antenna) -> dict[str, Any]:
@@ -171,7 +172,7 @@ def _to_record(solution: Solution, attributes: dict[str, Any]) -> Record:
             "port_names": [str(n) for n in d.station.port_names],
             "strategy": s.strategy,
             "precision": s.precision,
-            "relative_residual": s.relative_residual,
+            "relative_residual": s.relative_residual if np.isfinite(s.relative_residual) else None,
             "mesh_error": s.mesh_error,
             "seconds": dict(s.seconds),
             "n_functions": s.n_functions,
@@ -180,6 +181,19 @@ def _to_record(solution: Solution, attributes: dict[str, Any]) -> Record:
             **attributes,
         },
     )
+
+
+def _fits(record: Record, d: Discretisation) -> bool:
+    """Return whether a record was made from the same kinds of antenna; places that round alike may differ in kind."""
+    a = record.arrays
+    if not np.array_equal(a["unknown_offset"], d.unknown_offsets) or not np.array_equal(a["port_offset"], d.port_offsets):
+        return False
+    # Kinds may be numbered otherwise, but antennas that share one must share one here.
+    if not len(a["functions"]):
+        return True
+    if len(a["functions_shape"]) != len(d.kinds):
+        return False
+    return np.array_equal(a["kind_of_antenna"], d.kind_of)
 
 
 def _from_record(record: Record, d: Discretisation) -> Solution:
@@ -199,7 +213,7 @@ def _from_record(record: Record, d: Discretisation) -> Solution:
         precision=attributes["precision"],
         n_unknowns=d.n_unknowns,
         n_ports=d.n_ports,
-        relative_residual=float(attributes["relative_residual"]),
+        relative_residual=float("nan" if attributes["relative_residual"] is None else attributes["relative_residual"]),
         mesh_error=float(attributes["mesh_error"]),
         seconds={k: float(v) for k, v in attributes["seconds"].items()},
         n_functions=int(attributes["n_functions"]),
@@ -208,7 +222,9 @@ def _from_record(record: Record, d: Discretisation) -> Solution:
     )
     bases: list[np.ndarray | None] = []
     first = 0
-    for rows, columns in a["functions_shape"]:
+    # A direct solution has no functions, however its kinds were counted.
+    shapes = a["functions_shape"] if len(a["functions"]) else [(0, 0)] * len(d.kinds)
+    for rows, columns in shapes:
         bases.append(a["functions"][first : first + rows * columns].reshape(rows, columns) if rows else None)
         first += rows * columns
     space = CurrentSpace(a["coordinate_offset"], tuple(bases))
@@ -298,7 +314,9 @@ def solve(
         key = solution_key(station, frequency_hz, settings, near, far, strategy)
         record = store.get(key)
         if record is not None:
-            return _from_record(record, discretise(station, frequency_hz, mesh=settings, near=near, far=far, self_blocks=False))
+            found = discretise(station, frequency_hz, mesh=settings, near=near, far=far, self_blocks=False)
+            if _fits(record, found):
+                return _from_record(record, found)
         if not only_stored:
             store.check_writable()
     if only_stored:

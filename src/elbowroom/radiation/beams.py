@@ -47,7 +47,7 @@ def pointing_weights(
     if delay_step_s is not None:
         from elbowroom.base.constants import SPEED_OF_LIGHT
 
-        if not delay_step_s > 0.0:
+        if not 0.0 < delay_step_s < np.inf:
             msg = f"delay_step_s {delay_step_s!r}: expected a positive time"
             raise ModelRangeError(msg)
         step = delay_step_s * SPEED_OF_LIGHT

@@ -362,6 +362,7 @@ class Solution:
             Effective length along theta_hat and phi_hat [m].
         """
         frame = direction_frame(theta_rad, phi_rad)
+        self._refuse_mixed_responses(self._checked_weights(weights), termination)
         beams = current_beams(self.discretisation, self.beam_currents(weights, termination), frame, space=self.space)
         return beams if np.ndim(weights) == 2 else beams[0]
 
@@ -371,6 +372,7 @@ class Solution:
         """Return the isolated beam: the weighted sum of isolated element patterns; see :meth:`beam`."""
         frame = direction_frame(theta_rad, phi_rad)
         table = self._checked_weights(weights)
+        self._refuse_mixed_responses(table, termination)
         amounts = self._isolated_amounts(termination)
         currents = np.empty((self.discretisation.n_unknowns, len(table)), dtype=complex)
         for a, amount in enumerate(amounts):
@@ -422,6 +424,18 @@ class Solution:
             amplitudes=amplitude,
             delay_step_s=delay_step_s,
         )
+
+    def _refuse_mixed_responses(self, weights: ComplexArray, termination: Termination) -> None:
+        """Refuse beams that add currents of shorted ports [m/ohm] to voltages of others [m]."""
+        shorted = reflection_of(termination, self.discretisation.n_ports, self.reference_ohm) == -1.0
+        used = weights != 0.0
+        mixed = np.any(used[:, shorted], axis=1) & np.any(used[:, ~shorted], axis=1)
+        if np.any(mixed):
+            msg = (
+                "a beam adds shorted ports, whose response is a current, to others, whose response is a voltage; "
+                "give shorted ports no weight"
+            )
+            raise ModelRangeError(msg)
 
     def _checked_weights(self, weights: ArrayLike) -> ComplexArray:
         table = np.atleast_2d(np.asarray(weights, dtype=complex))

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from threading import Lock
 
 import numpy as np
@@ -171,6 +171,18 @@ class Discretisation:
         """Return the rows of one antenna's ports."""
         return slice(int(self.port_offsets[antenna]), int(self.port_offsets[antenna + 1]))
 
+    def part(self, antennas: np.ndarray) -> Discretisation:
+        """Return some of the antennas as a station of their own, of the same kinds."""
+        placed = [self.station.placed[int(a)] for a in antennas]
+        unknowns, ports = np.diff(self.unknown_offsets)[antennas], np.diff(self.port_offsets)[antennas]
+        return replace(
+            self,
+            station=Station(placed, self.station.ground),
+            kind_of=self.kind_of[antennas],
+            unknown_offsets=np.concatenate([[0], np.cumsum(unknowns)]),
+            port_offsets=np.concatenate([[0], np.cumsum(ports)]),
+        )
+
     def antennas_of(self, kind: int) -> np.ndarray:
         """Return the indices of the antennas of one kind."""
         return np.flatnonzero(self.kind_of == kind)
@@ -287,7 +299,9 @@ def discretise(
         which = design_index[id(placed.antenna)]
         # Over free space height is just another shift; keeping it in the kind costs nothing but a little memory.
         height = placed.position[2]
-        key = (which, placed.attitude, height)
+        # Rounded as in the store's keys: antennas that are one to them are one kind.
+        turns = tuple(np.round(placed.orientation / 1e-8).astype(np.int64).ravel())
+        key = (which, turns, round(height / 1e-6))
         if key in index_of:
             kind_of[a] = index_of[key]
             continue

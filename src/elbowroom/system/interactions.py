@@ -66,7 +66,7 @@ class SkeletonInteractions:
         levels = range(len(self.skeletons.distances_m))
         self.skeletons.prepare()
         with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
-            pairs = [(k, level) for k in range(len(self.discretisation.kinds)) for level in levels]
+            pairs = [(int(k), level) for k in np.unique(self.discretisation.kind_of) for level in levels]
             list(pool.map(lambda pair: self.weights(*pair), pairs))
 
     def weights(self, kind: int, level: int) -> _SkeletonWeights:
@@ -155,6 +155,12 @@ class SkeletonTable:
         self.distances_m = tuple(sorted(distances_m))
         self._made: dict[tuple[int, int, int], tuple[Mesh, Skeleton]] = {}
         self._lock = Lock()
+
+    def of_station(self, discretisation: Discretisation) -> SkeletonTable:
+        """Return the same skeletons for another station of the same kinds of antenna."""
+        other = SkeletonTable(discretisation, self.distances_m, self.tolerance)
+        other._made, other._lock = self._made, self._lock
+        return other
 
     def level_of(self, distance: float) -> int:
         """Return the level that serves wires at a distance [m]; -1 where none does."""

@@ -76,7 +76,7 @@ def attach_ports(antenna: Antenna, frequency_hz: float, reference_ohm: float) ->
     other (for example D. M. Pozar, Microwave Engineering, 4th ed., 2012, sections 2.1 and 4.3).
     """
     n_gaps, n_ports = len(antenna.gaps), len(antenna.ports)
-    if not antenna.network and n_gaps == n_ports:
+    if not antenna.network and antenna.port_nodes == antenna.nodes[:n_gaps]:
         # Every port looks straight into its own gap.
         return PortAttachment(
             np.eye(n_gaps) * complex(reference_ohm), np.eye(n_gaps, dtype=complex), np.zeros((n_ports, n_ports), dtype=complex)

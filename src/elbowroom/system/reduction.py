@@ -47,7 +47,7 @@ class ReductionSettings:
     """
 
     tolerance: float = 1e-3
-    cut_factor: float = 0.13
+    cut_factor: float = 0.4
     neighbour_pairs: int = 24
     skeleton_factor: float = 0.05
     skeleton_distances_m: tuple[float, ...] = (0.1, 0.3, 1.0)

@@ -44,7 +44,8 @@ class SolveStatistics:
         Sizes.
     relative_residual : float
         Largest |b - Z x| / |b| in the scaled unknowns, over the ports or random combinations of them; in single
-        precision, where Z is not kept, the relative error of known random vectors recovered from their products.
+        precision, where Z is not kept, the relative error of known random vectors recovered from their products.  Not a number
+        for reduced solves, whose error is ``pattern_error``.
     mesh_error : float
         Largest relative change of an isolated antenna's port admittance when its mesh is refined.
     seconds : dict
@@ -52,8 +53,9 @@ class SolveStatistics:
     n_functions : int
         Functions that stood for the unknowns in a reduced solve; 0 otherwise.
     pattern_error, port_matrix_error : float
-        Stated error of a reduced solve against the full one on the same mesh: of embedded patterns relative to their peaks,
-        and of the port matrix relative to its norm; zero where all unknowns were solved for.
+        Stated error of a reduced solve against the full one on the same mesh: of embedded patterns relative to their peaks
+        where every port sees the reference resistance, and of the port matrix relative to its norm; zero where all unknowns
+        were solved for.
     """
 
     strategy: str
@@ -172,8 +174,12 @@ def mesh_error(discretisation: Discretisation, isolated: list[PortCurrents]) -> 
         alone = discretise(
             Station([place], discretisation.station.ground), discretisation.frequency_hz, mesh=finer, near=discretisation.near
         )
-        fine = admittance_from_loaded(solve_isolated(alone)[0].loaded_admittance, REFERENCE_OHM)
-        here = admittance_from_loaded(isolated[k].loaded_admittance, REFERENCE_OHM)
+        fine, here = solve_isolated(alone)[0].loaded_admittance, isolated[k].loaded_admittance
+        try:
+            fine, here = admittance_from_loaded(fine, REFERENCE_OHM), admittance_from_loaded(here, REFERENCE_OHM)
+        except np.linalg.LinAlgError:
+            # Ports in parallel at one node have no short-circuit admittance; the loaded one always exists.
+            pass
         worst = max(worst, float(np.linalg.norm(here - fine) / np.linalg.norm(fine)))
     return worst
 

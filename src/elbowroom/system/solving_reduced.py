@@ -2,13 +2,17 @@
 
 from __future__ import annotations
 
+import copy
 import time
 from collections.abc import Iterator
 from concurrent.futures import ThreadPoolExecutor
+from dataclasses import replace
 
 import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
+from elbowroom.base.errors import GeometryError, SolveError
+from elbowroom.geometry.stations import Station
 from elbowroom.system.assembly import (
     TILE_ORDER,
     PairFiller,
@@ -21,7 +25,7 @@ from elbowroom.system.discretisation import Discretisation, attachments
 from elbowroom.system.factorisation import TiledSymmetric
 from elbowroom.system.interactions import SkeletonInteractions, SkeletonTable
 from elbowroom.system.reduction import KindAnswers, ReductionSettings, enriched, reduced_candidates
-from elbowroom.system.reduction_error import reduction_error, skeleton_error
+from elbowroom.system.reduction_error import ReductionError, reduction_error, skeleton_error
 from elbowroom.system.solving import REFERENCE_OHM, PortCurrents, SolveStatistics, port_excitations
 from elbowroom.system.spaces import CurrentSpace, reduced_space
 
@@ -30,6 +34,9 @@ BATCH_ANTENNAS = 12
 
 SINGLE_TOLERANCE = 3e-5
 """Tolerance from which the reduced matrix is kept and factored in single precision."""
+
+PILOT_ANTENNAS, MOST_PILOTS, PILOT_MARGIN = 8, 10, 0.25
+"""Antennas on which the number of functions is tried, tries, and part of the tolerance that must be met there."""
 
 MOST_ATTEMPTS = 4
 """Times that functions are added before an error above the tolerance is left as stated."""
@@ -52,6 +59,8 @@ def assemble_reduced(
     *,
     dtype: type = np.complex64,
     progress: Progress | None = None,
+    into: TiledSymmetric | None = None,
+    only: frozenset[int] | None = None,
 ) -> TiledSymmetric:
     """Return the reduced impedance matrix with every port loaded, in tiles.
 
@@ -73,6 +82,10 @@ def assemble_reduced(
         Precision of the matrix.
     progress : callable, optional
         Told the stage and the fraction done.
+    into : TiledSymmetric, optional
+        A matrix of the same functions to be filled in place.
+    only : frozenset of int, optional
+        If given, only rows and columns of these antennas are filled.
     """
     d, n_antennas = discretisation, len(discretisation.station)
     groups: list[range] = []
@@ -82,7 +95,7 @@ def assemble_reduced(
             groups.append(range(first, a))
             first = a
     groups.append(range(first, n_antennas))
-    matrix = TiledSymmetric([int(space.offsets[g.stop] - space.offsets[g.start]) for g in groups], dtype)
+    matrix = into or TiledSymmetric([int(space.offsets[g.stop] - space.offsets[g.start]) for g in groups], dtype)
     group_of = np.repeat(np.arange(len(groups)), [len(g) for g in groups])
     attached = attachments(d, reference_ohm)
     levels = np.vectorize(interactions.skeletons.level_of, otypes=[int])(distances)
@@ -107,6 +120,8 @@ def assemble_reduced(
     def fill_row(i: int) -> None:
         place(i, i, own[d.kind_of[i]])
         others = np.arange(i + 1, n_antennas)
+        if only is not None and i not in only:
+            others = np.array([j for j in others if int(j) in only], dtype=int)
         for level, chosen in _batches(others, levels[i, others]):
             if level >= 0:
                 for j, block in zip(chosen, interactions.blocks(i, chosen, level), strict=True):
@@ -130,9 +145,30 @@ def solve_reduced(
     reference_ohm: float = REFERENCE_OHM,
     progress: Progress | None = None,
 ) -> tuple[PortCurrents, CurrentSpace, SolveStatistics]:
-    """Solve a station in a few functions of each antenna, and state the error.
+    """Solve a station in a few functions of each antenna, and state the error; see :class:`ReducedStation`."""
+    solved = ReducedStation(discretisation, settings, reference_ohm=reference_ohm, progress=progress)
+    return solved.currents, solved.space, solved.statistics
 
-    Where the stated error exceeds the tolerance, more functions are taken and the station is solved again.
+
+class _Stopwatch:
+    """Wall time of stages, one after another."""
+
+    def __init__(self) -> None:
+        self.seconds: dict[str, float] = {}
+        self._clock = time.perf_counter()
+
+    def lap(self, stage: str) -> None:
+        """Count the time since the last call for a stage."""
+        now = time.perf_counter()
+        self.seconds[stage] = self.seconds.get(stage, 0.0) + now - self._clock
+        self._clock = now
+
+
+class ReducedStation:
+    """A station solved in a few functions of each antenna, with a stated error; antennas can be moved afterwards.
+
+    How many functions serve is tried on a few neighbouring antennas first.  Where the stated error of the whole station exceeds
+    the tolerance all the same, more functions are taken and the station is solved again.
 
     Parameters
     ----------
@@ -144,81 +180,196 @@ def solve_reduced(
         Resistance across every port [ohm].
     progress : callable, optional
         Told the stage and the fraction done.
+    movable : bool, optional
+        Whether to keep the matrix beside its factors, so that :meth:`moved` need not fill it again.
 
-    Returns
-    -------
-    PortCurrents, CurrentSpace, SolveStatistics
-        Currents in the coordinates of the space.
+    Attributes
+    ----------
+    currents : PortCurrents
+        Currents in the coordinates of ``space``.
+    space : CurrentSpace
+        The functions.
+    statistics : SolveStatistics
+        Sizes, times and stated errors.
 
     Raises
     ------
     SolveError
         If the reduced matrix is singular or not finite.
     """
-    d, settings = discretisation, settings or ReductionSettings()
-    seconds: dict[str, float] = {}
-    clock = time.perf_counter()
 
-    def lap(stage: str) -> None:
-        nonlocal clock
-        now = time.perf_counter()
-        seconds[stage] = seconds.get(stage, 0.0) + now - clock
-        clock = now
+    currents: PortCurrents
+    space: CurrentSpace
+    statistics: SolveStatistics
 
-    filler, distances, answers = PairFiller(d), antenna_distances(d), KindAnswers(d, reference_ohm)
-    table = SkeletonTable(d, settings.skeleton_distances_m, settings.skeleton_factor * settings.tolerance)
-    with single_threaded_blas():
-        # Matrices of one antenna: threads of BLAS would cost more than they save.
-        candidates = reduced_candidates(d, settings, filler, distances, answers, table)
-    skeleton: float | None = None
-    excitations, own = port_excitations(d, reference_ohm)
-    lap("functions")
-    cut = settings.cut_factor * np.sqrt(settings.tolerance)
-    for attempt in range(MOST_ATTEMPTS):
-        bases = [c.cut(cut) for c in candidates]
-        space = reduced_space(d, bases)
-        interactions = SkeletonInteractions(d, space.bases, table)
-        interactions.prepare()
-        lap("skeletons")
+    def __init__(
+        self,
+        discretisation: Discretisation,
+        settings: ReductionSettings | None = None,
+        *,
+        reference_ohm: float = REFERENCE_OHM,
+        progress: Progress | None = None,
+        movable: bool = False,
+    ) -> None:
+        self.discretisation, self.settings = discretisation, settings or ReductionSettings()
+        self.reference_ohm, self.progress, self.movable = reference_ohm, progress, movable
+        self.watch = _Stopwatch()
+        d = discretisation
+        self.filler, self.distances, self.answers = PairFiller(d), antenna_distances(d), KindAnswers(d, reference_ohm)
+        # Nearer than this, an element's Gauss points do not reach the tolerance however many they are.
+        nearest = d.far.close_elements * self.filler.longest
+        served = sorted({max(distance, nearest) for distance in self.settings.skeleton_distances_m})
+        self.table = SkeletonTable(d, served, self.settings.skeleton_factor * self.settings.tolerance)
+        with single_threaded_blas():
+            # Matrices of one antenna: threads of BLAS would cost more than they save.
+            self.candidates = reduced_candidates(d, self.settings, self.filler, self.distances, self.answers, self.table)
+        self.skeleton_error = skeleton_error(d, self.table, self.filler, self.distances, self.answers)
         # Single precision leaves about 1e-6 of a pattern, which a tighter tolerance would see.
-        dtype = np.complex64 if settings.tolerance >= SINGLE_TOLERANCE else np.complex128
-        matrix = assemble_reduced(d, space, interactions, filler, distances, reference_ohm, dtype=dtype, progress=progress)
-        lap("assemble")
+        self.dtype: type = np.complex64 if self.settings.tolerance >= SINGLE_TOLERANCE else np.complex128
+        self.watch.lap("functions")
+        self.cut = self._pilot_cut()
+        self.watch.lap("pilot")
+        self._solve_until_good()
+
+    def _tell(self, stage: str, fraction: float) -> None:
+        if self.progress is not None:
+            self.progress(stage, fraction)
+
+    def _pilot_cut(self) -> float:
+        """Return a cut whose functions serve a few antennas that stand closest together."""
+        d, tolerance = self.discretisation, self.settings.tolerance
+        cut = self.settings.cut_factor * np.sqrt(tolerance)
+        if len(d.station) <= 2 * PILOT_ANTENNAS:
+            return cut
+        spread = np.where(np.eye(len(d.station), dtype=bool), np.inf, self.distances)
+        middle = int(np.argmin(np.sort(spread, axis=1)[:, :3].sum(axis=1)))
+        chosen = np.sort(np.argsort(self.distances[middle], kind="stable")[:PILOT_ANTENNAS])
+        part = d.part(chosen)
+        filler, table = PairFiller(part), self.table.of_station(part)
+        distances = self.distances[np.ix_(chosen, chosen)]
+        for _ in range(MOST_PILOTS):
+            space = reduced_space(part, [c.cut(cut) for c in self.candidates])
+            interactions = SkeletonInteractions(part, space.bases, table)
+            with single_threaded_blas():
+                matrix = assemble_reduced(part, space, interactions, filler, distances, self.reference_ohm, dtype=self.dtype)
+                _, error = self._solved(part, space, interactions, filler, distances, matrix, 0.0)
+            # A whole station gathers the errors of more neighbours than a few antennas do.
+            if error.pattern <= PILOT_MARGIN * tolerance or all(c.count(cut) == c.most for c in self.candidates):
+                break
+            cut *= 0.7
+        return cut
+
+    def _solved(
+        self,
+        d: Discretisation,
+        space: CurrentSpace,
+        interactions: SkeletonInteractions,
+        filler: PairFiller,
+        distances: FloatArray,
+        matrix: TiledSymmetric,
+        skeleton: float,
+        watch: _Stopwatch | None = None,
+    ) -> tuple[PortCurrents, ReductionError]:
+        """Factor a reduced matrix in place, solve it for all ports and estimate the error."""
+        excitations, own = port_excitations(d, self.reference_ohm)
         right = np.zeros((space.size, d.n_ports), dtype=complex)
         for a, k in enumerate(d.kind_of):
-            right[space.of(a), d.ports_of(a)] = bases[k].T @ excitations[d.unknowns_of(a), d.ports_of(a)]
-        if progress is not None:
-            progress("factorise", 0.0)
+            rows, ports = d.unknowns_of(a), d.ports_of(a)
+            right[space.of(a), ports] = space.bases[k].T @ excitations[rows, ports]  # type: ignore[union-attr]
         factors = matrix.factorise()
-        lap("factorise")
+        if watch is not None:
+            watch.lap("factorise")
         x = factors.solve(right).astype(np.complex128)
         admittance = own + right.T @ x
-        lap("port excitations")
-        if skeleton is None:
-            skeleton = skeleton_error(d, table, filler, distances, answers)
-        error = reduction_error(d, space, interactions, filler, distances, answers, x, excitations, factors, skeleton)
-        lap("error estimate")
-        complete = all(c.count(cut) == len(c.functions) for c in candidates)
-        if error.pattern <= settings.tolerance or complete or attempt == MOST_ATTEMPTS - 1:
-            break
-        if attempt > 0 or all(c.count(cut) == c.most for c in candidates):
-            # More of the same functions did not do: those that were missed join them.
-            candidates = enriched(d, candidates, error.corrections)
-        cut *= min(0.5, 0.5 * np.sqrt(settings.tolerance / error.pattern))
-    if progress is not None:
-        progress("port excitations", 1.0)
-    return (
-        PortCurrents(x, 0.5 * (admittance + admittance.T)),
-        space,
-        SolveStatistics(
+        if watch is not None:
+            watch.lap("port excitations")
+        error = reduction_error(d, space, interactions, filler, distances, self.answers, x, excitations, factors, skeleton)
+        if watch is not None:
+            watch.lap("error estimate")
+        return PortCurrents(x, 0.5 * (admittance + admittance.T)), error
+
+    def _solve_until_good(self) -> None:
+        d, tolerance = self.discretisation, self.settings.tolerance
+        for attempt in range(MOST_ATTEMPTS):
+            self.space = reduced_space(d, [c.cut(self.cut) for c in self.candidates])
+            self.interactions = SkeletonInteractions(d, self.space.bases, self.table)
+            self.interactions.prepare()
+            self.watch.lap("skeletons")
+            matrix = assemble_reduced(
+                d, self.space, self.interactions, self.filler, self.distances, self.reference_ohm,
+                dtype=self.dtype, progress=self.progress,
+            )  # fmt: skip
+            self.watch.lap("assemble")
+            error = self._finish(matrix)
+            complete = all(c.count(self.cut) == len(c.functions) for c in self.candidates)
+            if error.pattern <= tolerance or complete or attempt == MOST_ATTEMPTS - 1:
+                break
+            if attempt > 0 or all(c.count(self.cut) == c.most for c in self.candidates):
+                # More of the same functions did not do: those that were missed join them.
+                self.candidates = enriched(d, self.candidates, error.corrections)
+            self.cut *= min(0.5, 0.5 * np.sqrt(tolerance / error.pattern))
+        self._tell("port excitations", 1.0)
+
+    def _finish(self, matrix: TiledSymmetric) -> ReductionError:
+        """Factor the whole matrix, solve it and keep what came out."""
+        d = self.discretisation
+        self.matrix = matrix.astype(self.dtype) if self.movable else None
+        self._tell("factorise", 0.0)
+        self.currents, error = self._solved(
+            d, self.space, self.interactions, self.filler, self.distances, matrix, self.skeleton_error, self.watch
+        )
+        self.statistics = SolveStatistics(
             "reduced",
-            "single" if dtype is np.complex64 else "double",
+            "single" if self.dtype is np.complex64 else "double",
             d.n_unknowns,
             d.n_ports,
-            error.residual,
-            seconds=seconds,
-            n_functions=space.size,
+            float("nan"),
+            seconds=dict(self.watch.seconds),
+            n_functions=self.space.size,
             pattern_error=error.pattern,
             port_matrix_error=error.port_matrix,
-        ),
-    )
+        )
+        return error
+
+    def moved(self, places: dict[int, tuple[float, float]]) -> ReducedStation:
+        """Return the station with some antennas shifted to other places in the plane, solved again.
+
+        Only the rows and columns of these antennas are filled anew; factorisation, excitations and error estimate follow.  The
+        functions stay as they are, and where they no longer serve, the stated error says so (``statistics.pattern_error``).
+
+        Parameters
+        ----------
+        places : dict of int to (float, float)
+            New east and north [m] of antennas by their index.
+
+        Raises
+        ------
+        GeometryError
+            If there is no such antenna, or a place is not finite.
+        SolveError
+            If the station was not solved with ``movable=True``.
+        """
+        if self.matrix is None:
+            msg = "the matrix was not kept; solve with movable=True to move antennas afterwards"
+            raise SolveError(msg)
+        d = self.discretisation
+        for index in places:
+            if not 0 <= index < len(d.station):
+                msg = f"no antenna {index}: expected 0 to {len(d.station) - 1}"
+                raise GeometryError(msg)
+        placed = [replace(p, position=(*places[i], p.position[2])) if i in places else p for i, p in enumerate(d.station)]
+        other = copy.copy(self)
+        other.watch = _Stopwatch()
+        other.discretisation = replace(d, station=Station(placed, d.station.ground))
+        other.filler, other.distances = PairFiller(other.discretisation), antenna_distances(other.discretisation)
+        other.table = self.table.of_station(other.discretisation)
+        other.interactions = SkeletonInteractions(other.discretisation, self.space.bases, other.table)
+        other.watch.lap("distances")
+        matrix = self.matrix.astype(self.dtype)
+        assemble_reduced(
+            other.discretisation, self.space, other.interactions, other.filler, other.distances, self.reference_ohm,
+            dtype=self.dtype, into=matrix, only=frozenset(places),
+        )  # fmt: skip
+        other.watch.lap("assemble")
+        other._finish(matrix)
+        return other

@@ -159,9 +159,10 @@ def bow_tie(
 
     From each end of a short wire with the port two wires leave at half the flare angle to either side; a third closes the
     triangle.  Its half-width is (half_length - feed_length / 2) tan(flare / 2).  Solid bow-ties without end have the impedance
-    of two coplanar fins, (eta / 2) K(k') / K(k) with k = tan^2(45 deg - flare / 4) and k' its complement (R. L. Carrel, "The
-    characteristic impedance of two infinite cones of arbitrary cross section", IRE Trans. AP-6, 1958; from memory); an outline
-    of wires comes near it where the wires are many wavelengths long only.
+    of two coplanar fins, (eta / 4) K(k') / K(k) with k = tan^2(flare / 4) and k' its complement: 188 ohm, eta / 2, at 90 deg,
+    where the fins are their own complement (R. L. Carrel, "The characteristic impedance of two infinite cones of arbitrary
+    cross section", IRE Trans. AP-6, 1958; from memory); an outline of wires comes near it where the wires are many wavelengths
+    long only.
 
     Parameters
     ----------
