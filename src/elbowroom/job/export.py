@@ -130,8 +130,9 @@ def table_head(title: str, job_text: str, settings: TableSettings) -> dict[str, 
         "coupled": "weighted sum of embedded element patterns: every port of the station terminated, all antennas coupled",
         "isolated": "weighted sum of isolated element patterns: each antenna alone at its place, same ground and termination",
         "stated_error": "relative_residual of the linear system; mesh_error: relative change of an isolated antenna's port "
-        "admittance on a finer mesh; pattern_error: of embedded patterns with 100-ohm terminations relative to their peaks, against "
-        "solving for all unknowns of that mesh, 0 where that was done; the wires' own approximations are of the order of (ka)^2",
+        "admittance on a finer mesh; pattern_error: of embedded patterns with 100-ohm terminations relative to their peaks, "
+        "against solving for all unknowns of that mesh, 0 where that was done; the wires' own approximations are of the order of "
+        "(ka)^2",
         "job_file": job_text,
     }
 
