@@ -193,3 +193,14 @@ def test_table__explains_every_column(tmp_path):
         assert any(line.startswith(f"# {name}: ") for line in head), name
     assert float(found[0]["resistance_ohm"]) == pytest.approx(rows[0].resistance_ohm, rel=1e-8)
     assert found[0]["impedance_change"] == "nan"
+
+
+def test_figures__high_over_a_ground__find_the_peak_between_its_many_lobes():
+    # 0.4 m dipole 20 m up at 350 MHz: lobes of a degree or two
+    design = Antenna("high", [Wire((-0.2, 0, 20.4), (0.2, 0, 20.4), 0.002)], [Port("x", 0)])
+    solution = solve_alone(alone(design, PerfectGround()), 350e6)
+    (figures,) = antenna_figures(solution)
+    theta = np.radians(np.arange(0.0, 90.0, 0.02))
+    field = solution.embedded_patterns(theta, np.full(theta.size, np.pi / 2), termination=100.0)[0]
+    best = 10 * np.log10((4 * np.pi * 376.730313 * (np.abs(field) ** 2).sum(-1) / 100.0 / (299792458.0 / 350e6) ** 2).max())
+    assert figures.peak_realised_gain_db == pytest.approx(best, abs=0.05)

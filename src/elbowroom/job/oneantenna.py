@@ -32,8 +32,8 @@ from elbowroom.radiation.solution import Solution, antenna_power_gain
 from elbowroom.system.discretisation import discretise
 from elbowroom.system.solving import REFERENCE_OHM, solve_direct
 
-SKY_STEP_DEG = 2.0
-"""Step of the directions among which the peak is looked for; its place and height are then interpolated."""
+SKY_STEP_DEG, FINEST_SKY_STEP_DEG = 2.0, 0.1
+"""Largest and smallest step of the directions among which the peak is looked for; its place is then interpolated."""
 
 CUT_STEP_DEG = 0.25
 """Step of the planes on which half-power widths are read; the crossing itself is interpolated."""
@@ -211,6 +211,26 @@ def solve_alone(station: Station, frequency_hz: float, mesh: str | MeshSettings 
     return Solution(discretisation, currents, (currents,), REFERENCE_OHM, statistics)
 
 
+def _electrical_radius(solution: Solution) -> float:
+    """Return k times the radius of the smallest sphere about the antenna and its image in a ground."""
+    placed = solution.station.placed[0]
+    points = placed.to_station(np.array([(w.start, w.end) for w in placed.antenna.wires])).reshape(-1, 3)
+    middle = 0.5 * (points.min(axis=0) + points.max(axis=0))
+    if not isinstance(solution.station.ground, FreeSpace):
+        middle[2] = 0.0
+    return solution.discretisation.wavenumber * float(np.max(np.linalg.norm(points - middle, axis=1)))
+
+
+def sky_for(solution: Solution) -> Directions:
+    """Return a grid of the sky on which no lobe is missed.
+
+    Lobes of a source within a radius a are no narrower than about 180 deg / (ka); an eighth of that is the step, if it is less
+    than `SKY_STEP_DEG`.
+    """
+    step = max(min(SKY_STEP_DEG, 22.5 / _electrical_radius(solution)), FINEST_SKY_STEP_DEG)
+    return hemisphere_grid(90.0 / np.ceil(90.0 / step - 1e-9))
+
+
 def sphere_for(solution: Solution) -> Directions:
     """Return directions and weights that integrate the power of an antenna's patterns, over the sky only above a ground.
 
@@ -218,14 +238,8 @@ def sphere_for(solution: Solution) -> Directions:
     Michielssen, Song (eds.), Fast and Efficient Algorithms in Computational Electromagnetics, 2001, section 3.3; from memory),
     with d = 8; power takes twice that.  A ground's image is within the radius, too.
     """
-    placed = solution.station.placed[0]
     grounded = not isinstance(solution.station.ground, FreeSpace)
-    points = placed.to_station(np.array([(w.start, w.end) for w in placed.antenna.wires])).reshape(-1, 3)
-    low, high = points.min(axis=0), points.max(axis=0)
-    middle = 0.5 * (low + high)
-    if grounded:
-        middle[2] = 0.0
-    size = solution.discretisation.wavenumber * float(np.max(np.linalg.norm(points - middle, axis=1)))
+    size = _electrical_radius(solution)
     order = int(np.ceil(size + 1.8 * 8.0 ** (2.0 / 3.0) * size ** (1.0 / 3.0))) + 2
     return sphere_quadrature(2 * order, hemisphere=grounded)
 
@@ -305,7 +319,7 @@ def antenna_figures(solution: Solution, finer: Solution | None = None, *, termin
         If the termination has no positive resistance, or a port answers to no direction at all.
     """
     seen = checked_termination(termination)
-    sky = hemisphere_grid(SKY_STEP_DEG)
+    sky = sky_for(solution)
     here = _response(solution, sky, seen)
     there = None if finer is None else _response(finer, sky, seen)
     return [_figures(solution, finer, sky, here, there, port, seen) for port in range(solution.discretisation.n_ports)]
