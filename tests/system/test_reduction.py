@@ -124,6 +124,24 @@ def test_settings__a_tolerance_out_of_range_is_refused(tolerance):
         ReductionSettings(tolerance)
 
 
+@pytest.mark.parametrize(
+    ("key", "value"),
+    [("cut_factor", 0.0), ("cut_factor", np.nan), ("skeleton_factor", -1.0), ("skeleton_factor", np.inf), ("neighbour_pairs", -1),
+     ("skeleton_distances_m", (0.3, 0.0)), ("skeleton_distances_m", (np.nan,))],
+)  # fmt: skip
+def test_settings__numbers_without_sense_are_refused_by_their_key(key, value):
+    with pytest.raises(ModelRangeError, match=f"{key} .*: expected"):
+        ReductionSettings(**{key: value})
+
+
+def test_settings__without_skeletons_all_pairs_are_done_in_full():
+    d = discretise(cluster(3), FREQUENCY_HZ)
+    with_them, without = (solve_reduced(d, ReductionSettings(1e-4, **o)) for o in ({}, {"skeleton_distances_m": ()}))
+    expected = without[0].loaded_admittance
+    found = with_them[0].loaded_admittance
+    assert 0.0 < np.linalg.norm(found - expected) < with_them[2].port_matrix_error * np.linalg.norm(expected)
+
+
 @pytest.mark.parametrize("ground", [FreeSpace(), PerfectGround()], ids=["free space", "perfect ground"])
 def test_bases__finer_tolerances_take_more_functions(ground):
     d = discretise(cluster(3, ground=isinstance(ground, PerfectGround)), FREQUENCY_HZ)

@@ -93,7 +93,7 @@ def antenna(
         msg = f"--height-m {height_m}: expected a number of metres"
         raise click.UsageError(msg)
     from elbowroom import __version__
-    from elbowroom.geometry.grounds import FreeSpace, PerfectGround
+    from elbowroom.geometry.grounds import GROUNDS
     from elbowroom.job.antennafile import read_antenna
     from elbowroom.job.oneantenna import alone, write_figures
     from elbowroom.job.pictures import picture_name
@@ -101,7 +101,7 @@ def antenna(
     screen = make_screen(mode)
     design = read_antenna(file)
     folder = checked_folder(output or file.parent / "results")
-    station = alone(design, PerfectGround() if ground == "perfect" else FreeSpace(), height_m=height_m)
+    station = alone(design, GROUNDS[ground], height_m=height_m)
     about = [
         f"antenna {design.name!r} from {file}; ports {', '.join(p.name for p in design.ports)}",
         f"ground {ground}, origin at {height_m:g} m, every port terminated with {_text(termination)} ohm, mesh {mesh}",
@@ -180,7 +180,6 @@ def _draw(
     station: Station, rows: list[AntennaFigures], cuts: list[PatternCut], folder: Path, stem: str, termination: complex,
     screen: Screen, *, convergence: bool,
 ) -> None:  # fmt: skip
-    from elbowroom.geometry.grounds import FreeSpace
     from elbowroom.job.pictures import antenna as pictures
     from elbowroom.job.pictures import picture_name
 
@@ -193,7 +192,7 @@ def _draw(
 
     screen.wrote(pictures.draw_antenna(station, path("view"), title=title, frequencies_hz=frequencies))
     screen.wrote(pictures.draw_antenna_impedance(rows, path("impedance"), **common))  # type: ignore[arg-type]
-    free_space = isinstance(station.ground, FreeSpace)
+    free_space = station.ground.open_below
     screen.wrote(pictures.draw_antenna_gain(rows, path("gain"), free_space=free_space, **common))  # type: ignore[arg-type]
     screen.wrote(pictures.draw_antenna_cuts(cuts, path("cuts"), **common))  # type: ignore[arg-type]
     if convergence:

@@ -15,7 +15,6 @@ from elbowroom.base.arrays import FloatArray
 from elbowroom.base.constants import wavelength_of
 from elbowroom.base.errors import GeometryError, ModelRangeError
 from elbowroom.geometry.antennas import Antenna
-from elbowroom.geometry.grounds import FreeSpace, PerfectGround
 from elbowroom.geometry.layouts import SAME_PLACE_M
 from elbowroom.geometry.mesh import Mesh, MeshSettings, build_mesh, mesh_settings
 from elbowroom.geometry.stations import Placed, Station
@@ -167,7 +166,7 @@ def _meshes(station: Station, wavelength: float, settings: MeshSettings) -> Iter
     """Yield each different mesh with the first antenna that has it and the number of those that do."""
     from elbowroom.system.discretisation import grounded_ends
 
-    conducting = isinstance(station.ground, PerfectGround)
+    conducting = station.ground.conducting
     groups: dict[tuple[int, bytes], tuple[Placed, np.ndarray, int]] = {}
     design_index = {id(d): i for i, d in enumerate(station.designs)}
     ends_of: dict[tuple, np.ndarray] = {}
@@ -192,7 +191,7 @@ def _near_ground(station: Station) -> Iterator[Problem]:
     """Wires so low over a conducting ground that their image is as near as another wire that would be doubted."""
     from elbowroom.system.discretisation import GROUND_CONTACT_M
 
-    if isinstance(station.ground, FreeSpace):
+    if station.ground.open_below:
         return
     told: set[tuple[int, float]] = set()
     for placed in station:
@@ -380,7 +379,7 @@ def _ground(station: Station) -> Iterator[Problem]:
     """Wires below, in or almost on a perfect ground; antennas alike are told once."""
     from elbowroom.system.discretisation import GROUND_CONTACT_M
 
-    if not isinstance(station.ground, PerfectGround):
+    if not station.ground.conducting:
         return
     found: dict[tuple[str, int, str], list[str]] = {}
     for placed in station:

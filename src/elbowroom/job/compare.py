@@ -16,7 +16,6 @@ import numpy as np
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import JobFileError
 from elbowroom.geometry.directions import Directions, hemisphere_grid, ludwig3, unit_vectors
-from elbowroom.geometry.grounds import FreeSpace
 from elbowroom.job.beamfields import BeamFields, beam_fields, mean_nominal_phi_rad
 from elbowroom.job.files import written_whole
 
@@ -234,7 +233,7 @@ def _great_circles(peak: np.ndarray, above_ground: bool) -> tuple[FloatArray, li
 
 def _widths(fields_: BeamFields, index: int, peak: np.ndarray, which: str) -> tuple[float, float]:
     solution, weights = fields_.solution, fields_.weights[index]
-    grounded = not isinstance(solution.station.ground, FreeSpace)
+    grounded = not solution.station.ground.open_below
     angle, circles = _great_circles(peak, grounded)
     evaluate = solution.beam if which == "coupled" else solution.isolated_beam
     theta = np.concatenate([c[0] for c in circles])
@@ -282,7 +281,7 @@ def resolving_step_deg(fields_: BeamFields) -> float:
 def _searched_peak(fields_: BeamFields, index: int, which: str, start: np.ndarray) -> tuple[float, np.ndarray]:
     """Return the largest power near a direction and where it is, from the field itself on ever finer patches."""
     evaluate = fields_.solution.beam if which == "coupled" else fields_.solution.isolated_beam
-    grounded = not isinstance(fields_.solution.station.ground, FreeSpace)
+    grounded = not fields_.solution.station.ground.open_below
     rows, _ = fields_.directions.shape or (2, 1)
     reach = np.pi / 2.0 / max(rows - 1, 1)
     offsets = np.linspace(-1.0, 1.0, 7)
@@ -319,7 +318,7 @@ def _shape(fields_: BeamFields, index: int, which: str, nominal: float) -> _Shap
     weights = d.weights_sr
     assert weights is not None
     integral = float(power @ weights)
-    if isinstance(fields_.solution.station.ground, FreeSpace):
+    if fields_.solution.station.ground.open_below:
         evaluate = fields_.solution.beam if which == "coupled" else fields_.solution.isolated_beam
         below = evaluate(fields_.weights[index], np.pi - d.theta_rad, d.phi_rad, termination=fields_.termination)
         integral += float(total_power(below) @ weights)

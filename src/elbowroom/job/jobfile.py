@@ -59,7 +59,7 @@ from typing import Any
 
 from elbowroom.base.errors import GeometryError, JobFileError
 from elbowroom.geometry.antennas import Antenna
-from elbowroom.geometry.grounds import FreeSpace, Ground, PerfectGround
+from elbowroom.geometry.grounds import GROUNDS
 from elbowroom.geometry.layouts import Layout, read_layout
 from elbowroom.geometry.offsets import Offsets, displaced, read_offsets
 from elbowroom.geometry.stations import PortName
@@ -74,8 +74,6 @@ from elbowroom.job.tomlfile import counted, fail, key_path, near_miss, read_toml
 
 SCHEMA = 1
 """Version of the keys above."""
-
-_GROUNDS: dict[str, Ground] = {"perfect": PerfectGround(), "free-space": FreeSpace()}
 
 
 _TOP_KEYS = ("schema", "title", *SECTIONS, "beam")
@@ -156,7 +154,7 @@ def read_job(path: str | Path) -> Job:
         layout=layout,
         designs=designs,
         antenna_paths=antenna_paths,
-        ground=_GROUNDS[station_table.ground],
+        ground=GROUNDS[station_table.ground],
         turn_deg=station_table.turn_deg,
         shift_east_m=station_table.shift_east_m,
         shift_north_m=station_table.shift_north_m,

@@ -216,7 +216,7 @@ def _electrical_radius(solution: Solution) -> float:
     placed = solution.station.placed[0]
     points = placed.to_station(np.array([(w.start, w.end) for w in placed.antenna.wires])).reshape(-1, 3)
     middle = 0.5 * (points.min(axis=0) + points.max(axis=0))
-    if not isinstance(solution.station.ground, FreeSpace):
+    if not solution.station.ground.open_below:
         middle[2] = 0.0
     return solution.discretisation.wavenumber * float(np.max(np.linalg.norm(points - middle, axis=1)))
 
@@ -238,7 +238,7 @@ def sphere_for(solution: Solution) -> Directions:
     Michielssen, Song (eds.), Fast and Efficient Algorithms in Computational Electromagnetics, 2001, section 3.3; from memory),
     with d = 8; power takes twice that.  A ground's image is within the radius, too.
     """
-    grounded = not isinstance(solution.station.ground, FreeSpace)
+    grounded = not solution.station.ground.open_below
     size = _electrical_radius(solution)
     order = int(np.ceil(size + 1.8 * 8.0 ** (2.0 / 3.0) * size ** (1.0 / 3.0))) + 2
     return sphere_quadrature(2 * order, hemisphere=grounded)
@@ -274,7 +274,7 @@ def _response(solution: Solution, sky: Directions, termination: complex) -> _Res
 
 def _plane(solution: Solution, phi_rad: float, step_deg: float) -> tuple[Directions, FloatArray]:
     """Return directions and signed zenith angles of a vertical plane, all the way round in free space."""
-    reach = 180.0 if isinstance(solution.station.ground, FreeSpace) else 90.0
+    reach = 180.0 if solution.station.ground.open_below else 90.0
     half = round(reach / step_deg)
     angle = np.arange(-half, half + 1) * (reach / half)
     return Directions(np.radians(np.abs(angle)), np.where(angle < 0.0, phi_rad + np.pi, phi_rad)), angle
@@ -359,7 +359,7 @@ def _figures(
     others = np.delete(np.abs(here.scattering[:, port]), port)
     accepted = 1.0 - abs(reflection) ** 2
     level = solution.station.placed[0].antenna.has_level_polarisation(port)
-    free = isinstance(solution.station.ground, FreeSpace)
+    free = solution.station.ground.open_below
     mean = float(here.mean_gain[port])
     changes = (nan,) * 4
     if finer is not None and there is not None:

@@ -17,7 +17,6 @@ from scipy.linalg import cholesky, lu_factor, lu_solve, solve_triangular
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import ModelRangeError
-from elbowroom.geometry.grounds import FreeSpace
 from elbowroom.geometry.mesh import Mesh
 from elbowroom.kernels.basis import overlap_matrix, slope_coefficients
 from elbowroom.kernels.grounds import Workspace
@@ -43,7 +42,12 @@ class ReductionSettings:
     skeleton_factor : float
         Tolerance of interactions between antennas, as a part of the tolerance.
     skeleton_distances_m : tuple of float
-        Distances between wires from which each set of skeletons serves [m]; nearer pairs are done in full.
+        Distances between wires from which each set of skeletons serves [m]; nearer pairs are done in full, all if there are none.
+
+    Raises
+    ------
+    ModelRangeError
+        If the tolerance is out of range or another number makes no sense.
     """
 
     tolerance: float = 1e-3
@@ -55,6 +59,16 @@ class ReductionSettings:
     def __post_init__(self) -> None:
         if not 1e-6 <= self.tolerance <= 0.1:
             msg = f"tolerance {self.tolerance!r}: expected 1e-6 to 0.1"
+            raise ModelRangeError(msg)
+        for key in ("cut_factor", "skeleton_factor"):
+            if not 0.0 < getattr(self, key) < np.inf:
+                msg = f"{key} {getattr(self, key)!r}: expected a positive number"
+                raise ModelRangeError(msg)
+        if self.neighbour_pairs < 0:
+            msg = f"neighbour_pairs {self.neighbour_pairs!r}: expected none or more"
+            raise ModelRangeError(msg)
+        if not all(0.0 < distance < np.inf for distance in self.skeleton_distances_m):
+            msg = f"skeleton_distances_m {self.skeleton_distances_m!r}: expected positive distances"
             raise ModelRangeError(msg)
 
 
@@ -264,7 +278,7 @@ def _candidates_of(
     root = cholesky(current_weights(mesh, d.wavenumber), lower=False)
     ends = np.concatenate([mesh.start, mesh.end])
     radius = 0.5 * float(np.max(np.linalg.norm(ends - ends.mean(axis=0), axis=1))) * 2.0
-    theta, phi = sky_samples(radius, d.wavenumber, isinstance(d.station.ground, FreeSpace))
+    theta, phi = sky_samples(radius, d.wavenumber, d.station.ground.open_below)
     frame = direction_frame(theta, phi)
     parts: list[ComplexArray] = []
     for k in _distinct_blocks(d, kinds):

@@ -14,7 +14,6 @@ from dataclasses import dataclass
 import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
-from elbowroom.geometry.grounds import FreeSpace
 from elbowroom.kernels.grounds import Workspace, ground_kernels
 from elbowroom.system.assembly import PairFiller, available_cores, single_threaded_blas
 from elbowroom.system.discretisation import Discretisation
@@ -191,14 +190,14 @@ def _from_others(
 
 def _relative_fields(d: Discretisation, correction: ComplexArray, currents: ComplexArray) -> FloatArray:
     """Return the largest far field of corrections (N, R) over that of the currents, (R,), over the whole sky."""
-    theta, phi = sky_samples(4.0 / d.wavenumber, d.wavenumber, isinstance(d.station.ground, FreeSpace))
-    if not isinstance(d.station.ground, FreeSpace):
+    theta, phi = sky_samples(4.0 / d.wavenumber, d.wavenumber, d.station.ground.open_below)
+    if not d.station.ground.open_below:
         # Level and upright currents have their nulls at the horizon and the zenith; neither end is left out.
         theta = np.minimum(theta, 0.5 * np.pi)
     rng = np.random.default_rng(theta.size)
     # Directions by chance beside the regular ones: the far field of a whole station has far finer structure.
     more = 160
-    lowest = -1.0 if isinstance(d.station.ground, FreeSpace) else 0.0
+    lowest = -1.0 if d.station.ground.open_below else 0.0
     theta = np.concatenate([theta, np.arccos(rng.uniform(lowest, 1.0, more))])
     phi = np.concatenate([phi, rng.uniform(0.0, 2.0 * np.pi, more)])
     frame = direction_frame(theta, phi)

@@ -13,7 +13,6 @@ from matplotlib.lines import Line2D
 from elbowroom.base.arrays import FloatArray
 from elbowroom.base.constants import wavelength_of
 from elbowroom.geometry.antennas import Antenna
-from elbowroom.geometry.grounds import FreeSpace
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.job.pictures.sheets import (
     HALO,
@@ -266,7 +265,7 @@ def draw_from_side(
     count = sum(p.antenna == design for p in station)
     points = lines.reshape(-1, 2)
     width = max(float(np.ptp(points[:, 0])), 0.05)
-    grounded = not isinstance(station.ground, FreeSpace)
+    grounded = not station.ground.open_below
     bottom = min(0.0, float(points[:, 1].min())) if grounded else float(points[:, 1].min())
     top = float(points[:, 1].max())
     height = max(top - bottom, 0.05)
