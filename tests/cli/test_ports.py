@@ -72,7 +72,7 @@ def test_ports__scan_points_from_horizon_to_horizon(command, solved):
     results = solved.parent / "results"
     assert (results / "active-scan_low-x_110MHz.png").read_bytes()[:4] == b"\x89PNG"
     rows = table(results / "active-scan_low-x_110MHz.csv")
-    assert len(rows) == 73 * 3
+    assert len(rows) == 181 * 3
     # where the scan passes the beam's own direction, it is the beam
     here = [r for r in rows if (r["zenith_angle_deg"], r["azimuth_deg"]) == ("40", "120")]
     beam = [r for r in table(results / "active_ports.csv") if r["beam"] == "low-x"]

@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     from elbowroom.job.pipeline import JobRun
     from elbowroom.job.portmatrices import ActivePorts
 
-STEP_DEG = 2.5
+STEP_DEG = 1.0
 """Step of the zenith angle of a scan."""
 
 

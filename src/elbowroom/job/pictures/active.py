@@ -127,7 +127,7 @@ def draw_scan(
         frequency_text(float(active.frequency_hz[0])),
     ]
     z, gamma = active.impedance_ohm[0][:, rows], np.abs(active.reflection[0][:, rows])
-    label = f"zenith angle pointed at [deg], positive towards {azimuth_deg % 360.0:.5g}\u00b0"
+    label = f"zenith angle pointed at [deg], positive towards azimuth {azimuth_deg % 360.0:.5g}\u00b0"
     _draw(
         path, "Active impedance and reflection over pointing", details, terminations, angle, label, z, gamma,
         active.returned_power()[0], angle.size == 1,
