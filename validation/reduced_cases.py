@@ -61,7 +61,7 @@ class Difference:
     stated_pattern: float
     stated_admittance: float
     functions: float
-    attempts_seconds: float
+    seconds: float
 
 
 def pattern_errors(truth, other, termination=100.0, found=None) -> np.ndarray:
