@@ -32,7 +32,7 @@ from elbowroom.radiation.solution import Solution, antenna_power_gain
 from elbowroom.system.discretisation import discretise
 from elbowroom.system.solving import REFERENCE_OHM, solve_direct
 
-SKY_STEP_DEG, FINEST_SKY_STEP_DEG = 2.0, 0.1
+SKY_STEP_DEG, FINEST_SKY_STEP_DEG = 2.0, 0.25
 """Largest and smallest step of the directions among which the peak is looked for; its place is then interpolated."""
 
 CUT_STEP_DEG = 0.25

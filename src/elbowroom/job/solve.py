@@ -23,7 +23,7 @@ from elbowroom.system.solving import REFERENCE_OHM, PortCurrents, SolveStatistic
 from elbowroom.system.solving_reduced import solve_reduced
 from elbowroom.system.spaces import CurrentSpace, all_unknowns
 
-MODEL_VERSION = 1
+MODEL_VERSION = 2
 """Raised whenever a change of the physics or numerics changes solved currents beyond rounding."""
 
 PLACE_STEP_M = 1e-6

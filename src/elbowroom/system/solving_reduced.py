@@ -364,6 +364,8 @@ class ReducedStation:
         other.filler, other.distances = PairFiller(other.discretisation), antenna_distances(other.discretisation)
         other.table = self.table.of_station(other.discretisation)
         other.interactions = SkeletonInteractions(other.discretisation, self.space.bases, other.table)
+        # Antennas may now stand nearer to one another than any did.
+        other.skeleton_error = skeleton_error(other.discretisation, other.table, other.filler, other.distances, other.answers)
         other.watch.lap("distances")
         matrix = self.matrix.astype(self.dtype)
         assemble_reduced(
