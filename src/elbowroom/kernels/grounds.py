@@ -58,17 +58,24 @@ class GroundKernels(Protocol):
 
 
 class Workspace:
-    """Reusable buffers for point kernels, one per thread: large allocations cost more than filling them."""
+    """Reusable buffers for point kernels, one per thread: large allocations cost more than filling them.
 
-    def __init__(self) -> None:
+    Parameters
+    ----------
+    single : bool, optional
+        Whether kernels are kept in single precision: about 4e-7 of a kernel, and products in half the time.
+    """
+
+    def __init__(self, single: bool = False) -> None:
+        self.dtype: type = np.float32 if single else np.float64
         self._flat: dict[str, FloatArray] = {}
 
     def array(self, name: str, shape: tuple[int, ...]) -> FloatArray:
-        """Return an uninitialised float64 array of that shape; its contents last until the name is asked for again."""
+        """Return an uninitialised array of that shape; its contents last until the name is asked for again."""
         size = int(np.prod(shape))
         flat = self._flat.get(name)
         if flat is None or flat.size < size:
-            flat = self._flat[name] = np.empty(size)
+            flat = self._flat[name] = np.empty(size, dtype=self.dtype)
         return flat[:size].reshape(shape)
 
 

@@ -49,10 +49,19 @@ class SkeletonInteractions:
         Functions of each kind; ``None`` for the unknowns themselves.
     skeletons : SkeletonTable
         Skeletons of each design.
+    single : bool, optional
+        Whether kernels and their products are in single precision.
     """
 
-    def __init__(self, discretisation: Discretisation, bases: Sequence[ComplexArray | None], skeletons: SkeletonTable) -> None:
-        self.discretisation, self.bases, self.skeletons = discretisation, bases, skeletons
+    def __init__(
+        self,
+        discretisation: Discretisation,
+        bases: Sequence[ComplexArray | None],
+        skeletons: SkeletonTable,
+        *,
+        single: bool = False,
+    ) -> None:
+        self.discretisation, self.bases, self.skeletons, self.single = discretisation, bases, skeletons, single
         self.ground: GroundKernels = ground_kernels(discretisation.station.ground)
         self.positions = discretisation.station.positions
         probe = self.ground.fill(np.array([[0.0], [0.0], [1.0]]), np.array([[9.0], [0.0], [1.0]]), 1.0, Workspace())
@@ -94,14 +103,18 @@ class SkeletonInteractions:
         source = np.concatenate([level_parts.real, level_parts.imag, z.real, z.imag], axis=1)
         test = np.stack([x, y, -q, z], axis=1).reshape(-1, x.shape[1]).T
         points = skeleton.points @ k.orientation.T + [0.0, 0.0, k.height]
+        kinds = (np.float32, np.complex64) if self.single else (np.float64, np.complex128)
         return _SkeletonWeights(
-            np.ascontiguousarray(points.T), np.ascontiguousarray(source), np.ascontiguousarray(test), x.shape[1]
+            np.ascontiguousarray(points.T),
+            np.ascontiguousarray(source, dtype=kinds[0]),
+            np.ascontiguousarray(test, dtype=kinds[1]),
+            x.shape[1],
         )
 
     def radiated(self, i: int, points: FloatArray, level: int) -> ComplexArray:
         """Return what the functions of antenna i give at points (3, M) [m]: (M, 4, n), as x, y, charge and z weights meet it."""
         if not hasattr(self._local, "work"):
-            self._local.work = Workspace()
+            self._local.work = Workspace(self.single)
         mine = self.weights(self.discretisation.kind_of[i], level)
         n = mine.count
         kernels = self.ground.fill(mine.points, points, self.discretisation.wavenumber, self._local.work)
@@ -111,7 +124,7 @@ class SkeletonInteractions:
             for first in (2 * n, 5 * n):
                 level_part[..., first : first + n] = charges @ mine.source[:, first : first + n]
         upright = np.swapaxes(kernels.vertical, 1, 2) @ mine.source[:, 6 * n :]
-        out = np.empty((points.shape[1], 4, n), dtype=complex)
+        out = np.empty((points.shape[1], 4, n), dtype=np.complex64 if self.single else complex)
         flat = out.reshape(points.shape[1], 4 * n)
         flat.real[:, : 3 * n] = level_part[0, :, : 3 * n] - level_part[1, :, 3 * n :]
         flat.imag[:, : 3 * n] = level_part[0, :, 3 * n :] + level_part[1, :, : 3 * n]
@@ -256,7 +269,8 @@ def carried_field(
         parts = ((0, 2, kernels.horizontal), (2, 3, kernels.charge), (3, 4, kernels.vertical))  # type: ignore[assignment]
     for first, last, kernel in parts:
         some = weights[:, first:last].reshape(len(weights), -1)
-        real, imag = np.ascontiguousarray(some.real), np.ascontiguousarray(some.imag)
+        real: FloatArray = some.real.astype(work.dtype)
+        imag: FloatArray = some.imag.astype(work.dtype)
         field = np.empty((points.shape[1], real.shape[1]), dtype=complex)
         field.real = kernel[0] @ real - kernel[1] @ imag
         field.imag = kernel[0] @ imag + kernel[1] @ real

@@ -161,7 +161,7 @@ def _from_others(
             sources[int(j), level] = (table.points(int(j), level), weights)
 
     def row(i: int) -> None:
-        work = Workspace()
+        work = Workspace(interactions.single)
         own = d.unknowns_of(i)
         total = np.zeros((own.stop - own.start, currents.shape[1]), dtype=complex)
         others = np.flatnonzero(sounding & (np.arange(n_antennas) != i))

@@ -225,7 +225,8 @@ class ReducedStation:
             self.candidates = reduced_candidates(d, self.settings, self.filler, self.distances, self.answers, self.table)
         self.skeleton_error = skeleton_error(d, self.table, self.filler, self.distances, self.answers)
         # Single precision leaves about 1e-6 of a pattern, which a tighter tolerance would see.
-        self.dtype: type = np.complex64 if self.settings.tolerance >= SINGLE_TOLERANCE else np.complex128
+        self.single = self.settings.tolerance >= SINGLE_TOLERANCE
+        self.dtype: type = np.complex64 if self.single else np.complex128
         self.watch.lap("functions")
         self.cut = self._pilot_cut()
         self.watch.lap("pilot")
@@ -249,7 +250,7 @@ class ReducedStation:
         distances = self.distances[np.ix_(chosen, chosen)]
         for _ in range(MOST_PILOTS):
             space = reduced_space(part, [c.cut(cut) for c in self.candidates])
-            interactions = SkeletonInteractions(part, space.bases, table)
+            interactions = SkeletonInteractions(part, space.bases, table, single=self.single)
             with single_threaded_blas():
                 matrix = assemble_reduced(part, space, interactions, filler, distances, self.reference_ohm, dtype=self.dtype)
                 _, error = self._solved(part, space, interactions, filler, distances, matrix, 0.0)
@@ -292,7 +293,7 @@ class ReducedStation:
         d, tolerance = self.discretisation, self.settings.tolerance
         for attempt in range(MOST_ATTEMPTS):
             self.space = reduced_space(d, [c.cut(self.cut) for c in self.candidates])
-            self.interactions = SkeletonInteractions(d, self.space.bases, self.table)
+            self.interactions = SkeletonInteractions(d, self.space.bases, self.table, single=self.single)
             self.interactions.prepare()
             self.watch.lap("skeletons")
             matrix = assemble_reduced(
@@ -363,7 +364,7 @@ class ReducedStation:
         other.discretisation = replace(d, station=Station(placed, d.station.ground))
         other.filler, other.distances = PairFiller(other.discretisation), antenna_distances(other.discretisation)
         other.table = self.table.of_station(other.discretisation)
-        other.interactions = SkeletonInteractions(other.discretisation, self.space.bases, other.table)
+        other.interactions = SkeletonInteractions(other.discretisation, self.space.bases, other.table, single=self.single)
         # Antennas may now stand nearer to one another than any did.
         other.skeleton_error = skeleton_error(other.discretisation, other.table, other.filler, other.distances, other.answers)
         other.watch.lap("distances")
