@@ -257,22 +257,41 @@ class SkeletonTable:
 
 
 def carried_field(
-    ground: GroundKernels, points: FloatArray, sources: FloatArray, weights: ComplexArray, wavenumber: float, work: Workspace
+    ground: GroundKernels,
+    points: FloatArray,
+    sources: FloatArray,
+    weights: ComplexArray,
+    wavenumber: float,
+    work: Workspace,
 ) -> ComplexArray:
     """Return the fields (M, 4, R) at points (3, M) of weights (J, 4, R) at sources (3, J), in x, y, charge and z."""
+    flat = weights.reshape(len(weights), -1)
+    return field_of_parts(ground, points, sources, flat.real.astype(work.dtype), flat.imag.astype(work.dtype), wavenumber, work)
+
+
+def field_of_parts(
+    ground: GroundKernels,
+    points: FloatArray,
+    sources: FloatArray,
+    real: FloatArray,
+    imag: FloatArray,
+    wavenumber: float,
+    work: Workspace,
+    silent: np.ndarray | None = None,
+) -> ComplexArray:
+    """Return the fields (M, 4, R) of weights whose parts are (J, 4 R) each; ``silent`` are sources that count nothing."""
     kernels = ground.fill(points, sources, wavenumber, work)
-    columns = weights.shape[2]
-    out = np.empty((points.shape[1], 4, columns), dtype=complex)
-    together = kernels.charge is kernels.horizontal
-    parts = ((0, 3, kernels.horizontal), (3, 4, kernels.vertical))
-    if not together:
-        parts = ((0, 2, kernels.horizontal), (2, 3, kernels.charge), (3, 4, kernels.vertical))  # type: ignore[assignment]
+    columns = real.shape[1] // 4
+    if silent is not None and silent.size:
+        for kernel in {id(k): k for k in (kernels.horizontal, kernels.charge, kernels.vertical)}.values():
+            # A source may stand on a point; what the kernel is there must not enter.
+            kernel[:, :, silent] = 0.0
+    out = np.empty((points.shape[1], 4 * columns), dtype=complex)
+    parts = [(0, 3, kernels.horizontal), (3, 4, kernels.vertical)]
+    if kernels.charge is not kernels.horizontal:
+        parts = [(0, 2, kernels.horizontal), (2, 3, kernels.charge), (3, 4, kernels.vertical)]
     for first, last, kernel in parts:
-        some = weights[:, first:last].reshape(len(weights), -1)
-        real: FloatArray = some.real.astype(work.dtype)
-        imag: FloatArray = some.imag.astype(work.dtype)
-        field = np.empty((points.shape[1], real.shape[1]), dtype=complex)
-        field.real = kernel[0] @ real - kernel[1] @ imag
-        field.imag = kernel[0] @ imag + kernel[1] @ real
-        out[:, first:last] = field.reshape(points.shape[1], last - first, columns)
-    return out
+        own = slice(first * columns, last * columns)
+        out.real[:, own] = kernel[0] @ real[:, own] - kernel[1] @ imag[:, own]
+        out.imag[:, own] = kernel[0] @ imag[:, own] + kernel[1] @ real[:, own]
+    return out.reshape(points.shape[1], 4, columns)

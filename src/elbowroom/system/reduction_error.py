@@ -14,11 +14,11 @@ from dataclasses import dataclass
 import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
-from elbowroom.kernels.grounds import Workspace, ground_kernels
+from elbowroom.kernels.grounds import GroundKernels, Workspace, ground_kernels
 from elbowroom.system.assembly import PairFiller, available_cores, single_threaded_blas
 from elbowroom.system.discretisation import Discretisation
 from elbowroom.system.factorisation import Factors
-from elbowroom.system.interactions import SkeletonInteractions, SkeletonTable, carried_field
+from elbowroom.system.interactions import SkeletonInteractions, SkeletonTable, carried_field, field_of_parts
 from elbowroom.system.plane_waves import direction_frame, kind_vectors, phases
 from elbowroom.system.reduction import KindAnswers, sky_samples
 from elbowroom.system.spaces import CurrentSpace
@@ -31,6 +31,9 @@ SAMPLED_ANTENNAS = 8
 
 FOLLOWED_ANTENNAS = 24
 """Antennas, those with the largest corrections, whose effect on the others is followed."""
+
+BATCH = 16
+"""Sounding antennas whose kernels are filled at a time: few enough for the work arrays to stay in cache."""
 
 WHOLE_PAIRS = 6
 """Pairs at which skeletons are held against all quadrature points: those nearest to where each level begins to serve."""
@@ -153,39 +156,90 @@ def _from_others(
     n_antennas, ground, table = len(d.station), ground_kernels(d.station.ground), interactions.skeletons
     levels = np.vectorize(table.level_of, otypes=[int])(distances)
     out = np.empty_like(currents)
-    # Every antenna's currents gathered on its skeleton, at each level at which another antenna hears it.
-    sources: dict[tuple[int, int], tuple[FloatArray, ComplexArray]] = {}
+    dtype = Workspace(interactions.single).dtype
+    # Every antenna's currents gathered on its skeleton, at each level at which another antenna hears it, one after another.
+    heard: list[_Sources] = []
     for level in range(len(table.distances_m)):
-        heard = np.array([j for j in np.flatnonzero(sounding) if (levels[:, j] == level).any()], dtype=int)
-        for j, weights in zip(heard, table.gathered_all(heard, level, currents), strict=True):
-            sources[int(j), level] = (table.points(int(j), level), weights)
+        antennas = np.array([j for j in np.flatnonzero(sounding) if (levels[:, j] == level).any()], dtype=int)
+        gathered = table.gathered_all(antennas, level, currents)
+        flat = [w.reshape(len(w), -1) for w in gathered] or [np.zeros((0, 4 * currents.shape[1]), dtype=complex)]
+        weights = np.concatenate(flat)
+        points = [table.points(int(j), level) for j in antennas] or [np.zeros((3, 0))]
+        heard.append(
+            _Sources(
+                antennas,
+                np.concatenate([[0], np.cumsum([len(w) for w in gathered])]).astype(int),
+                np.ascontiguousarray(np.concatenate(points, axis=1)),
+                weights.real.astype(dtype),
+                weights.imag.astype(dtype),
+            )
+        )
 
     def row(i: int) -> None:
         work = Workspace(interactions.single)
         own = d.unknowns_of(i)
         total = np.zeros((own.stop - own.start, currents.shape[1]), dtype=complex)
-        others = np.flatnonzero(sounding & (np.arange(n_antennas) != i))
-        for level in np.unique(levels[i, others]):
-            chosen = others[levels[i, others] == level]
-            if level < 0:
-                for j in chosen:
-                    low, high = min(i, int(j)), max(i, int(j))
-                    block = filler.block(low, high, distances[i, j])
-                    total += (block if low == j else block.T) @ currents[d.unknowns_of(j)]
-                continue
-            points = table.points(i, int(level))
-            field: ComplexArray | float = 0.0
-            for first in range(0, len(chosen), 16):
-                batch = [sources[int(j), int(level)] for j in chosen[first : first + 16]]
-                theirs = np.concatenate([b[0] for b in batch], axis=1)
-                weights = np.concatenate([b[1] for b in batch])
-                field = field + carried_field(ground, points, theirs, weights, d.wavenumber, work)
-            total += table.tested(i, int(level), field)  # type: ignore[arg-type]
+        for j in np.flatnonzero(sounding & (levels[i] < 0) & (np.arange(n_antennas) != i)):
+            low, high = min(i, int(j)), max(i, int(j))
+            block: ComplexArray = filler.block(low, high, distances[i, j])
+            block = block if low == j else block.T
+            total += block @ currents[d.unknowns_of(int(j))]
+        for level, sources in enumerate(heard):
+            counts = (levels[i, sources.antennas] == level) & (sources.antennas != i)
+            if counts.any():
+                field = sources.field(ground, table.points(i, level), counts, d.wavenumber, work)
+                total += table.tested(i, level, field)
         out[own] = total
 
     with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
         list(pool.map(row, range(n_antennas)))
     return out
+
+
+@dataclass(frozen=True, eq=False)
+class _Sources:
+    """Antennas that sound at one level: their skeletons and weights, one after another.
+
+    Attributes
+    ----------
+    antennas : int (B,)
+        Which.
+    offsets : int (B+1,)
+        Where the points of each begin.
+    points : float64 (3, J)
+        [m]
+    real, imag : float (J, 4 R)
+        Parts of the weights of x, y, charge and z.
+    """
+
+    antennas: np.ndarray
+    offsets: np.ndarray
+    points: FloatArray
+    real: FloatArray
+    imag: FloatArray
+
+    def field(
+        self, ground: GroundKernels, points: FloatArray, counts: np.ndarray, wavenumber: float, work: Workspace
+    ) -> ComplexArray:
+        """Return the field (M, 4, R) at points (3, M) of those antennas that count, (B,) true or false."""
+        total = np.zeros((points.shape[1], 4, self.real.shape[1] // 4), dtype=complex)
+        for first in range(0, len(self.antennas), BATCH):
+            last = min(first + BATCH, len(self.antennas))
+            here = counts[first:last]
+            if not here.any():
+                continue
+            start, stop = int(self.offsets[first]), int(self.offsets[last])
+            edges = self.offsets[first : last + 1] - start
+            silent = np.concatenate([np.arange(0), *(np.arange(edges[q], edges[q + 1]) for q in np.flatnonzero(~here))])
+            if here.sum() * 3 > last - first:
+                rows: slice | np.ndarray = slice(start, stop)
+            else:
+                # Few of many: only theirs are worked out.
+                rows = start + np.concatenate([np.arange(edges[q], edges[q + 1]) for q in np.flatnonzero(here)])
+                silent = np.arange(0)
+            theirs = np.ascontiguousarray(self.points[:, rows])
+            total += field_of_parts(ground, points, theirs, self.real[rows], self.imag[rows], wavenumber, work, silent)
+        return total
 
 
 def _relative_fields(d: Discretisation, correction: ComplexArray, currents: ComplexArray) -> FloatArray:
