@@ -111,13 +111,40 @@ class SkeletonInteractions:
             x.shape[1],
         )
 
-    def radiated(self, i: int, points: FloatArray, level: int) -> ComplexArray:
+    def alike(self, antennas: range) -> bool:
+        """Return whether some antennas are of one design and mesh, so that their blocks have one shape."""
+        d = self.discretisation
+        kinds = {int(k) for k in d.kind_of[antennas.start : antennas.stop]}
+        return len({(id(d.kinds[k].antenna), id(d.kinds[k].mesh)) for k in kinds}) == 1
+
+    def run_of_blocks(self, i: int, antennas: range, level: int, silent: np.ndarray) -> ComplexArray:
+        """Return the blocks of antenna i with antennas alike that follow one another, stacked: (sum of n_j, n_i) [ohm].
+
+        Rows of those that are ``silent``, true for each antenna that this level does not serve, mean nothing.
+        """
+        d = self.discretisation
+        theirs = [self.weights(int(d.kind_of[j]), level) for j in antennas]
+        count = theirs[0].points.shape[1]
+        points = np.concatenate([w.points for w in theirs], axis=1)
+        shift = self.positions[antennas.start : antennas.stop, :2] - self.positions[i, :2]
+        points[:2] += np.repeat(shift, count, axis=0).T
+        field = self.radiated(i, points, level, np.flatnonzero(np.repeat(silent, count)))
+        first = theirs[0].test
+        tests = first if all(w.test is first for w in theirs) else np.stack([w.test for w in theirs])
+        stacked = np.matmul(tests, field.reshape(len(antennas), 4 * count, -1))
+        # Both factors of Z are imaginary: Z = j (sum of kernels).
+        return np.asarray(1j * stacked.reshape(-1, stacked.shape[2]))
+
+    def radiated(self, i: int, points: FloatArray, level: int, silent: np.ndarray | None = None) -> ComplexArray:
         """Return what the functions of antenna i give at points (3, M) [m]: (M, 4, n), as x, y, charge and z weights meet it."""
         if not hasattr(self._local, "work"):
             self._local.work = Workspace(self.single)
         mine = self.weights(self.discretisation.kind_of[i], level)
         n = mine.count
         kernels = self.ground.fill(mine.points, points, self.discretisation.wavenumber, self._local.work)
+        if silent is not None and silent.size:
+            for kernel in {id(k): k for k in (kernels.horizontal, kernels.charge, kernels.vertical)}.values():
+                kernel[:, :, silent] = 0.0
         level_part = np.swapaxes(kernels.horizontal, 1, 2) @ mine.source[:, : 6 * n]
         if not self.charge_with_horizontal:
             charges = np.swapaxes(kernels.charge, 1, 2)

@@ -117,11 +117,37 @@ def assemble_reduced(
             made[key] = loaded if basis is None else basis.T @ loaded @ basis
         own[k] = made[key]
 
+    farthest = len(interactions.skeletons.distances_m) - 1
+
+    def runs_after(i: int) -> Iterator[range]:
+        """Give runs of antennas after i, each within one tile."""
+        for group in groups:
+            for first in range(max(group.start, i + 1), group.stop, BATCH_ANTENNAS):
+                yield range(first, min(first + BATCH_ANTENNAS, group.stop))
+
+    def fill_run(i: int, run: range) -> list[int]:
+        """Fill the blocks of a run that the farthest level serves, all at once; return the antennas that are left."""
+        silent = levels[i, run.start : run.stop] != farthest
+        if 2 * int(silent.sum()) > len(run) or not interactions.alike(run):
+            return list(run)
+        block = interactions.run_of_blocks(i, run, farthest, silent)
+        group, mine = groups[group_of[run.start]], groups[group_of[i]]
+        tile = matrix.tiles[group_of[run.start], group_of[i]]
+        top, left = space.offsets[group.start], space.offsets[mine.start]
+        rows = slice(space.of(run.start).start - top, space.of(run.stop - 1).stop - top)
+        columns = slice(space.of(i).start - left, space.of(i).stop - left)
+        tile[rows, columns] = block
+        if group_of[run.start] == group_of[i]:
+            tile[columns, rows] = block.T
+        return [j for j, left_out in zip(run, silent, strict=True) if left_out]
+
     def fill_row(i: int) -> None:
         place(i, i, own[d.kind_of[i]])
         others = np.arange(i + 1, n_antennas)
         if only is not None and i not in only:
             others = np.array([j for j in others if int(j) in only], dtype=int)
+        if only is None and into is None:
+            others = np.array([j for run in runs_after(i) for j in fill_run(i, run)], dtype=int)
         for level, chosen in _batches(others, levels[i, others]):
             if level >= 0:
                 for j, block in zip(chosen, interactions.blocks(i, chosen, level), strict=True):
