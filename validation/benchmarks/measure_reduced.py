@@ -1,6 +1,7 @@
 """The reduced solver and log-periodic antennas: promised figures as ratios in one run.
 
-Run ``python validation/benchmarks/measure_reduced.py`` for all, or name some: ``dipoles log-periodics cluster scaling whole groups``.
+Run ``python validation/benchmarks/measure_reduced.py`` for all, or name some: ``dipoles log-periodics cluster scaling whole groups
+clusters identities``.
 U is one complex64 matrix product of order 5120 in the same run; every time is given in it, because machines differ.
 """
 
@@ -17,7 +18,7 @@ import numpy as np
 from stations import benchmark_antenna, benchmark_station, log_periodic_antenna, unit_seconds
 
 from elbowroom.geometry.antennas import Antenna
-from elbowroom.geometry.directions import hemisphere_grid
+from elbowroom.geometry.directions import hemisphere_grid, sphere_quadrature
 from elbowroom.geometry.grounds import PerfectGround
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.job.solve import solve
@@ -153,8 +154,53 @@ def groups() -> None:
           f"{peak_gib():.2f} GiB (target 12); {describe(solution)}")  # fmt: skip
 
 
+def clusters() -> None:
+    """Direct against reduced on clusters of dipoles and log-periodics, as many as are quick: every pattern, and port Z."""
+    sky = hemisphere_grid(5.0)
+    cases = [(benchmark_antenna(), n, f) for n in (16, 32, 64) for f in (50e6, 110e6, 150e6, 230e6, 350e6)]
+    cases += [(log_periodic_antenna(), 16, f) for f in (50e6, 110e6, 150e6, 230e6, 350e6)] + [(log_periodic_antenna(), 32, 150e6)]
+    for antenna, count, frequency in cases:
+        station = benchmark_station(count, antenna, turned=count != 32)
+        direct = solve(station, frequency, solver="direct")
+        exact, z = direct.embedded_patterns(sky.theta_rad, sky.phi_rad), direct.impedance_matrix()
+        peak = np.linalg.norm(exact, axis=-1).max(axis=1)
+        line = (
+            f"{count} {antenna.name}, {frequency / 1e6:g} MHz, {'turned' if count != 32 else 'parallel'}, {len(sky)} directions:"
+        )
+        for tolerance in (1e-3, 1e-4):
+            reduced = solve(station, frequency, solver="reduced", tolerance=tolerance)
+            off = np.linalg.norm(exact - reduced.embedded_patterns(sky.theta_rad, sky.phi_rad), axis=-1).max(axis=1) / peak
+            line += (
+                f" tolerance {tolerance:g}: worst pattern {20 * np.log10(off.max()):.1f} dB, stated "
+                f"{20 * np.log10(reduced.statistics.pattern_error):.1f} dB, Z "
+                f"{np.linalg.norm(reduced.impedance_matrix() - z) / np.linalg.norm(z):.0e};"
+            )
+        print(line, flush=True)
+
+
+def identities() -> None:
+    """Power at full size: what 256 lossless dipoles radiate against what their ports accept, for random waves at all ports."""
+    station = benchmark_station()
+    solution, _ = timed(station, 150e6, solver="reduced", tolerance=1e-4)
+    rng = np.random.default_rng(0)
+    waves = rng.normal(size=(4, 512)) + 1j * rng.normal(size=(4, 512))
+    s = solution.scattering_matrix(100.0)
+    accepted = np.sum(np.abs(waves) ** 2, axis=1) - np.sum(np.abs(waves @ s.T) ** 2, axis=1)
+    reach = 2.0 * np.pi * 150e6 / 299_792_458.0 * 19.0
+    sphere = sphere_quadrature(2 * int(reach + 30.0), hemisphere=True)
+    # A wave of sqrt(100) times its amplitude behind each port; receiving and transmitting patterns are one by reciprocity.
+    field = solution.beam(waves, sphere.theta_rad, sphere.phi_rad, termination=100.0)
+    wavelength = 299_792_458.0 / 150e6
+    gain = 4.0 * np.pi * 376.730313412 / 100.0 / wavelength**2 * np.sum(np.abs(field) ** 2, axis=-1)
+    radiated = sphere.integrate(gain) / (4.0 * np.pi)
+    print(f"power of 256 antennas at 150 MHz, {solution.statistics.n_functions} functions, four random excitations: radiated over "
+          f"accepted - 1 = {np.max(np.abs(radiated / accepted - 1.0)):.1e}, stated pattern error "
+          f"{solution.statistics.pattern_error:.1e}; (ka)^2 = {(reach / 19.0 * 0.003) ** 2:.1e} is lost at bends")  # fmt: skip
+
+
 MEASUREMENTS = {
     "dipoles": dipoles, "log-periodics": log_periodics, "cluster": cluster, "scaling": scaling, "whole": whole, "groups": groups,
+    "clusters": clusters, "identities": identities,
 }  # fmt: skip
 
 
