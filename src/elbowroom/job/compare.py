@@ -6,9 +6,8 @@ number means is in `MEANINGS`, which is also the head of the table that is writt
 
 from __future__ import annotations
 
-import csv
 from collections.abc import Iterable, Sequence
-from dataclasses import asdict, dataclass, fields
+from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
@@ -17,7 +16,7 @@ from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import JobFileError
 from elbowroom.geometry.directions import Directions, hemisphere_grid, ludwig3, unit_vectors
 from elbowroom.job.beamfields import BeamFields, beam_fields, mean_nominal_phi_rad
-from elbowroom.job.files import written_whole
+from elbowroom.job.files import write_explained_csv
 
 CUT_STEP_DEG = 0.05
 """Step of the great circles on which half-power widths are read; the crossing itself is interpolated."""
@@ -464,16 +463,8 @@ def write_comparison(rows: Sequence[BeamComparison], path: str | Path, head: Ite
     ExportError
         If the file cannot be written.
     """
-    names = [f.name for f in fields(BeamComparison)]
-    with written_whole(path) as temporary, temporary.open("w", newline="", encoding="utf-8") as file:
-        for line in (
-            *head,
-            "Coupled against isolated beams.  Results of a model, not a measurement.",
-            "Levels are of total power in dB; nan where a number does not exist, as the width of a beam that the horizon cuts.",
-            *(f"{name}: {MEANINGS[name]}" for name in names),
-        ):
-            file.write(f"# {line}\n")
-        writer = csv.DictWriter(file, names, lineterminator="\n")
-        writer.writeheader()
-        for row in rows:
-            writer.writerow({k: f"{v:.9g}" if isinstance(v, float) else v for k, v in asdict(row).items()})
+    about = (
+        "Coupled against isolated beams.  Results of a model, not a measurement.",
+        "Levels are of total power in dB; nan where a number does not exist, as the width of a beam that the horizon cuts.",
+    )
+    write_explained_csv(path, rows, MEANINGS, (*head, *about))

@@ -2,10 +2,13 @@
 
 from __future__ import annotations
 
+import csv
 import os
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator, Mapping
 from contextlib import contextmanager
+from dataclasses import asdict
 from pathlib import Path
+from typing import Any
 
 from elbowroom.base.errors import ElbowroomError, ExportError
 
@@ -54,3 +57,31 @@ def written_whole(path: str | Path) -> Iterator[Path]:
             temporary.unlink(missing_ok=True)
         except OSError:
             pass
+
+
+def write_explained_csv(path: str | Path, rows: Iterable[Any], meanings: Mapping[str, str], head: Iterable[str]) -> None:
+    """Write dataclass rows as CSV, under ``#`` lines that say what each column means.
+
+    Parameters
+    ----------
+    path : str or Path
+        The file.
+    rows : iterable
+        Instances of one dataclass.
+    meanings : mapping of str to str
+        What each of its fields means, in the order of the columns.
+    head : iterable of str
+        Lines that come first.
+
+    Raises
+    ------
+    ExportError
+        If the file cannot be written.
+    """
+    with written_whole(path) as temporary, temporary.open("w", newline="", encoding="utf-8") as file:
+        for line in (*head, *(f"{name}: {meaning}" for name, meaning in meanings.items())):
+            file.write(f"# {' '.join(line.split())}\n")
+        writer = csv.DictWriter(file, list(meanings), lineterminator="\n")
+        writer.writeheader()
+        for row in rows:
+            writer.writerow({k: f"{v:.9g}" if isinstance(v, float) else v for k, v in asdict(row).items()})

@@ -8,9 +8,8 @@
 
 from __future__ import annotations
 
-import csv
 from collections.abc import Iterable, Sequence
-from dataclasses import asdict, dataclass, fields
+from dataclasses import dataclass
 from math import nan
 from pathlib import Path
 
@@ -27,7 +26,7 @@ from elbowroom.geometry.mesh import MeshSettings
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.job.checks import Problem, check_station
 from elbowroom.job.compare import decibels, half_power_width_deg, refined_peak, total_power
-from elbowroom.job.files import written_whole
+from elbowroom.job.files import write_explained_csv
 from elbowroom.radiation.solution import Solution, antenna_power_gain
 from elbowroom.system.discretisation import discretise
 from elbowroom.system.solving import REFERENCE_OHM, solve_direct
@@ -447,16 +446,8 @@ def write_figures(rows: Sequence[AntennaFigures], path: str | Path, head: Iterab
     ExportError
         If the file cannot be written.
     """
-    names = [f.name for f in fields(AntennaFigures)]
-    with written_whole(path) as temporary, temporary.open("w", newline="", encoding="utf-8") as file:
-        for line in (
-            *head,
-            "One antenna alone.  Results of a model, not a measurement.",
-            "Levels in dB of power; nan where a number does not exist, as the width of a lobe that the horizon cuts.",
-            *(f"{name}: {MEANINGS[name]}" for name in names),
-        ):
-            file.write(f"# {' '.join(line.split())}\n")
-        writer = csv.DictWriter(file, names, lineterminator="\n")
-        writer.writeheader()
-        for row in rows:
-            writer.writerow({k: f"{v:.9g}" if isinstance(v, float) else v for k, v in asdict(row).items()})
+    about = (
+        "One antenna alone.  Results of a model, not a measurement.",
+        "Levels in dB of power; nan where a number does not exist, as the width of a lobe that the horizon cuts.",
+    )
+    write_explained_csv(path, rows, MEANINGS, (*head, *about))
