@@ -128,7 +128,7 @@ def assemble_reduced(
     def fill_run(i: int, run: range) -> list[int]:
         """Fill the blocks of a run that the farthest level serves, all at once; return the antennas that are left."""
         silent = levels[i, run.start : run.stop] != farthest
-        if 2 * int(silent.sum()) > len(run) or not interactions.alike(run):
+        if farthest < 0 or 2 * int(silent.sum()) > len(run) or not interactions.alike(run):
             return list(run)
         block = interactions.run_of_blocks(i, run, farthest, silent)
         group, mine = groups[group_of[run.start]], groups[group_of[i]]
