@@ -204,7 +204,11 @@ class SkeletonTable:
 
     def level_of(self, distance: float) -> int:
         """Return the level that serves wires at a distance [m]; -1 where none does."""
-        return int(np.searchsorted(self.distances_m, distance, side="right")) - 1
+        return int(self.levels_of(np.asarray(distance)))
+
+    def levels_of(self, distances: FloatArray) -> np.ndarray:
+        """Return the level that serves each of some distances [m]; -1 where none does."""
+        return np.asarray(np.searchsorted(self.distances_m, distances, side="right")) - 1
 
     def prepare(self) -> None:
         """Make all skeletons now, in threads."""

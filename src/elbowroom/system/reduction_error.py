@@ -80,7 +80,7 @@ def reduction_error(
     distances: FloatArray,
     answers: KindAnswers,
     coordinates: ComplexArray,
-    excitations: FloatArray | ComplexArray,
+    excitations: list[tuple[FloatArray | ComplexArray, ComplexArray]],
     factors: Factors,
     skeleton: float,
 ) -> ReductionError:
@@ -102,8 +102,8 @@ def reduction_error(
         Own blocks, loaded and factored.
     coordinates : complex128 (n, P)
         The solution.
-    excitations : (N, P)
-        Right-hand sides of the unknowns.
+    excitations : list of ((N_k, P_k), (P_k, P_k))
+        Right-hand sides of each kind, from :func:`elbowroom.system.solving.kind_excitations`.
     factors : Factors
         Of the reduced matrix: they tell what its rounding does to all antennas together.
     skeleton : float
@@ -112,10 +112,13 @@ def reduction_error(
     d = discretisation
     sample = sampled_antennas(distances)
     ports = np.concatenate([np.arange(d.ports_of(a).start, d.ports_of(a).stop) for a in sample])
+    drive: ComplexArray = np.zeros((d.n_unknowns, len(ports)), dtype=complex)
+    for a in sample:
+        drive[d.unknowns_of(a), np.isin(ports, np.arange(d.n_ports)[d.ports_of(a)])] = excitations[d.kind_of[a]][0]
     currents = space.unknowns(d, coordinates[:, ports])
     own = np.concatenate([answers.product(int(k), currents[d.unknowns_of(a)]) for a, k in enumerate(d.kind_of)])
     everyone = np.ones(len(d.station), dtype=bool)
-    residual = excitations[:, ports] - own - _from_others(d, interactions, filler, distances, currents, everyone)
+    residual = drive - own - _from_others(d, interactions, filler, distances, currents, everyone)
     correction = np.empty(residual.shape, dtype=complex)
     strength = np.empty((len(d.station), len(ports)))
     with single_threaded_blas():
@@ -134,7 +137,7 @@ def reduction_error(
     answered = correction
     correction = answered + space.unknowns(d, factors.solve(left).astype(np.complex128))
     pattern = float(np.max(_relative_fields(d, correction, currents)))
-    admittance = excitations[:, ports].T @ currents
+    admittance = drive.T @ currents
     # Functions are tested by themselves, so that currents and residual react on one another by rounding alone; what is left out
     # reacts with the residual.
     reaction = np.linalg.norm(currents.T @ residual) + np.linalg.norm(residual.T @ correction)
@@ -154,7 +157,7 @@ def _from_others(
 ) -> ComplexArray:
     """Return the matrix of all unknowns without own blocks times the currents (N, R) of some antennas, through skeletons."""
     n_antennas, ground, table = len(d.station), ground_kernels(d.station.ground), interactions.skeletons
-    levels = np.vectorize(table.level_of, otypes=[int])(distances)
+    levels = table.levels_of(distances)
     out = np.empty_like(currents)
     dtype = Workspace(interactions.single).dtype
     # Every antenna's currents gathered on its skeleton, at each level at which another antenna hears it, one after another.
@@ -285,7 +288,7 @@ def skeleton_error(
     d, ground = discretisation, ground_kernels(discretisation.station.ground)
     n = len(d.station)
     first, second = np.triu_indices(n, 1)
-    levels = np.vectorize(table.level_of, otypes=[int])(distances[first, second]) if n > 1 else np.zeros(0, int)
+    levels = table.levels_of(distances[first, second])
     chosen: list[tuple[int, int, int, int]] = []
     for level in np.unique(levels[levels >= 0]):
         here = np.flatnonzero(levels == level)

@@ -116,19 +116,34 @@ def _solve_single(
     return factors.solve(right).astype(np.complex128), error
 
 
+def kind_excitations(
+    discretisation: Discretisation, reference_ohm: float = REFERENCE_OHM
+) -> list[tuple[FloatArray | ComplexArray, ComplexArray]]:
+    """Return for each kind its ports' right-hand sides (N_k, P_k) and the port currents (P_k, P_k) [S] that flow with gaps open.
+
+    A port's source reaches no other antenna, so that nothing of the station's size is needed.
+    """
+    attached = attachments(discretisation, reference_ohm)
+    made = []
+    for kind in discretisation.kinds:
+        rows = attached[kind.antenna].excitations(kind.mesh.gap_vectors)
+        # Real where ports look straight into gaps: half the work for whoever multiplies with it.
+        made.append((rows if np.any(rows.imag) else rows.real, attached[kind.antenna].admittance))
+    return made
+
+
 def port_excitations(
     discretisation: Discretisation, reference_ohm: float = REFERENCE_OHM
 ) -> tuple[FloatArray | ComplexArray, ComplexArray]:
     """Return the right-hand sides (N, P) of all ports' sources, and the port currents (P, P) [S] that flow with gaps open."""
-    rows: ComplexArray = np.zeros((discretisation.n_unknowns, discretisation.n_ports), dtype=complex)
-    own: ComplexArray = np.zeros((discretisation.n_ports, discretisation.n_ports), dtype=complex)
-    attached = attachments(discretisation, reference_ohm)
-    for a in range(len(discretisation.station)):
-        kind, ports = discretisation.kinds[discretisation.kind_of[a]], discretisation.ports_of(a)
-        rows[discretisation.unknowns_of(a), ports] = attached[kind.antenna].excitations(kind.mesh.gap_vectors)
-        own[ports, ports] = attached[kind.antenna].admittance
-    # Real where ports look straight into gaps: half the work for whoever multiplies with it.
-    return (rows if np.any(rows.imag) else rows.real), own
+    d, made = discretisation, kind_excitations(discretisation, reference_ohm)
+    dtype = np.result_type(*(rows.dtype for rows, _ in made))
+    right: FloatArray | ComplexArray = np.zeros((d.n_unknowns, d.n_ports), dtype=dtype)
+    own: ComplexArray = np.zeros((d.n_ports, d.n_ports), dtype=complex)
+    for a, k in enumerate(d.kind_of):
+        ports = d.ports_of(a)
+        right[d.unknowns_of(a), ports], own[ports, ports] = made[k]
+    return right, own
 
 
 def solve_isolated(discretisation: Discretisation, reference_ohm: float = REFERENCE_OHM) -> list[PortCurrents]:

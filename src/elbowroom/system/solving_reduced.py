@@ -26,7 +26,7 @@ from elbowroom.system.factorisation import TiledSymmetric
 from elbowroom.system.interactions import SkeletonInteractions, SkeletonTable
 from elbowroom.system.reduction import KindAnswers, ReductionSettings, enriched, reduced_candidates
 from elbowroom.system.reduction_error import ReductionError, reduction_error, skeleton_error
-from elbowroom.system.solving import REFERENCE_OHM, PortCurrents, SolveStatistics, port_excitations
+from elbowroom.system.solving import REFERENCE_OHM, PortCurrents, SolveStatistics, kind_excitations
 from elbowroom.system.spaces import CurrentSpace, reduced_space
 
 BATCH_ANTENNAS = 12
@@ -98,7 +98,7 @@ def assemble_reduced(
     matrix = into or TiledSymmetric([int(space.offsets[g.stop] - space.offsets[g.start]) for g in groups], dtype)
     group_of = np.repeat(np.arange(len(groups)), [len(g) for g in groups])
     attached = attachments(d, reference_ohm)
-    levels = np.vectorize(interactions.skeletons.level_of, otypes=[int])(distances)
+    levels = interactions.skeletons.levels_of(distances)
 
     def place(i: int, j: int, block: ComplexArray) -> None:
         tile = matrix.tiles[group_of[j], group_of[i]]
@@ -298,16 +298,19 @@ class ReducedStation:
         watch: _Stopwatch | None = None,
     ) -> tuple[PortCurrents, ReductionError]:
         """Factor a reduced matrix in place, solve it for all ports and estimate the error."""
-        excitations, own = port_excitations(d, self.reference_ohm)
-        right = np.zeros((space.size, d.n_ports), dtype=complex)
+        excitations = kind_excitations(d, self.reference_ohm)
+        driven = [basis.T @ rows for basis, (rows, _) in zip(space.bases, excitations, strict=True)]  # type: ignore[union-attr]
+        right = np.zeros((space.size, d.n_ports), dtype=matrix.dtype)
         for a, k in enumerate(d.kind_of):
-            rows, ports = d.unknowns_of(a), d.ports_of(a)
-            right[space.of(a), ports] = space.bases[k].T @ excitations[rows, ports]  # type: ignore[union-attr]
+            right[space.of(a), d.ports_of(a)] = driven[k]
         factors = matrix.factorise()
         if watch is not None:
             watch.lap("factorise")
         x = factors.solve(right).astype(np.complex128)
-        admittance = own + right.T @ x
+        # A port's source acts within its own antenna only.
+        admittance = np.concatenate([driven[k].T @ x[space.of(a)] for a, k in enumerate(d.kind_of)])
+        for a, k in enumerate(d.kind_of):
+            admittance[d.ports_of(a), d.ports_of(a)] += excitations[k][1]
         if watch is not None:
             watch.lap("port excitations")
         error = reduction_error(d, space, interactions, filler, distances, self.answers, x, excitations, factors, skeleton)
