@@ -158,7 +158,7 @@ def clusters() -> None:
     """Direct against reduced on clusters of dipoles and log-periodics, as many as are quick: every pattern, and port Z."""
     sky = hemisphere_grid(5.0)
     cases = [(benchmark_antenna(), n, f) for n in (16, 32, 64) for f in (50e6, 110e6, 150e6, 230e6, 350e6)]
-    cases += [(log_periodic_antenna(), 16, f) for f in (50e6, 110e6, 150e6, 230e6, 350e6)] + [(log_periodic_antenna(), 32, 150e6)]
+    cases += [(log_periodic_antenna(), n, f) for n in (16, 32) for f in (50e6, 110e6, 150e6, 230e6, 350e6)]
     for antenna, count, frequency in cases:
         station = benchmark_station(count, antenna, turned=count != 32)
         direct = solve(station, frequency, solver="direct")
