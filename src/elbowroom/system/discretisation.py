@@ -243,6 +243,7 @@ def discretise(
     near: NearSettings | None = None,
     far: FarSettings | None = None,
     self_blocks: bool = True,
+    mesh_hz: float | None = None,
 ) -> Discretisation:
     """Mesh every kind of antenna of a station and compute its self block.
 
@@ -258,6 +259,8 @@ def discretise(
         Accuracy of reactions inside and between antennas.
     self_blocks : bool, optional
         Whether to compute the self blocks; without them patterns can be made but nothing can be solved.
+    mesh_hz : float, optional
+        Frequency for which elements are cut [Hz], where several frequencies share a mesh; by default that of the solve.
 
     Returns
     -------
@@ -275,6 +278,7 @@ def discretise(
         raise ModelRangeError(msg)
     settings, near, far = mesh_settings(mesh), near or NearSettings(), far or FarSettings()
     wavelength = wavelength_of(frequency_hz)
+    cut_for = wavelength if mesh_hz is None else wavelength_of(mesh_hz)
     ground = ground_kernels(station.ground)
     for design in station.designs:
         for index, wire in enumerate(design.wires):
@@ -311,7 +315,7 @@ def discretise(
             ends = np.zeros((len(placed.antenna.wires), 2), dtype=bool)
         mesh_key = (which, ends.tobytes())
         if mesh_key not in meshes:
-            made = build_mesh(placed.antenna, wavelength, settings, ends)
+            made = build_mesh(placed.antenna, cut_for, settings, ends)
             if self_blocks:
                 own: ComplexArray = free_self_block(made, frequency_hz, near) + loss_and_loads(placed.antenna, made, frequency_hz)
             else:

@@ -29,6 +29,9 @@ RESIDUAL_LIMIT = 1e-8
 N_PROBES = 16
 """Random combinations of ports on which the residual is measured."""
 
+ORIGINS = ("assembled", "interpolated matrix", "interpolated currents")
+"""Where a solution comes from: its own matrix, one interpolated along frequency, or solutions at other frequencies."""
+
 PRECISIONS = ("mixed", "single", "double")
 
 
@@ -56,6 +59,9 @@ class SolveStatistics:
         Stated error of a reduced solve against the full one on the same mesh: of embedded patterns relative to their peaks
         where every port sees the reference resistance, and of the port matrix relative to its norm; zero where all unknowns
         were solved for.
+    origin : str
+        One of `ORIGINS`: whether the matrix was assembled at this frequency, or interpolated along frequency and factored, or
+        currents were interpolated between solved frequencies.  Stated errors hold what interpolation adds.
     """
 
     strategy: str
@@ -68,6 +74,7 @@ class SolveStatistics:
     n_functions: int = 0
     pattern_error: float = 0.0
     port_matrix_error: float = 0.0
+    origin: str = "assembled"
 
 
 @dataclass(frozen=True)
@@ -147,17 +154,21 @@ def port_excitations(
 
 
 def solve_isolated(discretisation: Discretisation, reference_ohm: float = REFERENCE_OHM) -> list[PortCurrents]:
-    """Return the port currents of each kind of antenna alone over the ground."""
+    """Return the port currents of each kind of antenna alone over the ground; kinds that share a block share them."""
     result = []
     attached = attachments(discretisation, reference_ohm)
+    made: dict[tuple[int, int, int], PortCurrents] = {}
     for kind in discretisation.kinds:
-        ports = attached[kind.antenna]
-        loaded = kind.self_block + ports.structure(kind.mesh.gap_vectors)
-        right = ports.excitations(kind.mesh.gap_vectors)
-        scale = 1.0 / np.sqrt(np.abs(np.diagonal(loaded)))
-        currents: ComplexArray = scale[:, None] * np.linalg.solve(loaded * np.outer(scale, scale), scale[:, None] * right)
-        admittance = ports.admittance + right.T @ currents
-        result.append(PortCurrents(currents, 0.5 * (admittance + admittance.T)))
+        key = (id(kind.antenna), id(kind.mesh), id(kind.self_block))
+        if key not in made:
+            ports = attached[kind.antenna]
+            loaded = kind.self_block + ports.structure(kind.mesh.gap_vectors)
+            right = ports.excitations(kind.mesh.gap_vectors)
+            scale = 1.0 / np.sqrt(np.abs(np.diagonal(loaded)))
+            currents: ComplexArray = scale[:, None] * np.linalg.solve(loaded * np.outer(scale, scale), scale[:, None] * right)
+            admittance = ports.admittance + right.T @ currents
+            made[key] = PortCurrents(currents, 0.5 * (admittance + admittance.T))
+        result.append(made[key])
     return result
 
 

@@ -22,9 +22,9 @@ from elbowroom.system.assembly import (
     single_threaded_blas,
 )
 from elbowroom.system.discretisation import Discretisation, attachments
-from elbowroom.system.factorisation import TiledSymmetric
+from elbowroom.system.factorisation import Factors, TiledSymmetric
 from elbowroom.system.interactions import SkeletonInteractions, SkeletonTable
-from elbowroom.system.reduction import KindAnswers, ReductionSettings, enriched, reduced_candidates
+from elbowroom.system.reduction import Candidates, KindAnswers, ReductionSettings, enriched, reduced_candidates
 from elbowroom.system.reduction_error import ReductionError, reduction_error, skeleton_error
 from elbowroom.system.solving import REFERENCE_OHM, PortCurrents, SolveStatistics, kind_excitations
 from elbowroom.system.spaces import CurrentSpace, reduced_space
@@ -176,7 +176,47 @@ def solve_reduced(
     return solved.currents, solved.space, solved.statistics
 
 
-class _Stopwatch:
+def port_currents(
+    discretisation: Discretisation,
+    space: CurrentSpace,
+    matrix: TiledSymmetric,
+    excitations: list[tuple[FloatArray | ComplexArray, ComplexArray]],
+    watch: Stopwatch | None = None,
+) -> tuple[PortCurrents, Factors]:
+    """Factor a reduced matrix in place and solve it for all ports.
+
+    Parameters
+    ----------
+    discretisation : Discretisation
+        The meshed station.
+    space : CurrentSpace
+        Functions of each kind.
+    matrix : TiledSymmetric
+        From :func:`assemble_reduced`; gone afterwards.
+    excitations : list of ((N_k, P_k), (P_k, P_k))
+        From :func:`elbowroom.system.solving.kind_excitations`.
+    watch : Stopwatch, optional
+        Told of the stages.
+    """
+    d = discretisation
+    driven = [basis.T @ rows for basis, (rows, _) in zip(space.bases, excitations, strict=True)]  # type: ignore[union-attr]
+    right = np.zeros((space.size, d.n_ports), dtype=matrix.dtype)
+    for a, k in enumerate(d.kind_of):
+        right[space.of(a), d.ports_of(a)] = driven[k]
+    factors = matrix.factorise()
+    if watch is not None:
+        watch.lap("factorise")
+    x = factors.solve(right).astype(np.complex128)
+    # A port's source acts within its own antenna only.
+    admittance = np.concatenate([driven[k].T @ x[space.of(a)] for a, k in enumerate(d.kind_of)])
+    for a, k in enumerate(d.kind_of):
+        admittance[d.ports_of(a), d.ports_of(a)] += excitations[k][1]
+    if watch is not None:
+        watch.lap("port excitations")
+    return PortCurrents(x, 0.5 * (admittance + admittance.T)), factors
+
+
+class Stopwatch:
     """Wall time of stages, one after another."""
 
     def __init__(self) -> None:
@@ -237,26 +277,41 @@ class ReducedStation:
         progress: Progress | None = None,
         movable: bool = False,
     ) -> None:
-        self.discretisation, self.settings = discretisation, settings or ReductionSettings()
+        self._prepare(discretisation, settings or ReductionSettings(), reference_ohm, progress, movable)
+        self.cut = self._pilot_cut()
+        self.watch.lap("pilot")
+        self._solve_until_good()
+
+    def _prepare(
+        self,
+        discretisation: Discretisation,
+        settings: ReductionSettings,
+        reference_ohm: float,
+        progress: Progress | None,
+        movable: bool,
+        candidates: list[Candidates] | None = None,
+    ) -> None:
+        """Make what any solve needs; candidates that are given serve in place of the station's own."""
+        self.discretisation, self.settings = discretisation, settings
         self.reference_ohm, self.progress, self.movable = reference_ohm, progress, movable
-        self.watch = _Stopwatch()
+        self.watch = Stopwatch()
         d = discretisation
         self.filler, self.distances, self.answers = PairFiller(d), antenna_distances(d), KindAnswers(d, reference_ohm)
         # Nearer than this, an element's Gauss points do not reach the tolerance however many they are.
         nearest = d.far.close_elements * self.filler.longest
         served = sorted({max(distance, nearest) for distance in self.settings.skeleton_distances_m})
         self.table = SkeletonTable(d, served, self.settings.skeleton_factor * self.settings.tolerance)
-        with single_threaded_blas():
-            # Matrices of one antenna: threads of BLAS would cost more than they save.
-            self.candidates = reduced_candidates(d, self.settings, self.filler, self.distances, self.answers, self.table)
+        if candidates is not None:
+            self.candidates = candidates
+        else:
+            with single_threaded_blas():
+                # Matrices of one antenna: threads of BLAS would cost more than they save.
+                self.candidates = reduced_candidates(d, self.settings, self.filler, self.distances, self.answers, self.table)
         self.skeleton_error = skeleton_error(d, self.table, self.filler, self.distances, self.answers)
         # Single precision leaves about 1e-6 of a pattern, which a tighter tolerance would see.
         self.single = self.settings.tolerance >= SINGLE_TOLERANCE
         self.dtype: type = np.complex64 if self.single else np.complex128
         self.watch.lap("functions")
-        self.cut = self._pilot_cut()
-        self.watch.lap("pilot")
-        self._solve_until_good()
 
     def _tell(self, stage: str, fraction: float) -> None:
         if self.progress is not None:
@@ -295,28 +350,16 @@ class ReducedStation:
         distances: FloatArray,
         matrix: TiledSymmetric,
         skeleton: float,
-        watch: _Stopwatch | None = None,
+        watch: Stopwatch | None = None,
     ) -> tuple[PortCurrents, ReductionError]:
         """Factor a reduced matrix in place, solve it for all ports and estimate the error."""
         excitations = kind_excitations(d, self.reference_ohm)
-        driven = [basis.T @ rows for basis, (rows, _) in zip(space.bases, excitations, strict=True)]  # type: ignore[union-attr]
-        right = np.zeros((space.size, d.n_ports), dtype=matrix.dtype)
-        for a, k in enumerate(d.kind_of):
-            right[space.of(a), d.ports_of(a)] = driven[k]
-        factors = matrix.factorise()
-        if watch is not None:
-            watch.lap("factorise")
-        x = factors.solve(right).astype(np.complex128)
-        # A port's source acts within its own antenna only.
-        admittance = np.concatenate([driven[k].T @ x[space.of(a)] for a, k in enumerate(d.kind_of)])
-        for a, k in enumerate(d.kind_of):
-            admittance[d.ports_of(a), d.ports_of(a)] += excitations[k][1]
-        if watch is not None:
-            watch.lap("port excitations")
+        currents, factors = port_currents(d, space, matrix, excitations, watch)
+        x = currents.currents
         error = reduction_error(d, space, interactions, filler, distances, self.answers, x, excitations, factors, skeleton)
         if watch is not None:
             watch.lap("error estimate")
-        return PortCurrents(x, 0.5 * (admittance + admittance.T)), error
+        return currents, error
 
     def _solve_until_good(self) -> None:
         d, tolerance = self.discretisation, self.settings.tolerance
@@ -389,7 +432,7 @@ class ReducedStation:
                 raise GeometryError(msg)
         placed = [replace(p, position=(*places[i], p.position[2])) if i in places else p for i, p in enumerate(d.station)]
         other = copy.copy(self)
-        other.watch = _Stopwatch()
+        other.watch = Stopwatch()
         other.discretisation = replace(d, station=Station(placed, d.station.ground))
         other.filler, other.distances = PairFiller(other.discretisation), antenna_distances(other.discretisation)
         other.table = self.table.of_station(other.discretisation)
