@@ -18,6 +18,7 @@ from threadpoolctl import threadpool_limits
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.constants import IMPEDANCE_OF_VACUUM
+from elbowroom.base.threads import loop_threads
 from elbowroom.geometry.wires import segment_distances
 from elbowroom.kernels.grounds import GroundKernels, Workspace, ground_kernels
 from elbowroom.kernels.quadrature import gauss_table
@@ -31,13 +32,6 @@ TILE_ORDER = 768
 
 Progress = Callable[[str, float], None]
 """Called with the stage and the fraction of it that is done."""
-
-
-def available_cores() -> int:
-    """Return the number of cores this process may use."""
-    import os
-
-    return len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else (os.cpu_count() or 1)
 
 
 @contextmanager
@@ -333,7 +327,7 @@ def assemble(
                         for a, b, transposed in shared[i, int(j)]:
                             place(a, b, block.T if transposed else block)
 
-    workers = available_cores() if workers is None else workers
+    workers = loop_threads() if workers is None else workers
     with single_threaded_blas(), ThreadPoolExecutor(workers) as pool:
         for done, _ in enumerate(pool.map(fill_row, range(n_antennas)), start=1):
             if progress is not None:

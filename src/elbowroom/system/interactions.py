@@ -11,9 +11,10 @@ import numpy as np
 
 from elbowroom.base.arrays import AnyComplexArray, ComplexArray, FloatArray
 from elbowroom.base.constants import IMPEDANCE_OF_VACUUM
+from elbowroom.base.threads import loop_threads
 from elbowroom.geometry.mesh import Mesh
 from elbowroom.kernels.grounds import GroundKernels, Workspace, ground_kernels
-from elbowroom.system.assembly import available_cores, single_threaded_blas
+from elbowroom.system.assembly import single_threaded_blas
 from elbowroom.system.discretisation import Discretisation
 from elbowroom.system.skeletons import Skeleton, skeleton_of
 
@@ -74,7 +75,7 @@ class SkeletonInteractions:
         """Make all skeletons and weights now, in threads."""
         levels = range(len(self.skeletons.distances_m))
         self.skeletons.prepare()
-        with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
+        with single_threaded_blas(), ThreadPoolExecutor(loop_threads()) as pool:
             pairs = [(int(k), level) for k in np.unique(self.discretisation.kind_of) for level in levels]
             list(pool.map(lambda pair: self.weights(*pair), pairs))
 
@@ -213,7 +214,7 @@ class SkeletonTable:
     def prepare(self) -> None:
         """Make all skeletons now, in threads."""
         kinds = {(id(kind.antenna), id(kind.mesh)): k for k, kind in enumerate(self.discretisation.kinds)}
-        with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
+        with single_threaded_blas(), ThreadPoolExecutor(loop_threads()) as pool:
             list(pool.map(lambda pair: self.of(*pair), [(k, v) for k in kinds.values() for v in range(len(self.distances_m))]))
 
     def of(self, kind: int, level: int) -> Skeleton:

@@ -14,8 +14,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
+from elbowroom.base.threads import loop_threads
 from elbowroom.kernels.grounds import GroundKernels, Workspace, ground_kernels
-from elbowroom.system.assembly import PairFiller, available_cores, single_threaded_blas
+from elbowroom.system.assembly import PairFiller, single_threaded_blas
 from elbowroom.system.discretisation import Discretisation
 from elbowroom.system.factorisation import Factors
 from elbowroom.system.interactions import SkeletonInteractions, SkeletonTable, carried_field, field_of_parts
@@ -194,7 +195,7 @@ def _from_others(
                 total += table.tested(i, level, field)
         out[own] = total
 
-    with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
+    with single_threaded_blas(), ThreadPoolExecutor(loop_threads()) as pool:
         list(pool.map(row, range(n_antennas)))
     return out
 
@@ -309,7 +310,7 @@ def skeleton_error(
         return level, float(max(sizes)), count
 
     total: dict[int, tuple[float, int]] = {}
-    with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
+    with single_threaded_blas(), ThreadPoolExecutor(loop_threads()) as pool:
         for level, size, count in pool.map(share, chosen):
             total[level] = (max(size, total.get(level, (0.0, 0))[0]), count)
     # Pairs of a level are spread over n antennas, and a pattern gathers the errors at all of them.

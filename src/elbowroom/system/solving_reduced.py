@@ -12,13 +12,13 @@ import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import GeometryError, SolveError
+from elbowroom.base.threads import loop_threads
 from elbowroom.geometry.stations import Station
 from elbowroom.system.assembly import (
     TILE_ORDER,
     PairFiller,
     Progress,
     antenna_distances,
-    available_cores,
     single_threaded_blas,
 )
 from elbowroom.system.discretisation import Discretisation, attachments
@@ -157,7 +157,7 @@ def assemble_reduced(
                 full = filler.block(i, int(j), distances[i, j])
                 place(i, int(j), space.bases[d.kind_of[j]].T @ full @ space.bases[d.kind_of[i]])  # type: ignore[union-attr]
 
-    with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
+    with single_threaded_blas(), ThreadPoolExecutor(loop_threads()) as pool:
         for done, _ in enumerate(pool.map(fill_row, range(n_antennas)), start=1):
             if progress is not None:
                 progress("assemble", done / n_antennas)
