@@ -2,6 +2,10 @@
 
 import csv
 import json
+import os
+import signal
+import subprocess
+import sys
 
 import pytest
 
@@ -70,6 +74,78 @@ def test_antenna__height_and_quiet(command, file):
     assert "unknowns" not in low.out
     values = [float(table(file.parent / str(h) / "antenna_rod.csv")[0]["resistance_ohm"]) for h in (0.0, 0.5)]
     assert abs(values[0] - values[1]) > 1.0
+
+
+def states(outcome):
+    lines = [json.loads(line) for line in outcome.out.splitlines()]
+    return [line["state"] for line in lines if line["kind"] == "unit"]
+
+
+def test_antenna__solves_nothing_twice(command, file, tmp_path):
+    def look(*options):
+        outcome = command("antenna", file, "--frequency-hz", 150e6, "--frequency-hz", 160e6, "--json", *options)
+        assert outcome.code == 0, outcome.all
+        return outcome
+
+    first, again = look(), look()
+    assert states(first) == ["solved", "solved"]
+    assert states(again) == ["from store", "from store"]
+    figures = [[line for line in outcome.out.splitlines() if '"figures"' in line] for outcome in (first, again)]
+    assert figures[0] == figures[1]
+    assert len(list((file.parent / "store").rglob("*.h5"))) == 4
+    # the termination is no part of what is solved, and a denser band adds to it
+    denser = look("--frequency-hz", 155e6, "--termination", "50")
+    assert states(denser) == ["from store", "solved", "from store"]
+    # ground and height are, and a store of its own knows nothing
+    assert states(look("--ground", "free-space", "--no-convergence")) == ["solved", "solved"]
+    assert states(look("--height-m", 0.1, "--no-convergence")) == ["solved", "solved"]
+    assert states(look("--no-convergence", "--store", tmp_path / "mine")) == ["solved", "solved"]
+    assert len(list((tmp_path / "mine").rglob("*.h5"))) == 2
+
+
+def test_antenna__damaged_unit__is_told_and_solved_again(command, file):
+    options = ("antenna", file, "--frequency-hz", 150e6, "--no-convergence")
+    assert command(*options).code == 0
+    (unit,) = (file.parent / "store").rglob("*.h5")
+    unit.write_bytes(unit.read_bytes()[:-100])
+    outcome = command(*options)
+    assert outcome.code == 0
+    assert unit.name in outcome.all.replace("\n", "")
+    assert "from store" not in outcome.out
+    assert "from store" in command(*options).out
+
+
+def test_antenna__store_that_cannot_be_made__is_told_before_anything_is_solved(command, file):
+    (file.parent / "store").write_text("")
+    outcome = command("antenna", file, "--frequency-hz", 150e6)
+    assert outcome.code == 6
+    assert "store" in outcome.err
+    assert not (file.parent / "results").exists()
+
+
+@pytest.mark.parametrize("deed", [signal.SIGINT, signal.SIGKILL])
+def test_antenna__interrupted__goes_on_where_it_was(command, file, deed):
+    band = ("--start-hz", "100e6", "--stop-hz", "170e6", "--step-hz", "10e6", "--json")
+    process = subprocess.Popen(
+        [sys.executable, "-m", "elbowroom", "antenna", str(file), *band],
+        stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True, env={**os.environ, "PYTHONUNBUFFERED": "1"},
+    )  # fmt: skip
+    for line in process.stdout:
+        if json.loads(line)["kind"] == "unit":
+            break
+    process.send_signal(deed)
+    _, err = process.communicate(timeout=60)
+    if deed == signal.SIGINT:
+        assert process.returncode == 130
+        assert "what was finished is in the store" in err
+        assert "Traceback" not in err
+    # two meshes a frequency
+    found = len(list((file.parent / "store").rglob("*.h5"))) // 2
+    assert 1 <= found < 8
+    outcome = command("antenna", file, *band)
+    assert outcome.code == 0
+    assert states(outcome).count("from store") == found
+    assert len(states(outcome)) == 8
 
 
 @pytest.mark.parametrize(

@@ -16,6 +16,7 @@ from elbowroom.job.oneantenna import (
     SKY_STEP_DEG,
     alone,
     antenna_figures,
+    is_stored,
     largest_lobe_width_deg,
     pattern_cuts,
     problems_of,
@@ -126,6 +127,25 @@ def test_changes__vanish_against_itself_and_show_the_coarse_mesh():
     none = antenna_figures(coarse)[0]
     assert np.isnan([none.impedance_change, none.pattern_change_db]).all()
     assert none.finer_unknowns == 0
+
+
+def test_store__gives_the_same_figures_and_is_no_jobs_solution():
+    """Nothing is stated of the mesh's error here, so a job of the same station, which states it, must not find this."""
+    from elbowroom.base.errors import StoreError
+    from elbowroom.job.solve import SOLUTION_SCHEMA, solve
+    from elbowroom.store import MemoryStore
+
+    station, store = alone(level(0.4)), MemoryStore(SOLUTION_SCHEMA)
+    assert not is_stored(station, 150e6, "default", store)
+    first = solve_alone(station, 150e6, store=store)
+    assert is_stored(station, 150e6, "default", store)
+    assert not is_stored(station, 150e6, "refined", store)
+    again = solve_alone(station, 150e6, store=store)
+    assert again is not first
+    np.testing.assert_equal(vars(antenna_figures(again)[0]), vars(antenna_figures(first)[0]))
+    assert np.isnan(again.statistics.mesh_error)
+    with pytest.raises(StoreError, match="150 MHz is not in the store"):
+        solve(station, 150e6, solver="direct", precision="double", store=store, only_stored=True)
 
 
 def test_sphere__integrates_power_to_many_digits():

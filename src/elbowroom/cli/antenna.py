@@ -15,6 +15,7 @@ if TYPE_CHECKING:
     from elbowroom.cli.screen import Screen
     from elbowroom.geometry.stations import Station
     from elbowroom.job.oneantenna import AntennaFigures, PatternCut
+    from elbowroom.store import Hdf5Store
 
 SHOWN = {
     "Z [ohm]": "{resistance_ohm:.1f}{reactance_ohm:+.1f}j",
@@ -78,15 +79,22 @@ def _frequencies(
     help="Whether to solve again on a finer mesh, which takes several times as long, and tell what changes.",
 )  # fmt: skip
 @click.option("--output", type=click.Path(path_type=Path), help="Folder of table and pictures; by default 'results' beside FILE.")
+@click.option(
+    "--store", "store_folder", type=click.Path(path_type=Path), help="Folder of solved currents; by default 'store' beside FILE."
+)
 @modes
 def antenna(
     file: Path, ground: str, listed: tuple[float, ...], start_hz: float | None, stop_hz: float | None, step_hz: float | None,
-    termination: complex, height_m: float, mesh: str, convergence: bool, output: Path | None, mode: str | None,
+    termination: complex, height_m: float, mesh: str, convergence: bool, output: Path | None, store_folder: Path | None,
+    mode: str | None,
 ) -> None:  # fmt: skip
     """Look at one antenna alone: FILE is an antenna file, nothing else is needed.
 
     Over frequency: impedance, reflection at the termination, directivity and realised gain, half-power widths, front-to-back
     ratio, cross-polarisation, radiation efficiency, and how much all that changes on a finer mesh; as a table and as pictures.
+
+    Solved currents are kept in a store, whatever the termination: the command may be interrupted at any time, the next one goes
+    on, and another termination or a denser band solves nothing twice.
     """
     frequencies = _frequencies(listed, start_hz, stop_hz, step_hz)
     if not math.isfinite(height_m):
@@ -108,7 +116,8 @@ def antenna(
     ]
     for line in about:
         screen.say(f"  {line}")
-    rows, cuts = _solve(station, frequencies, termination, mesh, convergence, screen)
+    kept = _open_store(store_folder or file.parent / "store", screen)
+    rows, cuts = _solve(station, frequencies, termination, mesh, convergence, kept, screen)
     table = folder / Path(picture_name("antenna", file.stem)).with_suffix(".csv").name
     write_figures(rows, table, (f"elbowroom {__version__}", *about))
     _show(rows, screen, free_space=ground == "free-space", convergence=convergence)
@@ -121,34 +130,48 @@ def _text(termination: complex) -> str:
     return f"{termination.real:g}" if termination.imag == 0.0 else f"{termination.real:g}{termination.imag:+g}j"
 
 
+def _open_store(folder: Path, screen: Screen) -> Hdf5Store:
+    """Return the store, whose damaged files are told on the screen."""
+    from elbowroom.job.solve import SOLUTION_SCHEMA
+    from elbowroom.store import Hdf5Store
+
+    return Hdf5Store(folder, SOLUTION_SCHEMA, report=lambda damage: screen.warn(str(damage)))
+
+
 def _solve(
-    station: Station, frequencies: tuple[float, ...], termination: complex, mesh: str, convergence: bool, screen: Screen
-) -> tuple[list[AntennaFigures], list[PatternCut]]:
+    station: Station, frequencies: tuple[float, ...], termination: complex, mesh: str, convergence: bool, store: Hdf5Store,
+    screen: Screen,
+) -> tuple[list[AntennaFigures], list[PatternCut]]:  # fmt: skip
     """Return the figures of all frequencies, and the cuts of the lowest, the middle and the highest."""
     from elbowroom.cli.screen import readable_seconds
     from elbowroom.geometry.mesh import finer_mesh, mesh_settings
-    from elbowroom.job.oneantenna import antenna_figures, pattern_cuts, problems_of, solve_alone
+    from elbowroom.job.oneantenna import antenna_figures, is_stored, pattern_cuts, problems_of, solve_alone
     from elbowroom.job.plan import predict_station, refuse_if_too_large, total
 
     settings = mesh_settings(mesh)
-    finer = finer_mesh(settings)
+    meshes = (settings, finer_mesh(settings)) if convergence else (settings,)
     for problem in problems_of(station, frequencies, settings):
         screen.warn(problem.text)
-    refuse_if_too_large(total(predict_station(station, frequencies, finer if convergence else settings, "double")))
+    missing = [(f, m) for f in frequencies for m in meshes if not is_stored(station, f, m, store)]
+    if missing:
+        store.check_writable()
+        predictions = [predict_station(station, [f], m, "double")[0] for f, m in missing]
+        refuse_if_too_large(total(predictions), folder=store.folder)
     drawn = {frequencies[0], frequencies[len(frequencies) // 2], frequencies[-1]}
     rows: list[AntennaFigures] = []
     cuts: list[PatternCut] = []
     for count, frequency in enumerate(frequencies, start=1):
         clock = time.perf_counter()
-        solution = solve_alone(station, frequency, settings)
-        again = solve_alone(station, frequency, finer) if convergence else None
-        found = antenna_figures(solution, again, termination=termination)
+        solution, *again = (solve_alone(station, frequency, m, store=store) for m in meshes)
+        found = antenna_figures(solution, *again, termination=termination)
         rows += found
         if frequency in drawn:
             cuts += pattern_cuts(solution, termination=termination)
         unknowns = f"{found[0].unknowns} unknowns" + (f", finer mesh {found[0].finer_unknowns}" if convergence else "")
-        seconds = readable_seconds(time.perf_counter() - clock)
-        screen.say(f"  {frequency / 1e6:g} MHz ({count} of {len(frequencies)}): {unknowns}, {seconds}")
+        solved = sum(f == frequency for f, _ in missing)
+        state = "from store" if not solved else readable_seconds(time.perf_counter() - clock)
+        screen.say(f"  {frequency / 1e6:g} MHz ({count} of {len(frequencies)}): {unknowns}, {state}")
+        screen.emit("unit", frequency_hz=frequency, state="solved" if solved else "from store")
     return rows, cuts
 
 

@@ -1,7 +1,8 @@
 """One antenna by itself: impedance, gain, widths, cross-polarisation and efficiency over frequency, and how converged they are.
 
 - `alone`: the station that has nothing but the antenna
-- `solve_alone`, `antenna_figures`: one frequency, solved and told in numbers; `MEANINGS` explains each
+- `solve_alone`, `is_stored`: one frequency, solved or fetched from a store
+- `antenna_figures`: one frequency told in numbers; `MEANINGS` explains each
 - `pattern_cuts`: what is drawn of its patterns
 - `write_figures`: the table
 """
@@ -22,14 +23,16 @@ from elbowroom.base.errors import GeometryError, ModelRangeError
 from elbowroom.geometry.antennas import Antenna
 from elbowroom.geometry.directions import Directions, azimuth_deg, hemisphere_grid, ludwig3, sphere_quadrature
 from elbowroom.geometry.grounds import FreeSpace, Ground
-from elbowroom.geometry.mesh import MeshSettings
+from elbowroom.geometry.mesh import MeshSettings, mesh_settings
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.job.checks import Problem, check_station
 from elbowroom.job.compare import decibels, half_power_width_deg, refined_peak, total_power
 from elbowroom.job.files import write_explained_csv
+from elbowroom.job.solve import solution_key, solve, strategy_of
 from elbowroom.radiation.solution import Solution, antenna_power_gain
-from elbowroom.system.discretisation import discretise
-from elbowroom.system.solving import REFERENCE_OHM, solve_direct
+from elbowroom.store.records import Store
+from elbowroom.system.discretisation import FarSettings
+from elbowroom.system.self_block import NearSettings
 
 SKY_STEP_DEG, FINEST_SKY_STEP_DEG = 2.0, 0.25
 """Largest and smallest step of the directions among which the peak is looked for; its place is then interpolated."""
@@ -185,7 +188,9 @@ def problems_of(station: Station, frequencies_hz: Sequence[float], mesh: str | M
     return found
 
 
-def solve_alone(station: Station, frequency_hz: float, mesh: str | MeshSettings = "default") -> Solution:
+def solve_alone(
+    station: Station, frequency_hz: float, mesh: str | MeshSettings = "default", *, store: Store | None = None
+) -> Solution:
     """Return the solution of a single antenna, in double precision; its error is left to a comparison with a finer mesh.
 
     Parameters
@@ -196,18 +201,24 @@ def solve_alone(station: Station, frequency_hz: float, mesh: str | MeshSettings 
         [Hz].
     mesh : str or MeshSettings, optional
         ``"default"``, ``"refined"`` or settings.
+    store : Store, optional
+        Where to look first and to keep the result.
 
     Raises
     ------
-    GeometryError, ModelRangeError, SolveError
+    GeometryError, ModelRangeError, SolveError, StoreError
         See the stages.
     """
     if len(station) != 1:
         msg = f"expected one antenna alone, got a station of {len(station)}"
         raise ModelRangeError(msg)
-    discretisation = discretise(station, frequency_hz, mesh=mesh)
-    currents, statistics = solve_direct(discretisation, precision="double")
-    return Solution(discretisation, currents, (currents,), REFERENCE_OHM, statistics)
+    return solve(station, frequency_hz, solver="direct", precision="double", mesh=mesh, store=store, with_mesh_error=False)
+
+
+def is_stored(station: Station, frequency_hz: float, mesh: str | MeshSettings, store: Store) -> bool:
+    """Return whether a store has what :func:`solve_alone` would return."""
+    strategy = strategy_of("direct", "double", nan, with_mesh_error=False)
+    return solution_key(station, frequency_hz, mesh_settings(mesh), NearSettings(), FarSettings(), strategy) in store
 
 
 def _electrical_radius(solution: Solution) -> float:

@@ -173,7 +173,7 @@ def _to_record(solution: Solution, attributes: dict[str, Any]) -> Record:
             "strategy": s.strategy,
             "precision": s.precision,
             "relative_residual": s.relative_residual if np.isfinite(s.relative_residual) else None,
-            "mesh_error": s.mesh_error,
+            "mesh_error": s.mesh_error if np.isfinite(s.mesh_error) else None,
             "seconds": dict(s.seconds),
             "n_functions": s.n_functions,
             "pattern_error": s.pattern_error,
@@ -214,7 +214,7 @@ def _from_record(record: Record, d: Discretisation) -> Solution:
         n_unknowns=d.n_unknowns,
         n_ports=d.n_ports,
         relative_residual=float("nan" if attributes["relative_residual"] is None else attributes["relative_residual"]),
-        mesh_error=float(attributes["mesh_error"]),
+        mesh_error=float("nan" if attributes["mesh_error"] is None else attributes["mesh_error"]),
         seconds={k: float(v) for k, v in attributes["seconds"].items()},
         n_functions=int(attributes["n_functions"]),
         pattern_error=float(attributes["pattern_error"]),
@@ -246,9 +246,10 @@ def chosen_solver(station: Station, frequency_hz: float, mesh: MeshSettings, sol
     return "reduced" if d.n_unknowns > AUTO_DIRECT_UNKNOWNS and len(station) > 1 else "direct"
 
 
-def strategy_of(solver: str, precision: str, tolerance: float) -> tuple[str, str]:
-    """Return what a key says of how a station is solved."""
-    return (solver, precision) if solver == "direct" else (solver, f"{tolerance:.6g}")
+def strategy_of(solver: str, precision: str, tolerance: float, *, with_mesh_error: bool = True) -> tuple[str, str]:
+    """Return what a key says of how a station is solved; solutions that state no mesh error are kept apart."""
+    how = precision if solver == "direct" else f"{tolerance:.6g}"
+    return (solver, how if with_mesh_error else f"{how}, no mesh error")
 
 
 def solve(
@@ -265,6 +266,7 @@ def solve(
     attributes: dict[str, Any] | None = None,
     progress: Progress | None = None,
     only_stored: bool = False,
+    with_mesh_error: bool = True,
 ) -> Solution:
     """Solve a station at one frequency, or fetch what was solved before.
 
@@ -293,6 +295,8 @@ def solve(
         Told the stage and the fraction done.
     only_stored : bool, optional
         Whether to raise rather than solve what the store does not hold.
+    with_mesh_error : bool, optional
+        Whether to solve each design on a finer mesh and state what that changes; the mesh error is NaN without it.
 
     Returns
     -------
@@ -308,7 +312,7 @@ def solve(
         raise ModelRangeError(msg)
     settings, near, far = mesh_settings(mesh), near or NearSettings(), far or FarSettings()
     chosen = chosen_solver(station, frequency_hz, settings, solver)
-    strategy = strategy_of(chosen, precision, tolerance)
+    strategy = strategy_of(chosen, precision, tolerance, with_mesh_error=with_mesh_error)
     key = ""
     if store is not None:
         key = solution_key(station, frequency_hz, settings, near, far, strategy)
@@ -329,7 +333,8 @@ def solve(
     else:
         coupled, statistics = solve_direct(d, precision=precision, progress=progress)
         space = all_unknowns(d)
-    statistics = replace(statistics, mesh_error=mesh_error(d, per_kind))
+    if with_mesh_error:
+        statistics = replace(statistics, mesh_error=mesh_error(d, per_kind))
     solution = Solution(d, coupled, tuple(per_kind[k] for k in d.kind_of), REFERENCE_OHM, statistics, space)
     if store is not None:
         store.put(key, _to_record(solution, attributes or {}))
