@@ -3,6 +3,8 @@
 A store is told at construction what its records look like (:class:`Schema`); it knows no physics.
 """
 
+from elbowroom.store.claims import Claim as Claim
+from elbowroom.store.claims import Holder as Holder
 from elbowroom.store.hdf5 import Hdf5Store as Hdf5Store
 from elbowroom.store.keys import content_key as content_key
 from elbowroom.store.memory import MemoryStore as MemoryStore

@@ -3,6 +3,7 @@
 ::
 
     <folder>/<schema>-v<version>/<key>.h5               one unit
+    <folder>/<schema>-v<version>/<key>.claim            somebody works on this unit
     <folder>/<schema>-v<version>/.writing-*             being written, or left by a process that was killed
     <folder>/<schema>-v<version>/set-aside/             what could not be used, each with the reason beside it
 
@@ -13,19 +14,16 @@ each other's units.
 from __future__ import annotations
 
 import contextlib
-import errno
-import io
 import os
 import secrets
-import shutil
 import stat
-import time
 import warnings
-from collections.abc import Iterator
 from datetime import UTC, datetime
 from pathlib import Path
 
 from elbowroom.base.errors import StoreError
+from elbowroom.store.claims import SILENCE_SECONDS, Claim, Claims, Holder
+from elbowroom.store.disk import STALE_AFTER_SECONDS, Disk, explained, flush_folder, is_damage
 from elbowroom.store.header import NotAUnit, read_header
 from elbowroom.store.records import (
     DamageReport,
@@ -46,9 +44,6 @@ from elbowroom.store.unitfile import (
 )
 
 _SUFFIX = ".h5"
-_TEMPORARY = ".writing-"
-_STALE_AFTER_SECONDS = 3600.0
-"""A temporary file that has not changed for so long belongs to no living process: a write takes seconds."""
 
 
 def warn_of_damage(report: DamageReport) -> None:
@@ -68,6 +63,8 @@ class Hdf5Store:
     report : callable, optional
         Called with a :class:`~elbowroom.store.records.DamageReport` for every file that is set aside, for
         instance to print it.  Default: a Python warning of class ``StoreDamageWarning``.
+    claim_silence_seconds : float, optional
+        How long a claim must not change to be void [s]; see :mod:`elbowroom.store.claims`.
 
     Notes
     -----
@@ -75,11 +72,20 @@ class Hdf5Store:
     be created, a read-only or full disk, missing permission.  Nothing already stored is lost by that.
     """
 
-    def __init__(self, folder: str | Path, schema: Schema, *, report: Reporter = warn_of_damage) -> None:
+    def __init__(
+        self,
+        folder: str | Path,
+        schema: Schema,
+        *,
+        report: Reporter = warn_of_damage,
+        claim_silence_seconds: float = SILENCE_SECONDS,
+    ) -> None:
         self._root = Path(folder)
         self._schema = schema
         self._report = report
         self._folder = self._root / f"{schema.name}-v{schema.version}"
+        self._disk = Disk(self._folder)
+        self._claims = Claims(self._disk, claim_silence_seconds)
         self._swept = False
 
     @property
@@ -125,19 +131,19 @@ class Hdf5Store:
         """
         path = self.path_of(key)
         record = checked_record(self._schema, record, path)
-        self._create_folder()
+        self._disk.create_folder()
         try:
             try:
                 self._write(path, key, record)
             except FileNotFoundError:
                 # a process stopped for longer than the stale limit may find its temporary file swept away
-                self._create_folder()
+                self._disk.create_folder()
                 self._write(path, key, record)
         except NotAUnit as cause:
             msg = f"was written and {cause}; nothing was stored under this name"
             raise StoreError(msg, path=path) from cause
         except OSError as cause:
-            raise _explained(cause, path, "cannot be written") from cause
+            raise explained(cause, path, "cannot be written") from cause
 
     def get(self, key: str) -> Record | None:
         """Return the record under a key, after checking every byte of its file.
@@ -166,7 +172,7 @@ class Hdf5Store:
         except OtherSchema:
             return None
         except OSError as cause:
-            raise _explained(cause, path, "cannot be read") from cause
+            raise explained(cause, path, "cannot be read") from cause
         if reason is not None:
             self._set_aside(path, reason, identity)
         return record
@@ -197,7 +203,7 @@ class Hdf5Store:
         except OtherSchema as cause:
             return str(cause)
         except OSError as cause:
-            raise _explained(cause, path, "cannot be read") from cause
+            raise explained(cause, path, "cannot be read") from cause
 
     def __contains__(self, key: object) -> bool:
         """Return whether there is a unit under a key, by the header and length of its file alone.
@@ -209,7 +215,7 @@ class Hdf5Store:
         try:
             return self._holds_unit(path, checked_key(key))
         except OSError as cause:
-            raise _explained(cause, path, "cannot be read") from cause
+            raise explained(cause, path, "cannot be read") from cause
 
     def keys(self) -> list[str]:
         """Return the keys of all units, sorted; a unit counts as in ``key in store``."""
@@ -219,7 +225,7 @@ class Hdf5Store:
         except FileNotFoundError:
             return []
         except OSError as cause:
-            raise _explained(cause, self._folder, "cannot be read") from cause
+            raise explained(cause, self._folder, "cannot be read") from cause
         found = []
         for name in names:
             with contextlib.suppress(StoreError):
@@ -243,11 +249,11 @@ class Hdf5Store:
         path = self.path_of(key)
         try:
             path.unlink()
-            _flush_folder(self._folder)
+            flush_folder(self._folder)
         except FileNotFoundError:
             return False
         except OSError as cause:
-            raise _explained(cause, path, "cannot be removed") from cause
+            raise explained(cause, path, "cannot be removed") from cause
         return True
 
     def read_file(self, path: str | Path) -> Record:
@@ -278,82 +284,107 @@ class Hdf5Store:
         StoreError
             If that is refused.
         """
-        self._create_folder()
+        self._disk.create_folder()
         try:
-            with self._temporary("check") as (file, _):
+            with self._disk.temporary("check") as (file, _):
                 file.write(b"\n")
                 os.fsync(file.fileno())
         except OSError as cause:
-            raise _explained(cause, self._folder, "cannot be written to") from cause
+            raise explained(cause, self._folder, "cannot be written to") from cause
 
-    def remove_stale(self, older_than_seconds: float = _STALE_AFTER_SECONDS) -> list[Path]:
+    def remove_stale(self, older_than_seconds: float = STALE_AFTER_SECONDS) -> list[Path]:
         """Remove temporary files that killed processes left behind; done by itself before the first ``put``.
 
         Parameters
         ----------
         older_than_seconds : float
-            Time since their last change, by the clock of the disk [s].
+            Time since their last change, by the clock of the disk [s]; those of processes of this machine that have ended
+            go at any age.
 
         Returns
         -------
         list of Path
             What was removed.
         """
-        self._create_folder()
+        self._disk.create_folder()
         try:
-            now = self._disk_time()
-            removed = []
-            for path in sorted(self._folder.glob(f"{_TEMPORARY}*")):
-                with contextlib.suppress(FileNotFoundError):
-                    if now - path.stat().st_mtime > older_than_seconds:
-                        path.unlink()
-                        removed.append(path)
+            return self._disk.remove_stale(older_than_seconds)
         except OSError as cause:
-            raise _explained(cause, self._folder, "cannot be cleaned of old temporary files") from cause
-        return removed
+            raise explained(cause, self._folder, "cannot be cleaned of old temporary files") from cause
 
-    def _create_folder(self) -> None:
+    def claim(self, key: str) -> Claim | None:
+        """Say that this process works on a unit, unless another does; see :mod:`elbowroom.store.claims`.
+
+        Parameters
+        ----------
+        key : str
+            Content key.
+
+        Returns
+        -------
+        Claim or None
+            A context manager that lets go of the unit in the end, or None: somebody else works on it.  The other may have
+            finished it just before, so look into the store once more after claiming.
+
+        Raises
+        ------
+        StoreError
+            If ``key`` is not a key, or the disk refuses.
+        """
+        path = self.path_of(key)
+        self._disk.create_folder()
         try:
-            missing = [path for path in (self._folder, *self._folder.parents) if not path.exists()]
-            self._folder.mkdir(parents=True, exist_ok=True)
-            for path in missing:
-                _flush_folder(path.parent)
+            return self._claims.claim(key)
         except OSError as cause:
-            raise _explained(cause, self._folder, "the folder cannot be created") from cause
+            raise explained(cause, path, "cannot be claimed for work") from cause
 
-    @contextlib.contextmanager
-    def _temporary(self, label: str) -> Iterator[tuple[io.FileIO, Path]]:
-        """Create a file of a name nobody else has; whatever happens, that name is gone in the end."""
-        path = self._folder / f"{_TEMPORARY}{label}-{os.getpid()}-{secrets.token_hex(8)}"
-        try:
-            with open(path, "x+b", buffering=0) as file:
-                yield file, path
-        finally:
-            with contextlib.suppress(OSError):
-                path.unlink()
+    def claimed(self, key: str) -> Holder | None:
+        """Return who works on a unit now, this process included; None if nobody does.
 
-    def _disk_time(self) -> float:
-        """Return the time by the clock of the disk, which may be another machine's [s since the epoch]."""
+        Raises
+        ------
+        StoreError
+            If ``key`` is not a key, or the operating system refuses.
+        """
+        holder = self.claim_of(key)
+        return holder if holder is not None and holder.state == "working" else None
+
+    def claim_of(self, key: str) -> Holder | None:
+        """Return whose claim lies on a unit, void or not; None if there is none; errors as :meth:`claimed`."""
+        path = self.path_of(key)
         try:
-            with self._temporary("clock") as (file, _):
-                return os.fstat(file.fileno()).st_mtime
+            return self._claims.holder(key)
         except OSError as cause:
-            if cause.errno not in (errno.ENOSPC, errno.EDQUOT):
-                raise
-            return time.time()  # what is stale may be what fills the disk
+            raise explained(cause, path, "its claim cannot be read") from cause
+
+    def claims(self) -> dict[str, Holder]:
+        """Return all claims, void or not, by the keys of their units; errors as :meth:`claimed`."""
+        try:
+            found = {key: self._claims.holder(key) for key in self._claims.keys()}
+        except OSError as cause:
+            raise explained(cause, self._folder, "the claims in it cannot be read") from cause
+        return {key: holder for key, holder in found.items() if holder is not None}
+
+    def discard_claim(self, key: str) -> bool:
+        """Remove a void claim and say whether there was one; errors as :meth:`claimed`."""
+        path = self.path_of(key)
+        try:
+            return self._claims.discard(key)
+        except OSError as cause:
+            raise explained(cause, path, "its claim cannot be removed") from cause
 
     def _write(self, path: Path, key: str, record: Record) -> None:
         if not self._swept:
             self.remove_stale()
             self._swept = True
-        with self._temporary(key[:16]) as (file, temporary):
+        with self._disk.temporary(key[:16]) as (file, temporary):
             write_unit(file, self._schema, key, record)
             os.fsync(file.fileno())
             file.close()  # network disks may report a full disk only here
             check_written(temporary, self._schema, key, record)
             self._make_way(path, key)
-            os.replace(temporary, path)
-        _flush_folder(self._folder)
+            self._disk.replace(temporary, path)
+        flush_folder(self._folder)
 
     def _make_way(self, path: Path, key: str) -> None:
         """Set aside whatever stands where a unit is to go, unless it is a unit of ours."""
@@ -373,7 +404,7 @@ class Hdf5Store:
         except (FileNotFoundError, NotAUnit, OtherSchema):
             return False
         except OSError as cause:
-            if _is_damage(cause):
+            if is_damage(cause):
                 return False
             raise
         return header.key == key
@@ -391,7 +422,7 @@ class Hdf5Store:
         except NotAUnit as cause:
             return None, str(cause), (found.st_dev, found.st_ino)
         except OSError as cause:
-            if not _is_damage(cause):
+            if not is_damage(cause):
                 raise
             return None, f"cannot be read: {cause.strerror}", (found.st_dev, found.st_ino)
 
@@ -419,44 +450,3 @@ class Hdf5Store:
         with contextlib.suppress(OSError):  # on a full disk the report alone must do
             target.with_suffix(".txt").write_text(f"{path}\n{reason}\n", encoding="utf-8")
         self._report(DamageReport(path, reason, target))
-
-
-def _is_damage(error: OSError) -> bool:
-    """Return whether an error of the operating system is about this one file, not about the machine."""
-    return error.errno in (errno.EIO, errno.ELOOP)
-
-
-def _flush_folder(folder: Path) -> None:
-    """Make a rename, creation or removal in a folder survive a power failure, where the system offers it."""
-    if not hasattr(os, "O_DIRECTORY"):
-        return
-    descriptor = os.open(folder, os.O_RDONLY | os.O_DIRECTORY)
-    try:
-        os.fsync(descriptor)
-    except OSError as cause:
-        if cause.errno not in (errno.EINVAL, errno.ENOTSUP):  # some file systems know no such thing
-            raise
-    finally:
-        os.close(descriptor)
-
-
-def _explained(error: OSError, path: Path, what: str) -> StoreError:
-    """Return the error of the operating system as a message a user can act on."""
-    if isinstance(error, StoreError):
-        return error
-    existing = next((p for p in (path, *path.parents) if os.path.exists(p)), Path("."))
-    if error.errno in (errno.ENOSPC, errno.EDQUOT):
-        free = shutil.disk_usage(existing).free
-        why = (
-            f"no space left on the device or in the quota ({free / 1e6:.1f} MB free on the device); "
-            "free some space or choose another folder. Units stored before are untouched"
-        )
-    elif error.errno in (errno.ENOTDIR, errno.EEXIST) and not existing.is_dir():
-        why = f"{existing} is a file; expected a folder"
-    elif error.errno == errno.EROFS:
-        why = "the disk is mounted read-only; choose another folder"
-    elif error.errno in (errno.EACCES, errno.EPERM):
-        why = "permission denied; choose another folder or have its permissions changed"
-    else:
-        why = error.strerror or str(error)
-    return StoreError(f"{what}: {why}", path=path)

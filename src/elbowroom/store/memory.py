@@ -3,7 +3,11 @@
 from __future__ import annotations
 
 import copy
+import os
+import socket
+from datetime import UTC, datetime
 
+from elbowroom.store.claims import Claim, Holder
 from elbowroom.store.records import Record, Schema, checked_key, checked_record
 from elbowroom.store.unitfile import provenance_of
 
@@ -22,6 +26,7 @@ class MemoryStore:
     def __init__(self, schema: Schema) -> None:
         self._schema = schema
         self._records: dict[str, Record] = {}
+        self._claimed: dict[str, Holder] = {}
 
     @property
     def schema(self) -> Schema:
@@ -84,6 +89,34 @@ class MemoryStore:
     def keys(self) -> list[str]:
         """Return the keys of all units, sorted."""
         return sorted(self._records)
+
+    def claim(self, key: str) -> Claim | None:
+        """Claim a unit until released; None if it is claimed already.
+
+        Raises
+        ------
+        StoreError
+            If ``key`` is not a key.
+        """
+        if checked_key(key) in self._claimed:
+            return None
+        since = datetime.now(UTC).isoformat(timespec="seconds")
+        self._claimed[key] = Holder(socket.gethostname(), os.getpid(), since, "working")
+
+        def release() -> None:
+            self._claimed.pop(key, None)
+
+        return Claim(key, release, lambda: key in self._claimed)
+
+    def claimed(self, key: str) -> Holder | None:
+        """Return who works on a unit; None if nobody does.
+
+        Raises
+        ------
+        StoreError
+            If ``key`` is not a key.
+        """
+        return self._claimed.get(checked_key(key))
 
     def check_writable(self) -> None:
         """Do nothing: memory can be written."""

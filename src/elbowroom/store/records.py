@@ -14,6 +14,7 @@ import numpy as np
 
 from elbowroom.base.arrays import ArraySpec
 from elbowroom.base.errors import StoreError
+from elbowroom.store.claims import Claim, Holder
 
 _KEY = re.compile(r"[0-9a-f]{64}")
 _SCHEMA_NAME = re.compile(r"[a-z][a-z0-9-]{0,39}")
@@ -189,6 +190,12 @@ class Store(Protocol):
 
     def path_of(self, key: str) -> Path | None:
         """Return the file of a unit, present or not, or None for a store without files."""
+
+    def claim(self, key: str) -> Claim | None:
+        """Say that this process works on a unit, until the claim is released; None if another does."""
+
+    def claimed(self, key: str) -> Holder | None:
+        """Return who works on a unit now, or None."""
 
     def check_writable(self) -> None:
         """Raise ``StoreError`` now if nothing can be written."""
