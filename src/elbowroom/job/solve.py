@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from contextlib import nullcontext
 from dataclasses import fields, replace
 from typing import Any
 
@@ -12,6 +13,7 @@ from elbowroom.base.errors import ModelRangeError, StoreError
 from elbowroom.geometry.antennas import Antenna
 from elbowroom.geometry.mesh import MeshSettings, mesh_settings
 from elbowroom.geometry.stations import Station, orientation_matrix
+from elbowroom.job.sharing import working_on
 from elbowroom.radiation.solution import Solution
 from elbowroom.store.keys import content_key
 from elbowroom.store.records import Record, Schema, Store
@@ -268,7 +270,7 @@ def solve(
     only_stored: bool = False,
     with_mesh_error: bool = True,
 ) -> Solution:
-    """Solve a station at one frequency, or fetch what was solved before.
+    """Solve a station at one frequency, or fetch what was solved before; wait while another run solves it into the same store.
 
     Parameters
     ----------
@@ -326,16 +328,21 @@ def solve(
     if only_stored:
         msg = f"{frequency_hz / 1e6:g} MHz is not in the store, or its file is damaged; solve it first"
         raise StoreError(msg)
-    d = discretise(station, frequency_hz, mesh=settings, near=near, far=far)
-    per_kind = solve_isolated(d)
-    if chosen == "reduced":
-        coupled, space, statistics = solve_reduced(d, ReductionSettings(tolerance), progress=progress)
-    else:
-        coupled, statistics = solve_direct(d, precision=precision, progress=progress)
-        space = all_unknowns(d)
-    if with_mesh_error:
-        statistics = replace(statistics, mesh_error=mesh_error(d, per_kind))
-    solution = Solution(d, coupled, tuple(per_kind[k] for k in d.kind_of), REFERENCE_OHM, statistics, space)
-    if store is not None:
-        store.put(key, _to_record(solution, attributes or {}))
-    return solution
+    with nullcontext() if store is None else working_on(store, key, progress) as arrived:
+        if arrived is not None:
+            found = discretise(station, frequency_hz, mesh=settings, near=near, far=far, self_blocks=False)
+            if _fits(arrived, found):
+                return _from_record(arrived, found)
+        d = discretise(station, frequency_hz, mesh=settings, near=near, far=far)
+        per_kind = solve_isolated(d)
+        if chosen == "reduced":
+            coupled, space, statistics = solve_reduced(d, ReductionSettings(tolerance), progress=progress)
+        else:
+            coupled, statistics = solve_direct(d, precision=precision, progress=progress)
+            space = all_unknowns(d)
+        if with_mesh_error:
+            statistics = replace(statistics, mesh_error=mesh_error(d, per_kind))
+        solution = Solution(d, coupled, tuple(per_kind[k] for k in d.kind_of), REFERENCE_OHM, statistics, space)
+        if store is not None:
+            store.put(key, _to_record(solution, attributes or {}))
+        return solution
