@@ -35,11 +35,11 @@ from elbowroom.geometry.mesh import MeshSettings
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import Wire
 from elbowroom.kernels.basis import local_values
+from elbowroom.kernels.wire_metal import internal_impedance
 from elbowroom.radiation.patterns import station_patterns
 from elbowroom.system.discretisation import discretise
 from elbowroom.system.plane_waves import direction_frame
 from elbowroom.system.port_algebra import admittance_from_loaded
-from elbowroom.system.self_block import internal_impedance
 from elbowroom.system.solving import solve_direct
 
 pytestmark = pytest.mark.validation

@@ -2,6 +2,9 @@
 
 kill <seconds> <first unit>   fork a process that stores unit after unit, kill it that long after its first
 race <times>                  fork two processes that store records of their own under one key, wait for both
+claims <processes> <times>    fork processes that claim one unit again and again; 0 if never two had it together
+hold <key> [<silence>]        fork a process that claims a unit and waits; "lost" when it sees that it has it no more
+reap                          wait for the process that held
 """
 
 from __future__ import annotations
@@ -49,6 +52,29 @@ def write_same(folder: str, writer: int, times: int) -> None:
         store.put(key_of(0), record_of(writer, RACE_PORTS))
 
 
+def claim_often(folder: str, times: int) -> None:
+    store = Hdf5Store(folder, SCHEMA)
+    inside = Path(folder) / "inside"
+    held = 0
+    while held < times:
+        claim = store.claim(key_of(0))
+        if claim is None:
+            continue
+        with claim:
+            held += 1
+            os.close(os.open(inside, os.O_CREAT | os.O_EXCL))  # fails if another is inside
+            time.sleep(0.0005)
+            os.unlink(inside)
+
+
+def hold(folder: str, key: str, silence: float) -> None:
+    with Hdf5Store(folder, SCHEMA, claim_silence_seconds=silence).claim(key) as claim:
+        print("holder", os.getpid(), flush=True)
+        while claim.held:
+            time.sleep(0.02)
+        print("lost", flush=True)
+
+
 def main(folder: str) -> None:
     library_versions()  # slow once, then known to every process that is forked
     print("ready", flush=True)
@@ -63,6 +89,15 @@ def main(folder: str) -> None:
             os.kill(child, signal.SIGKILL)
             print("status", os.waitpid(child, 0)[1], flush=True)
             os.close(reader)
+        elif command == "claims":
+            n, times = map(int, arguments)
+            children = [forked(lambda n_times=times: claim_often(folder, n_times)) for _ in range(n)]
+            print("status", max(os.waitpid(child, 0)[1] for child in children), flush=True)
+        elif command == "hold":
+            silence = float(arguments[1]) if len(arguments) > 1 else 40.0
+            holder = forked(lambda key=arguments[0], after=silence: hold(folder, key, after))
+        elif command == "reap":
+            print("status", os.waitpid(holder, 0)[1], flush=True)
         else:
             times = int(arguments[0])
             children = [forked(lambda writer=n, n_times=times: write_same(folder, writer, n_times)) for n in (1, 2)]

@@ -10,7 +10,7 @@ import numpy as np
 from elbowroom.base.arrays import FloatArray, check_array
 from elbowroom.base.errors import GeometryError
 from elbowroom.geometry.antennas import Antenna
-from elbowroom.geometry.grounds import GROUNDS, FreeSpace, Ground
+from elbowroom.geometry.grounds import GROUND_TYPES, FreeSpace, Ground
 
 
 def orientation_matrix(rotation_deg: float, tilt_east_deg: float = 0.0, tilt_north_deg: float = 0.0) -> FloatArray:
@@ -134,7 +134,7 @@ class Station:
     ----------
     placed : sequence of Placed
         The antennas.  Those without a name are called ``A001``, ``A002``, ...
-    ground : FreeSpace or PerfectGround
+    ground : Ground
         What they stand on; the surface is z = 0.
 
     Raises
@@ -150,8 +150,8 @@ class Station:
         if not placed:
             msg = "the station has no antennas"
             raise GeometryError(msg)
-        if not isinstance(ground, tuple(type(known) for known in GROUNDS.values())):
-            msg = f"ground {ground!r}: expected {' or '.join(f'{type(known).__name__}()' for known in GROUNDS.values())}"
+        if not isinstance(ground, GROUND_TYPES):
+            msg = f"ground {ground!r}: expected {', '.join(known.__name__ for known in GROUND_TYPES)}"
             raise GeometryError(msg)
         named = tuple(
             p if p.name else Placed(p.antenna, p.position, p.rotation_deg, p.tilt_east_deg, p.tilt_north_deg, f"A{i + 1:03d}")

@@ -8,27 +8,17 @@ ground treats them differently.  A new ground is a class here beside a descripti
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
 from typing import Protocol
 
 import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
-from elbowroom.geometry.grounds import FreeSpace, Ground, PerfectGround
+from elbowroom.geometry.grounds import FreeSpace, Ground, MeshOnSoil, MoistSoil, PerfectGround, Soil, TabulatedSoil
+from elbowroom.kernels.lossy_grounds import LossyGroundKernels
+from elbowroom.kernels.point_kernels import Extent, PointKernels, Workspace, distinct_kernels
 from elbowroom.kernels.points_numba import fill_free, fill_image
 
-
-@dataclass(frozen=True)
-class PointKernels:
-    """Scalar kernels between two sets of points, real and imaginary parts apart, each float64 (2, Q, Q').
-
-    ``horizontal`` multiplies the x and y currents, ``vertical`` the z currents, ``charge`` the charges.  Equal kernels
-    may be one and the same array, which lets the caller do their products together.
-    """
-
-    horizontal: FloatArray
-    vertical: FloatArray
-    charge: FloatArray
+__all__ = ["Extent", "GroundKernels", "PointKernels", "Workspace", "distinct_kernels", "ground_kernels"]
 
 
 class GroundKernels(Protocol):
@@ -36,6 +26,8 @@ class GroundKernels(Protocol):
 
     conducting_surface: bool
     """Whether wires may end on z = 0, their current flowing on into an image."""
+    has_correction: bool
+    """Whether the ground adds a smooth part to the direct kernel, by :meth:`correction`, in place of images."""
 
     def fill(self, points: FloatArray, points2: FloatArray, wavenumber: float, work: Workspace) -> PointKernels:
         """Return the kernels between points (3, Q) and (3, Q') in the station frame, direct part included."""
@@ -49,6 +41,10 @@ class GroundKernels(Protocol):
         """
         ...
 
+    def serving(self, extent: Extent) -> GroundKernels:
+        """Return the fields of the same ground for points within an extent: the same object if it serves already."""
+        ...
+
     def self_images(self) -> tuple[float, float, float] | None:
         """Return what the mirror image of an antenna counts in its own block, or None.
 
@@ -56,33 +52,20 @@ class GroundKernels(Protocol):
         """
         ...
 
+    def correction(self, points: FloatArray, points2: FloatArray, wavenumber: float, work: Workspace) -> PointKernels | None:
+        """Return what the ground adds to the direct kernel between points, or None where there is nothing or images say it all.
 
-class Workspace:
-    """Reusable buffers for point kernels, one per thread: large allocations cost more than filling them.
-
-    Parameters
-    ----------
-    single : bool, optional
-        Whether kernels are kept in single precision: about 4e-7 of a kernel, and products in half the time.
-    """
-
-    def __init__(self, single: bool = False) -> None:
-        self.dtype: type = np.float32 if single else np.float64
-        self._flat: dict[str, FloatArray] = {}
-
-    def array(self, name: str, shape: tuple[int, ...]) -> FloatArray:
-        """Return an uninitialised array of that shape; its contents last until the name is asked for again."""
-        size = int(np.prod(shape))
-        flat = self._flat.get(name)
-        if flat is None or flat.size < size:
-            flat = self._flat[name] = np.empty(size, dtype=self.dtype)
-        return flat[:size].reshape(shape)
+        It is smooth for points above the ground, so that an antenna's own block and pairs that nearly touch take it by plain
+        quadrature.
+        """
+        ...
 
 
 class FreeSpaceKernels:
     """No ground."""
 
     conducting_surface = False
+    has_correction = False
 
     def fill(self, points: FloatArray, points2: FloatArray, wavenumber: float, work: Workspace) -> PointKernels:
         """Return exp(-jkR)/R between all points."""
@@ -94,8 +77,16 @@ class FreeSpaceKernels:
         """Return None: nothing is reflected."""
         return
 
+    def serving(self, extent: Extent) -> FreeSpaceKernels:
+        """Return itself."""
+        return self
+
     def self_images(self) -> None:
         """Return None: there is no image."""
+        return
+
+    def correction(self, points: FloatArray, points2: FloatArray, wavenumber: float, work: Workspace) -> None:
+        """Return None: nothing is added."""
         return
 
 
@@ -103,6 +94,7 @@ class PerfectGroundKernels:
     """A perfectly conducting plane: image theory."""
 
     conducting_surface = True
+    has_correction = False
 
     def fill(self, points: FloatArray, points2: FloatArray, wavenumber: float, work: Workspace) -> PointKernels:
         """Return g - g_image for horizontal currents and charges, g + g_image for vertical currents."""
@@ -116,17 +108,44 @@ class PerfectGroundKernels:
         ones = np.ones(np.shape(theta_rad), dtype=complex)
         return -ones, ones
 
+    def serving(self, extent: Extent) -> PerfectGroundKernels:
+        """Return itself."""
+        return self
+
     def self_images(self) -> tuple[float, float, float]:
         """Return (-1, +1, -1): the image of a horizontal current runs backwards, its charge is opposite."""
         return -1.0, 1.0, -1.0
 
+    def correction(self, points: FloatArray, points2: FloatArray, wavenumber: float, work: Workspace) -> None:
+        """Return None: images say it all."""
+        return
 
-_KERNELS: dict[type, Callable[[], GroundKernels]] = {
-    FreeSpace: FreeSpaceKernels,
-    PerfectGround: PerfectGroundKernels,
+
+_KERNELS: dict[type, Callable[[Ground, float, Extent], GroundKernels]] = {
+    FreeSpace: lambda ground, frequency_hz, extent: FreeSpaceKernels(),
+    PerfectGround: lambda ground, frequency_hz, extent: PerfectGroundKernels(),
+    Soil: LossyGroundKernels,
+    TabulatedSoil: LossyGroundKernels,
+    MoistSoil: LossyGroundKernels,
+    MeshOnSoil: LossyGroundKernels,
 }
 
 
-def ground_kernels(ground: Ground) -> GroundKernels:
-    """Return the fields of a ground description."""
-    return _KERNELS[type(ground)]()
+def ground_kernels(ground: Ground, frequency_hz: float, extent: Extent) -> GroundKernels:
+    """Return the fields of a ground description.
+
+    Parameters
+    ----------
+    ground : Ground
+        Which.
+    frequency_hz : float
+        [Hz].
+    extent : Extent
+        Where points may lie that kernels are asked for.
+
+    Raises
+    ------
+    ModelRangeError
+        If the ground is not known at that frequency.
+    """
+    return _KERNELS[type(ground)](ground, frequency_hz, extent)

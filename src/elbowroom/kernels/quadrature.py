@@ -51,7 +51,7 @@ class SampledCurrents:
         return self.points.shape[0]
 
 
-def points_per_element(mesh: Mesh, distance: float, wavenumber: float, tolerance: float) -> np.ndarray:
+def points_per_element(mesh: Mesh, distance: float | FloatArray, wavenumber: float, tolerance: float) -> np.ndarray:
     """Return how many Gauss points each element needs towards sources at a distance.
 
     The kernel's nearest singularity beside the middle of an element of length h is 2 distance/h half lengths away,
@@ -62,8 +62,8 @@ def points_per_element(mesh: Mesh, distance: float, wavenumber: float, tolerance
     ----------
     mesh : Mesh
         The elements.
-    distance : float
-        Smallest distance of the other currents [m].
+    distance : float, or float64 (E,)
+        Smallest distance of the other currents, for all elements or for each [m].
     wavenumber : float
         [rad/m].
     tolerance : float

@@ -6,7 +6,6 @@ import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import ModelRangeError
-from elbowroom.kernels.grounds import ground_kernels
 from elbowroom.kernels.points_numba import accumulate_phases
 from elbowroom.radiation.patterns import CHUNK_DIRECTIONS
 from elbowroom.system.discretisation import Discretisation
@@ -84,7 +83,7 @@ def current_beams(
     complex128 (B, D, 2)
     """
     d, space = discretisation, space or all_unknowns(discretisation)
-    ground = ground_kernels(d.station.ground)
+    ground = d.ground
     n_beams = currents.shape[1]
     out = np.zeros((n_beams, frame.count, 2), dtype=complex)
     positions = np.ascontiguousarray(d.station.positions * [1.0, 1.0, 0.0])

@@ -5,7 +5,6 @@ from __future__ import annotations
 import numpy as np
 
 from elbowroom.base.arrays import ComplexArray
-from elbowroom.kernels.grounds import ground_kernels
 from elbowroom.system.discretisation import Discretisation
 from elbowroom.system.plane_waves import DirectionFrame, kind_vectors, phases
 from elbowroom.system.spaces import CurrentSpace, all_unknowns
@@ -46,7 +45,7 @@ def station_patterns(
         [m times the unit of the currents]
     """
     d, space = discretisation, space or all_unknowns(discretisation)
-    ground = ground_kernels(d.station.ground)
+    ground = d.ground
     n_patterns = currents.shape[1]
     if out is None:
         out = np.empty((n_patterns, frame.count, 2), dtype=complex)

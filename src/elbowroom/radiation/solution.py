@@ -15,7 +15,6 @@ from numpy.typing import ArrayLike
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.stations import PortName, Station
-from elbowroom.kernels.grounds import ground_kernels
 from elbowroom.radiation.beams import current_beams, pointing_weights
 from elbowroom.radiation.patterns import CHUNK_DIRECTIONS, station_patterns
 from elbowroom.system.discretisation import Discretisation
@@ -322,7 +321,7 @@ class Solution:
         frame = direction_frame(theta_rad, phi_rad)
         rows = self._port_rows(ports)
         amounts = self._isolated_amounts(termination)
-        ground = ground_kernels(d.station.ground)
+        ground = d.ground
         positions = d.station.positions * [1.0, 1.0, 0.0]
         owner = d.station.port_antennas[rows]
         out = np.empty((rows.size, frame.count, 2), dtype=complex)

@@ -20,11 +20,12 @@ from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.constants import IMPEDANCE_OF_VACUUM
 from elbowroom.base.threads import loop_threads
 from elbowroom.geometry.wires import segment_distances
-from elbowroom.kernels.grounds import GroundKernels, Workspace, ground_kernels
+from elbowroom.kernels.grounds import GroundKernels, Workspace
 from elbowroom.kernels.quadrature import gauss_table
 from elbowroom.kernels.reactions_numba import angled_moments_all
 from elbowroom.system.discretisation import Discretisation, Kind, Samples, attachments
 from elbowroom.system.factorisation import TiledSymmetric
+from elbowroom.system.ground_blocks import ground_block, ring_samples
 from elbowroom.system.self_block import expand_moments_between
 
 TILE_ORDER = 768
@@ -89,15 +90,12 @@ class PairFiller:
 
     def __init__(self, discretisation: Discretisation) -> None:
         self.discretisation = discretisation
-        self.ground: GroundKernels = ground_kernels(discretisation.station.ground)
+        self.ground: GroundKernels = discretisation.ground
         self.positions = discretisation.station.positions
         self.longest = max(float(kind.mesh.length.max()) for kind in discretisation.kinds)
         self._weights: dict[tuple[int, int], _Weights] = {}
         self._lock = Lock()
         self._local = local()
-        # Kernels that are one and the same array are multiplied together; a probe finds out which are.
-        probe = self.ground.fill(np.array([[0.0], [0.0], [1.0]]), np.array([[9.0], [0.0], [1.0]]), 1.0, Workspace())
-        self.charge_with_horizontal = probe.charge is probe.horizontal
 
     def level_of(self, distance: float) -> int:
         """Return the index of the Gauss rules for a pair at a distance [m]; -1 means element by element."""
@@ -148,11 +146,15 @@ class PairFiller:
         kernels = self.ground.fill(mine.points, points, d.wavenumber, work)
         horizontal = np.swapaxes(kernels.horizontal, 1, 2) @ mine.square_horizontal
         vertical = np.swapaxes(kernels.vertical, 1, 2) @ mine.square_vertical
-        if not self.charge_with_horizontal:
-            n = mine.square_vertical.shape[1]
-            horizontal[..., 2 * n :] = np.swapaxes(kernels.charge, 1, 2) @ mine.square_horizontal[:, 2 * n :]
         blocks, first = [], 0
         n = mine.square_vertical.shape[1]
+        # Kernels that are one and the same array are multiplied together.
+        if kernels.charge is not kernels.horizontal:
+            horizontal[..., 2 * n :] = np.swapaxes(kernels.charge, 1, 2) @ mine.square_horizontal[:, 2 * n :]
+        if kernels.cross is not None:
+            crossed = np.swapaxes(kernels.cross, 1, 2)
+            horizontal[..., 2 * n :] += crossed @ (d.wavenumber * mine.square_vertical)
+            vertical -= crossed @ (d.wavenumber * mine.square_horizontal[:, 2 * n :])
         for w, count in zip(theirs, counts, strict=True):
             part_h = horizontal[:, first : first + count].reshape(2, 3 * count, n)
             part_v = vertical[:, first : first + count]
@@ -177,6 +179,14 @@ class PairFiller:
         images = self.ground.self_images()
         if images is not None:
             block = block + self._element_block(kind_j, self.positions[j], kind_i, self.positions[i], images)
+        if self.ground.has_correction:
+            ends = [kind_j.placed_elements(self.positions[j]), kind_i.placed_elements(self.positions[i])]
+            lowest = min(float(end[:, 2].min()) for pair in ends for end in pair)
+            samples = [
+                ring_samples(kind.mesh, *pair, lowest, d.wavenumber, d.near.tolerance)
+                for kind, pair in zip((kind_j, kind_i), ends, strict=True)
+            ]
+            block = block + ground_block(self.ground, samples[0], samples[1], d.wavenumber)
         return block
 
     def _element_block(

@@ -6,6 +6,7 @@ from dataclasses import dataclass, field, replace
 from threading import Lock
 
 import numpy as np
+from scipy.spatial.distance import pdist
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.constants import wavelength_of, wavenumber_of
@@ -13,8 +14,9 @@ from elbowroom.base.errors import GeometryError, ModelRangeError
 from elbowroom.geometry.antennas import Antenna
 from elbowroom.geometry.mesh import Mesh, MeshSettings, build_mesh, mesh_settings
 from elbowroom.geometry.stations import Placed, Station
-from elbowroom.kernels.grounds import ground_kernels
+from elbowroom.kernels.grounds import Extent, GroundKernels, ground_kernels
 from elbowroom.kernels.quadrature import points_per_element, sample_mesh
+from elbowroom.system.ground_blocks import RingSamples, ground_block, ring_samples
 from elbowroom.system.networks import PortAttachment, attach_ports
 from elbowroom.system.self_block import NearSettings, free_self_block, image_self_block, loss_and_loads
 
@@ -136,6 +138,8 @@ class Discretisation:
         Kind of each antenna.
     unknown_offsets, port_offsets : int (A+1,)
         Where each antenna's unknowns and ports begin.
+    ground : GroundKernels
+        The fields of the ground, one object for all who ask.
     """
 
     station: Station
@@ -147,6 +151,7 @@ class Discretisation:
     kind_of: np.ndarray
     unknown_offsets: np.ndarray
     port_offsets: np.ndarray
+    ground: GroundKernels
 
     @property
     def wavenumber(self) -> float:
@@ -216,6 +221,12 @@ def grounded_ends(placed: Placed, conducting: bool) -> np.ndarray:
         )
         raise GeometryError(msg)
     touching = height <= GROUND_CONTACT_M
+    if touching.any() and not conducting:
+        msg = (
+            f"antenna {placed.name!r} ({placed.antenna.name!r}): wire {int(np.argwhere(touching)[0, 0])} ends on the ground; wires "
+            "that end on or enter soil are not modelled; raise the antenna with up_m, or take the perfect ground"
+        )
+        raise GeometryError(msg)
     radius = np.array([w.radius for w in placed.antenna.wires])
     flat = touching.all(axis=1)
     if flat.any():
@@ -226,13 +237,36 @@ def grounded_ends(placed: Placed, conducting: bool) -> np.ndarray:
         wire = int(np.argwhere(near)[0, 0])
         msg = (
             f"antenna {placed.name!r}: an end of wire {wire} is {float(height[near][0]):g} m above the ground, less than its "
-            f"radius ({radius[wire]:g} m); end it on z = 0 to join it to the ground, or raise it"
+            f"radius ({radius[wire]:g} m); {'end it on z = 0 to join it to the ground, or ' if conducting else ''}raise it"
         )
         raise GeometryError(msg)
-    if touching.any() and not conducting:
-        msg = f"antenna {placed.name!r}: a wire ends on the ground, which this ground does not conduct"
-        raise GeometryError(msg)
     return touching
+
+
+def extent_of(station: Station) -> Extent:
+    """Return where the wires of a station lie, their thickness included."""
+    positions = station.positions
+    reach = lowest = highest = thickest = 0.0
+    seen: set[tuple] = set()
+    for placed in station:
+        key = (id(placed.antenna), placed.tilt_east_deg, placed.tilt_north_deg, placed.rotation_deg, placed.position[2])
+        if key in seen:
+            continue
+        ends = np.array([[w.start, w.end] for w in placed.antenna.wires]).reshape(-1, 3) @ placed.orientation.T
+        low, high = float(ends[:, 2].min()) + placed.position[2], float(ends[:, 2].max()) + placed.position[2]
+        lowest, highest = (min(lowest, low), max(highest, high)) if seen else (low, high)
+        seen.add(key)
+        reach = max(reach, float(np.hypot(ends[:, 0], ends[:, 1]).max()))
+        thickest = max(thickest, *(w.radius for w in placed.antenna.wires))
+    apart = float(pdist(positions[:, :2]).max()) if len(positions) > 1 else 0.0
+    return Extent(apart + 2.0 * (reach + thickest), lowest - thickest, highest + thickest)
+
+
+def _ground_samples(mesh: Mesh, attitude: FloatArray, height: float, frequency_hz: float, near: NearSettings) -> RingSamples:
+    """Return the points by which an antenna of some attitude and height meets its own part of the ground's field."""
+    start, end = mesh.start @ attitude.T + [0.0, 0.0, height], mesh.end @ attitude.T + [0.0, 0.0, height]
+    lowest = float(min(start[:, 2].min(), end[:, 2].min()))
+    return ring_samples(mesh, start, end, lowest, wavenumber_of(frequency_hz), near.tolerance)
 
 
 def discretise(
@@ -244,6 +278,7 @@ def discretise(
     far: FarSettings | None = None,
     self_blocks: bool = True,
     mesh_hz: float | None = None,
+    ground: GroundKernels | None = None,
 ) -> Discretisation:
     """Mesh every kind of antenna of a station and compute its self block.
 
@@ -279,7 +314,7 @@ def discretise(
     settings, near, far = mesh_settings(mesh), near or NearSettings(), far or FarSettings()
     wavelength = wavelength_of(frequency_hz)
     cut_for = wavelength if mesh_hz is None else wavelength_of(mesh_hz)
-    ground = ground_kernels(station.ground)
+    ground = ground or ground_kernels(station.ground, frequency_hz, extent_of(station))
     for design in station.designs:
         for index, wire in enumerate(design.wires):
             if wire.radius > 0.02 * wavelength:
@@ -309,10 +344,10 @@ def discretise(
         if key in index_of:
             kind_of[a] = index_of[key]
             continue
-        if ground.conducting_surface:
-            ends = grounded_ends(placed, conducting=True)
-        else:
+        if station.ground.open_below:
             ends = np.zeros((len(placed.antenna.wires), 2), dtype=bool)
+        else:
+            ends = grounded_ends(placed, conducting=ground.conducting_surface)
         mesh_key = (which, ends.tobytes())
         if mesh_key not in meshes:
             made = build_mesh(placed.antenna, cut_for, settings, ends)
@@ -331,6 +366,14 @@ def discretise(
                     made, frequency_hz, near, height, np.eye(3) if level else placed.orientation, image_counts
                 )
             block = images[image_key]
+        if ground.has_correction and self_blocks:
+            # Nothing but the height and the tilt counts: the ground is the same all round.
+            level = placed.tilt_east_deg == 0.0 and placed.tilt_north_deg == 0.0
+            image_key = (mesh_key, height, None if level else placed.attitude)
+            if image_key not in images:
+                samples = _ground_samples(made, np.eye(3) if level else placed.orientation, height, frequency_hz, near)
+                images[image_key] = block + ground_block(ground, samples, samples, wavenumber_of(frequency_hz))
+            block = images[image_key]
         kind_of[a] = index_of[key] = len(kinds)
         kinds.append(Kind(placed.antenna, made, placed.orientation, height, block))
 
@@ -346,4 +389,5 @@ def discretise(
         kind_of=kind_of,
         unknown_offsets=np.concatenate([[0], np.cumsum(unknowns)]),
         port_offsets=np.concatenate([[0], np.cumsum(ports)]),
+        ground=ground,
     )

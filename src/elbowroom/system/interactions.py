@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
+from functools import cached_property
 from threading import Lock, local
 
 import numpy as np
@@ -13,7 +14,7 @@ from elbowroom.base.arrays import AnyComplexArray, ComplexArray, FloatArray
 from elbowroom.base.constants import IMPEDANCE_OF_VACUUM
 from elbowroom.base.threads import loop_threads
 from elbowroom.geometry.mesh import Mesh
-from elbowroom.kernels.grounds import GroundKernels, Workspace, ground_kernels
+from elbowroom.kernels.grounds import GroundKernels, Workspace, distinct_kernels
 from elbowroom.system.assembly import single_threaded_blas
 from elbowroom.system.discretisation import Discretisation
 from elbowroom.system.skeletons import Skeleton, skeleton_of
@@ -31,12 +32,24 @@ class _SkeletonWeights:
         Real parts, then imaginary parts, of the weights of x, y current and charge (3 n each), then of z current (n each).
     test : complex (n, 4 J)
         Weights of x, y current, charge (negative), z current of each point, points slowest.
+    count : int
+        Number of functions n.
+    wavenumber : float
+        [rad/m]
     """
 
     points: FloatArray
     source: FloatArray
     test: AnyComplexArray
     count: int
+    wavenumber: float
+
+    @cached_property
+    def crossed(self) -> FloatArray:
+        """Parts of the weights (J, 4 n) that meet the cross kernel: of z current, then of charge, times the wavenumber."""
+        n = self.count
+        both = [self.source[:, 6 * n :], self.source[:, 2 * n : 3 * n], self.source[:, 5 * n : 6 * n]]
+        return np.ascontiguousarray(np.concatenate(both, axis=1) * self.source.dtype.type(self.wavenumber))
 
 
 class SkeletonInteractions:
@@ -63,10 +76,8 @@ class SkeletonInteractions:
         single: bool = False,
     ) -> None:
         self.discretisation, self.bases, self.skeletons, self.single = discretisation, bases, skeletons, single
-        self.ground: GroundKernels = ground_kernels(discretisation.station.ground)
+        self.ground: GroundKernels = discretisation.ground
         self.positions = discretisation.station.positions
-        probe = self.ground.fill(np.array([[0.0], [0.0], [1.0]]), np.array([[9.0], [0.0], [1.0]]), 1.0, Workspace())
-        self.charge_with_horizontal = probe.charge is probe.horizontal
         self._weights: dict[tuple[int, int], _SkeletonWeights] = {}
         self._lock = Lock()
         self._local = local()
@@ -110,6 +121,7 @@ class SkeletonInteractions:
             np.ascontiguousarray(source, dtype=kinds[0]),
             np.ascontiguousarray(test, dtype=kinds[1]),
             x.shape[1],
+            d.wavenumber,
         )
 
     def alike(self, antennas: range) -> bool:
@@ -144,14 +156,19 @@ class SkeletonInteractions:
         n = mine.count
         kernels = self.ground.fill(mine.points, points, self.discretisation.wavenumber, self._local.work)
         if silent is not None and silent.size:
-            for kernel in {id(k): k for k in (kernels.horizontal, kernels.charge, kernels.vertical)}.values():
+            for kernel in distinct_kernels(kernels):
                 kernel[:, :, silent] = 0.0
         level_part = np.swapaxes(kernels.horizontal, 1, 2) @ mine.source[:, : 6 * n]
-        if not self.charge_with_horizontal:
+        if kernels.charge is not kernels.horizontal:
             charges = np.swapaxes(kernels.charge, 1, 2)
             for first in (2 * n, 5 * n):
                 level_part[..., first : first + n] = charges @ mine.source[:, first : first + n]
         upright = np.swapaxes(kernels.vertical, 1, 2) @ mine.source[:, 6 * n :]
+        if kernels.cross is not None:
+            crossed = np.swapaxes(kernels.cross, 1, 2) @ mine.crossed
+            for part, first in enumerate((2 * n, 5 * n)):
+                level_part[..., first : first + n] += crossed[..., part * n : (part + 1) * n]
+            upright -= crossed[..., 2 * n :]
         out = np.empty((points.shape[1], 4, n), dtype=np.complex64 if self.single else complex)
         flat = out.reshape(points.shape[1], 4 * n)
         flat.real[:, : 3 * n] = level_part[0, :, : 3 * n] - level_part[1, :, 3 * n :]
@@ -315,7 +332,7 @@ def field_of_parts(
     kernels = ground.fill(points, sources, wavenumber, work)
     columns = real.shape[1] // 4
     if silent is not None and silent.size:
-        for kernel in {id(k): k for k in (kernels.horizontal, kernels.charge, kernels.vertical)}.values():
+        for kernel in distinct_kernels(kernels):
             # A source may stand on a point; what the kernel is there must not enter.
             kernel[:, :, silent] = 0.0
     out = np.empty((points.shape[1], 4 * columns), dtype=complex)
@@ -326,4 +343,10 @@ def field_of_parts(
         own = slice(first * columns, last * columns)
         out.real[:, own] = kernel[0] @ real[:, own] - kernel[1] @ imag[:, own]
         out.imag[:, own] = kernel[0] @ imag[:, own] + kernel[1] @ real[:, own]
+    if kernels.cross is not None:
+        cross = kernels.cross
+        charge, upright = slice(2 * columns, 3 * columns), slice(3 * columns, 4 * columns)
+        for target, source, sign in ((charge, upright, wavenumber), (upright, charge, -wavenumber)):
+            out.real[:, target] += sign * (cross[0] @ real[:, source] - cross[1] @ imag[:, source])
+            out.imag[:, target] += sign * (cross[0] @ imag[:, source] + cross[1] @ real[:, source])
     return out.reshape(points.shape[1], 4, columns)

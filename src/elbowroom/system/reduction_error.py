@@ -15,7 +15,7 @@ import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.threads import loop_threads
-from elbowroom.kernels.grounds import GroundKernels, Workspace, ground_kernels
+from elbowroom.kernels.grounds import GroundKernels, Workspace
 from elbowroom.system.assembly import PairFiller, single_threaded_blas
 from elbowroom.system.discretisation import Discretisation
 from elbowroom.system.factorisation import Factors
@@ -157,7 +157,7 @@ def _from_others(
     sounding: np.ndarray,
 ) -> ComplexArray:
     """Return the matrix of all unknowns without own blocks times the currents (N, R) of some antennas, through skeletons."""
-    n_antennas, ground, table = len(d.station), ground_kernels(d.station.ground), interactions.skeletons
+    n_antennas, ground, table = len(d.station), d.ground, interactions.skeletons
     levels = table.levels_of(distances)
     out = np.empty_like(currents)
     dtype = Workspace(interactions.single).dtype
@@ -259,7 +259,7 @@ def _relative_fields(d: Discretisation, correction: ComplexArray, currents: Comp
     theta = np.concatenate([theta, np.arccos(rng.uniform(lowest, 1.0, more))])
     phi = np.concatenate([phi, rng.uniform(0.0, 2.0 * np.pi, more)])
     frame = direction_frame(theta, phi)
-    ground = ground_kernels(d.station.ground)
+    ground = d.ground
     both = np.concatenate([correction, currents], axis=1)
     total = np.zeros((both.shape[1], frame.count * 2), dtype=complex)
     positions = np.ascontiguousarray(d.station.positions * [1.0, 1.0, 0.0])
@@ -286,7 +286,7 @@ def skeleton_error(
     What a skeleton gets wrong falls with distance from where its level begins, so these pairs stand above all others; what each
     antenna gets wrong by all its neighbours adds up by chance, as the errors at different antennas do.
     """
-    d, ground = discretisation, ground_kernels(discretisation.station.ground)
+    d, ground = discretisation, discretisation.ground
     n = len(d.station)
     first, second = np.triu_indices(n, 1)
     levels = table.levels_of(distances[first, second])

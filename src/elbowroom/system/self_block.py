@@ -12,15 +12,15 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.special import ive
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
-from elbowroom.base.constants import IMPEDANCE_OF_VACUUM, VACUUM_PERMEABILITY, wavenumber_of
+from elbowroom.base.constants import IMPEDANCE_OF_VACUUM, wavenumber_of
 from elbowroom.geometry.antennas import Antenna
 from elbowroom.geometry.mesh import Mesh
 from elbowroom.kernels.basis import current_coefficients, overlap_matrix, slope_coefficients
 from elbowroom.kernels.quadrature import gauss_table
 from elbowroom.kernels.reactions_numba import angled_moments, coaxial_moments
+from elbowroom.kernels.wire_metal import internal_impedance
 
 
 @dataclass(frozen=True)
@@ -40,37 +40,6 @@ class NearSettings:
     tolerance: float = 1e-8
     ring_points: int = 6
     touching_points: int = 6
-
-
-def internal_impedance(radius: float, conductivity: float, relative_permeability: float, frequency_hz: float) -> complex:
-    r"""Return the internal impedance per length of a round wire [ohm/m].
-
-    .. math:: Z_i = \frac{\gamma}{2 \pi a \sigma} \frac{I_0(\gamma a)}{I_1(\gamma a)},
-              \quad \gamma = \sqrt{j \omega \mu \sigma}
-
-    Exact for a current that does not vary along the wire.
-
-    Parameters
-    ----------
-    radius : float
-        Wire radius a [m].
-    conductivity : float
-        Conductivity [S/m].
-    relative_permeability : float
-        Relative permeability [-].
-    frequency_hz : float
-        Frequency [Hz].
-
-    References
-    ----------
-    .. [1] S. Ramo, J. R. Whinnery, T. Van Duzer, Fields and Waves in Communication Electronics, 3rd ed., 1994,
-       section 4.5.
-    """
-    omega = 2.0 * np.pi * frequency_hz
-    gamma = np.sqrt(1j * omega * VACUUM_PERMEABILITY * relative_permeability * conductivity)
-    # Exponentially scaled Bessel functions: their common factor cancels, so thick wires do not overflow.
-    ratio = ive(0, gamma * radius) / ive(1, gamma * radius)
-    return complex(gamma / (2.0 * np.pi * radius * conductivity) * ratio)
 
 
 def _coaxial(mesh: Mesh, i: int, start2: FloatArray, end2: FloatArray, tangent: FloatArray) -> FloatArray | None:

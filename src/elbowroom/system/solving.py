@@ -198,8 +198,9 @@ def mesh_error(discretisation: Discretisation, isolated: list[PortCurrents]) -> 
         seen.append(kind.antenna)
         place = discretisation.station.placed[int(discretisation.antennas_of(k)[0])]
         alone = discretise(
-            Station([place], discretisation.station.ground), discretisation.frequency_hz, mesh=finer, near=discretisation.near
-        )
+            Station([place], discretisation.station.ground), discretisation.frequency_hz, mesh=finer, near=discretisation.near,
+            ground=discretisation.ground,
+        )  # fmt: skip
         fine, here = solve_isolated(alone)[0].loaded_admittance, isolated[k].loaded_admittance
         try:
             fine, here = admittance_from_loaded(fine, REFERENCE_OHM), admittance_from_loaded(here, REFERENCE_OHM)

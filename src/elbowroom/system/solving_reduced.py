@@ -21,7 +21,7 @@ from elbowroom.system.assembly import (
     antenna_distances,
     single_threaded_blas,
 )
-from elbowroom.system.discretisation import Discretisation, attachments
+from elbowroom.system.discretisation import Discretisation, attachments, extent_of
 from elbowroom.system.factorisation import Factors, TiledSymmetric
 from elbowroom.system.interactions import SkeletonInteractions, SkeletonTable
 from elbowroom.system.reduction import Candidates, KindAnswers, ReductionSettings, enriched, reduced_candidates
@@ -433,7 +433,8 @@ class ReducedStation:
         placed = [replace(p, position=(*places[i], p.position[2])) if i in places else p for i, p in enumerate(d.station)]
         other = copy.copy(self)
         other.watch = Stopwatch()
-        other.discretisation = replace(d, station=Station(placed, d.station.ground))
+        station = Station(placed, d.station.ground)
+        other.discretisation = replace(d, station=station, ground=d.ground.serving(extent_of(station)))
         other.filler, other.distances = PairFiller(other.discretisation), antenna_distances(other.discretisation)
         other.table = self.table.of_station(other.discretisation)
         other.interactions = SkeletonInteractions(other.discretisation, self.space.bases, other.table, single=self.single)

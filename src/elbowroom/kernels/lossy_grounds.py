@@ -1,0 +1,108 @@
+"""Soil, and wire mesh on soil, as antennas meet them: kernels from tables made once, reflection in closed form."""
+
+from __future__ import annotations
+
+from threading import Lock
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from elbowroom.base.arrays import ComplexArray, FloatArray
+from elbowroom.base.constants import VACUUM_PERMITTIVITY, wavenumber_of
+from elbowroom.geometry.grounds import Ground, MeshOnSoil, Soil
+from elbowroom.kernels.point_kernels import Extent, PointKernels, Workspace
+from elbowroom.kernels.wire_metal import internal_impedance
+
+if TYPE_CHECKING:
+    from elbowroom.kernels.soil.response import GroundResponse
+    from elbowroom.kernels.soil.table import SoilTable
+
+
+def relative_permittivity(soil: Soil, frequency_hz: float) -> complex:
+    """Return eps_r - j sigma/(omega eps0) of a soil at a frequency [Hz]."""
+    return soil.relative_permittivity - 1j * soil.conductivity_s_per_m / (2.0 * np.pi * frequency_hz * VACUUM_PERMITTIVITY)
+
+
+def ground_response(ground: Ground, frequency_hz: float) -> GroundResponse:
+    """Return the reflection coefficients of soil, or of mesh on soil, at a frequency [Hz]."""
+    from elbowroom.kernels.soil.response import bare_soil, mesh_on_soil
+
+    here, wavenumber = ground.at(frequency_hz), wavenumber_of(frequency_hz)
+    if isinstance(here, MeshOnSoil):
+        metal = 0.0 + 0.0j
+        if here.wire_conductivity_s_per_m is not None:
+            metal = internal_impedance(
+                here.wire_radius_m, here.wire_conductivity_s_per_m, here.wire_relative_permeability, frequency_hz
+            )
+        soil = here.soil.at(frequency_hz)
+        return mesh_on_soil(wavenumber, relative_permittivity(soil, frequency_hz), here.pitch_m, here.wire_radius_m, metal)
+    assert isinstance(here, Soil)
+    return bare_soil(wavenumber, relative_permittivity(here, frequency_hz))
+
+
+class LossyGroundKernels:
+    """A ground whose field is not that of images, at one frequency.
+
+    Its tables are made when first asked for, and then serve everyone who shares the object.
+
+    Parameters
+    ----------
+    ground : Soil, TabulatedSoil, MoistSoil or MeshOnSoil
+        Which.
+    frequency_hz : float
+        [Hz].
+    extent : Extent
+        Where points may lie.
+
+    Raises
+    ------
+    ModelRangeError
+        If the ground is not known at that frequency.
+    """
+
+    conducting_surface = False
+    has_correction = True
+
+    def __init__(self, ground: Ground, frequency_hz: float, extent: Extent) -> None:
+        self.ground, self.frequency_hz, self.extent = ground.at(frequency_hz), frequency_hz, extent
+        self.response = ground_response(ground, frequency_hz)
+        self._table: SoilTable | None = None
+        self._lock = Lock()
+
+    def table(self) -> SoilTable:
+        """Return the tables of the ground's kernels, made once."""
+        from elbowroom.kernels.soil.table import build_table
+
+        with self._lock:
+            if self._table is None:
+                tolerance = self.ground.tolerance  # type: ignore[union-attr]
+                low, high = 2.0 * self.extent.lowest_m, 2.0 * self.extent.highest_m
+                self._table = build_table(self.response, self.extent.widest_m, low, high, tolerance=tolerance)
+            return self._table
+
+    def fill(self, points: FloatArray, points2: FloatArray, wavenumber: float, work: Workspace) -> PointKernels:
+        """Return the direct kernel with what the ground adds, for horizontal and vertical currents and for charges."""
+        from elbowroom.kernels.soil.fill import fill_soil
+
+        return fill_soil(self.table(), points, points2, work, direct=True)
+
+    def correction(self, points: FloatArray, points2: FloatArray, wavenumber: float, work: Workspace) -> PointKernels:
+        """Return what the ground adds to the direct kernel."""
+        from elbowroom.kernels.soil.fill import fill_soil
+
+        return fill_soil(self.table(), points, points2, work, direct=False)
+
+    def reflection(self, theta_rad: FloatArray, wavenumber: float) -> tuple[ComplexArray, ComplexArray]:
+        """Return (Gh, Ge) of plane waves at zenith angles; both are -1 at the horizon."""
+        return self.response.reflection(np.minimum(theta_rad, 0.5 * np.pi))
+
+    def serving(self, extent: Extent) -> LossyGroundKernels:
+        """Return kernels for points within an extent: itself if its tables reach as far."""
+        mine = self.extent
+        if extent.widest_m <= mine.widest_m and mine.lowest_m <= extent.lowest_m and extent.highest_m <= mine.highest_m:
+            return self
+        return LossyGroundKernels(self.ground, self.frequency_hz, extent)
+
+    def self_images(self) -> None:
+        """Return None: the field is not that of a mirror image."""
+        return

@@ -1,0 +1,249 @@
+"""Grounds whose field is a smooth correction: one that is made to be the perfect plane is it in every path, a cross kernel obeys
+reciprocity, and wires in soil are refused."""
+
+import numpy as np
+import pytest
+from numpy.testing import assert_allclose
+
+from elbowroom.base.errors import GeometryError
+from elbowroom.geometry.grounds import PerfectGround, Soil
+from elbowroom.geometry.stations import Placed, Station
+from elbowroom.kernels import grounds
+from elbowroom.kernels.grounds import PerfectGroundKernels, PointKernels
+from elbowroom.kernels.points import free_kernel
+from elbowroom.radiation.patterns import station_patterns
+from elbowroom.system.assembly import PairFiller, antenna_distances
+from elbowroom.system.discretisation import discretise, extent_of
+from elbowroom.system.ground_blocks import ground_block, ring_samples
+from elbowroom.system.interactions import SkeletonInteractions, SkeletonTable, carried_field
+from elbowroom.system.plane_waves import direction_frame
+from elbowroom.system.reduction import ReductionSettings
+from elbowroom.system.solving import mesh_error, solve_direct, solve_isolated
+from elbowroom.system.solving_reduced import ReducedStation, solve_reduced
+from helpers import FREQUENCY_HZ, crossed, dipole
+
+ANY_SOIL = Soil(10.0, 0.01)
+PLACES = [(0.0, 0.0, 0.0), (1.5, 0.3, 0.2), (-0.6, 1.7, 0.0), (3.0, 3.5, 0.0), (-2.0, -1.0, 0.1)]
+
+
+def parts(kernel):
+    return np.stack([kernel.real, kernel.imag])
+
+
+class MirrorAsCorrection(PerfectGroundKernels):
+    """The perfect plane told as a correction: horizontal and charge -g2, vertical +g2; optionally with a cross kernel."""
+
+    conducting_surface = False
+    has_correction = True
+    cross = None
+
+    def __init__(self, ground, frequency_hz, extent):
+        self.extent = extent
+
+    def serving(self, extent):
+        return self
+
+    def self_images(self):
+        return None
+
+    def _crossed(self, points, points2, wavenumber):
+        if self.cross is None:
+            return None
+        # The second mirrored: a function of the horizontal distance and the sum of the heights.
+        return parts(self.cross * free_kernel(points, points2 * np.array([[1.0], [1.0], [-1.0]]), wavenumber))
+
+    def correction(self, points, points2, wavenumber, work):
+        mirrored = parts(free_kernel(points, points2 * np.array([[1.0], [1.0], [-1.0]]), wavenumber))
+        return PointKernels(-mirrored, mirrored, -mirrored, self._crossed(points, points2, wavenumber))
+
+    def fill(self, points, points2, wavenumber, work):
+        direct = super().fill(points, points2, wavenumber, work)
+        # Charges in an array of their own, as with real soil.
+        return PointKernels(direct.horizontal, direct.vertical, direct.charge.copy(), self._crossed(points, points2, wavenumber))
+
+
+class CrossedCorrection(MirrorAsCorrection):
+    cross = 0.3 - 0.2j
+
+
+@pytest.fixture
+def fake(monkeypatch):
+    def use(kind=MirrorAsCorrection):
+        monkeypatch.setitem(grounds._KERNELS, Soil, kind)
+
+    use()
+    return use
+
+
+def station(ground, places=PLACES, antenna=None, **attitude):
+    design = antenna or crossed()
+    return Station([Placed(design, p, rotation_deg=20.0 * i, **attitude) for i, p in enumerate(places)], ground)
+
+
+def relative(found, expected):
+    return np.abs(found - expected).max() / np.abs(expected).max()
+
+
+@pytest.mark.parametrize("attitude", [{}, {"tilt_east_deg": 8.0, "tilt_north_deg": -5.0}], ids=["level", "tilted"])
+def test_own_blocks__are_those_of_images(fake, attitude):
+    fake_d, true_d = (discretise(station(g, **attitude), FREQUENCY_HZ) for g in (ANY_SOIL, PerfectGround()))
+    free = discretise(Station([Placed(crossed(), (0.0, 0.0, 0.0))]), FREQUENCY_HZ).kinds[0].self_block
+    for found, expected in zip(fake_d.kinds, true_d.kinds, strict=True):
+        images = expected.self_block - free
+        assert relative(found.self_block - free, images) < 2e-6
+    assert [k.mesh.n_unknowns for k in fake_d.kinds] == [k.mesh.n_unknowns for k in true_d.kinds]
+
+
+@pytest.mark.parametrize("height", [0.05, 0.2])
+def test_own_block__of_a_low_wire_is_that_of_its_image(fake, height):
+    """Three points round the wire leave what is of third order in radius over twice the height."""
+    low = dipole(height=height, direction=(1.0, 0.2, 0.0))
+    found, expected = (discretise(Station([Placed(low, (0, 0, 0))], g), FREQUENCY_HZ) for g in (ANY_SOIL, PerfectGround()))
+    free = discretise(Station([Placed(low, (0, 0, 0))]), FREQUENCY_HZ).kinds[0].self_block
+    images = expected.kinds[0].self_block - free
+    assert relative(found.kinds[0].self_block - free, images) < 3.0 * (0.002 / (2.0 * height)) ** 3 + 1e-7
+
+
+def test_pairs__sampled_and_close_are_those_of_images(fake):
+    places = [(0.0, 0.0, 0.0), (0.9, 0.1, 0.15), (2.5, 1.0, 0.0)]
+    fillers = [PairFiller(discretise(station(g, places), FREQUENCY_HZ)) for g in (ANY_SOIL, PerfectGround())]
+    for i, j in ((0, 1), (0, 2), (1, 2)):
+        assert relative(fillers[0].close_block(i, j), fillers[1].close_block(i, j)) < 1e-6
+        for level in range(4):
+            found, expected = (f.sampled_blocks(i, np.array([j]), level)[0] for f in fillers)
+            assert relative(found, expected) < 1e-12
+
+
+@pytest.mark.parametrize("precision", [False, True], ids=["double", "single"])
+def test_skeletons__of_both_are_alike(fake, precision):
+    blocks = []
+    for g in (ANY_SOIL, PerfectGround()):
+        d = discretise(station(g), FREQUENCY_HZ)
+        table = SkeletonTable(d, (0.3,), 1e-6)
+        interactions = SkeletonInteractions(d, [None] * len(d.kinds), table, single=precision)
+        blocks.append(
+            interactions.blocks(0, np.array([1, 3]), 0) + [interactions.run_of_blocks(0, range(1, 4), 0, np.zeros(3, bool))]
+        )
+    for found, expected in zip(*blocks, strict=True):
+        assert relative(found, expected) < (1e-5 if precision else 1e-12)
+
+
+def test_direct_solution__patterns_isolated_and_mesh_error_are_those_of_the_perfect_plane(fake):
+    frame = direction_frame([0.2, 0.9, 1.5], [0.3, 2.0, 4.0])
+    results = []
+    for g in (ANY_SOIL, PerfectGround()):
+        d = discretise(station(g), FREQUENCY_HZ)
+        solved, _ = solve_direct(d)
+        alone = solve_isolated(d)
+        results.append(
+            (solved.loaded_admittance, station_patterns(d, solved.currents, frame), alone[0].currents, mesh_error(d, alone))
+        )
+    for found, expected in zip(results[0][:3], results[1][:3], strict=True):
+        assert relative(found, expected) < 1e-5
+    assert_allclose(results[0][3], results[1][3], rtol=1e-2)
+
+
+def test_reduced_solution__is_that_of_the_perfect_plane_and_moves(fake):
+    rng = np.random.default_rng(8)
+    grid = [(2.0 * i + rng.uniform(-0.2, 0.2), 2.0 * j + rng.uniform(-0.2, 0.2), 0.0) for i in range(3) for j in range(3)]
+    frame = direction_frame([0.2, 0.9], [0.3, 2.0])
+    results = []
+    for g in (ANY_SOIL, PerfectGround()):
+        d = discretise(Station([Placed(crossed(), p) for p in grid], g), FREQUENCY_HZ)
+        solved = ReducedStation(d, ReductionSettings(1e-5), movable=True)
+        moved = solved.moved({4: (2.1, 2.6)})
+        fields = [station_patterns(s.discretisation, s.currents.currents, frame, space=s.space) for s in (solved, moved)]
+        results.append((*fields, solved.statistics.pattern_error, moved.statistics.pattern_error))
+    # both are within their stated errors of what is one and the same solution
+    for found, expected in zip(results[0][:2], results[1][:2], strict=True):
+        assert relative(found, expected) < sum(max(r[2:]) for r in results)
+    assert max(results[0][2:]) < 3e-5
+
+
+def crossed_terms(d, i, j):
+    """Kernel of the cross terms alone between two antennas, by plain sums over their Gauss points, without the filler."""
+    filler = PairFiller(d)
+    first, second = filler.samples(d.kind_of[i], 2), filler.samples(d.kind_of[j], 2)
+    shift = np.zeros((3, 1))
+    shift[:2, 0] = (filler.positions[j] - filler.positions[i])[:2]
+    flip = np.array([[1.0], [1.0], [-1.0]])
+    cross = CrossedCorrection.cross * free_kernel(second.points + shift, first.points * flip, d.wavenumber)
+    factor = -1j * d.wavenumber * 376.730313412 / (4.0 * np.pi)
+    return factor * (second.currents[2].T @ cross @ first.charge + second.charge.T @ cross @ first.currents[2])
+
+
+def test_cross_kernel__enters_every_path_as_its_formula_says(fake):
+    places = [(0.0, 0.0, 0.0), (1.6, 0.2, 0.3)]
+    plain = discretise(station(ANY_SOIL, places), FREQUENCY_HZ)
+    fake(CrossedCorrection)
+    d = discretise(station(ANY_SOIL, places), FREQUENCY_HZ)
+    expected = crossed_terms(d, 0, 1)
+    fillers = [PairFiller(x) for x in (d, plain)]
+    sampled = [f.sampled_blocks(0, np.array([1]), 2)[0] for f in fillers]
+    assert relative(sampled[0] - sampled[1], expected) < 1e-9
+    close = [f.close_block(0, 1) for f in fillers]
+    # spread round the wires instead of on their axes
+    assert relative(close[0] - close[1], expected) < 1e-4
+    table = [SkeletonTable(x, (0.3,), 1e-8) for x in (d, plain)]
+    hearing = [SkeletonInteractions(x, [None] * 2, t) for x, t in zip((d, plain), table, strict=True)]
+    through = [h.blocks(0, np.array([1]), 0)[0] for h in hearing]
+    assert relative(through[0] - through[1], expected) < 1e-6
+    # the same through fields of weights
+    unit = np.eye(d.kinds[0].mesh.n_unknowns)
+    tested = []
+    for x, t in zip((d, plain), table, strict=True):
+        weights = t.gathered(0, 0, unit)
+        field = carried_field(x.ground, t.points(1, 0), t.points(0, 0), weights, d.wavenumber, grounds.Workspace())
+        tested.append(t.tested(1, 0, field))
+    assert relative(tested[0] - tested[1], expected) < 1e-6
+    assert relative(tested[0], through[0]) < 1e-12
+
+
+def test_cross_kernel__own_block_is_symmetric_and_that_of_close_pairs_too(fake):
+    fake(CrossedCorrection)
+    d = discretise(station(ANY_SOIL), FREQUENCY_HZ)
+    own = d.kinds[0].self_block
+    assert relative(own, own.T) < 1e-12
+    filler, free = PairFiller(d), PairFiller(discretise(Station(d.station.placed), FREQUENCY_HZ))
+    grounds_part = [filler.close_block(*pair) - free.close_block(*pair) for pair in ((0, 1), (1, 0))]
+    assert relative(grounds_part[0], grounds_part[1].T) < 1e-10
+    mesh = d.kinds[0].mesh
+    start, end = d.kinds[0].placed_elements(np.zeros(3))
+    samples = ring_samples(mesh, start, end, 0.5, d.wavenumber, 1e-8)
+    finer = ring_samples(mesh, start, end, 0.2, d.wavenumber, 1e-11)
+    assert (
+        relative(ground_block(d.ground, samples, samples, d.wavenumber), ground_block(d.ground, finer, finer, d.wavenumber))
+        < 1e-7
+    )
+
+
+def test_reduced_solution__with_a_cross_kernel_is_the_direct_one(fake):
+    fake(CrossedCorrection)
+    d = discretise(station(ANY_SOIL), FREQUENCY_HZ)
+    direct, _ = solve_direct(d)
+    reduced, _, statistics = solve_reduced(d, ReductionSettings(1e-4))
+    assert relative(reduced.loaded_admittance, direct.loaded_admittance) < statistics.pattern_error
+    assert statistics.pattern_error < 2e-4
+
+
+def test_extent__holds_all_wires():
+    s = station(ANY_SOIL)
+    points = np.concatenate([p.to_station(np.array([w.end for w in p.antenna.wires])) for p in s])
+    extent = extent_of(s)
+    assert extent.widest_m >= np.linalg.norm(points[:, None, :2] - points[None, :, :2], axis=-1).max()
+    assert extent.lowest_m <= points[:, 2].min() < points[:, 2].max() <= extent.highest_m
+    assert extent_of(Station(s.placed[:1], ANY_SOIL)).lowest_m >= extent.lowest_m
+
+
+@pytest.mark.parametrize(
+    ("height", "told"),
+    [(0.47, "end on or enter soil are not modelled"), (0.3, "below the ground"), (0.4710, "less than its radius")],
+)
+def test_wires_in_or_on_soil__are_refused(height, told):
+    with pytest.raises(GeometryError, match=told):
+        discretise(Station([Placed(dipole(height=height), (0, 0, 0))], ANY_SOIL), FREQUENCY_HZ, self_blocks=False)
+
+
+def test_antennas__their_distances_do_not_depend_on_the_ground(fake):
+    first, second = (antenna_distances(discretise(station(g), FREQUENCY_HZ)) for g in (ANY_SOIL, PerfectGround()))
+    assert_allclose(first, second, rtol=0.0, atol=0.0)
