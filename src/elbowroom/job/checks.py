@@ -133,7 +133,7 @@ def mesh_statistics(station: Station, frequency_hz: float, mesh: str | MeshSetti
     unknowns_per_antenna: dict[str, int] = {}
     lengths: list[FloatArray] = []
     ratios: list[FloatArray] = []
-    for placed, made, count in _meshes(station, wavelength, settings):
+    for placed, made, count in StationMeshes(station).at(wavelength, settings):
         name = placed.antenna.name
         unknowns += made.n_unknowns * count
         elements += made.n_elements * count
@@ -162,29 +162,52 @@ def mesh_statistics(station: Station, frequency_hz: float, mesh: str | MeshSetti
     }
 
 
-def _meshes(station: Station, wavelength: float, settings: MeshSettings) -> Iterator[tuple[Placed, Mesh, int]]:
-    """Yield each different mesh with the first antenna that has it and the number of those that do."""
-    from elbowroom.system.discretisation import grounded_ends
+class StationMeshes:
+    """The different meshes of a station, found once for any number of frequencies.
 
-    conducting = station.ground.conducting
-    groups: dict[tuple[int, bytes], tuple[Placed, np.ndarray, int]] = {}
-    design_index = {id(d): i for i, d in enumerate(station.designs)}
-    ends_of: dict[tuple, np.ndarray] = {}
-    for placed in station:
-        if id(placed.antenna) not in design_index:
-            design_index[id(placed.antenna)] = station.designs.index(placed.antenna)
-        design = design_index[id(placed.antenna)]
-        stance = (design, placed.attitude, placed.position[2])
-        if stance not in ends_of:
-            ends_of[stance] = (
-                grounded_ends(placed, conducting=True) if conducting else np.zeros((len(placed.antenna.wires), 2), dtype=bool)
-            )
-        ends = ends_of[stance]
-        key = (design, ends.tobytes())
-        first, _, count = groups.get(key, (placed, ends, 0))
-        groups[key] = (first, ends, count + 1)
-    for placed, ends, count in groups.values():
-        yield placed, build_mesh(placed.antenna, wavelength, settings, ends), count
+    Parameters
+    ----------
+    station : Station
+        Antennas and ground.
+    """
+
+    def __init__(self, station: Station) -> None:
+        from elbowroom.system.discretisation import grounded_ends
+
+        conducting = station.ground.conducting
+        groups: dict[tuple[int, bytes], tuple[Placed, np.ndarray, int]] = {}
+        designs = station.designs
+        design_index = {id(d): i for i, d in enumerate(designs)}
+        ends_of: dict[tuple, np.ndarray] = {}
+        for placed in station:
+            if id(placed.antenna) not in design_index:
+                design_index[id(placed.antenna)] = designs.index(placed.antenna)
+            design = design_index[id(placed.antenna)]
+            stance = (design, placed.attitude, placed.position[2])
+            if stance not in ends_of:
+                ends_of[stance] = (
+                    grounded_ends(placed, conducting=True) if conducting else np.zeros((len(placed.antenna.wires), 2), dtype=bool)
+                )
+            ends = ends_of[stance]
+            key = (design, ends.tobytes())
+            first, _, count = groups.get(key, (placed, ends, 0))
+            groups[key] = (first, ends, count + 1)
+        self._groups = list(groups.values())
+
+    def at(self, wavelength: float, settings: MeshSettings) -> Iterator[tuple[Placed, Mesh, int]]:
+        """Yield each different mesh at a wavelength [m] with the first antenna that has it and the number of those that do."""
+        for placed, ends, count in self._groups:
+            yield placed, build_mesh(placed.antenna, wavelength, settings, ends), count
+
+    def unknowns(self, frequency_hz: float, settings: MeshSettings) -> int:
+        """Return the number of unknowns of the whole station at a frequency [Hz].
+
+        Raises
+        ------
+        GeometryError
+            If an antenna cannot be meshed where it stands.
+        """
+        return sum(made.n_unknowns * count for _, made, count in self.at(wavelength_of(frequency_hz), settings))
 
 
 def _near_ground(station: Station) -> Iterator[Problem]:
@@ -411,7 +434,7 @@ def _elements(station: Station, frequencies_hz: Sequence[float], settings: MeshS
     told: set[str] = set()
     for frequency in sorted({min(frequencies_hz), max(frequencies_hz)}, reverse=True):
         try:
-            made = list(_meshes(station, wavelength_of(frequency), settings))
+            made = list(StationMeshes(station).at(wavelength_of(frequency), settings))
         except GeometryError as cause:
             yield Problem("error", str(cause))
             return

@@ -46,6 +46,10 @@ allow_negative_resistance``
 ``[[beam]] delay_step_s``        delays are rounded to multiples of this [s]; exact by default
 ``[sky] step_deg``               step of the directions of maps; must divide 90; 1 by default [deg]
 ``[store] folder``               where solved currents are kept; ``"store"`` by default
+``[store] precision``            ``"double"``, or ``"single"``: currents take half the room and are rounded to 6e-8;
+                                 port matrices stay in double
+``[store] currents``             ``"keep"``, or ``"drop"``: once `elbowroom run` has made tables and pictures, only
+                                 port matrices stay; other beams then need another solve
 ``[output] folder``              where tables and pictures go; ``"results"`` by default
 ================================ ===========================================================================
 """
@@ -171,6 +175,8 @@ def read_job(path: str | Path) -> Job:
         as_built_path=None if station_table.as_built is None else folder / station_table.as_built,
         offsets=offsets,
         damage=damage,
+        store_precision=parts["store"].precision,
+        store_currents=parts["store"].currents,
     )
 
 

@@ -126,6 +126,10 @@ class Job:
         How antennas differ from the layout.
     damage : Damage
         What is broken.
+    store_precision : str
+        ``"double"``, or ``"single"`` for currents in half the room.
+    store_currents : str
+        ``"keep"``, or ``"drop"`` once tables and pictures are made.
     """
 
     path: Path
@@ -152,6 +156,8 @@ class Job:
     as_built_path: Path | None = None
     offsets: Offsets | None = None
     damage: Damage = field(default_factory=Damage)
+    store_precision: str = "double"
+    store_currents: str = "keep"
 
     @property
     def termination(self) -> PortTermination:
@@ -264,6 +270,8 @@ class Job:
             *lines,
             f"sky.step_deg = {self.sky_step_deg:.10g}",
             f"store.folder = {self.store_folder}",
+            f"store.precision = {self.store_precision}",
+            f"store.currents = {self.store_currents}",
             f"output.folder = {self.output_folder}",
         ]
 

@@ -257,9 +257,11 @@ class SkyTable(Table):
 
 
 class StoreTable(Table):
-    """Where solved currents are kept."""
+    """Where solved currents are kept, and how much of them."""
 
     folder: _FileName = "store"
+    precision: Literal["double", "single"] = "double"
+    currents: Literal["keep", "drop"] = "keep"
 
 
 class OutputTable(Table):

@@ -11,11 +11,11 @@ import numpy as np
 
 from elbowroom.base.errors import ElbowroomError, GeometryError, JobFileError
 from elbowroom.geometry.stations import Station
-from elbowroom.job.checks import Problem, check_station
+from elbowroom.job.checks import Problem, StationMeshes, check_station
 from elbowroom.job.jobfile import Job
 from elbowroom.job.jobtables import OnePort
 from elbowroom.job.plan import Prediction, predict_reduced, predict_station, refuse_if_too_large, total
-from elbowroom.job.solve import SOLUTION_SCHEMA, chosen_solver, solution_key, solve, strategy_of
+from elbowroom.job.solve import SOLUTION_SCHEMA, StationKeys, chosen_solver, solve, strategy_of
 from elbowroom.store import Hdf5Store
 from elbowroom.store.records import DamageReport
 from elbowroom.system.terminations import PortTermination
@@ -97,6 +97,7 @@ class JobRun:
         else:
             self.frequencies_hz = job.frequencies_hz
         self._solvers: dict[float, str] = {}
+        self._keys, self._meshes = StationKeys(self.station), StationMeshes(self.station)
         options = {} if report is None else {"report": report}
         self.store = Hdf5Store(job.store_folder, SOLUTION_SCHEMA, **options)
 
@@ -147,21 +148,24 @@ class JobRun:
         from elbowroom.system.discretisation import FarSettings
         from elbowroom.system.self_block import NearSettings
 
-        return solution_key(
-            self.station,
-            frequency_hz,
-            mesh_settings(self.job.mesh),
-            NearSettings(),
-            FarSettings(),
-            strategy_of(self.solver_at(frequency_hz), self.job.precision, self.job.tolerance),
+        strategy = strategy_of(
+            self.solver_at(frequency_hz), self.job.precision, self.job.tolerance, single_storage=self.single_storage
         )
+        return self._keys.key(frequency_hz, mesh_settings(self.job.mesh), NearSettings(), FarSettings(), strategy)
+
+    @property
+    def single_storage(self) -> bool:
+        """Whether currents are stored in single precision."""
+        return self.job.store_precision == "single"
 
     def solver_at(self, frequency_hz: float) -> str:
         """Return the solver of a frequency [Hz]: ``"direct"`` or ``"reduced"``."""
         from elbowroom.geometry.mesh import mesh_settings
 
         if frequency_hz not in self._solvers:
-            self._solvers[frequency_hz] = chosen_solver(self.station, frequency_hz, mesh_settings(self.job.mesh), self.job.solver)
+            self._solvers[frequency_hz] = chosen_solver(
+                self.station, frequency_hz, mesh_settings(self.job.mesh), self.job.solver, self._meshes
+            )
         return self._solvers[frequency_hz]
 
     def _predicted(self, frequency_hz: float) -> Prediction:
@@ -205,8 +209,8 @@ class JobRun:
             If the store does not hold it whole.
         """
         found = solve(
-            self.station, frequency_hz, solver=self.job.solver, mesh=self.job.mesh, precision=self.job.precision,
-            tolerance=self.job.tolerance, store=self.store, only_stored=True,
+            self.station, frequency_hz, solver=self.solver_at(frequency_hz), mesh=self.job.mesh, precision=self.job.precision,
+            tolerance=self.job.tolerance, store=self.store, only_stored=True, single_storage=self.single_storage,
         )  # fmt: skip
         return found
 
@@ -220,13 +224,14 @@ class JobRun:
         return solve(
             self.station,
             frequency_hz,
-            solver=self.job.solver,
+            solver=self.solver_at(frequency_hz),
             mesh=self.job.mesh,
             precision=self.job.precision,
             tolerance=self.job.tolerance,
             store=self.store,
             attributes={"title": self.job.title, "job_file": self.job.text},
             progress=tell,
+            single_storage=self.single_storage,
         )
 
     def solutions(self, progress: UnitProgress | None = None) -> Iterator[Solution | Failure]:

@@ -10,9 +10,11 @@ import numpy as np
 
 from elbowroom.base.arrays import ArraySpec
 from elbowroom.base.errors import ModelRangeError, StoreError
+from elbowroom.base.threads import blas_threads, loop_threads
 from elbowroom.geometry.antennas import Antenna
 from elbowroom.geometry.mesh import MeshSettings, mesh_settings
 from elbowroom.geometry.stations import Station, orientation_matrix
+from elbowroom.job.checks import StationMeshes
 from elbowroom.job.sharing import working_on
 from elbowroom.radiation.solution import Solution
 from elbowroom.store.keys import content_key
@@ -114,6 +116,38 @@ def _relative_places(station: Station) -> tuple[np.ndarray, np.ndarray]:
     return places, np.round(attitudes / 1e-8).astype(np.int64)
 
 
+class StationKeys:
+    """Keys of the units of one station; what does not depend on frequency is worked out once.
+
+    Parameters
+    ----------
+    station : Station
+        The station.
+    """
+
+    def __init__(self, station: Station) -> None:
+        designs = station.designs
+        index_of = {id(d): i for i, d in enumerate(designs)}
+        index = [index_of[id(p.antenna)] if id(p.antenna) in index_of else designs.index(p.antenna) for p in station]
+        places, attitudes = _relative_places(station)
+        self._inputs = {
+            "model_version": MODEL_VERSION,
+            "designs": [_design_inputs(d) for d in designs],
+            "design_of_antenna": index,
+            "places": places,
+            "attitudes": attitudes,
+            "ground": station.ground,
+            "reference_ohm": REFERENCE_OHM,
+        }
+
+    def key(
+        self, frequency_hz: float, mesh: MeshSettings, near: NearSettings, far: FarSettings, strategy: tuple[str, str]
+    ) -> str:
+        """Return the key of the station at a frequency [Hz]; see `solution_key`."""
+        own = {"frequency_hz": float(frequency_hz), "mesh": mesh, "near": near, "far": far, "strategy": strategy}
+        return content_key(self._inputs | own)
+
+
 def solution_key(
     station: Station, frequency_hz: float, mesh: MeshSettings, near: NearSettings, far: FarSettings, strategy: tuple[str, str]
 ) -> str:
@@ -121,28 +155,14 @@ def solution_key(
 
     Terminations, weights and names are no part of it, nor is a turn or a shift of the whole station.
     """
-    designs = station.designs
-    index = [designs.index(p.antenna) for p in station]
-    places, attitudes = _relative_places(station)
-    return content_key(
-        {
-            "model_version": MODEL_VERSION,
-            "designs": [_design_inputs(d) for d in designs],
-            "design_of_antenna": index,
-            "places": places,
-            "attitudes": attitudes,
-            "ground": station.ground,
-            "frequency_hz": float(frequency_hz),
-            "mesh": mesh,
-            "near": near,
-            "far": far,
-            "strategy": strategy,
-            "reference_ohm": REFERENCE_OHM,
-        }
-    )
+    return StationKeys(station).key(frequency_hz, mesh, near, far, strategy)
 
 
-def _to_record(solution: Solution, attributes: dict[str, Any]) -> Record:
+HALVED = ("currents_per_volt", "functions", "isolated_currents_per_volt")
+"""Arrays that single-precision storage halves.  Port matrices stay: impedances are differences of what they hold."""
+
+
+def _to_record(solution: Solution, attributes: dict[str, Any], *, single_storage: bool = False) -> Record:
     d = solution.discretisation
     widest = int(np.diff(d.port_offsets).max())
     isolated_currents = np.zeros((d.n_unknowns, widest), dtype=complex)
@@ -152,7 +172,7 @@ def _to_record(solution: Solution, attributes: dict[str, Any]) -> Record:
         isolated_currents[d.unknowns_of(a), :n] = alone.currents
         isolated_admittance[d.ports_of(a), :n] = alone.loaded_admittance
     s = solution.statistics
-    return Record(
+    record = Record(
         {
             "currents_per_volt": solution.coupled.currents,
             "coordinate_offset": solution.space.offsets,
@@ -180,9 +200,16 @@ def _to_record(solution: Solution, attributes: dict[str, Any]) -> Record:
             "n_functions": s.n_functions,
             "pattern_error": s.pattern_error,
             "port_matrix_error": s.port_matrix_error,
+            # Rounding depends on how sums are split among threads, and on nothing else of the machine at hand.
+            "blas_threads": blas_threads(),
+            "loop_threads": loop_threads(),
             **attributes,
         },
     )
+    if single_storage:
+        for name in HALVED:
+            record.arrays[name] = record.arrays[name].astype(np.complex64)
+    return record
 
 
 def _fits(record: Record, d: Discretisation) -> bool:
@@ -199,7 +226,9 @@ def _fits(record: Record, d: Discretisation) -> bool:
 
 
 def _from_record(record: Record, d: Discretisation) -> Solution:
-    a, attributes = record.arrays, record.attributes
+    a, attributes = dict(record.arrays), record.attributes
+    for name in HALVED:
+        a[name] = a[name].astype(np.complex128, copy=False)
     alone: list[PortCurrents] = []
     made: dict[bytes, PortCurrents] = {}
     for i in range(len(d.station)):
@@ -240,18 +269,29 @@ def _from_record(record: Record, d: Discretisation) -> Solution:
     )
 
 
-def chosen_solver(station: Station, frequency_hz: float, mesh: MeshSettings, solver: str) -> str:
-    """Return ``"direct"`` or ``"reduced"``: what was asked for, or what ``"auto"`` takes for a station of that size."""
+def chosen_solver(
+    station: Station, frequency_hz: float, mesh: MeshSettings, solver: str, meshes: StationMeshes | None = None
+) -> str:
+    """Return ``"direct"`` or ``"reduced"``: what was asked for, or what ``"auto"`` takes for a station of that size.
+
+    The station's meshes may be given, so that they need not be told apart again at every frequency.
+    """
     if solver != "auto":
         return solver
-    d = discretise(station, frequency_hz, mesh=mesh, self_blocks=False)
-    return "reduced" if d.n_unknowns > AUTO_DIRECT_UNKNOWNS and len(station) > 1 else "direct"
+    unknowns = (meshes or StationMeshes(station)).unknowns(frequency_hz, mesh)
+    return "reduced" if unknowns > AUTO_DIRECT_UNKNOWNS and len(station) > 1 else "direct"
 
 
-def strategy_of(solver: str, precision: str, tolerance: float, *, with_mesh_error: bool = True) -> tuple[str, str]:
-    """Return what a key says of how a station is solved; solutions that state no mesh error are kept apart."""
+def strategy_of(
+    solver: str, precision: str, tolerance: float, *, with_mesh_error: bool = True, single_storage: bool = False
+) -> tuple[str, str]:
+    """Return what a key says of how a station is solved and kept.
+
+    Solutions that state no mesh error, or are stored in single precision, are kept apart from those that hold more.
+    """
     how = precision if solver == "direct" else f"{tolerance:.6g}"
-    return (solver, how if with_mesh_error else f"{how}, no mesh error")
+    how = how if with_mesh_error else f"{how}, no mesh error"
+    return (solver, f"{how}, stored in single precision" if single_storage else how)
 
 
 def solve(
@@ -269,6 +309,7 @@ def solve(
     progress: Progress | None = None,
     only_stored: bool = False,
     with_mesh_error: bool = True,
+    single_storage: bool = False,
 ) -> Solution:
     """Solve a station at one frequency, or fetch what was solved before; wait while another run solves it into the same store.
 
@@ -299,6 +340,8 @@ def solve(
         Whether to raise rather than solve what the store does not hold.
     with_mesh_error : bool, optional
         Whether to solve each design on a finer mesh and state what that changes; the mesh error is NaN without it.
+    single_storage : bool, optional
+        Whether the store keeps currents to single precision, in half the room; what was solved just now is returned in full.
 
     Returns
     -------
@@ -314,7 +357,7 @@ def solve(
         raise ModelRangeError(msg)
     settings, near, far = mesh_settings(mesh), near or NearSettings(), far or FarSettings()
     chosen = chosen_solver(station, frequency_hz, settings, solver)
-    strategy = strategy_of(chosen, precision, tolerance, with_mesh_error=with_mesh_error)
+    strategy = strategy_of(chosen, precision, tolerance, with_mesh_error=with_mesh_error, single_storage=single_storage)
     key = ""
     if store is not None:
         key = solution_key(station, frequency_hz, settings, near, far, strategy)
@@ -344,5 +387,5 @@ def solve(
             statistics = replace(statistics, mesh_error=mesh_error(d, per_kind))
         solution = Solution(d, coupled, tuple(per_kind[k] for k in d.kind_of), REFERENCE_OHM, statistics, space)
         if store is not None:
-            store.put(key, _to_record(solution, attributes or {}))
+            store.put(key, _to_record(solution, attributes or {}, single_storage=single_storage))
         return solution
