@@ -1,0 +1,290 @@
+"""Tables of a ground's kernels over horizontal distance and height, to a stated error.
+
+Kept is each kernel times R exp(+jkR), R the distance to the image: smooth, of order one, and without the image to subtract.
+Cubic B-splines, uniform in s = rho/(rho + a) with zero slope at rho = 0 and in t = Z/(Z + b): both cost a division each where
+logarithms would cost more.  The distance a and the number of nodes follow from fourth derivatives sampled before anything is
+tabulated: near the origin the lowest height sets the scale, far away the wave that travels through the soil.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from elbowroom.base.arrays import ComplexArray, FloatArray
+from elbowroom.base.errors import ModelRangeError, SolveError
+from elbowroom.kernels.soil.response import GroundResponse
+from elbowroom.kernels.soil.sommerfeld import GroundQuadrature
+from elbowroom.kernels.soil.splines import spline_coefficients, spline_matrix, spline_weights
+
+SINGLE_FROM = 2e-6
+"""Tables of this tolerance and more are kept in single precision."""
+
+_SPLINE_ERROR = 1.0 / 384.0
+"""Error of an interpolating cubic spline over the fourth difference of its samples (Hall 1968 has 5/384 for the worst)."""
+
+_DISTANCES_M = (0.75, 1.5, 3.0, 4.5, 6.0, 9.0, 12.0, 18.0, 24.0, 36.0, 54.0)
+_MOST_CHEBYSHEV = 40
+_ATTEMPTS = 4
+
+
+@dataclass(frozen=True)
+class SoilTable:
+    """Kernels of one ground at one frequency as bicubic splines.
+
+    Attributes
+    ----------
+    coefficients : float32 or float64 (n_rho, n_z, 8)
+        Spline coefficients; last axis real and imaginary parts of P, N, K and V times R exp(+jkR).
+    wavenumber : float
+        [rad/m].
+    rho_scale_m, rho_per_node : float
+        a of s = rho/(rho + a), and the distance in s of two nodes.
+    z_scale_m, z_start, z_per_node : float
+        b of t = Z/(Z + b), t of the first node, and the distance in t of two nodes.
+    rho_max_m, z_min_m, z_max_m : float
+        Where the table holds [m].
+    tolerance : float
+        Asked for: error of P, N, K times R, and of V times k R.
+    error : float
+        Largest found on held-out points.
+    """
+
+    coefficients: FloatArray
+    wavenumber: float
+    rho_scale_m: float
+    rho_per_node: float
+    z_scale_m: float
+    z_start: float
+    z_per_node: float
+    rho_max_m: float
+    z_min_m: float
+    z_max_m: float
+    tolerance: float
+    error: float
+
+    @property
+    def nbytes(self) -> int:
+        """Size of the coefficients [bytes]."""
+        return int(self.coefficients.nbytes)
+
+    def to_arrays(self) -> dict[str, np.ndarray]:
+        """Return everything as arrays, for a store."""
+        names = [name for name in self.__dataclass_fields__ if name != "coefficients"]
+        return {"coefficients": self.coefficients, "numbers": np.array([getattr(self, name) for name in names])}
+
+    @classmethod
+    def from_arrays(cls, arrays: dict[str, np.ndarray]) -> SoilTable:
+        """Return the table that :meth:`to_arrays` took apart."""
+        return cls(arrays["coefficients"], *(float(x) for x in arrays["numbers"]))
+
+    def smooth(self, rho: FloatArray, z: FloatArray) -> ComplexArray:
+        """Return what the table holds, kernels times R exp(+jkR), at broadcast points: complex (..., 4)."""
+        s = rho / (rho + self.rho_scale_m) / self.rho_per_node
+        t = (z / (z + self.z_scale_m) - self.z_start) / self.z_per_node
+        s, t = np.broadcast_arrays(s, t)
+        n_rho, n_z, _ = self.coefficients.shape
+        i = np.clip(np.floor(s).astype(int), 0, n_rho - 4)
+        j = np.clip(np.floor(t).astype(int), 0, n_z - 4)
+        along, up = spline_weights(s - i), spline_weights(t - j)
+        total = np.zeros((*s.shape, 8))
+        for p in range(4):
+            for q in range(4):
+                total += (along[p] * up[q])[..., None] * self.coefficients[i + p, j + q]
+        return total.view(np.complex128)
+
+    def kernels(self, rho_m: FloatArray, z_m: FloatArray) -> ComplexArray:
+        """Return P, N, K [1/m] and V [1] at broadcast points: the slow twin of the compiled fill.
+
+        Parameters
+        ----------
+        rho_m, z_m : float64 (...)
+            Horizontal distances and sums of heights [m], within the table.
+
+        Returns
+        -------
+        complex128 (4, ...)
+        """
+        rho, z = np.broadcast_arrays(np.asarray(rho_m, dtype=float), np.asarray(z_m, dtype=float))
+        distance = np.sqrt(rho**2 + z**2)
+        wave = np.exp(-1j * self.wavenumber * distance) / distance
+        return np.moveaxis(self.smooth(rho, z) * wave[..., None], -1, 0)
+
+
+def _check(name: str, value: float, lowest: float) -> float:
+    if not (isinstance(value, (int, float, np.number)) and np.isfinite(value) and value > lowest):
+        msg = f"{name}: expected a finite number above {lowest:g}, got {value!r}"
+        raise ModelRangeError(msg)
+    return float(value)
+
+
+def build_table(
+    response: GroundResponse, rho_max_m: float, z_min_m: float, z_max_m: float, tolerance: float = 1e-5
+) -> SoilTable:
+    """Tabulate the kernels of a ground.
+
+    Parameters
+    ----------
+    response : GroundResponse
+        The ground.
+    rho_max_m : float
+        Largest horizontal distance of two points [m].
+    z_min_m, z_max_m : float
+        Smallest and largest sum of two heights [m].
+    tolerance : float, optional
+        Error allowed: of P, N and K times R, of V times k R, between 1e-8 and 1e-2.
+
+    Returns
+    -------
+    SoilTable
+        Its ``error`` is what was found on held-out points.
+
+    Raises
+    ------
+    ModelRangeError
+        On distances or heights that are not positive and finite or out of order, or a tolerance out of its range.
+    SolveError
+        If the error stays above the tolerance.
+    """
+    rho_max = _check("largest horizontal distance [m]", rho_max_m, 0.0)
+    z_min = _check("smallest sum of heights [m]", z_min_m, 0.0)
+    z_max = _check("largest sum of heights [m]", z_max_m, 0.0)
+    if z_max < z_min:
+        msg = f"sums of heights [m]: expected the largest not below the smallest, got {z_max:g} and {z_min:g}"
+        raise ModelRangeError(msg)
+    if not 1e-8 <= tolerance <= 1e-2:
+        msg = f"tolerance of the ground's table: expected 1e-8 to 1e-2, got {tolerance!r}"
+        raise ModelRangeError(msg)
+    # A little more than asked for, so that rounding of coordinates stays inside.
+    z_low, z_high, rho_end = z_min * (1.0 - 1e-6), max(z_max, 1.02 * z_min) * (1.0 + 1e-6), rho_max * (1.0 + 1e-6)
+    quadrature = GroundQuadrature(response, z_low)
+    heights = _chebyshev_heights(quadrature, rho_end, z_low, z_high, 0.1 * tolerance)
+    scale, count = _plan_distances(quadrature, rho_end, z_low, z_high, 0.3 * tolerance)
+    # Nodes in order of random distances over the whole table, half of them near, always with the lowest height.
+    rng = np.random.default_rng(20)
+    rho_test = np.concatenate([[0.0, rho_max], rho_max * rng.random(40), np.minimum(rho_max, 20.0 * z_low) * rng.random(24)])
+    z_test = np.concatenate([[z_min, z_max], z_min * (z_max / z_min) ** rng.random(6)])
+    exact = quadrature.kernels(rho_test, z_test)
+    share = 0.3
+    for _ in range(_ATTEMPTS):
+        table = _tabulate(quadrature, scale, count, rho_end, heights, (z_low, z_high), share * tolerance)
+        found = np.moveaxis(table.smooth(rho_test[:, None], z_test), -1, 0)
+        found[3] *= response.wavenumber
+        error = float(np.abs(found - exact).max())
+        if error <= 0.8 * tolerance:
+            numbers = table.to_arrays()["numbers"].copy()
+            numbers[-5:] = rho_max, z_min, z_max, tolerance, error
+            return SoilTable.from_arrays({"coefficients": table.coefficients, "numbers": numbers})
+        count, share = int(np.ceil(1.35 * count)), 0.4 * share
+    msg = f"table of the ground's kernels: error {error:.1e} on held-out points, expected {tolerance:.1e}"
+    raise SolveError(msg)
+
+
+@dataclass(frozen=True)
+class _Heights:
+    """Chebyshev nodes in ln Z."""
+
+    centre: float
+    half: float
+    count: int
+
+    def nodes(self) -> FloatArray:
+        x = np.cos(np.pi * (np.arange(self.count) + 0.5) / self.count)
+        return np.exp(self.centre + self.half * x)
+
+    def matrix(self, z: FloatArray) -> FloatArray:
+        """Return the matrix (len(z), count) from values at the nodes to values at z."""
+        m = np.arange(self.count)
+        x = np.clip((np.log(z) - self.centre) / self.half, -1.0, 1.0)
+        at_nodes = np.cos(np.pi * np.outer(m + 0.5, m) / self.count) * (2.0 / self.count)
+        at_nodes[:, 0] *= 0.5
+        return np.cos(np.outer(np.arccos(x), m)) @ at_nodes.T
+
+
+def _chebyshev_heights(quadrature: GroundQuadrature, rho_max: float, z_low: float, z_high: float, allowed: float) -> _Heights:
+    """Return as many nodes as the last coefficients at some distances ask for."""
+    centre, half = 0.5 * np.log(z_low * z_high), 0.5 * np.log(z_high / z_low)
+    most = _Heights(centre, half, _MOST_CHEBYSHEV)
+    rho = np.concatenate([[0.0], np.geomspace(0.3 * z_low, rho_max, 15)])
+    values = quadrature.kernels(rho, most.nodes())
+    m = np.arange(most.count)
+    spectrum = np.abs(values @ np.cos(np.pi * np.outer(m + 0.5, m) / most.count)).max(axis=(0, 1)) * (2.0 / most.count)
+    left = np.cumsum(spectrum[::-1])[::-1]
+    needed = int(np.argmax(left <= allowed)) if np.any(left <= allowed) else most.count
+    return _Heights(centre, half, int(np.clip(needed + 1, 5, most.count)))
+
+
+def _plan_distances(
+    quadrature: GroundQuadrature, rho_max: float, z_low: float, z_high: float, allowed: float
+) -> tuple[float, int]:
+    """Return a of s = rho/(rho + a) and the number of nodes that fourth derivatives at some distances ask for."""
+    k = quadrature.response.wavenumber
+    places = np.concatenate([[0.0], np.geomspace(0.2 * z_low, rho_max, 24)])
+    z = np.geomspace(z_low, z_high, 4)
+    # Stencils of seven points: short against the height, the distance and the shortest wave in the ground.
+    step = np.minimum(0.25 * np.hypot(z_low, places / 4.0), 0.35 / max(quadrature.corner, k))
+    rho = np.abs(places[:, None] + step[:, None] * np.arange(-3.0, 4.0))
+    values = quadrature.kernels(rho.ravel(), z).reshape(4, len(places), 7, len(z))
+    rows = np.array(
+        [[0, 0, -1, 0, 1, 0, 0], [0, 0, 1, -2, 1, 0, 0], [0, -1, 2, 0, -2, 1, 0], [0, 1, -4, 6, -4, 1, 0]], dtype=float
+    ) * np.array([0.5, 1.0, 0.5, 1.0])[:, None]
+    d1, d2, d3, d4 = np.einsum("mj,apjz->mapz", rows, values) / (step[:, None] ** np.arange(1.0, 5.0)[:, None, None, None])
+    best = (_DISTANCES_M[0], np.inf)
+    for a in _DISTANCES_M:
+        # Chain rule for rho(s) = a s/(1 - s).
+        q = (places + a)[:, None]
+        r1, r2, r3, r4 = q**2 / a, 2.0 * q**3 / a**2, 6.0 * q**4 / a**3, 24.0 * q**5 / a**4
+        fourth = d4 * r1**4 + 6.0 * d3 * r1**2 * r2 + d2 * (3.0 * r2**2 + 4.0 * r1 * r3) + d1 * r4
+        spacing = (allowed / (_SPLINE_ERROR * np.abs(fourth).max())) ** 0.25
+        count = rho_max / (rho_max + a) / spacing
+        if count < best[1]:
+            best = (a, float(count))
+    return best[0], max(8, int(np.ceil(best[1])) + 1)
+
+
+def _tabulate(
+    quadrature: GroundQuadrature,
+    scale: float,
+    count: int,
+    rho_end: float,
+    heights: _Heights,
+    z_range: tuple[float, float],
+    allowed: float,
+) -> SoilTable:
+    """Return the table on a grid of distances; as many heights as the spline between them asks for."""
+    s = np.linspace(0.0, rho_end / (rho_end + scale), count)
+    values = quadrature.kernels(scale * s / (1.0 - s), heights.nodes())
+    values[3] /= quadrature.response.wavenumber
+    parts = np.ascontiguousarray(values.transpose(1, 2, 0)).view(np.float64)  # (n_rho, n_chebyshev, 8)
+    z_low, z_high = z_range
+    b = np.sqrt(z_low * z_high)
+    t_low, t_high = z_low / (z_low + b), z_high / (z_high + b)
+    some = parts[:: max(1, count // 64)]
+    weight = np.repeat([1.0, 1.0, 1.0, quadrature.response.wavenumber], 2)
+    n_z = 6
+    while True:
+        grid = np.linspace(t_low, t_high, n_z)
+        to_grid = heights.matrix(b * grid / (1.0 - grid))
+        positions = np.concatenate([np.arange(n_z - 1) + 0.5, [0.25, n_z - 1.25]])
+        between = t_low + positions * (grid[1] - grid[0])
+        gap = heights.matrix(b * between / (1.0 - between)) - spline_matrix(n_z, positions, flat_start=False) @ to_grid
+        if np.abs(np.matmul(gap, some) * weight).max() <= allowed or n_z > 400:
+            break
+        n_z = int(np.ceil(1.25 * n_z))
+    up = spline_coefficients(to_grid, flat_start=False)
+    coefficients = spline_coefficients(np.matmul(up, parts), flat_start=True)
+    return SoilTable(
+        coefficients=np.ascontiguousarray(coefficients, dtype=np.float32 if allowed >= 0.1 * SINGLE_FROM else np.float64),
+        wavenumber=quadrature.response.wavenumber,
+        rho_scale_m=scale,
+        rho_per_node=float(s[1]),
+        z_scale_m=float(b),
+        z_start=float(t_low),
+        z_per_node=float((t_high - t_low) / (n_z - 1)),
+        rho_max_m=rho_end,
+        z_min_m=z_low,
+        z_max_m=z_high,
+        tolerance=np.inf,
+        error=np.inf,
+    )
