@@ -16,7 +16,7 @@ from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import ModelRangeError, SolveError
 from elbowroom.kernels.soil.response import GroundResponse
 from elbowroom.kernels.soil.sommerfeld import GroundQuadrature
-from elbowroom.kernels.soil.splines import spline_coefficients, spline_matrix, spline_weights
+from elbowroom.kernels.soil.splines import even_spline_coefficients, spline_basis, spline_weights
 
 SINGLE_FROM = 2e-6
 """Tables of this tolerance and more are kept in single precision."""
@@ -27,6 +27,7 @@ _SPLINE_ERROR = 1.0 / 384.0
 _DISTANCES_M = (0.75, 1.5, 3.0, 4.5, 6.0, 9.0, 12.0, 18.0, 24.0, 36.0, 54.0)
 _MOST_CHEBYSHEV = 40
 _ATTEMPTS = 4
+_BEYOND = 5
 
 
 @dataclass(frozen=True)
@@ -119,9 +120,7 @@ def _check(name: str, value: float, lowest: float) -> float:
     return float(value)
 
 
-def build_table(
-    response: GroundResponse, rho_max_m: float, z_min_m: float, z_max_m: float, tolerance: float = 1e-5
-) -> SoilTable:
+def build_table(response: GroundResponse, rho_max_m: float, z_min_m: float, z_max_m: float, tolerance: float = 1e-5) -> SoilTable:
     """Tabulate the kernels of a ground.
 
     Parameters
@@ -226,9 +225,10 @@ def _plan_distances(
     step = np.minimum(0.25 * np.hypot(z_low, places / 4.0), 0.35 / max(quadrature.corner, k))
     rho = np.abs(places[:, None] + step[:, None] * np.arange(-3.0, 4.0))
     values = quadrature.kernels(rho.ravel(), z).reshape(4, len(places), 7, len(z))
-    rows = np.array(
-        [[0, 0, -1, 0, 1, 0, 0], [0, 0, 1, -2, 1, 0, 0], [0, -1, 2, 0, -2, 1, 0], [0, 1, -4, 6, -4, 1, 0]], dtype=float
-    ) * np.array([0.5, 1.0, 0.5, 1.0])[:, None]
+    rows = (
+        np.array([[0, 0, -1, 0, 1, 0, 0], [0, 0, 1, -2, 1, 0, 0], [0, -1, 2, 0, -2, 1, 0], [0, 1, -4, 6, -4, 1, 0]], dtype=float)
+        * np.array([0.5, 1.0, 0.5, 1.0])[:, None]
+    )
     d1, d2, d3, d4 = np.einsum("mj,apjz->mapz", rows, values) / (step[:, None] ** np.arange(1.0, 5.0)[:, None, None, None])
     best = (_DISTANCES_M[0], np.inf)
     for a in _DISTANCES_M:
@@ -253,7 +253,8 @@ def _tabulate(
     allowed: float,
 ) -> SoilTable:
     """Return the table on a grid of distances; as many heights as the spline between them asks for."""
-    s = np.linspace(0.0, rho_end / (rho_end + scale), count)
+    # The spline's last few intervals are less good: they lie beyond the end.
+    s = np.arange(count + _BEYOND) * (rho_end / (rho_end + scale) / (count - 1))
     values = quadrature.kernels(scale * s / (1.0 - s), heights.nodes())
     values[3] /= quadrature.response.wavenumber
     parts = np.ascontiguousarray(values.transpose(1, 2, 0)).view(np.float64)  # (n_rho, n_chebyshev, 8)
@@ -262,20 +263,20 @@ def _tabulate(
     t_low, t_high = z_low / (z_low + b), z_high / (z_high + b)
     some = parts[:: max(1, count // 64)]
     weight = np.repeat([1.0, 1.0, 1.0, quadrature.response.wavenumber], 2)
-    n_z = 6
+    n_z = 8
     while True:
-        grid = np.linspace(t_low, t_high, n_z)
-        to_grid = heights.matrix(b * grid / (1.0 - grid))
-        positions = np.concatenate([np.arange(n_z - 1) + 0.5, [0.25, n_z - 1.25]])
-        between = t_low + positions * (grid[1] - grid[0])
-        gap = heights.matrix(b * between / (1.0 - between)) - spline_matrix(n_z, positions, flat_start=False) @ to_grid
-        if np.abs(np.matmul(gap, some) * weight).max() <= allowed or n_z > 400:
+        positions = np.arange(4 * (n_z - 1) + 1) / 4.0
+        t = t_low + positions * ((t_high - t_low) / (n_z - 1))
+        exact, basis = heights.matrix(b * t / (1.0 - t)), spline_basis(n_z, positions)
+        up = np.linalg.lstsq(basis, exact, rcond=None)[0]
+        if np.abs(np.matmul(exact - basis @ up, some) * weight).max() <= allowed or n_z > 400:
             break
-        n_z = int(np.ceil(1.25 * n_z))
-    up = spline_coefficients(to_grid, flat_start=False)
-    coefficients = spline_coefficients(np.matmul(up, parts), flat_start=True)
+        n_z = int(np.ceil(1.2 * n_z))
+    coefficients = even_spline_coefficients(np.matmul(up, parts))
     return SoilTable(
-        coefficients=np.ascontiguousarray(coefficients, dtype=np.float32 if allowed >= 0.1 * SINGLE_FROM else np.float64),
+        coefficients=np.ascontiguousarray(
+            coefficients[: count + 2], dtype=np.float32 if allowed >= 0.1 * SINGLE_FROM else np.float64
+        ),
         wavenumber=quadrature.response.wavenumber,
         rho_scale_m=scale,
         rho_per_node=float(s[1]),
