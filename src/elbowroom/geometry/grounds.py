@@ -16,6 +16,8 @@ from elbowroom.base.errors import ModelRangeError
 TABLE_TOLERANCE = 1e-5
 """Error of a real ground's kernels times distance that their tables are made for, unless a ground says otherwise."""
 
+TOLERANCE_RANGE = (1e-8, 1e-3)
+
 LARGEST_PERMITTIVITY, LARGEST_CONDUCTIVITY = 100.0, 1e8
 """Beyond water and beyond metals [-], [S/m]: another unit or a slip."""
 
@@ -102,14 +104,13 @@ class Soil:
     lossy: ClassVar[bool] = True
 
     def __post_init__(self) -> None:
-        set_ = object.__setattr__
-        set_(
-            self,
-            "relative_permittivity",
-            _checked("relative_permittivity", self.relative_permittivity, 1.0, LARGEST_PERMITTIVITY),
-        )
-        set_(self, "conductivity_s_per_m", _checked("conductivity_s_per_m", self.conductivity_s_per_m, 0.0, LARGEST_CONDUCTIVITY))
-        set_(self, "tolerance", _checked("tolerance", self.tolerance, 1e-8, 1e-3))
+        ranges = {
+            "relative_permittivity": (1.0, LARGEST_PERMITTIVITY),
+            "conductivity_s_per_m": (0.0, LARGEST_CONDUCTIVITY),
+            "tolerance": TOLERANCE_RANGE,
+        }
+        for key, (low, high) in ranges.items():
+            object.__setattr__(self, key, _checked(key, getattr(self, key), low, high))
 
     def at(self, frequency_hz: float) -> Soil:
         """Return the ground as it is at a frequency [Hz]."""

@@ -14,8 +14,8 @@ class PointKernels:
     """Scalar kernels between two sets of points, real and imaginary parts apart, each float64 (2, Q, Q').
 
     ``horizontal`` multiplies the x and y currents, ``vertical`` the z currents, ``charge`` the charges.  Equal kernels
-    may be one and the same array, which lets the caller do their products together.  ``cross`` (dimensionless) joins z currents and
-    charges, -j k eta/(4 pi) cross (f_z q' + q f_z'); None where the ground has no such kernel.
+    may be one and the same array, which lets the caller do their products together.  ``cross`` (dimensionless) joins z
+    currents and charges, -j k eta/(4 pi) cross (f_z q' + q f_z'); None where the ground has no such kernel.
     """
 
     horizontal: FloatArray

@@ -182,11 +182,11 @@ class PairFiller:
         if self.ground.has_correction:
             ends = [kind_j.placed_elements(self.positions[j]), kind_i.placed_elements(self.positions[i])]
             lowest = min(float(end[:, 2].min()) for pair in ends for end in pair)
-            samples = [
-                ring_samples(kind.mesh, *pair, lowest, d.wavenumber, d.near.tolerance)
-                for kind, pair in zip((kind_j, kind_i), ends, strict=True)
-            ]
-            block = block + ground_block(self.ground, samples[0], samples[1], d.wavenumber)
+            samples, samples2 = (
+                ring_samples(kind.mesh, start, end, lowest, d.wavenumber, d.near.tolerance)
+                for kind, (start, end) in zip((kind_j, kind_i), ends, strict=True)
+            )
+            block = block + ground_block(self.ground, samples, samples2, d.wavenumber)
         return block
 
     def _element_block(

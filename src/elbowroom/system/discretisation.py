@@ -223,8 +223,8 @@ def grounded_ends(placed: Placed, conducting: bool) -> np.ndarray:
     touching = height <= GROUND_CONTACT_M
     if touching.any() and not conducting:
         msg = (
-            f"antenna {placed.name!r} ({placed.antenna.name!r}): wire {int(np.argwhere(touching)[0, 0])} ends on the ground; wires "
-            "that end on or enter soil are not modelled; raise the antenna with up_m, or take the perfect ground"
+            f"antenna {placed.name!r} ({placed.antenna.name!r}): wire {int(np.argwhere(touching)[0, 0])} ends on the ground; "
+            "wires that end on or enter soil are not modelled; raise the antenna with up_m, or take the perfect ground"
         )
         raise GeometryError(msg)
     radius = np.array([w.radius for w in placed.antenna.wires])
