@@ -16,7 +16,6 @@ the store keeps one of two equal results.
 from __future__ import annotations
 
 import contextlib
-import errno
 import json
 import os
 import re
@@ -29,7 +28,7 @@ from datetime import UTC, datetime
 from pathlib import Path
 from types import TracebackType
 
-from elbowroom.store.disk import Disk, is_damage
+from elbowroom.store.disk import Disk
 from elbowroom.store.processes import ProcessTag, this_process
 
 SUFFIX = ".claim"
@@ -195,10 +194,6 @@ class Claims:
             return self._disk.read_small(self._path(key))
         except FileNotFoundError:
             return None
-        except OSError as cause:
-            if is_damage(cause) or cause.errno in (errno.ENXIO, errno.ESTALE):
-                return b""
-            raise
 
     def _judged(self, key: str, content: bytes) -> Holder:
         now = time.monotonic()

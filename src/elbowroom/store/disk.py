@@ -180,21 +180,26 @@ class Disk:
         return False
 
     def read_small(self, path: Path, limit: int = 4096) -> bytes:
-        """Return the first bytes of a file; of what is no ordinary file, none.
+        """Return the first bytes of a file; none of a damaged one, nor of what is no ordinary file.
 
         Raises
         ------
         OSError
-            If there is no such file, or it cannot be read.
+            If there is no such file, or the system refuses.
         """
-        # a pipe under the name must not block whoever looks at it
-        descriptor = os.open(path, os.O_RDONLY | getattr(os, "O_NONBLOCK", 0))
         try:
-            return os.read(descriptor, limit)
+            # a pipe under the name must not block whoever looks at it
+            descriptor = os.open(path, os.O_RDONLY | getattr(os, "O_NONBLOCK", 0) | getattr(os, "O_NOFOLLOW", 0))
+            try:
+                return os.read(descriptor, limit)
+            finally:
+                os.close(descriptor)
         except (IsADirectoryError, BlockingIOError):
             return b""
-        finally:
-            os.close(descriptor)
+        except OSError as cause:
+            if is_damage(cause) or cause.errno in (errno.ENXIO, errno.ESTALE):
+                return b""
+            raise
 
     def remove_stale(self, older_than_seconds: float) -> list[Path]:
         """Remove temporary files of processes that have ended, as far as that can be known; return which.

@@ -388,9 +388,10 @@ class Hdf5Store:
 
     def _make_way(self, path: Path, key: str) -> None:
         """Set aside whatever stands where a unit is to go, unless it is a unit of ours."""
-        if os.path.lexists(path) and not self._holds_unit(path, key):
-            with contextlib.suppress(FileNotFoundError):
-                found = os.lstat(path)
+        with contextlib.suppress(FileNotFoundError):
+            # before it is judged: another process may put a good unit there meanwhile, which must not be the one to go
+            found = os.lstat(path)
+            if not self._holds_unit(path, key):
                 reason = "it was not a unit of this store and a unit was to be written under its name"
                 self._set_aside(path, reason, (found.st_dev, found.st_ino))
 
