@@ -1,0 +1,236 @@
+r"""Impedance matrices between the frequencies at which they were assembled.
+
+Between antennas i and j the product :math:`f Z_{ij}(f) \exp(jkd_{ij})`, with d the distance of their places, has no phase left
+but that of paths across the antennas themselves, and no pole: on a mesh and in functions that are held, it is a polynomial in
+frequency for all purposes.  The same holds for an antenna's own block without loss, loads and networks, which are put back as
+they are at each frequency.  Nodes are the extrema of a Chebyshev polynomial, ends included; own blocks, in which potentials
+of current and charge nearly cancel, have twice as many intervals.
+
+References
+----------
+.. [1] J.-P. Berrut, L. N. Trefethen, "Barycentric Lagrange interpolation", SIAM Review 46 (2004) 501-517.
+.. [2] L. N. Trefethen, Approximation Theory and Approximation Practice, SIAM, 2013, chapter 8 (error bounds).
+"""
+
+from __future__ import annotations
+
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import replace
+
+import numpy as np
+
+from elbowroom.base.arrays import AnyComplexArray, ComplexArray, FloatArray
+from elbowroom.base.constants import SPEED_OF_LIGHT
+from elbowroom.base.errors import ModelRangeError
+from elbowroom.base.threads import available_cores
+from elbowroom.system.assembly import single_threaded_blas
+from elbowroom.system.discretisation import Discretisation, Kind, attachments
+from elbowroom.system.factorisation import TiledSymmetric
+from elbowroom.system.self_block import loss_and_loads
+from elbowroom.system.spaces import CurrentSpace
+
+
+def band_nodes(low_hz: float, high_hz: float, intervals: int) -> FloatArray:
+    """Return the extrema of the Chebyshev polynomial of a degree on a band, rising, (intervals + 1,) [Hz]."""
+    nodes = 0.5 * (low_hz + high_hz) - 0.5 * (high_hz - low_hz) * np.cos(np.pi * np.arange(intervals + 1) / intervals)
+    nodes[0], nodes[-1] = low_hz, high_hz
+    return nodes
+
+
+def node_weights(nodes: FloatArray, frequency_hz: float) -> FloatArray:
+    """Return what each node counts in the polynomial through all, at a frequency; for nodes of :func:`band_nodes`.
+
+    Raises
+    ------
+    ModelRangeError
+        If the frequency lies outside the nodes.
+    """
+    span = nodes[-1] - nodes[0]
+    if not nodes[0] - 1e-9 * span <= frequency_hz <= nodes[-1] + 1e-9 * span:
+        msg = f"{frequency_hz:.12g} Hz lies outside the segment, {nodes[0]:.12g} to {nodes[-1]:.12g} Hz"
+        raise ModelRangeError(msg)
+    offset = frequency_hz - nodes
+    here = np.abs(offset) < 1e-12 * span
+    if here.any():
+        return here.astype(float)
+    weights = (-1.0) ** np.arange(len(nodes))
+    weights[[0, -1]] *= 0.5
+    weights = weights / offset
+    return np.asarray(weights / weights.sum())
+
+
+def intervals_for(span_hz: float, reach_m: float, tolerance: float) -> int:
+    r"""Return the even number of intervals at which interpolation over a band is good to a relative tolerance.
+
+    A phase :math:`\exp(-jk s)` with path s up to the reach deviates by no more than
+    :math:`2 (\theta/2)^{n+1}/(n+1)!` from the polynomial of degree n through Chebyshev nodes, where
+    :math:`\theta` is half the turn of its phase over the band.
+    """
+    half = np.pi * span_hz * reach_m / SPEED_OF_LIGHT
+    bound, n = 2.0, 0
+    while n < 2 or bound > tolerance or n % 2:
+        n += 1
+        bound = 2.0
+        for factor in range(1, n + 2):
+            bound *= 0.5 * half / factor
+    return n
+
+
+def reach_of(discretisation: Discretisation) -> float:
+    """Return the largest extra path [m] of waves between antennas over the distance of their places.
+
+    From one end of an antenna to another and past the image: what is left in the phase of interactions once that of the places
+    is taken out, and what an antenna's own block holds.
+    """
+    reach = 0.0
+    for kind in discretisation.kinds:
+        ends = np.array([[w.start, w.end] for w in kind.antenna.wires]).reshape(-1, 3) @ kind.orientation.T
+        sideways = float(np.linalg.norm(ends[:, :2], axis=1).max())
+        top = float(ends[:, 2].max() + kind.height)
+        upright = float(np.ptp(ends[:, 2])) if discretisation.station.ground.open_below else 2.0 * top
+        reach = max(reach, float(np.hypot(2.0 * sideways, upright)))
+    return reach
+
+
+class OwnBlocks:
+    """Own blocks of every kind of antenna at any frequency of a segment.
+
+    Parameters
+    ----------
+    discretisations : list of Discretisation
+        At the frequencies of :func:`band_nodes`, on one mesh, with self blocks.
+    """
+
+    def __init__(self, discretisations: list[Discretisation]) -> None:
+        self.nodes = np.array([d.frequency_hz for d in discretisations])
+        first = discretisations[0]
+        self._model = first
+        self._shared: dict[int, list[int]] = {}
+        for k, kind in enumerate(first.kinds):
+            self._shared.setdefault(id(kind.self_block), []).append(k)
+        # What is smooth: no loss, no loads, no 1/f of the charges.
+        self._samples: dict[int, ComplexArray] = {}
+        for kinds in self._shared.values():
+            k = kinds[0]
+            self._samples[k] = np.stack(
+                [
+                    d.frequency_hz * (d.kinds[k].self_block - loss_and_loads(d.kinds[k].antenna, d.kinds[k].mesh, d.frequency_hz))
+                    for d in discretisations
+                ]
+            )
+
+    def at(self, frequency_hz: float) -> Discretisation:
+        """Return the station at a frequency of the segment [Hz], on the mesh of the segment."""
+        weights = node_weights(self.nodes, frequency_hz) / frequency_hz
+        model = self._model
+        blocks: dict[int, ComplexArray] = {}
+        lossy: dict[tuple[int, int], ComplexArray] = {}
+        for kinds in self._shared.values():
+            kind = model.kinds[kinds[0]]
+            key = (id(kind.antenna), id(kind.mesh))
+            if key not in lossy:
+                lossy[key] = loss_and_loads(kind.antenna, kind.mesh, frequency_hz)
+            made = np.tensordot(weights, self._samples[kinds[0]], axes=1) + lossy[key]
+            blocks |= dict.fromkeys(kinds, 0.5 * (made + made.T))
+        kinds_now = [Kind(q.antenna, q.mesh, q.orientation, q.height, blocks[k]) for k, q in enumerate(model.kinds)]
+        return replace(model, frequency_hz=float(frequency_hz), kinds=kinds_now)
+
+
+class MatrixSamples:
+    """Reduced matrices of a segment at its nodes, without own blocks, each block's phase of distance and 1/f taken out.
+
+    Parameters
+    ----------
+    discretisation : Discretisation
+        The station.
+    space : CurrentSpace
+        Functions of the segment.
+    nodes : float64 (M,)
+        Frequencies at which :meth:`add` is going to be called [Hz].
+    dtype : type
+        Precision.
+    """
+
+    def __init__(self, discretisation: Discretisation, space: CurrentSpace, nodes: FloatArray, dtype: type) -> None:
+        self.station, self.space, self.nodes, self.dtype = discretisation.station, space, nodes, np.dtype(dtype)
+        self._real = np.float32 if self.dtype == np.complex64 else np.float64
+        positions = discretisation.station.positions
+        self.separation = np.linalg.norm(positions[:, None] - positions[None, :], axis=2)
+        self.sizes: tuple[int, ...] = ()
+        self.samples: dict[tuple[int, int], AnyComplexArray] = {}
+
+    @property
+    def nbytes(self) -> int:
+        """Bytes held."""
+        return sum(s.nbytes for s in self.samples.values())
+
+    def _antennas(self, sizes: tuple[int, ...]) -> list[slice]:
+        edges = np.searchsorted(self.space.offsets, np.concatenate([[0], np.cumsum(sizes)]))
+        return [slice(int(a), int(b)) for a, b in zip(edges[:-1], edges[1:], strict=True)]
+
+    def _turn(self, tile: tuple[int, int], wavenumber: float, groups: list[slice]) -> AnyComplexArray:
+        """Return exp(-jkd) of every entry of a tile, transposed to the order in which tiles are kept."""
+        rows, columns = groups[tile[0]], groups[tile[1]]
+        counts = np.diff(self.space.offsets)
+        turn = np.exp(-1j * wavenumber * self.separation[columns, rows]).astype(self.dtype)
+        return np.repeat(np.repeat(turn, counts[rows], axis=1), counts[columns], axis=0)
+
+    def add(self, node: int, matrix: TiledSymmetric) -> None:
+        """Take the matrix assembled at a node; the matrix is left as it was."""
+        if not self.samples:
+            self.sizes = matrix.sizes
+            self.samples = {key: np.empty((len(self.nodes), tile.size), self.dtype) for key, tile in matrix.tiles.items()}
+        frequency, groups = float(self.nodes[node]), self._antennas(self.sizes)
+        wavenumber = 2.0 * np.pi * frequency / SPEED_OF_LIGHT
+
+        def take(key: tuple[int, int]) -> None:
+            turned = matrix.tiles[key].T * self._turn(key, -wavenumber, groups)
+            turned *= self._real(frequency)
+            if key[0] == key[1]:
+                first = self.space.offsets[groups[key[0]].start]
+                for a in range(groups[key[0]].start, groups[key[0]].stop):
+                    own = slice(self.space.offsets[a] - first, self.space.offsets[a + 1] - first)
+                    turned[own, own] = 0.0
+            self.samples[key][node] = turned.ravel()
+
+        with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
+            list(pool.map(take, self.samples))
+
+    def at(self, discretisation: Discretisation, reference_ohm: float) -> TiledSymmetric:
+        """Return the matrix at the frequency of a station from :meth:`OwnBlocks.at`, every port loaded [ohm]."""
+        d, space = discretisation, self.space
+        weights = (node_weights(self.nodes, d.frequency_hz) / d.frequency_hz).astype(self._real)
+        groups = self._antennas(self.sizes)
+        # The tiles are about to be written: nothing need be set to zero first.
+        matrix = TiledSymmetric([], self.dtype.type)
+        matrix.sizes, matrix.offsets = self.sizes, np.concatenate([[0], np.cumsum(self.sizes)])
+        own = own_blocks(d, space, reference_ohm)
+
+        def fill(key: tuple[int, int]) -> None:
+            flat = weights @ self.samples[key].view(self._real)
+            tile = flat.view(self.dtype).reshape(self.sizes[key[1]], self.sizes[key[0]])
+            tile *= self._turn(key, d.wavenumber, groups)
+            if key[0] == key[1]:
+                first = space.offsets[groups[key[0]].start]
+                for a in range(groups[key[0]].start, groups[key[0]].stop):
+                    here = slice(space.offsets[a] - first, space.offsets[a + 1] - first)
+                    tile[here, here] = own[d.kind_of[a]].T
+            matrix.tiles[key] = tile.T
+
+        with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
+            list(pool.map(fill, self.samples))
+        return matrix
+
+
+def own_blocks(discretisation: Discretisation, space: CurrentSpace, reference_ohm: float) -> list[ComplexArray]:
+    """Return the loaded own block of each kind in its functions, (n, n) [ohm]; kinds that are turned only share it."""
+    attached = attachments(discretisation, reference_ohm)
+    made: dict[int, ComplexArray] = {}
+    out: list[ComplexArray] = []
+    for k, kind in enumerate(discretisation.kinds):
+        basis, key = space.bases[k], id(kind.self_block)
+        if key not in made:
+            loaded = kind.self_block + attached[kind.antenna].structure(kind.mesh.gap_vectors)
+            made[key] = loaded if basis is None else basis.T @ loaded @ basis
+        out.append(made[key])
+    return out
