@@ -17,6 +17,7 @@ from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.stations import PortName, Station
 from elbowroom.radiation.beams import current_beams, pointing_weights
 from elbowroom.radiation.patterns import CHUNK_DIRECTIONS, station_patterns
+from elbowroom.radiation.power import PowerParts, power_parts
 from elbowroom.system.discretisation import Discretisation
 from elbowroom.system.plane_waves import direction_frame, kind_vectors, phases
 from elbowroom.system.port_algebra import (
@@ -243,6 +244,27 @@ class Solution:
         reflection = reflection_of(termination, self.discretisation.n_ports, self.reference_ohm)
         whole = scattering_from_loaded(self.coupled.loaded_admittance, self.reference_ohm)
         return *driven_ports(whole, self.reference_ohm, reflection, table), table
+
+    def power_parts(self, weights: ArrayLike, *, termination: Termination = 100.0) -> PowerParts:
+        """Return where the power goes that ports accept while they are driven at once.
+
+        Weights and terminations as in :meth:`active_impedance`; the weights of a receiving beam give the parts of the beam sent
+        in its direction, a single 1 among zeros those of one port.
+
+        Parameters
+        ----------
+        weights : complex (P,) or (B, P)
+            w.
+        termination : number, "open", "short" or one of these per port, optional
+            What the ports see [ohm].
+
+        Raises
+        ------
+        ModelRangeError
+            As :meth:`active_impedance`.
+        """
+        voltage, current, _ = self._driven(weights, termination)
+        return power_parts(self.discretisation, self.space, self.coupled.currents, self.reference_ohm, voltage, current)
 
     def isolated_impedance(self, antenna: int) -> ComplexArray:
         """Return the impedance matrix [ohm] of the ports of one antenna standing alone over the ground."""

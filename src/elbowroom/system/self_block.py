@@ -198,6 +198,11 @@ def image_self_block(
 
 def loss_and_loads(antenna: Antenna, mesh: Mesh, frequency_hz: float) -> ComplexArray:
     """Return the distributed wire loss and the lumped loads of one antenna as a matrix (N, N) [ohm]."""
+    return wire_loss(antenna, mesh, frequency_hz) + lumped_loads(antenna, mesh, frequency_hz)
+
+
+def wire_loss(antenna: Antenna, mesh: Mesh, frequency_hz: float) -> ComplexArray:
+    """Return what the metal of one antenna's wires adds to its matrix, (N, N) [ohm]."""
     matrix = np.zeros((mesh.n_unknowns, mesh.n_unknowns), dtype=complex)
     overlap = overlap_matrix(mesh.order)
     for e in range(mesh.n_elements):
@@ -206,6 +211,12 @@ def loss_and_loads(antenna: Antenna, mesh: Mesh, frequency_hz: float) -> Complex
             continue
         per_metre = internal_impedance(wire.radius, wire.conductivity, wire.relative_permeability, frequency_hz)
         matrix += per_metre * 0.5 * mesh.length[e] * (mesh.expansion[e].T @ overlap @ mesh.expansion[e])
+    return matrix
+
+
+def lumped_loads(antenna: Antenna, mesh: Mesh, frequency_hz: float) -> ComplexArray:
+    """Return what the lumped loads of one antenna add to its matrix, (N, N) [ohm]."""
+    matrix = np.zeros((mesh.n_unknowns, mesh.n_unknowns), dtype=complex)
     for load, vector in zip(antenna.loads, mesh.load_vectors, strict=True):
         matrix += load.impedance(2.0 * np.pi * frequency_hz) * np.outer(vector, vector)
     return matrix
