@@ -137,3 +137,37 @@ def hallen_admittance(half_length, radius, *, order=1):
     constant = -0.5 * (np.sin(k * h) - step * at_end[1]) / (np.cos(k * h) - step * at_end[0])
     shapes = [start[i] - step * (at_feed[i] - at_end[i]) for i in range(2)]
     return complex(-4j * pi / (IMPEDANCE_OF_VACUUM * omega) * (constant * shapes[0] + 0.5 * shapes[1])), float(omega)
+
+
+SLENDER = 10.0 ** -np.arange(4.0, 8.6, 0.5)
+"""Radii from which limits of vanishing thickness are worked out."""
+
+
+def limits(omega, values, first):
+    """Return the leading coefficient of values = sum c_n/Omega^n, n from ``first``, and how far it is uncertain.
+
+    Fits of three, four and five terms; the middle one is taken and the largest change is its uncertainty.
+    """
+    found = []
+    for terms in (3, 4, 5):
+        table = np.array([omega ** -float(n) for n in range(first, first + terms)]).T
+        found.append(np.linalg.lstsq(table, np.array(values), rcond=None)[0][0])
+    return found[1], max(abs(found[0] - found[1]), abs(found[2] - found[1]))
+
+
+LIGHT = MeshSettings(order=3, end_radii=4.0, gap_radii=6.0, floor_wavelengths=0.01)
+"""For many thin dipoles: elements that suffice for gains to 0.05 dB and half the time of the default."""
+
+
+def directivity(solved: Alone, theta=0.0, phi=0.0, frequency=1.0, power=None) -> float:
+    """Return the directivity of port 0 in a direction, by the power it takes in unless another is given."""
+    k = K * frequency
+    frame = direction_frame(np.array([theta]), np.array([phi]))
+    length = station_patterns(solved.discretisation, solved.currents[:, :1], frame)[0]
+    radiated = 0.5 * solved.admittance[0, 0].real if power is None else power
+    return float(IMPEDANCE_OF_VACUUM * k**2 / (8.0 * pi) * np.sum(np.abs(length) ** 2) / radiated)
+
+
+def decibels(ratio) -> float:
+    """Return a ratio of powers in dB."""
+    return float(10.0 * np.log10(ratio))

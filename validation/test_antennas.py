@@ -1,4 +1,4 @@
-"""Parametric shapes and arrays of dipoles against the published theory and measurements of their kind.
+"""Parametric shapes against the published theory and measurements of their kind.
 
 All lengths are in wavelengths (1 m at c hertz).  Printed values here are from memory unless a check says otherwise.
 """
@@ -13,35 +13,15 @@ from scipy import special
 from scipy.optimize import brentq
 
 import references as ref
-from dipole_models import FREQUENCY_HZ, K, admittance, radiated_power, solve_alone
+from dipole_models import FREQUENCY_HZ, LIGHT, K, admittance, decibels, directivity, radiated_power, solve_alone
 from elbowroom.base.constants import IMPEDANCE_OF_VACUUM
-from elbowroom.geometry.antennas import Antenna, Port
 from elbowroom.geometry.grounds import PerfectGround
-from elbowroom.geometry.mesh import MeshSettings
 from elbowroom.geometry.shapes import crossed_dipoles, dipole, folded_dipole, log_periodic, monopole, polygonal_loop
-from elbowroom.geometry.wires import Wire
 from elbowroom.radiation.patterns import station_patterns
 from elbowroom.system.networks import attach_ports
 from elbowroom.system.plane_waves import direction_frame
 
 pytestmark = pytest.mark.validation
-
-# Many thin dipoles: elements that suffice for gains to 0.05 dB and half the time of the default.
-LIGHT = MeshSettings(order=3, end_radii=4.0, gap_radii=6.0, floor_wavelengths=0.01)
-
-
-def directivity(solved, theta=0.0, phi=0.0, frequency=1.0, power=None):
-    """Return the directivity of port 0 in a direction, by the power it takes in unless another is given."""
-    k = K * frequency
-    frame = direction_frame(np.array([theta]), np.array([phi]))
-    length = station_patterns(solved.discretisation, solved.currents[:, :1], frame)[0]
-    radiated = 0.5 * solved.admittance[0, 0].real if power is None else power
-    return float(IMPEDANCE_OF_VACUUM * k**2 / (8.0 * pi) * np.sum(np.abs(length) ** 2) / radiated)
-
-
-def decibels(ratio):
-    return float(10.0 * np.log10(ratio))
-
 
 # --- folded dipole
 
@@ -286,66 +266,6 @@ def test_log_periodic__active_region_moves_by_one_element_for_each_factor_tau(re
         f"tau {tau}: elements by which it moves for tau^2", largest[0] - largest[1], 2.0, absolute=0.5,
         source="exact, but for the ends", wrong=[0.0, 1.0, -2.0],
     )  # fmt: skip
-
-
-# --- parasitic arrays
-
-MEASURED = {
-    "3 elements, 0.4 wavelengths": ([0.482, 0.442], 0.2, 7.1),
-    "5 elements, 0.8 wavelengths": ([0.482, 0.428, 0.424, 0.428], 0.2, 9.2),
-    "6 elements, 1.2 wavelengths": ([0.482, 0.428, 0.420, 0.420, 0.428], 0.25, 10.2),
-    "12 elements, 2.2 wavelengths": (
-        [0.482, 0.432, 0.415, 0.407, 0.398, 0.390, 0.390, 0.390, 0.390, 0.398, 0.407], 0.2, 12.25,
-    ),
-}  # fmt: skip
-"""Lengths of reflector and directors, spacing of directors and gain over a half-wave dipole [dB]; rods of diameter 0.0085, the
-reflector 0.2 behind the driven element.  P. P. Viezbicke, Yagi Antenna Design, NBS Technical Note 688, 1976, table 1 (from memory, as
-reprinted by handbooks)."""
-
-
-@pytest.mark.parametrize("name", MEASURED)
-def test_yagi_uda__gain_over_a_dipole_is_the_measured_one(record, name):
-    """Tolerance: half a decibel, which gains measured on an outdoor range are good to (common practice, no source)."""
-    (reflector, *directors), spacing, published = MEASURED[name]
-    lengths = [reflector, 0.47, *directors]
-    places = [-0.2, 0.0, *(spacing * (1 + np.arange(len(directors))))]
-    radius = 0.5 * 0.0085
-    wires = [Wire((-0.5 * q, 0.0, z), (0.5 * q, 0.0, z), radius) for q, z in zip(lengths, places, strict=True)]
-    solved = solve_alone(Antenna("array", wires, [Port("p", 1)]), mesh="default")
-    half_wave = directivity(solve_alone(dipole(half_length_m=0.235, height_m=1.0, wire_radius_m=radius), mesh="default"))
-    gain = directivity(solved)
-    back = directivity(solved, theta=pi)
-    record(
-        f"{name}: gain over a half-wave dipole [dB]", decibels(gain / half_wave), published, absolute=0.5,
-        source="Viezbicke 1976 (memory)", wrong=[published + 2.15, published - 2.15, decibels(back / half_wave), 0.0],
-    )  # fmt: skip
-
-
-def test_yagi_uda__fifteen_elements__directivity_and_widths_of_the_worked_example(record):
-    """A 15-element design solved by moments in C. A. Balanis, Antenna Theory, section 10.3 (Thiele's method; from memory).
-
-    Reflector 0.5, driven element 0.47, thirteen directors 0.406 wavelengths long, radius 0.003, reflector at 0.25, directors 0.34
-    apart: 14.64 dB, half-power widths 26.79 deg (E) and 27.85 deg (H).  That solution has filaments, whose ends differ from those
-    of tubes by about a radius: elements 1.5 % longer change the optimised arrays above by a few tenths of a decibel, hence 0.3 dB,
-    and the widths by half as much in proportion, hence 1 deg.
-    """
-    lengths = [0.5, 0.47] + [0.406] * 13
-    places = [-0.25, *(0.34 * i for i in range(14))]
-    wires = [Wire((-0.5 * q, 0.0, z), (0.5 * q, 0.0, z), 0.003) for q, z in zip(lengths, places, strict=True)]
-    solved = solve_alone(Antenna("array", wires, [Port("p", 1)]), mesh=LIGHT)
-    source = "Balanis, section 10.3 (memory)"
-    forwards = directivity(solved)
-    back = directivity(solved, theta=pi)
-    record(
-        "15-element Yagi-Uda: directivity [dB]", decibels(forwards), 14.64, absolute=0.3, source=source,
-        wrong=[decibels(back), 14.64 - 2.15, 14.0],
-    )  # fmt: skip
-    for plane, phi, published in (("E", 0.0, 26.79), ("H", 0.5 * pi, 27.85)):
-        half = brentq(lambda t, at=phi: directivity(solved, theta=t, phi=at) - 0.5 * forwards, 0.05, 0.4)
-        record(
-            f"15-element Yagi-Uda: width in the {plane} plane [deg]", 2.0 * np.degrees(half), published, absolute=1.0,
-            source=source, wrong=[78.0, published + 3.0],
-        )  # fmt: skip
 
 
 # --- crossed short dipoles

@@ -19,11 +19,13 @@ from scipy.optimize import brentq
 import references as ref
 from dipole_models import (
     FREQUENCY_HZ,
+    SLENDER,
     K,
     admittance,
     dipole,
     hallen_admittance,
     integral_of_current,
+    limits,
     radiated_power,
     sinusoid,
     solve_alone,
@@ -143,21 +145,6 @@ def test_resonant_length__is_the_handbooks(record, value):
 
 
 # --- theory of slender dipoles
-
-
-SLENDER = 10.0 ** -np.arange(4.0, 8.6, 0.5)
-
-
-def limits(omega, values, first):
-    """Return the leading coefficient of values = sum c_n/Omega^n, n from ``first``, and how far it is uncertain.
-
-    Fits of three, four and five terms; the middle one is taken and the largest change is its uncertainty.
-    """
-    found = []
-    for terms in (3, 4, 5):
-        table = np.array([omega ** -float(n) for n in range(first, first + terms)]).T
-        found.append(np.linalg.lstsq(table, np.array(values), rcond=None)[0][0])
-    return found[1], max(abs(found[0] - found[1]), abs(found[2] - found[1]))
 
 
 @pytest.mark.parametrize("h", [0.1, 0.18, 0.35, 0.625])
