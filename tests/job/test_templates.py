@@ -6,14 +6,20 @@ import numpy as np
 import pytest
 
 from elbowroom import random_disc
+from elbowroom.base.constants import wavelength_of
 from elbowroom.base.errors import ExportError, JobFileError
+from elbowroom.geometry.antennas import Antenna
+from elbowroom.geometry.grounds import PerfectGround
 from elbowroom.geometry.mesh import mesh_settings
+from elbowroom.geometry.networks import Network
 from elbowroom.geometry.wires import segment_distances
 from elbowroom.job.checks import check_station
 from elbowroom.job.jobfile import read_job
 from elbowroom.job.jobtables import SECTIONS, BeamTable
+from elbowroom.job.oneantenna import alone, solve_alone
 from elbowroom.job.solve import solution_key, solve
 from elbowroom.job.templates import TEMPLATES, template_files, write_template
+from elbowroom.radiation.solution import antenna_power_gain
 from elbowroom.system.discretisation import FarSettings
 from elbowroom.system.self_block import NearSettings
 
@@ -52,6 +58,7 @@ def test_log_periodic__is_the_station_that_its_files_say():
     assert np.abs(job.layout.positions - again.positions).max() <= 0.5e-3 * (1 + 1e-9)
     antenna = job.station().placed[0].antenna
     assert (len(antenna.wires), len(antenna.network.lines), [p.name for p in antenna.ports]) == (20, 18, ["x", "y"])
+    assert [branch.resistance_ohm for branch in antenna.network.branches] == [250.0, 250.0]
     # no wire of one antenna reaches into the circle of another, however both are turned
     reach = max(np.hypot(*end[:2]) for wire in antenna.wires for end in (wire.start, wire.end))
     offsets = job.layout.positions[:, None] - job.layout.positions[None]
@@ -61,6 +68,22 @@ def test_log_periodic__is_the_station_that_its_files_say():
     heights = sorted({wire.start[2] for wire in antenna.wires})
     assert 0.7 < heights[0] < 0.75
     assert heights[-1] == 1.95
+
+
+@pytest.mark.parametrize("frequency", [158e6, 245e6])
+def test_log_periodic__resistor_at_the_feeders_end_keeps_the_beam_whole(frequency):
+    """Without it, long dipoles and open end resonate: realised gain towards the zenith drops by far more than the resistor costs."""
+    antenna = read_job(DEMO / "log-periodic" / "job.toml").station().placed[0].antenna
+    bare = Antenna("bare", antenna.wires, antenna.ports, antenna.loads, antenna.feeds, Network(antenna.network.lines))
+
+    def gain_db(design, at):
+        solution = solve_alone(alone(design, PerfectGround()), at)
+        towards = solution.embedded_patterns([0.0], [0.0], ports=[0])
+        gain = antenna_power_gain(towards, 1.0 / 100.0, wavelength_of(at)).sum()
+        return 10.0 * np.log10(gain)
+
+    assert gain_db(antenna, frequency) > 5.0
+    assert gain_db(bare, frequency) < gain_db(antenna, frequency) - 1.0
 
 
 def test_demo__is_the_station_that_its_readme_says():
