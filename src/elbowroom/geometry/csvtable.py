@@ -21,6 +21,9 @@ import numpy as np
 from elbowroom.base.arrays import FloatArray
 from elbowroom.base.errors import JobFileError
 
+_UNITS = {"_s_per_m": "siemens per metre", "_hz": "hertz", "_m": "metres", "_deg": "degrees"}
+"""Units by how columns end; others are plain numbers."""
+
 
 @dataclass(frozen=True, eq=False)
 class Rows:
@@ -47,7 +50,14 @@ class Rows:
     problems: list[tuple[int, str]]
 
 
-def read_rows(file: Path, what: str, numbers: Mapping[str, float | None], texts: Sequence[str], required: Sequence[str]) -> Rows:
+def read_rows(
+    file: Path,
+    what: str,
+    numbers: Mapping[str, float | None],
+    texts: Sequence[str],
+    required: Sequence[str],
+    things: str = "antennas",
+) -> Rows:
     """Read a CSV file whose first line names the columns.
 
     Lines starting with ``#`` are comments.  A byte-order mark, any kind of line end, spaces round cells, blank lines and
@@ -60,11 +70,13 @@ def read_rows(file: Path, what: str, numbers: Mapping[str, float | None], texts:
     what : str
         What it should be, for messages: ``"layout"``.
     numbers : mapping of str to float or None
-        Columns of numbers and their defaults; names end in their unit, ``_m`` or ``_deg``.
+        Columns of numbers and their defaults; names end in their unit, ``_m``, ``_deg``, ``_hz`` or ``_s_per_m``, or have none.
     texts : sequence of str
         Columns of text.
     required : sequence of str
         Columns that must be there.
+    things : str, optional
+        What lines stand for.
 
     Raises
     ------
@@ -74,7 +86,7 @@ def read_rows(file: Path, what: str, numbers: Mapping[str, float | None], texts:
     columns = (*texts[:1], *numbers, *texts[1:])
     records, problems = _split_records(_read_text(file))
     if not records:
-        fail_table(file, what, problems or [(0, "no header line and no antennas")])
+        fail_table(file, what, problems or [(0, f"no header line and no {things}")])
     header_line, header = records[0]
     fault = _header_fault(header, required)
     if fault:  # no column can be told, so checks of the rows would only add noise
@@ -100,7 +112,7 @@ def read_rows(file: Path, what: str, numbers: Mapping[str, float | None], texts:
         for key in texts:
             cells_of[key].append(row.get(key, ""))
     if len(records) == 1 and all(line <= header_line for line, _ in problems):
-        problems.append((header_line, "no antennas below the header"))
+        problems.append((header_line, f"no {things} below the header"))
     table = np.array(values, dtype=float).reshape(-1, len(numbers))
     return Rows(header, lines, {key: tuple(cells) for key, cells in cells_of.items()}, table, problems)
 
@@ -202,13 +214,13 @@ def _header_problems(line: int, header: list[str], columns: Sequence[str], requi
 
 def _number(key: str, cell: str) -> tuple[float, str]:
     """Value of a cell, NaN if unusable, and what is wrong with it."""
-    unit = "metres" if key.endswith("_m") else "degrees"
+    unit = next((name for end, name in _UNITS.items() if key.endswith(end)), "")
     if not cell:
-        return math.nan, f"{key} is empty; a number in {unit} expected"
+        return math.nan, f"{key} is empty; a number{unit and f' in {unit}'} expected"
     try:
         value = float(cell.replace("_", "?"))  # 1_000 would be a number to Python
     except ValueError:
-        return math.nan, f"{key} = {cell!r} is not a number; {unit} expected, as in -12.5"
+        return math.nan, f"{key} = {cell!r} is not a number; {unit or 'a number'} expected, as in -12.5"
     if not math.isfinite(value):
         return math.nan, f"{key} = {cell!r} is not a finite number"
     return value, ""

@@ -19,6 +19,7 @@ from elbowroom.geometry.layouts import SAME_PLACE_M
 from elbowroom.geometry.mesh import Mesh, MeshSettings, build_mesh, mesh_settings
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import segment_distances, wire_end_points
+from elbowroom.job.groundchecks import ground_doubts
 
 RADIUS_LIMIT_WAVELENGTHS = 0.02
 """Wire radius beyond which the solver refuses."""
@@ -97,6 +98,7 @@ def check_station(station: Station, frequencies_hz: Sequence[float], mesh: str |
     problems += ground_problems
     if not any(p.severity == "error" for p in ground_problems):
         problems += _near_ground(station)
+        problems += [Problem("warning", text) for text in ground_doubts(station, frequencies_hz)]
         problems += _elements(station, frequencies_hz, settings)
     return sorted(problems, key=lambda p: p.severity != "error")
 
@@ -174,7 +176,7 @@ class StationMeshes:
     def __init__(self, station: Station) -> None:
         from elbowroom.system.discretisation import grounded_ends
 
-        conducting = station.ground.conducting
+        free, conducting = station.ground.open_below, station.ground.conducting
         groups: dict[tuple[int, bytes], tuple[Placed, np.ndarray, int]] = {}
         designs = station.designs
         design_index = {id(d): i for i, d in enumerate(designs)}
@@ -186,7 +188,7 @@ class StationMeshes:
             stance = (design, placed.attitude, placed.position[2])
             if stance not in ends_of:
                 ends_of[stance] = (
-                    grounded_ends(placed, conducting=True) if conducting else np.zeros((len(placed.antenna.wires), 2), dtype=bool)
+                    np.zeros((len(placed.antenna.wires), 2), dtype=bool) if free else grounded_ends(placed, conducting=conducting)
                 )
             ends = ends_of[stance]
             key = (design, ends.tobytes())
@@ -211,7 +213,7 @@ class StationMeshes:
 
 
 def _near_ground(station: Station) -> Iterator[Problem]:
-    """Wires so low over a conducting ground that their image is as near as another wire that would be doubted."""
+    """Wires so low over a ground that their image is as near as another wire that would be doubted."""
     from elbowroom.system.discretisation import GROUND_CONTACT_M
 
     if station.ground.open_below:
@@ -399,11 +401,12 @@ def _thickness(design: Antenna, frequencies_hz: Sequence[float]) -> Iterator[Pro
 
 
 def _ground(station: Station) -> Iterator[Problem]:
-    """Wires below, in or almost on a perfect ground; antennas alike are told once."""
+    """Wires below, in or almost on a ground; antennas alike are told once."""
     from elbowroom.system.discretisation import GROUND_CONTACT_M
 
-    if not station.ground.conducting:
+    if station.ground.open_below:
         return
+    conducting = station.ground.conducting
     found: dict[tuple[str, int, str], list[str]] = {}
     for placed in station:
         height = placed.to_station(np.array([[w.start, w.end] for w in placed.antenna.wires]))[..., 2]
@@ -413,10 +416,12 @@ def _ground(station: Station) -> Iterator[Problem]:
                 text = f"reaches {-low:.3g} m below the ground (z = 0); raise the antenna with up_m or change its wires"
             elif high <= GROUND_CONTACT_M:
                 text = "lies in the ground's surface and can carry no field; raise it"
+            elif not conducting and low <= GROUND_CONTACT_M:
+                text = "ends on the ground; wires that end on or enter soil are not modelled; raise the antenna with up_m"
             elif GROUND_CONTACT_M < low < wire.radius:
                 text = (
-                    f"comes within {low * 1e3:.3g} mm of the ground, less than its radius ({wire.radius * 1e3:.3g} mm); end it "
-                    "on z = 0 to join it to the ground, or raise it"
+                    f"comes within {low * 1e3:.3g} mm of the ground, less than its radius ({wire.radius * 1e3:.3g} mm); "
+                    f"{'end it on z = 0 to join it to the ground, or ' if conducting else ''}raise it"
                 )
             else:
                 continue

@@ -11,6 +11,23 @@ key                              meaning
 ``[station] antenna``            antenna file of all antennas whose ``antenna`` column is empty
 ``[station.antennas] NAME``      antenna file of the antennas whose ``antenna`` column says NAME
 ``[station] ground``             ``"perfect"`` (conducting plane z = 0) or ``"free-space"``; perfect by default
+``[station.ground] kind``        instead: ``"soil"``, or ``"mesh-on-soil"``: a square wire mesh, bonded at its crossings,
+                                 that lies on soil and covers all of it
+``[station.ground]               real part of the soil's relative permittivity, 1 to 100
+relative_permittivity``
+``[station.ground]               its conductivity, all losses included [S/m]
+conductivity_s_per_m``
+``[station.ground] file``        instead of both: CSV file with the columns ``frequency_hz``,
+                                 ``relative_permittivity`` and ``conductivity_s_per_m``, interpolated linearly, never
+                                 outside its range
+``[station.ground]               instead of the permittivity: volume of water over volume of soil, 0 to 0.55, from which
+water_content``                  it follows by the polynomial of Topp, Davis and Annan (1980), 1 MHz to 1 GHz
+``[station.ground] pitch_m,      distance and radius of the mesh's wires [m]
+wire_radius_m``
+``[station.ground]               their metal [S/m], [-]; no loss by default
+wire_conductivity_s_per_m,
+wire_relative_permeability``
+``[station.ground] tolerance``   error of the soil's kernels times distance; 1e-5 by default
 ``[station] turn_deg``           turn of the whole station, its antennas included, about the station's reference
                                  point, from east towards north [deg]; 0 by default
 ``[station] shift_east_m,        shift of the whole station, after the turn [m]; 0 by default
@@ -63,12 +80,13 @@ from typing import Any
 
 from elbowroom.base.errors import GeometryError, JobFileError
 from elbowroom.geometry.antennas import Antenna
-from elbowroom.geometry.grounds import GROUNDS
+from elbowroom.geometry.grounds import GROUNDS, Ground, PerfectGround
 from elbowroom.geometry.layouts import Layout, read_layout
 from elbowroom.geometry.offsets import Offsets, displaced, read_offsets
 from elbowroom.geometry.stations import PortName
 from elbowroom.job.antennafile import read_antenna
 from elbowroom.job.damage import AMPLIFIER_OFF, Damage, read_damage
+from elbowroom.job.jobgrounds import read_ground
 from elbowroom.job.jobmodel import Beam as Beam
 from elbowroom.job.jobmodel import Job as Job
 from elbowroom.job.jobmodel import azimuth_to_phi_deg as azimuth_to_phi_deg
@@ -118,16 +136,26 @@ def read_job(path: str | Path) -> Job:
     if not isinstance(title, str) or not title.isprintable():
         problems.append(f"title = {shown(title)}: expected one line of text in quotes")
     parts: dict[str, Any] = {}
+    ground_table: dict[str, Any] | None = None
     for key, model in SECTIONS.items():
         if key in ("station", "band") and key not in table:
             problems.append(f"[{key}] is missing")
         else:
-            parts[key] = validate_table(model, table.get(key, {}), problems, (key,))
+            entry = table.get(key, {})
+            if key == "station" and isinstance(entry, dict) and isinstance(entry.get("ground"), dict):
+                entry = dict(entry)
+                ground_table = entry.pop("ground")
+            parts[key] = validate_table(model, entry, problems, (key,))
     beams = _beams(table.get("beam", []), problems)
     folder = file.parent
     offsets: Offsets | None = None
     damage, terminations = Damage(), Terminations()
     station_table = parts.get("station")
+    ground: Ground = PerfectGround()
+    if ground_table is not None:
+        ground = read_ground(folder, ground_table, () if parts.get("band") is None else parts["band"].frequencies(), problems)
+    elif station_table is not None:
+        ground = GROUNDS[station_table.ground]
     layout: Layout | None = None
     designs: dict[str, Antenna] | None = None
     antenna_paths: dict[str, Path] = {}
@@ -158,7 +186,7 @@ def read_job(path: str | Path) -> Job:
         layout=layout,
         designs=designs,
         antenna_paths=antenna_paths,
-        ground=GROUNDS[station_table.ground],
+        ground=ground,
         turn_deg=station_table.turn_deg,
         shift_east_m=station_table.shift_east_m,
         shift_north_m=station_table.shift_north_m,

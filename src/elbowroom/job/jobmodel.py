@@ -246,7 +246,7 @@ class Job:
             key = f"station.antennas.{name}" if name else "station.antenna"
             lines.append(f"{key} = {path} ({design.name!r}, ports {ports}; {counted(counts[name], 'antenna')})")
         lines += [
-            f"station.ground = {self.ground.name}",
+            f"station.ground = {self.ground.describe()}",
             f"station.turn_deg = {self.turn_deg:.10g}",
             f"station.shift_east_m = {self.shift_east_m:.10g}",
             f"station.shift_north_m = {self.shift_north_m:.10g}",

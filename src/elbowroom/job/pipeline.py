@@ -12,6 +12,7 @@ import numpy as np
 from elbowroom.base.errors import ElbowroomError, GeometryError, JobFileError
 from elbowroom.geometry.stations import Station
 from elbowroom.job.checks import Problem, StationMeshes, check_station
+from elbowroom.job.groundchecks import HORIZON_NOTE, LOW_BEAM_DEG
 from elbowroom.job.jobfile import Job
 from elbowroom.job.jobtables import OnePort
 from elbowroom.job.plan import Prediction, predict_reduced, predict_station, refuse_if_too_large, total
@@ -117,9 +118,11 @@ class JobRun:
         return [*found, *(Problem("warning", text) for text in doubts)]
 
     def _beam_doubts(self) -> list[str]:
-        """Return which beams add up ports that point in different directions."""
+        """Return which beams add up ports that point in different directions, or point where soil leaves no far field."""
         doubts = []
         for beam in self.job.beams:
+            if self.station.ground.lossy and beam.zenith_angle_deg > LOW_BEAM_DEG:
+                doubts.append(f"beam {beam.name!r} points to a zenith angle of {beam.zenith_angle_deg:g} deg. {HORIZON_NOTE}")
             ports = beam.amplitudes(self.station) > 0.0
             angles = self.station.port_nominal_phi_rad[ports]
             if not angles.size:

@@ -130,13 +130,13 @@ class StationKeys:
         index_of = {id(d): i for i, d in enumerate(designs)}
         index = [index_of[id(p.antenna)] if id(p.antenna) in index_of else designs.index(p.antenna) for p in station]
         places, attitudes = _relative_places(station)
+        self._ground = station.ground
         self._inputs = {
             "model_version": MODEL_VERSION,
             "designs": [_design_inputs(d) for d in designs],
             "design_of_antenna": index,
             "places": places,
             "attitudes": attitudes,
-            "ground": station.ground,
             "reference_ohm": REFERENCE_OHM,
         }
 
@@ -144,7 +144,15 @@ class StationKeys:
         self, frequency_hz: float, mesh: MeshSettings, near: NearSettings, far: FarSettings, strategy: tuple[str, str]
     ) -> str:
         """Return the key of the station at a frequency [Hz]; see `solution_key`."""
-        own = {"frequency_hz": float(frequency_hz), "mesh": mesh, "near": near, "far": far, "strategy": strategy}
+        ground = self._ground.at(frequency_hz)
+        own = {
+            "ground": ground,
+            "frequency_hz": float(frequency_hz),
+            "mesh": mesh,
+            "near": near,
+            "far": far,
+            "strategy": strategy,
+        }
         return content_key(self._inputs | own)
 
 
@@ -189,7 +197,7 @@ def _to_record(solution: Solution, attributes: dict[str, Any], *, single_storage
         {
             "frequency_hz": d.frequency_hz,
             "reference_ohm": solution.reference_ohm,
-            "ground": d.station.ground.name,
+            "ground": d.station.ground.describe(),
             "antenna_names": [p.name for p in d.station],
             "port_names": [str(n) for n in d.station.port_names],
             "strategy": s.strategy,

@@ -1,0 +1,102 @@
+"""Doubts about a real ground under a station, with their numbers."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+
+import numpy as np
+
+from elbowroom.base.constants import VACUUM_PERMITTIVITY, wavelength_of, wavenumber_of
+from elbowroom.base.errors import ModelRangeError
+from elbowroom.geometry.grounds import FreeSpace, MeshOnSoil, PerfectGround, Soil
+from elbowroom.geometry.stations import Station
+
+LOWEST_OVER_SOIL_M = 0.04
+"""Height of wires over soil below which its kernels turn logarithmic: tables grow and lose digits [m]."""
+
+LATERAL_NEPERS = 3.0
+"""Attenuation in the soil across the station below which the wave that runs in it is still there on the other side."""
+
+LOW_BEAM_DEG = 80.0
+"""Zenith angle from which the far field over soil is no longer what is met at finite range."""
+
+HORIZON_NOTE = (
+    "Over soil the far field vanishes at the horizon; close to it the next term of the field, falling as the square of the "
+    "range, is what is met: at 150 MHz and a zenith angle of 85 degrees it is 11 % of the far field at a range of 100 m."
+)
+
+
+def ground_doubts(station: Station, frequencies_hz: Sequence[float]) -> Iterator[str]:
+    """Yield what is doubtful about the ground of a station, one line each; nothing over free space or a perfect plane.
+
+    Parameters
+    ----------
+    station : Station
+        Antennas and ground.
+    frequencies_hz : sequence of float
+        Frequencies it is to be solved at [Hz].
+    """
+    ground = station.ground
+    if isinstance(ground, FreeSpace | PerfectGround):
+        return
+    low, lowest = _lowest_wire(station)
+    if low < LOWEST_OVER_SOIL_M:
+        yield (
+            f"{lowest} comes within {low * 1e3:.3g} mm of the soil; below {LOWEST_OVER_SOIL_M * 1e3:g} mm the tables of its "
+            "kernels grow, and real soil is neither flat nor even on that scale"
+        )
+    if isinstance(ground, MeshOnSoil) and low < ground.pitch_m:
+        yield (
+            f"{lowest} comes within {low * 1e3:.3g} mm of the mesh, less than its pitch ({ground.pitch_m * 1e3:.3g} mm); so low "
+            "an antenna meets single wires of it, which the model averages"
+        )
+    worst: dict[str, tuple[float, str]] = {}
+    for frequency in frequencies_hz:
+        try:
+            here = ground.at(frequency)
+        except ModelRangeError:
+            # told where the job is read, and again where it is solved
+            continue
+        assert isinstance(here, Soil | MeshOnSoil)
+        soil = here.soil.at(frequency) if isinstance(here, MeshOnSoil) else here
+        loss = soil.conductivity_s_per_m / (2.0 * np.pi * frequency * VACUUM_PERMITTIVITY)
+        index = np.sqrt(soil.relative_permittivity - 1j * loss)
+        inside = wavelength_of(frequency) / float(index.real)
+        if isinstance(here, MeshOnSoil) and here.pitch_m > 0.25 * inside:
+            text = (
+                f"pitch of the mesh {here.pitch_m * 1e3:.4g} mm, at {frequency / 1e6:.6g} MHz {here.pitch_m / inside:.3g} "
+                f"wavelengths in the soil ({inside:.3g} m); the averaged boundary condition holds up to a quarter"
+            )
+            _keep(worst, "pitch", here.pitch_m / inside, text)
+        across = _width(station)
+        nepers = -float(index.imag) * wavenumber_of(frequency) * across
+        if soil.relative_permittivity > 1.0 and nepers < LATERAL_NEPERS and across > 2.0 * inside:
+            text = (
+                f"soil that hardly loses power: at {frequency / 1e6:.6g} MHz a wave in it falls by {nepers * 8.686:.2g} dB "
+                f"across the station's {across:.3g} m, over {across / inside:.3g} wavelengths; tables of the kernels grow to "
+                "follow it"
+            )
+            _keep(worst, "lateral", 1.0 / max(nepers, 1e-9), text)
+    for _, text in worst.values():
+        yield text
+
+
+def _keep(worst: dict[str, tuple[float, str]], kind: str, size: float, text: str) -> None:
+    if kind not in worst or size > worst[kind][0]:
+        worst[kind] = (size, text)
+
+
+def _lowest_wire(station: Station) -> tuple[float, str]:
+    """Return the smallest height of a wire [m], and which it is."""
+    best, where = np.inf, ""
+    for placed in station:
+        heights = placed.to_station(np.array([[w.start, w.end] for w in placed.antenna.wires]))[..., 2].min(axis=1)
+        index = int(np.argmin(heights))
+        if heights[index] < best:
+            best, where = float(heights[index]), f"antenna {placed.name!r} ({placed.antenna.name!r}), wire {index}"
+    return best, where
+
+
+def _width(station: Station) -> float:
+    """Return the diagonal of the rectangle that holds the antennas [m]."""
+    return float(np.hypot(*np.ptp(station.positions[:, :2], axis=0)))

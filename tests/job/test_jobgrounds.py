@@ -1,0 +1,187 @@
+"""Grounds in job files, in keys of the store, and the doubts about them."""
+
+import numpy as np
+import pytest
+
+from elbowroom.base.errors import JobFileError
+from elbowroom.geometry.antennas import Antenna, Port
+from elbowroom.geometry.grounds import FreeSpace, MeshOnSoil, MoistSoil, PerfectGround, Soil, TabulatedSoil
+from elbowroom.geometry.mesh import mesh_settings
+from elbowroom.geometry.stations import Placed, Station
+from elbowroom.geometry.wires import Wire
+from elbowroom.job.checks import check_station
+from elbowroom.job.groundchecks import HORIZON_NOTE
+from elbowroom.job.jobfile import read_job
+from elbowroom.job.pipeline import JobRun
+from elbowroom.job.solve import solution_key
+from elbowroom.system.discretisation import FarSettings
+from elbowroom.system.self_block import NearSettings
+
+CROSS = 'shape = "crossed-dipoles"\narm_length_m = 0.6\nheight_m = 1.0\nwire_radius_m = 0.005\n'
+JOB = """
+[station]
+layout = "layout.csv"
+antenna = "cross.toml"
+{ground}
+[band]
+frequency_hz = [150e6, 60e6]
+[[beam]]
+name = "low"
+port = "x"
+zenith_angle_deg = 85
+"""
+SOIL = "[station.ground]\nkind = 'soil'\n"
+MESH = "[station.ground]\nkind = 'mesh-on-soil'\n"
+
+
+@pytest.fixture
+def job(tmp_path):
+    (tmp_path / "cross.toml").write_text(CROSS)
+    (tmp_path / "layout.csv").write_text("name,east_m,north_m\nA1,0,0\nA2,3,0\n")
+    (tmp_path / "soil.csv").write_text("frequency_hz,relative_permittivity,conductivity_s_per_m\n50e6,12,0.01\n200e6,9,0.02\n")
+
+    def read(ground):
+        (tmp_path / "job.toml").write_text(JOB.format(ground=ground))
+        return read_job(tmp_path / "job.toml")
+
+    return read
+
+
+@pytest.mark.parametrize(
+    ("ground", "expected"),
+    [
+        ("", PerfectGround()),
+        ('ground = "free-space"', FreeSpace()),
+        ("[station.ground]\nkind = 'free-space'", FreeSpace()),
+        (SOIL + "relative_permittivity = 10\nconductivity_s_per_m = 0.01", Soil(10.0, 0.01)),
+        (SOIL + "water_content = 0.2\nconductivity_s_per_m = 0.01\ntolerance = 1e-6", MoistSoil(0.2, 0.01, 1e-6)),
+        (SOIL + "file = 'soil.csv'", TabulatedSoil((50e6, 200e6), (12.0, 9.0), (0.01, 0.02))),
+        (
+            MESH + "relative_permittivity = 10\nconductivity_s_per_m = 0\npitch_m = 0.1\nwire_radius_m = 1e-3",
+            MeshOnSoil(Soil(10.0, 0.0), 0.1, 1e-3),
+        ),
+        (
+            MESH + "file = 'soil.csv'\npitch_m = 0.1\nwire_radius_m = 1e-3\nwire_conductivity_s_per_m = 5e6\n"
+            "wire_relative_permeability = 50",
+            MeshOnSoil(TabulatedSoil((50e6, 200e6), (12.0, 9.0), (0.01, 0.02)), 0.1, 1e-3, 5e6, 50.0),
+        ),
+    ],
+)
+def test_job__has_the_ground_that_its_table_describes(job, ground, expected):
+    made = job(ground)
+    assert made.ground == expected
+    assert made.station().ground == expected
+    assert f"station.ground = {expected.describe()}" in made.resolved_lines()
+
+
+@pytest.mark.parametrize(
+    ("ground", "told"),
+    [
+        ("[station.ground]\nrelative_permittivity = 10", "station.ground.kind: required key is missing"),
+        ("[station.ground]\nkind = 'sole'", 'station.ground.kind = "sole": expected'),
+        (SOIL, "station.ground: none given; expected one of relative_permittivity, water_content and file"),
+        (SOIL + "relative_permittivity = 10", "conductivity_s_per_m is missing beside relative_permittivity"),
+        (SOIL + "relative_permittivity = 10\nwater_content = 0.1", "relative_permittivity and water_content given"),
+        (SOIL + "relative_permittivity = 0.5\nconductivity_s_per_m = 0.01", "station.ground: relative_permittivity 0.5"),
+        (SOIL + "relative_permittivity = nan\nconductivity_s_per_m = 0.01", "station.ground.relative_permittivity = nan"),
+        (SOIL + "file = 'soil.csv'\nconductivity_s_per_m = 0.01", "beside file, which has a column of it"),
+        (SOIL + "file = 'sail.csv'", "station.ground.file: "),
+        (SOIL + "relative_permitivity = 10\nconductivity_s_per_m = 0.01", "did you mean 'relative_permittivity'?"),
+        (SOIL + "relative_permittivity = 10\nconductivity_s_per_m = 0.01\npitch_m = 0.1", 'kind = "mesh-on-soil" expected'),
+        (MESH + "relative_permittivity = 10\nconductivity_s_per_m = 0.01\npitch_m = 0.1", "wire_radius_m missing"),
+        (
+            MESH + "relative_permittivity = 10\nconductivity_s_per_m = 0.01\npitch_m = 0.1\nwire_radius_m = 0.2",
+            "station.ground: wire_radius_m 0.2: expected a number from above 0 to 0.01",
+        ),
+        ("[station.ground]\nkind = 'perfect'\npitch_m = 0.1", 'pitch_m is given, which kind = "perfect" has no use for'),
+    ],
+)
+def test_job__bad_grounds_are_told(job, ground, told):
+    with pytest.raises(JobFileError) as caught:
+        job(ground)
+    assert told in str(caught.value)
+
+
+def test_job__soil_must_be_known_at_every_frequency(job, tmp_path):
+    (tmp_path / "short.csv").write_text("frequency_hz,relative_permittivity,conductivity_s_per_m\n100e6,12,0.01\n200e6,9,0.02\n")
+    with pytest.raises(JobFileError, match="60 MHz lies outside its 100 to 200 MHz"):
+        job(SOIL + "file = 'short.csv'")
+
+
+def key(ground, frequency_hz=150e6):
+    wire = Wire((0.0, -0.4, 1.0), (0.0, 0.4, 1.0), 0.002)
+    station = Station([Placed(Antenna("d", [wire], [Port("p", 0)]), (0, 0, 0))], ground)
+    return solution_key(station, frequency_hz, mesh_settings("default"), NearSettings(), FarSettings(), ("direct", "mixed"))
+
+
+def test_store_key__knows_the_ground_as_it_is_at_the_frequency():
+    table = TabulatedSoil((50e6, 150e6), (12.0, 10.0), (0.03, 0.02))
+    assert key(table) == key(Soil(10.0, 0.02))
+    # what lies elsewhere in the table changes nothing
+    assert key(table) == key(TabulatedSoil((100e6, 150e6), (99.0, 10.0), (0.0, 0.02)))
+    assert key(MeshOnSoil(table, 0.1, 1e-3)) == key(MeshOnSoil(Soil(10.0, 0.02), 0.1, 1e-3))
+    different = [
+        PerfectGround(), FreeSpace(), Soil(10.0, 0.02), Soil(10.0, 0.021), Soil(10.1, 0.02), Soil(10.0, 0.02, 1e-6),
+        MeshOnSoil(Soil(10.0, 0.02), 0.1, 1e-3), MeshOnSoil(Soil(10.0, 0.02), 0.11, 1e-3),
+        MeshOnSoil(Soil(10.0, 0.02), 0.1, 1e-3, 1e6), MeshOnSoil(Soil(10.0, 0.02), 0.1, 2e-3),
+    ]  # fmt: skip
+    assert len({key(g) for g in different}) == len(different)
+
+
+def doubts(ground, height=1.0, frequencies=(150e6,), places=((0.0, 0.0), (30.0, 0.0))):
+    wire = Wire((0.0, -0.4, height), (0.0, 0.4, height), 0.002)
+    design = Antenna("d", [wire], [Port("p", 0)])
+    station = Station([Placed(design, (*p, 0.0)) for p in places], ground)
+    return [str(p) for p in check_station(station, frequencies)]
+
+
+def test_checks__say_nothing_of_ordinary_ground():
+    for ground in (Soil(10.0, 0.02), MeshOnSoil(Soil(10.0, 0.02), 0.1, 1e-3), MoistSoil(0.2, 0.02)):
+        assert doubts(ground) == []
+
+
+@pytest.mark.parametrize(
+    ("ground", "height", "said"),
+    [
+        (Soil(10.0, 0.02), 0.03, ("comes within 30 mm of the soil", "40 mm")),
+        (MeshOnSoil(Soil(10.0, 0.02), 0.1, 1e-3), 0.08, ("within 80 mm of the mesh", "pitch (100 mm)")),
+        # wavelength 2 m, 0.63 m in the soil
+        (MeshOnSoil(Soil(10.0, 0.02), 0.2, 1e-3), 1.0, ("pitch of the mesh 200 mm", "0.319 wavelengths", "up to a quarter")),
+        (Soil(30.0, 1e-4), 1.0, ("hardly loses power", "dB across the station's 30 m")),
+    ],
+)
+def test_checks__doubts_have_their_numbers(ground, height, said):
+    (problem,) = doubts(ground, height)
+    assert problem.startswith("warning: ")
+    for part in said:
+        assert part in problem
+
+
+def test_checks__numbers_are_of_the_worst_frequency():
+    (problem,) = doubts(MeshOnSoil(Soil(10.0, 0.02), 0.2, 1e-3), frequencies=(150e6, 300e6, 50e6))
+    assert "300 MHz" in problem
+    index = np.sqrt(10.0 - 0.02j / (2 * np.pi * 300e6 * 8.8541878e-12)).real
+    assert f"{0.2 * index / 0.99930819:.3g} wavelengths" in problem
+
+
+@pytest.mark.parametrize(
+    ("height", "said"), [(0.0, "lies in the ground's surface"), (-0.1, "below the ground"), (0.001, "less than its radius")]
+)
+def test_checks__wires_in_soil_are_errors(height, said):
+    problems = doubts(Soil(10.0, 0.02), height, places=((0.0, 0.0),))
+    assert [p for p in problems if p.startswith("error")]
+    assert said in problems[0]
+    assert "join it to the ground" not in problems[0]
+
+
+def test_checks__a_foot_on_soil_is_an_error():
+    design = Antenna("mast", [Wire((0.0, 0.0, 0.0), (0.0, 0.0, 0.5), 0.002)], [Port("p", 0, position=0.5)])
+    station = Station([Placed(design, (0.0, 0.0, 0.0))], Soil(10.0, 0.02))
+    assert "wires that end on or enter soil are not modelled" in str(check_station(station, (150e6,))[0])
+    assert check_station(Station(station.placed, PerfectGround()), (150e6,)) == []
+
+
+def test_job__beams_near_the_horizon_over_soil_are_doubted(job):
+    over_soil = job(SOIL + "relative_permittivity = 10\nconductivity_s_per_m = 0.01")
+    assert any(HORIZON_NOTE in str(p) for p in JobRun(over_soil).problems())
+    assert not any(HORIZON_NOTE in str(p) for p in JobRun(job("")).problems())
