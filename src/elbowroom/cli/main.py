@@ -16,6 +16,7 @@ from elbowroom.cli.antenna import antenna
 from elbowroom.cli.common import FREQUENCIES, JOB, exit_on, make_screen, modes, open_job, solve_all
 from elbowroom.cli.ports import ports
 from elbowroom.cli.results import compare, draw, export, run
+from elbowroom.cli.store import store
 
 INTERRUPTED_EXIT_CODE = 130
 TERMINATED_EXIT_CODE = 143
@@ -195,7 +196,7 @@ def solve(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> Non
     exit_on(failures)
 
 
-for _command in (antenna, compare, draw, export, ports, run):
+for _command in (antenna, compare, draw, export, ports, run, store):
     cli.add_command(_command)
 
 

@@ -14,7 +14,7 @@ import os
 import secrets
 import shutil
 import time
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from pathlib import Path
 
 from elbowroom.base.errors import StoreError
@@ -24,6 +24,7 @@ TEMPORARY = ".writing-"
 STALE_AFTER_SECONDS = 3600.0
 """A temporary file that has not changed for so long belongs to no living process: a write takes seconds."""
 
+_PIECE = 1 << 20
 _PASSING = (errno.EAGAIN, errno.EBUSY, errno.EINTR, errno.ESTALE, errno.ETIMEDOUT)
 """Errors of network disks that may be gone at the next attempt."""
 _PAUSES_SECONDS = (0.02, 0.1, 0.5, 1.0)
@@ -113,8 +114,7 @@ class Disk:
         """
         path = self.folder / name
         with self.temporary("new") as (file, temporary):
-            if file.write(content) != len(content):
-                raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
+            write_all(file, content)
             os.fsync(file.fileno())
             try:
                 self._link(temporary, path)
@@ -128,8 +128,7 @@ class Disk:
         try:
             with open(path, "xb", buffering=0) as file:
                 try:
-                    if file.write(content) != len(content):
-                        raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
+                    write_all(file, content)
                     os.fsync(file.fileno())
                 except OSError:
                     with contextlib.suppress(OSError):
@@ -229,6 +228,37 @@ class Disk:
 
     def _rename(self, source: Path, target: Path) -> None:
         os.replace(source, target)
+
+
+def copy_bytes(source: io.FileIO, target: io.FileIO, n_bytes: int, note: Callable[[bytes], object] | None = None) -> None:
+    """Copy some bytes from where one open file stands to where another stands, telling each piece.
+
+    Raises
+    ------
+    OSError
+        If the source ends too soon, or the system refuses to read or write.
+    """
+    while n_bytes:
+        piece = source.read(min(n_bytes, _PIECE))
+        if not piece:
+            raise OSError(errno.EIO, "the file ended too soon")
+        if note is not None:
+            note(piece)
+        write_all(target, piece)
+        n_bytes -= len(piece)
+
+
+def write_all(file: io.FileIO, content: bytes) -> None:
+    """Write all bytes to an unbuffered file, which may take fewer at a time.
+
+    Raises
+    ------
+    OSError
+        If the system refuses.
+    """
+    rest = memoryview(content)
+    while len(rest):
+        rest = rest[file.write(rest) :]
 
 
 def same_file(path: Path, identity: tuple[int, int]) -> bool:

@@ -14,6 +14,7 @@ each other's units.
 from __future__ import annotations
 
 import contextlib
+import io
 import os
 import secrets
 import stat
@@ -23,7 +24,7 @@ from pathlib import Path
 
 from elbowroom.base.errors import StoreError
 from elbowroom.store.claims import SILENCE_SECONDS, Claim, Claims, Holder
-from elbowroom.store.disk import STALE_AFTER_SECONDS, Disk, explained, flush_folder, is_damage
+from elbowroom.store.disk import STALE_AFTER_SECONDS, Disk, copy_bytes, explained, flush_folder, is_damage
 from elbowroom.store.header import NotAUnit, read_header
 from elbowroom.store.records import (
     DamageReport,
@@ -36,6 +37,7 @@ from elbowroom.store.records import (
 )
 from elbowroom.store.unitfile import (
     OtherSchema,
+    check_bytes,
     check_schema,
     check_written,
     read_unit,
@@ -254,6 +256,57 @@ class Hdf5Store:
             return False
         except OSError as cause:
             raise explained(cause, path, "cannot be removed") from cause
+        return True
+
+    def adopt(self, key: str, source: io.FileIO, n_bytes: int) -> bool:
+        """Store a unit that is a file already, byte for byte, after checking every byte of the copy.
+
+        Parameters
+        ----------
+        key : str
+            Its content key.
+        source : unbuffered binary file
+            Open for reading, standing at the first byte of the unit.
+        n_bytes : int
+            Length of the unit [bytes].
+
+        Returns
+        -------
+        bool
+            Whether it was stored; False where a sound unit is there already.  One that is not sound is set aside.
+
+        Raises
+        ------
+        StoreError
+            If the unit is damaged, of another key or schema, or the disk refuses; the store is then as it was.
+        """
+        path = self.path_of(key)
+        self._disk.create_folder()
+        try:
+            with self._disk.temporary(key[:16]) as (file, temporary):
+                copy_bytes(source, file, n_bytes)
+                os.fsync(file.fileno())
+                file.close()
+                with open(temporary, "rb", buffering=0) as made:
+                    check_bytes(made, self._schema, key)
+                if os.path.lexists(path):
+                    there = os.lstat(path)
+                    reason = "not an ordinary file"
+                    if stat.S_ISREG(there.st_mode):
+                        try:
+                            with open(path, "rb", buffering=0) as found:
+                                check_bytes(found, self._schema, key)
+                            return False
+                        except (NotAUnit, OtherSchema) as cause:
+                            reason = str(cause)
+                    self._set_aside(path, reason, (there.st_dev, there.st_ino))
+                self._disk.replace(temporary, path)
+            flush_folder(self._folder)
+        except (NotAUnit, OtherSchema) as cause:
+            msg = f"not added: {cause}"
+            raise StoreError(msg, path=path) from cause
+        except OSError as cause:
+            raise explained(cause, path, "cannot be written") from cause
         return True
 
     def read_file(self, path: str | Path) -> Record:

@@ -172,8 +172,8 @@ def read_unit(file: io.FileIO, schema: Schema, key: str | None) -> Record:
     return record
 
 
-def check_bytes(file: io.FileIO, schema: Schema, key: str | None) -> None:
-    """Check every byte of an open file, its key and schema, without HDF5; errors as :func:`read_unit`."""
+def check_bytes(file: io.FileIO, schema: Schema | None, key: str | None) -> Header:
+    """Check every byte of an open file, its key and schema (any if None), without HDF5; errors as :func:`read_unit`."""
     header = read_header(file, os.fstat(file.fileno()).st_size)
     found = sum_of(file, header)
     if found != header.sha256:
@@ -182,7 +182,35 @@ def check_bytes(file: io.FileIO, schema: Schema, key: str | None) -> None:
     if key is not None and header.key != key:
         msg = f"holds the unit {header.key}"
         raise NotAUnit(msg)
-    check_schema(header, schema)
+    if schema is not None:
+        check_schema(header, schema)
+    return header
+
+
+def read_description(file: io.FileIO) -> tuple[Header, dict[str, Any], dict[str, str]]:
+    """Return header, attributes and provenance of a unit of any schema, without reading its arrays or summing its bytes.
+
+    Parameters
+    ----------
+    file : unbuffered binary file
+        Open for reading.
+
+    Returns
+    -------
+    tuple of Header, dict, dict
+        What can be damaged unseen: only :func:`check_bytes` knows.
+
+    Raises
+    ------
+    NotAUnit
+        If it is seen to be damaged, or foreign.
+    OSError
+        From the operating system.
+    """
+    header = read_header(file, os.fstat(file.fileno()).st_size)
+    with _content_of(file) as content:
+        attributes = _read_attributes(content)
+        return header, attributes, {name: str(text) for name, text in content.attrs.items() if name != _IN_JSON}
 
 
 @contextmanager
