@@ -1,0 +1,85 @@
+"""Kernels between points over real ground, from a table."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from elbowroom.base.arrays import FloatArray
+from elbowroom.base.errors import ModelRangeError
+from elbowroom.kernels.point_kernels import PointKernels, Workspace
+from elbowroom.kernels.soil.fill_numba import fill_with_direct, fill_without
+from elbowroom.kernels.soil.table import SoilTable
+
+_LANES = 8
+
+
+def fill_soil(table: SoilTable, points: FloatArray, points2: FloatArray, work: Workspace, *, direct: bool) -> PointKernels:
+    """Return the kernels between two sets of points above a real ground.
+
+    Parameters
+    ----------
+    table : SoilTable
+        The ground's part.
+    points, points2 : float64 (3, Q), (3, Q')
+        Points in the station frame [m].
+    work : Workspace
+        Where the kernels are put; they last until it is used again.
+    direct : bool
+        Whether exp(-jkR)/R is part of the horizontal, vertical and charge kernels.
+
+    Returns
+    -------
+    PointKernels
+        Horizontal, vertical and charge kernels [1/m], cross kernel [1], each (2, Q, Q').
+
+    Raises
+    ------
+    ModelRangeError
+        If points lie where the table does not reach.
+    """
+    _check_reach(table, points, points2)
+    rows, count = points.shape[1], points2.shape[1]
+    # Planes whose distance is a large power of two would share the same few lines of the cache.
+    plane = rows * count + 72
+    flat = work.array("soil", (8 * plane,))
+    padded = np.empty((3, -(-count // _LANES) * _LANES))
+    padded[:, :count] = points2
+    padded[:, count:] = points2[:, -1:]
+    grid = np.array(
+        [
+            table.wavenumber / (2.0 * np.pi),
+            table.rho_scale_m,
+            1.0 / table.rho_per_node,
+            table.z_scale_m,
+            1.0 / table.z_per_node,
+            table.z_start / table.z_per_node,
+        ]
+    )
+    n_rho, n_z, parts = table.coefficients.shape
+    sizes = np.array([n_rho - 4, n_z - 4, n_z * parts], dtype=np.int32)
+    run = fill_with_direct if direct else fill_without
+    x, y, z = (np.ascontiguousarray(a) for a in points)
+    run(x, y, z, *padded, count, grid, sizes, table.coefficients.reshape(-1), flat, plane, np.empty(64, dtype=flat.dtype))
+    kernels = flat.reshape(8, plane)[:, : rows * count].reshape(4, 2, rows, count)
+    return PointKernels(kernels[0], kernels[1], kernels[2], kernels[3])
+
+
+def _check_reach(table: SoilTable, points: FloatArray, points2: FloatArray) -> None:
+    low = float(points[2].min() + points2[2].min())
+    high = float(points[2].max() + points2[2].max())
+    slack = 1e-9 * (1.0 + table.z_max_m)
+    if not (low >= table.z_min_m - slack and high <= table.z_max_m + slack):
+        msg = (
+            f"sums of heights above the ground: expected {table.z_min_m:g} to {table.z_max_m:g} m, which the ground's table "
+            f"covers, got {low:g} to {high:g} m"
+        )
+        raise ModelRangeError(msg)
+    # Corners of the boxes around the points first; all pairs only where that is not enough.
+    reach = [max(points[n].max() - points2[n].min(), points2[n].max() - points[n].min()) for n in (0, 1)]
+    farthest = float(np.hypot(*reach))
+    if farthest <= table.rho_max_m:
+        return
+    farthest = max(float(np.hypot(points[0, i] - points2[0], points[1, i] - points2[1]).max()) for i in range(points.shape[1]))
+    if not farthest <= table.rho_max_m * (1.0 + 1e-9):
+        msg = f"horizontal distance of points: expected at most {table.rho_max_m:g} m, which the ground's table covers, got {farthest:g} m"
+        raise ModelRangeError(msg)
