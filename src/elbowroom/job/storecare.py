@@ -97,22 +97,33 @@ class Needs:
         The job file.
     keys : frozenset of str
         Units of all its frequencies.
-    text : str
-        Text of the job file: units that were solved by a run of this very file are its own, whatever they are for.
+    run : JobRun
+        The job with its station: units of the same station at other frequencies of its band serve what is worked out between
+        solved frequencies.
     """
 
     path: Path
     keys: frozenset[str]
-    text: str
+    run: JobRun
 
     def includes(self, unit: UnitEntry) -> bool:
         """Return whether the job needs a unit."""
-        return unit.key in self.keys or unit.attributes.get("job_file") == self.text
+        if unit.key in self.keys:
+            return True
+        frequency = unit.attributes.get("frequency_hz")
+        if not is_current(unit) or isinstance(frequency, bool) or not isinstance(frequency, (int, float)):
+            return False
+        if not min(self.run.frequencies_hz) < frequency < max(self.run.frequencies_hz):
+            return False
+        try:
+            return self.run.key(float(frequency)) == unit.key
+        except ElbowroomError:
+            return False  # the station cannot be modelled there, so this unit is another's
 
 
 def needs_of(run: JobRun) -> Needs:
     """Return what a job needs of its store."""
-    return Needs(run.job.path, frozenset(run.key(f) for f in run.frequencies_hz), run.job.text)
+    return Needs(run.job.path, frozenset(run.key(f) for f in run.frequencies_hz), run)
 
 
 def jobs_beside(folder: Path) -> list[JobRun]:
