@@ -10,7 +10,10 @@ from elbowroom.kernels.point_kernels import PointKernels, Workspace
 from elbowroom.kernels.soil.fill_numba import fill_with_direct, fill_without
 from elbowroom.kernels.soil.table import SoilTable
 
-_LANES = 8
+_LANES = 16
+
+_BLOCK = 128
+"""Points of the second set worked on at a time: what is kept for them, and their part of the table, stay in the cache."""
 
 
 def fill_soil(table: SoilTable, points: FloatArray, points2: FloatArray, work: Workspace, *, direct: bool) -> PointKernels:
@@ -55,11 +58,19 @@ def fill_soil(table: SoilTable, points: FloatArray, points2: FloatArray, work: W
             table.z_start / table.z_per_node,
         ]
     )
-    n_rho, n_z, parts = table.coefficients.shape
-    sizes = np.array([n_rho - 4, n_z - 4, n_z * parts], dtype=np.int32)
+    nodes, stride, odd = table.aligned
+    n_rho, n_z, _ = table.coefficients.shape
+    sizes = np.array([n_rho - 4, n_z - 4, stride, odd, _BLOCK], dtype=np.int32)
+    kind = nodes.dtype
+    scratch = (
+        np.empty(2 * _BLOCK, dtype=kind),
+        np.empty(2 * _BLOCK, dtype=flat.dtype),
+        np.empty(8 * _BLOCK, dtype=kind),
+        np.empty(_BLOCK, dtype=np.int32),
+    )
     run = fill_with_direct if direct else fill_without
     x, y, z = (np.ascontiguousarray(a) for a in points)
-    run(x, y, z, *padded, count, grid, sizes, table.coefficients.reshape(-1), flat, plane, np.empty(64, dtype=flat.dtype))
+    run(x, y, z, *padded, count, grid, sizes, nodes, flat, plane, *scratch, np.empty(64, dtype=flat.dtype))
     kernels = flat.reshape(8, plane)[:, : rows * count].reshape(4, 2, rows, count)
     return PointKernels(kernels[0], kernels[1], kernels[2], kernels[3])
 

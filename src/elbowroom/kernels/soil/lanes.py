@@ -123,8 +123,8 @@ class Lanes:
 
 
 def size_of(kind: Any) -> int:
-    """Return the size of a floating-point type [bytes]."""
-    return 4 if isinstance(kind, ir.FloatType) else 8
+    """Return the size of a floating-point type or int32 [bytes]."""
+    return 8 if isinstance(kind, ir.DoubleType) else 4
 
 
 def transpose(rows: Sequence[Lanes]) -> list[Lanes]:

@@ -9,6 +9,7 @@ tabulated: near the origin the lowest height sets the scale, far away the wave t
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
@@ -69,6 +70,26 @@ class SoilTable:
     def nbytes(self) -> int:
         """Size of the coefficients [bytes]."""
         return int(self.coefficients.nbytes)
+
+    @cached_property
+    def aligned(self) -> tuple[FloatArray, int, int]:
+        """Return the coefficients as compiled code reads them: flat, elements between rows, elements to the odd copy.
+
+        Four nodes along Z are read at once, in two lines of the cache if they start on one.  In single precision two nodes
+        share a line: a second copy, one node on, serves places that start with an odd one.
+        """
+        n_rho, n_z, parts = self.coefficients.shape
+        dtype = self.coefficients.dtype
+        copies = 2 if dtype == np.float32 else 1
+        stride = (n_z + 1) // 2 * 2 * parts
+        flat = np.zeros(copies * n_rho * stride + 64, dtype=dtype)
+        start = -flat.ctypes.data % 64 // dtype.itemsize
+        flat = flat[start : start + copies * n_rho * stride]
+        places = flat.reshape(copies, n_rho, stride // parts, parts)
+        places[0, :, :n_z] = self.coefficients
+        if copies == 2:
+            places[1, :, : n_z - 1] = self.coefficients[:, 1:]
+        return flat, stride, n_rho * stride if copies == 2 else parts
 
     def to_arrays(self) -> dict[str, np.ndarray]:
         """Return everything as arrays, for a store."""
