@@ -11,9 +11,11 @@ import click
 
 if TYPE_CHECKING:
     from elbowroom.cli.screen import Screen
+    from elbowroom.job.engine.items import UnitFailure
     from elbowroom.job.pipeline import JobRun
 
 JOB = click.argument("job", type=click.Path(path_type=Path))
+JOBS = click.argument("jobs", metavar="JOB...", nargs=-1, required=True, type=click.Path(path_type=Path))
 FREQUENCIES = click.option(
     "--frequency-hz", "frequencies_hz", type=float, multiple=True, metavar="HZ",
     help="Only this frequency of the job; may be given several times.",
@@ -41,68 +43,15 @@ def open_job(job: Path, frequencies_hz: tuple[float, ...], screen: Screen) -> Jo
     return JobRun(read_job(job), frequencies_hz=frequencies_hz or None, report=lambda damage: screen.warn(str(damage)))
 
 
-def prepare(run: JobRun, screen: Screen) -> list:
-    """Show the settings and the doubts, refuse what cannot work, and return the plan."""
-    for line in run.job.resolved_lines():
-        screen.say(f"  {line}")
-    for problem in run.problems():
-        if problem.severity != "error":
-            screen.warn(problem.text)
-    return run.prepare()
-
-
-def solve_all(run: JobRun, screen: Screen) -> tuple[list[float], list]:
-    """Solve what the store lacks; return the frequencies that are solved and the failures."""
-    from elbowroom.cli.screen import SolveProgress, readable_seconds
-    from elbowroom.job.pipeline import Failure
-
-    units = prepare(run, screen)
-    missing = {u.frequency_hz: u.prediction.seconds for u in units if not u.stored}
-    screen.say(f"{len(units)} frequencies, {len(units) - len(missing)} in the store already, {len(missing)} to solve")
-    rows, solved, failures = [], [], []
-    with SolveProgress(screen, missing) as progress:
-        for frequency, outcome in zip(run.frequencies_hz, run.solutions(progress), strict=True):
-            progress.finished(frequency)
-            if isinstance(outcome, Failure):
-                failures.append(outcome)
-                screen.emit("failed", frequency_hz=frequency, error=str(outcome.error))
-                continue
-            solved.append(frequency)
-            s = outcome.statistics
-            total = sum(s.seconds.values())
-            state = "solved" if frequency in progress.worked_on else "from store"
-            reduced = s.strategy == "reduced"
-            rows.append(
-                [frequency / 1e6, state, s.strategy, s.n_unknowns, s.n_functions if reduced else "", s.n_ports,
-                 "" if reduced else f"{s.relative_residual:.1e}", f"{s.mesh_error:.1e}",
-                 f"{s.pattern_error:.1e}" if reduced else "", readable_seconds(total)]
-            )  # fmt: skip
-            screen.emit(
-                "unit", frequency_hz=frequency, state=state, solver=s.strategy, unknowns=s.n_unknowns, functions=s.n_functions,
-                ports=s.n_ports, relative_residual=None if reduced else s.relative_residual,
-                mesh_error=s.mesh_error, pattern_error=s.pattern_error,
-                port_matrix_error=s.port_matrix_error, seconds=total, file=str(run.path_of(frequency)),
-            )  # fmt: skip
-    if rows:
-        screen.table(
-            "Solutions",
-            ["frequency [MHz]", "state", "solver", "unknowns", "functions", "ports", "residual", "mesh error", "pattern error",
-             "solve time"],
-            rows,
-        )  # fmt: skip
-        screen.say("residual: of the linear system; mesh error: change of an isolated antenna's admittance on a finer mesh;")
-        screen.say(
-            "pattern error: of embedded patterns (100-ohm ports) relative to their peaks, against all unknowns of the mesh"
-        )
-    for failure in failures:
-        screen.error.print(f"failed at {failure.frequency_hz / 1e6:g} MHz: {failure.error}", markup=False)
-    return solved, failures
-
-
-def exit_on(failures: list) -> None:
-    """End with the code of the first failure; the others' causes are on the screen."""
+def exit_on(failures: list[UnitFailure]) -> None:
+    """End with the code of the first failure; all causes are on the screen."""
     if failures:
-        sys.exit(failures[0].error.exit_code)
+        sys.exit(failures[0].exit_code)
+
+
+def open_jobs(jobs: tuple[Path, ...], frequencies_hz: tuple[float, ...], screen: Screen) -> list[JobRun]:
+    """Read some jobs and find their stores."""
+    return [open_job(job, frequencies_hz, screen) for job in jobs]
 
 
 def require_stored(run: JobRun) -> None:

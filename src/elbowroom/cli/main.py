@@ -13,9 +13,10 @@ import click
 from elbowroom import __version__
 from elbowroom.base.errors import ElbowroomError, ExportError
 from elbowroom.cli.antenna import antenna
-from elbowroom.cli.common import FREQUENCIES, JOB, exit_on, make_screen, modes, open_job, solve_all
+from elbowroom.cli.common import FREQUENCIES, JOB, JOBS, exit_on, make_screen, modes, open_job, open_jobs
 from elbowroom.cli.ports import ports
 from elbowroom.cli.results import compare, draw, export, run
+from elbowroom.cli.solving import Wish, solve_all, workers_options
 from elbowroom.cli.store import store
 
 INTERRUPTED_EXIT_CODE = 130
@@ -158,6 +159,7 @@ def inspect(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> N
             screen.say("no problems found in the model")
     if not errors:
         rows = []
+        run.sample_functions()
         for unit in run.plan():
             mesh = mesh_statistics(run.station, unit.frequency_hz, run.job.mesh)
             p = unit.prediction
@@ -183,17 +185,23 @@ def inspect(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> N
 
 
 @cli.command()
-@JOB
+@JOBS
 @FREQUENCIES
+@click.option("--plan", "plan_only", is_flag=True, help="Show what is to be solved and what it takes; solve nothing.")
+@workers_options
 @modes
-def solve(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> None:
-    """Solve the currents of JOB at all its frequencies and keep them in its store.
+def solve(
+    jobs: tuple[Path, ...], frequencies_hz: tuple[float, ...], plan_only: bool, workers: int | None, threads: int | None,
+    cluster: str | None, log: Path | None, mode: str | None,
+) -> None:  # fmt: skip
+    """Solve the currents of each JOB at all its frequencies and keep them in its store.
 
-    What the store holds already is not solved again.  The run may be interrupted at any time; the next one goes on.
+    What the store holds already is not solved again.  The run may be interrupted at any time; the next one goes on.  A unit that
+    fails stops no other; only what failed or is missing is solved the next time.
     """
     screen = make_screen(mode)
-    _, failures = solve_all(open_job(job, frequencies_hz, screen), screen)
-    exit_on(failures)
+    wish = Wish(workers, threads, cluster, log, plan_only)
+    exit_on(solve_all(open_jobs(jobs, frequencies_hz, screen), screen, wish))
 
 
 for _command in (antenna, compare, draw, export, ports, run, store):

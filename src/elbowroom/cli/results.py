@@ -12,15 +12,17 @@ import click
 from elbowroom.cli.common import (
     FREQUENCIES,
     JOB,
+    JOBS,
     checked_folder,
     checked_output,
     exit_on,
     make_screen,
     modes,
     open_job,
+    open_jobs,
     require_stored,
-    solve_all,
 )
+from elbowroom.cli.solving import Wish, solve_all, workers_options
 
 if TYPE_CHECKING:
     from elbowroom.cli.screen import Screen
@@ -48,14 +50,18 @@ SHOWN = {
 """Columns of the table on the screen; the file has all."""
 
 
-def _fields(run: JobRun, step_deg: float | None = None) -> Iterator[BeamFields]:
-    """Give the beams of one frequency after another over the sky of the job; only one is held."""
+def _fields(run: JobRun, step_deg: float | None = None, *, solve_damaged: bool = False) -> Iterator[BeamFields]:
+    """Give the beams of one frequency after another over the sky of the job; only one is held.
+
+    A unit whose file turns out to be damaged is an error, or solved again.
+    """
     from elbowroom.geometry.directions import hemisphere_grid
     from elbowroom.job.beamfields import beam_fields
 
     directions = hemisphere_grid(run.job.sky_step_deg if step_deg is None else step_deg)
     for frequency in run.frequencies_hz:
-        yield beam_fields(run.stored_solution(frequency), run.job.beams, directions, run.termination_at(frequency))
+        solution = run.solution(frequency) if solve_damaged else run.stored_solution(frequency)
+        yield beam_fields(solution, run.job.beams, directions, run.termination_at(frequency))
 
 
 def _show_comparison(rows: list[BeamComparison], screen: Screen, path: Path) -> None:
@@ -254,31 +260,42 @@ def draw(
 
 
 @click.command()
-@JOB
+@JOBS
 @FREQUENCIES
+@workers_options
 @modes
-def run(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> None:
-    """Do it all for JOB: solve what the store lacks, compare beams, export the HDF5 beam table, draw.
+def run(
+    jobs: tuple[Path, ...], frequencies_hz: tuple[float, ...], workers: int | None, threads: int | None, cluster: str | None,
+    log: Path | None, mode: str | None,
+) -> None:  # fmt: skip
+    """Do it all for each JOB: solve what the store lacks, compare beams, export the HDF5 beam table, draw.
 
     Frequencies that cannot be solved are told and left out of the results.
     """
+    screen = make_screen(mode)
+    runs = open_jobs(jobs, frequencies_hz, screen)
+    for run_ in runs:
+        checked_folder(run_.job.output_folder)
+    failures = solve_all(runs, screen, Wish(workers, threads, cluster, log))
+    for run_ in runs:
+        if run_.frequencies_hz:
+            _results(run_, bool(frequencies_hz), screen)
+    exit_on(failures)
+
+
+def _results(run_: JobRun, chosen: bool, screen: Screen) -> None:
+    """Make comparison, table and pictures of a job's solved frequencies, and drop their currents if the job says so."""
     from elbowroom.job.compare import compare_beams
+    from elbowroom.job.dropping import drop_currents
     from elbowroom.job.export import TableSettings, export_hdf5
 
-    screen = make_screen(mode)
-    run_ = open_job(job, frequencies_hz, screen)
-    checked_folder(run_.job.output_folder)
-    solved, failures = solve_all(run_, screen)
-    if not solved:
-        exit_on(failures)
-    run_.frequencies_hz = tuple(solved)
     folder = run_.job.output_folder
-    pictures = _Pictures(run_, folder, screen, _drawn_frequencies(run_, frequencies_hz, screen))
+    pictures = _Pictures(run_, folder, screen, _drawn_frequencies(run_, run_.frequencies_hz if chosen else (), screen))
     pictures.layout()
     rows: list[BeamComparison] = []
 
     def each() -> Iterator[BeamFields]:
-        for fields in _fields(run_):
+        for fields in _fields(run_, solve_damaged=True):
             if fields.beams:
                 rows.extend(compare_beams(fields))
             pictures.add(fields)
@@ -287,7 +304,8 @@ def run(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> None:
     if run_.job.beams:
         settings = TableSettings()
         path = folder / TABLE_FILES["hdf5"]
-        export_hdf5(path, each(), len(solved), settings=settings, title=run_.job.title, job_text=run_.job.text)
+        count = len(run_.frequencies_hz)
+        export_hdf5(path, each(), count, settings=settings, title=run_.job.title, job_text=run_.job.text)
         pictures.finish()
         _tell_table(screen, path, settings)
         _write_comparison(run_, rows, folder / COMPARISON_FILE)
@@ -297,4 +315,7 @@ def run(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> None:
         for _ in each():
             pass
         pictures.finish()
-    exit_on(failures)
+    if run_.job.store_currents == "drop":
+        for frequency in run_.frequencies_hz:
+            drop_currents(run_, frequency)
+        screen.say(f"currents of {len(run_.frequencies_hz)} frequencies dropped, their port matrices are kept (store.currents)")

@@ -5,14 +5,11 @@ from __future__ import annotations
 import json
 import os
 import sys
-import time
 from collections.abc import Sequence
 from pathlib import Path
-from types import TracebackType
-from typing import Any, ClassVar
+from typing import Any
 
 from rich.console import Console
-from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn, TimeRemainingColumn
 from rich.table import Table
 from rich.text import Text
 
@@ -102,56 +99,3 @@ class Screen:
             self.out.print()
             for column, cell in zip(columns, row, strict=True):
                 self.out.print(f"  {column}: {cell}", markup=False)
-
-
-class SolveProgress:
-    """Progress of solving some frequencies: a bar on a terminal, lines elsewhere.
-
-    The bar advances by predicted seconds, so that the time left takes the size of each unit and stage into account.
-    """
-
-    SHARES: ClassVar = {"assemble": (0.0, 0.25), "factorise": (0.25, 0.55), "port excitations": (0.8, 0.2)}
-
-    def __init__(self, screen: Screen, weights: dict[float, float]) -> None:
-        self.screen, self.weights = screen, weights
-        self.done = 0.0
-        self.worked_on: set[float] = set()
-        self.total = sum(weights.values()) or 1.0
-        self.last_line = 0.0
-        self.bar: Progress | None = None
-        if screen.mode == "normal" and screen.out.is_terminal:
-            self.bar = Progress(
-                TextColumn("{task.description}"), BarColumn(), TextColumn("{task.percentage:>3.0f}%"), TimeElapsedColumn(),
-                TextColumn("left"), TimeRemainingColumn(), console=screen.out, transient=True,
-            )  # fmt: skip
-            self.task = self.bar.add_task("solving", total=self.total)
-
-    def __enter__(self) -> SolveProgress:
-        """Show the bar."""
-        if self.bar is not None:
-            self.bar.start()
-        return self
-
-    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None) -> None:
-        """Take the bar away."""
-        if self.bar is not None:
-            self.bar.stop()
-
-    def __call__(self, frequency_hz: float, stage: str, fraction: float) -> None:
-        """Move on."""
-        # Frequencies that were thought to be in the store are worked on too, if their file is found damaged.
-        self.worked_on.add(frequency_hz)
-        start, share = self.SHARES.get(stage, (0.0, 0.0))
-        reached = self.done + self.weights.get(frequency_hz, 0.0) * (start + share * fraction)
-        label = f"{frequency_hz / 1e6:g} MHz: {stage}"
-        if self.bar is not None:
-            self.bar.update(self.task, completed=reached, description=label)
-        elif self.screen.mode == "normal" and (fraction >= 1.0 or time.monotonic() - self.last_line > 20.0):
-            self.last_line = time.monotonic()
-            self.screen.say(f"  {label} {fraction:.0%} ({reached / self.total:.0%} of all)")
-        if fraction >= 1.0:
-            self.screen.emit("progress", frequency_hz=frequency_hz, stage=stage, fraction_of_all=reached / self.total)
-
-    def finished(self, frequency_hz: float) -> None:
-        """Count a unit as done, however long it took."""
-        self.done += self.weights.get(frequency_hz, 0.0)

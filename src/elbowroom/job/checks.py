@@ -171,6 +171,11 @@ class StationMeshes:
     ----------
     station : Station
         Antennas and ground.
+
+    Attributes
+    ----------
+    kind_counts : tuple of int
+        For each mesh, how many attitudes and heights its antennas have.
     """
 
     def __init__(self, station: Station) -> None:
@@ -178,6 +183,7 @@ class StationMeshes:
 
         free, conducting = station.ground.open_below, station.ground.conducting
         groups: dict[tuple[int, bytes], tuple[Placed, np.ndarray, int]] = {}
+        kinds: dict[tuple[int, bytes], set[tuple]] = {}
         designs = station.designs
         design_index = {id(d): i for i, d in enumerate(designs)}
         ends_of: dict[tuple, np.ndarray] = {}
@@ -194,7 +200,9 @@ class StationMeshes:
             key = (design, ends.tobytes())
             first, _, count = groups.get(key, (placed, ends, 0))
             groups[key] = (first, ends, count + 1)
+            kinds.setdefault(key, set()).add(stance)
         self._groups = list(groups.values())
+        self.kind_counts = tuple(len(kinds[key]) for key in groups)
 
     def at(self, wavelength: float, settings: MeshSettings) -> Iterator[tuple[Placed, Mesh, int]]:
         """Yield each different mesh at a wavelength [m] with the first antenna that has it and the number of those that do."""

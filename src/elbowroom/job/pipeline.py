@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -16,6 +16,7 @@ from elbowroom.job.groundchecks import HORIZON_NOTE, LOW_BEAM_DEG
 from elbowroom.job.jobfile import Job
 from elbowroom.job.jobtables import OnePort
 from elbowroom.job.plan import Prediction, predict_reduced, predict_station, refuse_if_too_large, total
+from elbowroom.job.sampling import FunctionCounts
 from elbowroom.job.solve import SOLUTION_SCHEMA, StationKeys, chosen_solver, solve, strategy_of
 from elbowroom.store import Hdf5Store
 from elbowroom.store.records import DamageReport
@@ -98,6 +99,7 @@ class JobRun:
         else:
             self.frequencies_hz = job.frequencies_hz
         self._solvers: dict[float, str] = {}
+        self._functions: FunctionCounts | None = None
         self._keys, self._meshes = StationKeys(self.station), StationMeshes(self.station)
         options = {} if report is None else {"report": report}
         self.store = Hdf5Store(job.store_folder, SOLUTION_SCHEMA, **options)
@@ -138,7 +140,7 @@ class JobRun:
 
     def plan(self) -> list[Unit]:
         """Return the units of the job, which the store has, and what the others take."""
-        predictions = [self._predicted(f) for f in self.frequencies_hz]
+        predictions = [self.predicted(f) for f in self.frequencies_hz]
         units = []
         for frequency, prediction in zip(self.frequencies_hz, predictions, strict=True):
             key = self.key(frequency)
@@ -171,10 +173,26 @@ class JobRun:
             )
         return self._solvers[frequency_hz]
 
-    def _predicted(self, frequency_hz: float) -> Prediction:
-        if self.solver_at(frequency_hz) == "reduced":
-            return predict_reduced(self.station, frequency_hz, self.job.mesh, self.job.tolerance)
-        return predict_station(self.station, [frequency_hz], self.job.mesh, self.job.precision)[0]
+    def predicted(self, frequency_hz: float, *, operations_per_second: float | None = None) -> Prediction:
+        """Return what the unit at a frequency [Hz] takes, at the rate of this machine or at another one."""
+        job = self.job
+        common: dict[str, Any] = {
+            "operations_per_second": operations_per_second, "meshes": self._meshes, "single_storage": self.single_storage,
+            "text_bytes": len(job.text.encode()),
+        }  # fmt: skip
+        if self.solver_at(frequency_hz) == "direct":
+            return predict_station(self.station, [frequency_hz], job.mesh, job.precision, **common)[0]
+        functions = None if self._functions is None else self._functions.at(frequency_hz)
+        return predict_reduced(self.station, frequency_hz, job.mesh, job.tolerance, functions=functions, **common)
+
+    def sample_functions(self) -> None:
+        """Make the first steps of the reduced solver at a few frequencies, so that memory and disk are predicted within 10 %.
+
+        Seconds for each of up to three frequencies; nothing where all units are solved for all unknowns.
+        """
+        reduced = [f for f in self.frequencies_hz if self.solver_at(f) == "reduced"]
+        if reduced and self._functions is None:
+            self._functions = FunctionCounts(self.station, reduced, self.job.mesh, self.job.tolerance)
 
     def path_of(self, frequency_hz: float) -> Path:
         """Return the store's file of the unit at a frequency [Hz]."""

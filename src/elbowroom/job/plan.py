@@ -8,16 +8,19 @@ from __future__ import annotations
 
 import shutil
 import time
-from collections.abc import Sequence
+from collections import Counter
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from functools import lru_cache
 from pathlib import Path
 
 import numpy as np
 
+from elbowroom.base.constants import wavelength_of, wavenumber_of
 from elbowroom.base.errors import ModelRangeError, ResourceError
-from elbowroom.geometry.mesh import MeshSettings
+from elbowroom.geometry.mesh import MeshSettings, mesh_settings
 from elbowroom.geometry.stations import Station
+from elbowroom.job.checks import StationMeshes
 
 PROCESS_BYTES = 300_000_000
 """The interpreter with its libraries and compiled kernels [byte]; 190 MB measured, with room for threads' work space."""
@@ -25,8 +28,8 @@ PROCESS_BYTES = 300_000_000
 TILE_ORDER = 768
 """Order of the tiles of the matrix, which decides how much is kept beside the half matrix."""
 
-STORE_OVERHEAD_BYTES = 200_000
-"""Header, attributes and chunk tables of one file of the store [byte]; measured, rounded up."""
+STORE_OVERHEAD_BYTES = 15_500
+"""Header, attributes and tables of one file of the store, the job's text apart [byte]; 15.2 kB measured."""
 
 ASSEMBLY_OPERATIONS = 9200.0
 """Operations per entry of the matrix pair, n^2, at the rate of single-precision products: 15 s for n = 16384 at
@@ -80,6 +83,8 @@ def predict(
     precision: str = "mixed",
     *,
     operations_per_second: float | None = None,
+    single_storage: bool = False,
+    text_bytes: int = 0,
 ) -> Prediction:
     """Return what one solve by the direct solver takes.
 
@@ -91,6 +96,10 @@ def predict(
         ``"mixed"``, ``"double"`` or ``"single"``.
     operations_per_second : float, optional
         Rate of single-precision complex matrix products [real operations/s]; by default measured once per process.
+    single_storage : bool, optional
+        Whether currents are stored in single precision.
+    text_bytes : int, optional
+        Length of the text stored beside them.
 
     Returns
     -------
@@ -124,9 +133,40 @@ def predict(
     # Sources (real) and solutions; product, difference and correction of a refinement.
     exciting = n * p * (8.0 + 16.0 + 16.0 + 16.0 + factor_bytes)
     memory = PROCESS_BYTES + matrix + max(factorising, exciting)
-    ports_of_antenna = np.ceil(p / n_antennas)
-    disk = STORE_OVERHEAD_BYTES + 16.0 * (n * p + p * p + (n + p) * ports_of_antenna) + 40.0 * n_antennas
+    disk = stored_bytes(n, n, p, n_antennas, np.ceil(p / n_antennas), single=single_storage) + text_bytes
     return Prediction(int(memory), int(disk), float(seconds), n_unknowns)
+
+
+def stored_bytes(
+    n_unknowns: float,
+    n_coordinates: float,
+    n_ports: float,
+    n_antennas: float,
+    ports_of_antenna: float,
+    function_numbers: float = 0.0,
+    *,
+    single: bool = False,
+) -> float:
+    """Return the length of a file of the store without the job's text [byte], counted from what is in it.
+
+    Parameters
+    ----------
+    n_unknowns, n_ports, n_antennas : float
+        Size of the station.
+    n_coordinates : float
+        Functions of all antennas; the unknowns themselves where there are none.
+    ports_of_antenna : float
+        Most ports of one antenna.
+    function_numbers : float, optional
+        Numbers in the functions of all kinds.
+    single : bool, optional
+        Whether currents are stored in single precision.
+    """
+    currents = n_coordinates * n_ports + n_unknowns * ports_of_antenna + function_numbers
+    matrices = n_ports * n_ports + n_ports * ports_of_antenna
+    # places, offsets and kinds of antennas; names of antennas and ports
+    beside = 72.0 * n_antennas + 12.0 * (n_antennas + n_ports)
+    return STORE_OVERHEAD_BYTES + (8.0 if single else 16.0) * currents + 16.0 * matrices + beside
 
 
 def predict_station(
@@ -136,16 +176,19 @@ def predict_station(
     precision: str = "mixed",
     *,
     operations_per_second: float | None = None,
+    meshes: StationMeshes | None = None,
+    single_storage: bool = False,
+    text_bytes: int = 0,
 ) -> list[Prediction]:
-    """Return what each frequency of a station takes, see `predict` and `total`."""
-    from elbowroom.job.checks import mesh_statistics
-
-    n_ports = len(station.port_names)
-    predictions = []
-    for frequency in frequencies_hz:
-        n = mesh_statistics(station, frequency, mesh)["unknowns"]
-        predictions.append(predict(n, n_ports, len(station), precision, operations_per_second=operations_per_second))
-    return predictions
+    """Return what each frequency of a station takes, see `predict` and `total`; its meshes may be given."""
+    meshes = meshes or StationMeshes(station)
+    return [
+        predict(
+            meshes.unknowns(frequency, mesh_settings(mesh)), len(station.port_names), len(station), precision,
+            operations_per_second=operations_per_second, single_storage=single_storage, text_bytes=text_bytes,
+        )
+        for frequency in frequencies_hz
+    ]  # fmt: skip
 
 
 def predicted_functions(station: Station, frequency_hz: float, tolerance: float) -> int:
@@ -154,12 +197,14 @@ def predicted_functions(station: Station, frequency_hz: float, tolerance: float)
     What a sphere around the antenna can radiate grows with its surface in square wavelengths; the numbers were fitted to crossed
     dipoles and log-periodic antennas from 50 to 350 MHz (8 to 33 functions), to about a third.
     """
+    antennas = Counter(id(placed.antenna) for placed in station)
+    designs = {id(placed.antenna): placed.antenna for placed in station}
     count = 0.0
-    for placed in station:
-        ends = np.array([[w.start, w.end] for w in placed.antenna.wires]).reshape(-1, 3)
+    for key, design in designs.items():
+        ends = np.array([[w.start, w.end] for w in design.wires]).reshape(-1, 3)
         radius = 0.5 * float(np.linalg.norm(np.ptp(ends, axis=0)))
-        size = 2.0 * np.pi * frequency_hz * radius / 299_792_458.0
-        count += len(placed.antenna.ports) + 6.0 + 0.55 * size**2 + 2.0 * np.log10(1e-3 / tolerance)
+        size = wavenumber_of(frequency_hz) * radius
+        count += antennas[key] * (len(design.ports) + 6.0 + 0.55 * size**2 + 2.0 * np.log10(1e-3 / tolerance))
     return int(count)
 
 
@@ -170,8 +215,15 @@ def predict_reduced(
     tolerance: float = 1e-4,
     *,
     operations_per_second: float | None = None,
+    meshes: StationMeshes | None = None,
+    functions: float | None = None,
+    single_storage: bool = False,
+    text_bytes: int = 0,
 ) -> Prediction:
-    """Return what one solve by the reduced solver takes; its number of functions is known to about a third beforehand.
+    """Return what one solve by the reduced solver takes.
+
+    Disk and memory follow the number of functions, which is guessed to about a third unless it is given; see
+    `elbowroom.job.sampling`.
 
     Parameters
     ----------
@@ -185,12 +237,20 @@ def predict_reduced(
         Of the reduced solver.
     operations_per_second : float, optional
         Rate of single-precision complex matrix products [real operations/s]; by default measured once per process.
+    meshes : StationMeshes, optional
+        Those of the station, if they are at hand.
+    functions : float, optional
+        Functions of all antennas together.
+    single_storage : bool, optional
+        Whether currents are stored in single precision.
+    text_bytes : int, optional
+        Length of the text stored beside them.
     """
-    from elbowroom.job.checks import mesh_statistics
-
     rate = calibrated_rate() if operations_per_second is None else operations_per_second
-    unknowns = mesh_statistics(station, frequency_hz, mesh)["unknowns"]
-    n, p, antennas = float(predicted_functions(station, frequency_hz, tolerance)), float(len(station.port_names)), len(station)
+    meshes, settings = meshes or StationMeshes(station), mesh_settings(mesh)
+    unknowns = meshes.unknowns(frequency_hz, settings)
+    n = float(predicted_functions(station, frequency_hz, tolerance) if functions is None else functions)
+    p, antennas = float(len(station.port_names)), len(station)
     own = unknowns / antennas
     seconds = (
         len(station.designs) * REDUCED_DESIGN_SECONDS * (own / 64.0) ** 1.5
@@ -201,8 +261,9 @@ def predict_reduced(
     entry = 8.0 if tolerance >= 3e-5 else 16.0
     memory = PROCESS_BYTES + entry * 0.5 * n * (n + TILE_ORDER) + n * TILE_ORDER * entry + n * p * (16.0 + 16.0 + entry)
     memory += len(station.designs) * 64.0 * own**2 * 4.0 + antennas * own * 16.0 * 64.0 + 1.5e8
-    ports_of_antenna = np.ceil(p / antennas)
-    disk = STORE_OVERHEAD_BYTES + 16.0 * (n * p + p * p + (unknowns + p) * ports_of_antenna) + 60.0 * antennas
+    made = meshes.at(wavelength_of(frequency_hz), settings)
+    functions_stored = sum(m.n_unknowns * n / antennas * kinds for (_, m, _), kinds in zip(made, meshes.kind_counts, strict=True))
+    disk = stored_bytes(unknowns, n, p, antennas, np.ceil(p / antennas), functions_stored, single=single_storage) + text_bytes
     return Prediction(int(memory), int(disk), float(seconds), unknowns)
 
 
@@ -259,12 +320,33 @@ def available_memory_bytes(root: str | Path = "/") -> int:
     return max(min(bounds), 0)
 
 
-def _control_group_bounds(root: Path) -> list[int]:
+def limit_of_memory_bytes(root: str | Path = "/") -> int:
+    """Return the memory that this process and its children may take if nothing else runs [byte].
+
+    What the machine has, or the least limit of its control groups.
+
+    Parameters
+    ----------
+    root : str or Path, optional
+        Where ``proc`` and ``sys`` are found; for tests.
+    """
+    import psutil
+
+    limits = [int(psutil.virtual_memory().total)]
+    for folder, (limit_name, _, _) in _control_groups(Path(root)):
+        try:
+            limits.append(int((folder / limit_name).read_text()))
+        except (OSError, ValueError):  # "max" is no number and no limit
+            continue
+    return min(limits)
+
+
+def _control_groups(root: Path) -> Iterator[tuple[Path, tuple[str, str, str]]]:
+    """Yield the folders of this process's control groups and of those above, with the names of what is read there."""
     try:
         lines = (root / "proc/self/cgroup").read_text().splitlines()
     except OSError:
-        return []
-    bounds = []
+        return
     for line in lines:
         parts = line.split(":", 2)
         if len(parts) != 3:
@@ -280,10 +362,12 @@ def _control_group_bounds(root: Path) -> list[int]:
         # Every group above sets a limit too; inside a container the path may name folders only seen outside.
         path = [part for part in group.split("/") if part and part != ".."]
         for depth in range(len(path), -1, -1):
-            bound = _group_bound(mount.joinpath(*path[:depth]), *names)
-            if bound is not None:
-                bounds.append(bound)
-    return bounds
+            yield mount.joinpath(*path[:depth]), names
+
+
+def _control_group_bounds(root: Path) -> list[int]:
+    found = (_group_bound(folder, *names) for folder, names in _control_groups(root))
+    return [bound for bound in found if bound is not None]
 
 
 def _group_bound(folder: Path, limit_name: str, usage_name: str, cache_name: str) -> int | None:

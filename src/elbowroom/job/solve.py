@@ -233,6 +233,23 @@ def _fits(record: Record, d: Discretisation) -> bool:
     return np.array_equal(a["kind_of_antenna"], d.kind_of)
 
 
+def stored_statistics(record: Record) -> SolveStatistics:
+    """Return what the solve of a stored unit cost and how well it came out."""
+    attributes = record.attributes
+    return SolveStatistics(
+        strategy=attributes["strategy"],
+        precision=attributes["precision"],
+        n_unknowns=int(record.arrays["unknown_offset"][-1]),
+        n_ports=int(record.arrays["port_offset"][-1]),
+        relative_residual=float("nan" if attributes["relative_residual"] is None else attributes["relative_residual"]),
+        mesh_error=float("nan" if attributes["mesh_error"] is None else attributes["mesh_error"]),
+        seconds={k: float(v) for k, v in attributes["seconds"].items()},
+        n_functions=int(attributes["n_functions"]),
+        pattern_error=float(attributes["pattern_error"]),
+        port_matrix_error=float(attributes["port_matrix_error"]),
+    )
+
+
 def _from_record(record: Record, d: Discretisation) -> Solution:
     a, attributes = dict(record.arrays), record.attributes
     for name in HALVED:
@@ -247,18 +264,7 @@ def _from_record(record: Record, d: Discretisation) -> Solution:
         if key not in made:
             made[key] = PortCurrents(currents, a["isolated_loaded_admittance_s"][d.ports_of(i), :n])
         alone.append(made[key])
-    statistics = SolveStatistics(
-        strategy=attributes["strategy"],
-        precision=attributes["precision"],
-        n_unknowns=d.n_unknowns,
-        n_ports=d.n_ports,
-        relative_residual=float("nan" if attributes["relative_residual"] is None else attributes["relative_residual"]),
-        mesh_error=float("nan" if attributes["mesh_error"] is None else attributes["mesh_error"]),
-        seconds={k: float(v) for k, v in attributes["seconds"].items()},
-        n_functions=int(attributes["n_functions"]),
-        pattern_error=float(attributes["pattern_error"]),
-        port_matrix_error=float(attributes["port_matrix_error"]),
-    )
+    statistics = stored_statistics(record)
     bases: list[np.ndarray | None] = []
     first = 0
     # A direct solution has no functions, however its kinds were counted.

@@ -1,0 +1,301 @@
+"""Jobs, one or many, as a list of units: which are there, which are to be solved, and what that takes.
+
+Units of stations that are turned or shifted copies have one key; those that share a store too are solved once.
+"""
+
+from __future__ import annotations
+
+import shutil
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+from elbowroom.base.errors import GeometryError, JobFileError, ResourceError
+from elbowroom.base.threads import available_cores
+from elbowroom.job.engine.items import StationWork, WorkItem, solve_units
+from elbowroom.job.engine.split import SMALL_SECONDS, Split, choose_split, thread_gain
+from elbowroom.job.pipeline import JobRun
+from elbowroom.job.plan import Prediction, available_memory_bytes, format_bytes, limit_of_memory_bytes, total
+from elbowroom.job.solve import stored_statistics
+from elbowroom.system.solving import SolveStatistics
+
+NOMINAL_RATE = 1e11
+"""Rate at which the thread count of a job's units is decided [real operations/s]; a measured one would decide differently from
+one run to the next."""
+
+READ_UNITS, READ_BYTES = 64, 256_000_000
+"""Stored units are read to the last byte while they are no more, and no larger together, than this; beyond, their names,
+lengths and headers are checked, and whoever uses them checks the rest."""
+
+
+@dataclass
+class CampaignUnit:
+    """One station at one frequency.
+
+    Attributes
+    ----------
+    run : JobRun
+        The job it belongs to.
+    frequency_hz : float
+        [Hz]
+    key : str
+        Key in the store.
+    stored : bool
+        Whether the store has it.
+    twin : CampaignUnit or None
+        An earlier unit of the same key and store: what is solved for it serves this one.
+    prediction : Prediction or None
+        What solving it takes with all cores; None if it is stored or has a twin.
+    statistics : SolveStatistics or None
+        What its solve cost, once that is known: it was solved now, or read from the store.
+    state : str
+        ``"solved"`` if it was solved now.
+    """
+
+    run: JobRun
+    frequency_hz: float
+    key: str
+    stored: bool
+    twin: CampaignUnit | None = None
+    prediction: Prediction | None = None
+    statistics: SolveStatistics | None = None
+    state: str = "from store"
+
+    @property
+    def place(self) -> tuple[Path, str]:
+        """Store and key: what makes two units one."""
+        return self.run.job.store_folder.resolve(), self.key
+
+    @property
+    def path(self) -> Path:
+        """The unit's file, present or not."""
+        return self.run.store.path_of(self.key)
+
+
+class Campaign:
+    """The units of some jobs.
+
+    Parameters
+    ----------
+    runs : sequence of JobRun
+        The jobs, at the frequencies chosen.
+
+    Attributes
+    ----------
+    units : list of CampaignUnit
+        Job by job, in rising frequency.
+    """
+
+    def __init__(self, runs: Sequence[JobRun]) -> None:
+        self.runs = tuple(runs)
+        paths = [run.job.path.resolve() for run in self.runs]
+        twice = {str(p) for p in paths if paths.count(p) > 1}
+        if twice:
+            msg = f"{', '.join(sorted(twice))} is given more than once"
+            raise JobFileError(msg)
+        self.units: list[CampaignUnit] = []
+        first: dict[tuple[Path, str], CampaignUnit] = {}
+        for run in self.runs:
+            for frequency in run.frequencies_hz:
+                key = run.key(frequency)
+                unit = CampaignUnit(run, frequency, key, key in run.store)
+                unit.twin = first.get(unit.place)
+                first.setdefault(unit.place, unit)
+                self.units.append(unit)
+
+    @property
+    def to_solve(self) -> list[CampaignUnit]:
+        """Units that are neither stored nor solved with another."""
+        return [u for u in self.units if not u.stored and u.twin is None]
+
+    def predict(self, *, sampled: bool = False) -> None:
+        """Work out what each unit to be solved takes.
+
+        Parameters
+        ----------
+        sampled : bool, optional
+            Whether to make the functions of reduced units at a few frequencies, which takes seconds for each station.
+        """
+        for run in self.runs if sampled else ():
+            run.sample_functions()
+        for unit in self.to_solve:
+            unit.prediction = unit.run.predicted(unit.frequency_hz)
+
+    def total(self) -> Prediction:
+        """Return what all units to be solved take one after another with all cores."""
+        return total([u.prediction for u in self.to_solve if u.prediction is not None])
+
+    def check(self) -> None:
+        """Refuse what cannot work, before anything is started; `predict` comes first.
+
+        Raises
+        ------
+        GeometryError
+            If a model has errors; all are listed.
+        StoreError
+            If a store cannot be written.
+        ResourceError
+            If a unit needs more memory, or a disk gets more, than there is.
+        """
+        for run in self.runs:
+            errors = tuple(p.text for p in run.problems() if p.severity == "error")
+            if errors:
+                msg = f"{run.job.path}: the station cannot be modelled"
+                raise GeometryError(msg, problems=errors)
+        if not self.to_solve:
+            return
+        for run in {u.run.job.store_folder: u.run for u in self.to_solve}.values():
+            run.store.check_writable()
+        found = self._lacking()
+        if found and any(u.run.solver_at(u.frequency_hz) == "reduced" for u in self.to_solve):
+            self.predict(sampled=True)
+            found = self._lacking()
+        if found:
+            msg = (
+                f"this job is too large here: {'; '.join(found)}; nothing was started. Take fewer antennas or "
+                "frequencies, the default mesh or a lower top frequency, or a machine with more of it"
+            )
+            raise ResourceError(msg)
+
+    def _lacking(self) -> list[str]:
+        """Return which memory or disk does not suffice, with figures."""
+        found, available = [], available_memory_bytes()
+        largest = self.total()
+        if largest.memory_bytes > available:
+            found.append(
+                f"{format_bytes(largest.memory_bytes)} of memory needed for {largest.n_unknowns} unknowns, "
+                f"{format_bytes(available)} available"
+            )
+        disks: dict[int, tuple[Path, int]] = {}
+        for unit in self.to_solve:
+            folder = unit.run.job.store_folder
+            place = folder.absolute()
+            while not place.exists() and place != place.parent:
+                place = place.parent
+            device = place.stat().st_dev
+            shown, count = disks.get(device, (folder, 0))
+            disks[device] = (shown, count + (unit.prediction.disk_bytes if unit.prediction else 0))
+        for folder, count in disks.values():
+            free = shutil.disk_usage(folder if folder.exists() else folder.absolute().parent).free
+            if count > free:
+                found.append(f"{format_bytes(count)} of disk needed in {folder}, {format_bytes(free)} free")
+        return found
+
+    def read_stored(self) -> None:
+        """Read stored units to the last byte, if they are few; what is damaged is set aside, told, and to be solved again."""
+        stored = [u for u in self.units if u.stored and u.twin is None]
+        if len(stored) > READ_UNITS or sum(u.path.stat().st_size for u in stored) > READ_BYTES:
+            return
+        for unit in stored:
+            record = unit.run.store.get(unit.key)
+            for same in self.units:
+                if same.place == unit.place:
+                    same.stored = record is not None
+                    same.statistics = None if record is None else stored_statistics(record)
+
+    def split(self, workers: int | None = None, threads: int | None = None) -> Split:
+        """Return how many workers solve these jobs, with how many threads each.
+
+        Parameters
+        ----------
+        workers, threads : int, optional
+            What the user wants; what is not given is chosen to fit.
+        """
+        cores = available_cores()
+        if threads is not None:
+            return Split(workers or max(1, cores // threads), threads)
+        if workers is not None:
+            return Split(workers, max(1, cores // workers))
+        largest = self._largest()
+        if largest is None:
+            return Split(1, cores)
+        run, frequency = largest
+        nominal = run.predicted(frequency, operations_per_second=NOMINAL_RATE)
+        return choose_split(
+            len(self.units),
+            nominal.seconds,
+            nominal.memory_bytes,
+            cores=cores,
+            memory_bytes=limit_of_memory_bytes(),
+            solver=run.solver_at(frequency),
+        )
+
+    def _largest(self) -> tuple[JobRun, float] | None:
+        """Return job and frequency of the largest unit: the highest of a job, as meshes get finer, of the largest station."""
+        found = [(run, run.frequencies_hz[-1]) for run in self.runs if run.frequencies_hz]
+        if len(found) > 1:
+            found.sort(key=lambda pair: pair[0].predicted(pair[1], operations_per_second=NOMINAL_RATE).seconds)
+        return found[-1] if found else None
+
+    def here(self, split: Split) -> bool:
+        """Return whether what is left is so little, or one unit only, that this process does it sooner than any worker."""
+        left = self.to_solve
+        return len(left) <= 1 or (split.workers == 1 and self.total().seconds <= SMALL_SECONDS)
+
+    def items(self, threads: int, *, longest_first: bool = True) -> list[WorkItem]:
+        """Return the work that is to be done.
+
+        Parameters
+        ----------
+        threads : int
+            For each item.
+        longest_first : bool, optional
+            So that no long one is left alone at the end; otherwise in the order of the units.
+        """
+        made = []
+        for unit in self.to_solve:
+            run, job = unit.run, unit.run.job
+            about = {"title": job.title, "job_file": job.text}
+            work = StationWork(
+                run.station,
+                (run.solver_at(unit.frequency_hz),),
+                job.mesh,
+                job.precision,
+                job.tolerance,
+                run.single_storage,
+                about,
+            )
+            assert unit.prediction is not None  # predict() comes first
+            made.append(
+                WorkItem(
+                    0, self.label_of(unit), (unit.frequency_hz,), (unit.key,), job.store_folder.absolute(), solve_units, work,
+                    unit.prediction, threads,
+                )
+            )  # fmt: skip
+        if longest_first:
+            made.sort(key=lambda item: -item.prediction.seconds)
+        return [replace(item, number=i) for i, item in enumerate(made)]
+
+    def label_of(self, unit: CampaignUnit) -> str:
+        """Return what a unit is called: its frequency, and its job where there are several."""
+        label = f"{unit.frequency_hz / 1e6:.10g} MHz"
+        return label if len(self.runs) == 1 else f"{unit.run.job.path.parent.name}/{unit.run.job.path.name}, {label}"
+
+    def units_of(self, item: WorkItem, index: int) -> list[CampaignUnit]:
+        """Return all units that a frequency of an item serves, by its index."""
+        place = (item.store_folder.resolve(), item.keys[index])
+        return [u for u in self.units if u.place == place]
+
+    def elsewhere(self, item: WorkItem) -> bool:
+        """Return whether another run works on what is missing of an item."""
+        store = next(u.run.store for u in self.units if u.key == item.keys[0])
+        for key in item.keys:
+            if key not in store:
+                holder = store.claimed(key)
+                return holder is not None and holder.state == "working"
+        return False
+
+
+def seconds_with(item: WorkItem) -> float:
+    """Return the predicted time of an item with its own number of threads [s]."""
+    cores = available_cores()
+    return item.prediction.seconds * thread_gain(cores) / thread_gain(min(item.threads, cores))
+
+
+def predicted_seconds(campaign: Campaign, split: Split) -> float:
+    """Return the predicted time of what is to be solved with so many workers and threads [s], the longest first."""
+    free = [0.0] * split.workers
+    for item in campaign.items(split.threads):
+        free[0] += seconds_with(item)
+        free.sort()
+    return max(free)
