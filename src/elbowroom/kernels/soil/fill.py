@@ -45,19 +45,12 @@ def fill_soil(table: SoilTable, points: FloatArray, points2: FloatArray, work: W
     # Planes whose distance is a large power of two would share the same few lines of the cache.
     plane = rows * count + 72
     flat = work.array("soil", (8 * plane,))
+    turns = table.wavenumber / (2.0 * np.pi)
     padded = np.empty((3, -(-count // _LANES) * _LANES))
-    padded[:, :count] = points2
-    padded[:, count:] = points2[:, -1:]
-    grid = np.array(
-        [
-            table.wavenumber / (2.0 * np.pi),
-            table.rho_scale_m,
-            1.0 / table.rho_per_node,
-            table.z_scale_m,
-            1.0 / table.z_per_node,
-            table.z_start / table.z_per_node,
-        ]
-    )
+    np.multiply(points2, turns, out=padded[:, :count])
+    padded[:, count:] = padded[:, count - 1 : count]
+    scales = (turns * table.rho_scale_m, 1.0 / table.rho_per_node, turns * table.z_scale_m, 1.0 / table.z_per_node, table.z_start / table.z_per_node)
+    grid = np.array(scales, dtype=table.coefficients.dtype)
     nodes, stride, odd = table.aligned
     n_rho, n_z, _ = table.coefficients.shape
     sizes = np.array([n_rho - 4, n_z - 4, stride, odd, _BLOCK], dtype=np.int32)
@@ -69,8 +62,8 @@ def fill_soil(table: SoilTable, points: FloatArray, points2: FloatArray, work: W
         np.empty(_BLOCK, dtype=np.int32),
     )
     run = fill_with_direct if direct else fill_without
-    x, y, z = (np.ascontiguousarray(a) for a in points)
-    run(x, y, z, *padded, count, grid, sizes, nodes, flat, plane, *scratch, np.empty(64, dtype=flat.dtype))
+    x, y, z = turns * points
+    run(x, y, z, *padded, count, turns, grid, sizes, nodes, flat, plane, *scratch, np.empty(64, dtype=flat.dtype))
     kernels = flat.reshape(8, plane)[:, : rows * count].reshape(4, 2, rows, count)
     return PointKernels(kernels[0], kernels[1], kernels[2], kernels[3])
 

@@ -21,13 +21,16 @@ _AT_ONCE = 16
 _FLOAT, _DOUBLE = ir.FloatType(), ir.DoubleType()
 
 
-def _inverse_and_rest(square, turns_per_metre):
-    """Return 1/R, and what is left of R in wavelengths after whole turns, from R^2 in double precision."""
-    short = 1.0 / square.as_kind(_FLOAT).call("sqrt")
-    y = short.as_kind(_DOUBLE)
-    inverse = y * (1.5 - (0.5 * square) * (y * y))
-    turns = square * inverse * turns_per_metre
-    return inverse, turns - turns.call("rint")
+def _path(square, short, kind):
+    """Return 1/R, and what is left of R after whole turns, in a precision, from R^2 (in wavelengths) in both precisions."""
+    y = (1.0 / short.call("sqrt"))
+    slope = y.as_kind(_DOUBLE)
+    root = square * slope
+    miss = 1.0 - root * slope
+    # One step of Newton's iteration makes 14 digits of seven.
+    turns = root + (0.5 * root) * miss
+    inverse = y if kind == _FLOAT else slope + (0.5 * slope) * miss
+    return inverse.as_kind(kind), (turns - turns.call("rint")).as_kind(kind)
 
 
 def _wave(inverse, rest):
@@ -39,15 +42,11 @@ def _wave(inverse, rest):
     return inverse - twice * s, -1.0 * (twice * c)
 
 
-def _spline_weights(t):
+def _six_spline_weights(t):
+    """Return six times the weights of a cubic B-spline."""
     s = 1.0 - t
-    half = 0.5 * t
-    return [
-        (s * s) * (s * (1.0 / 6.0)),
-        2.0 / 3.0 - (t * t) * (1.0 - half),
-        2.0 / 3.0 - (s * s) * (0.5 + half),
-        (t * t) * (t * (1.0 / 6.0)),
-    ]
+    t2, s2 = t * t, s * s
+    return [s * s2, 4.0 + t2 * (3.0 * t - 6.0), 4.0 + s2 * (3.0 * s - 6.0), t * t2]
 
 
 class _Access:
@@ -70,67 +69,69 @@ class _Access:
 
 def _make_prepare(direct):
     @intrinsic
-    def prepare(typing_context, x, y, z, x2, y2, z2, start, numbers, sizes, image, straight, weights, index, slot):
+    def prepare(typing_context, x, y, z, x2, y2, z2, start, turns, grid, sizes, image, straight, weights, index, slot):
         """Work out what pairs from ``start`` on need and keep it from ``slot`` on: waves, spline weights, places in the table.
 
         ``image`` and ``straight`` (2, B): real and imaginary part of exp(-jkR)/R of the two paths; ``weights``: (4, B) along
-        rho, then (B, 4) along Z; ``index`` (B); B stands last in ``sizes``.
+        rho, then (B, 4) along Z; ``index`` (B); B stands last in ``sizes``.  Lengths are in
+        wavelengths, ``turns`` is 1 over the wavelength.
         """
-        kinds = (x, y, z, x2, y2, z2, start, numbers, sizes, image, straight, weights, index, slot)
+        kinds = (x, y, z, x2, y2, z2, start, turns, grid, sizes, image, straight, weights, index, slot)
 
         def generate(context, builder, signature, values):
             access = _Access(context, builder, kinds, values)
-            start, slot = values[6], values[13]
+            start, slot = values[6], values[14]
             kind = context.get_value_type(weights.dtype)
 
-            def same(scalar, like):
-                return Lanes.same(builder, scalar, _AT_ONCE).as_kind(like)
+            def same(scalar):
+                return Lanes.same(builder, scalar, _AT_ONCE)
 
-            def number(n, like):
-                return same(builder.load(access.at(7, access.whole(n))), like)
-
-            last_rho, last_z, stride, odd, block = (builder.load(access.at(8, access.whole(n))) for n in range(5))
+            rho_scale, rho_nodes, z_scale, z_nodes, z_start = (
+                same(builder.load(access.at(8, access.whole(n)))) for n in range(5)
+            )
+            last_rho, last_z, stride, odd, block = (builder.load(access.at(9, access.whole(n))) for n in range(5))
             block = builder.sext(block, start.type)
             second = [Lanes.load(builder, access.at(3 + n, start), _AT_ONCE) for n in range(3)]
-            dx, dy = (same(values[n], _DOUBLE) - second[n] for n in (0, 1))
-            own = same(values[2], _DOUBLE)
+            dx, dy = (same(values[n]) - second[n] for n in (0, 1))
+            own = same(values[2])
             top = own + second[2]
             flat = dx * dx + dy * dy
-            turns = number(0, _DOUBLE)
+            # In the table's own precision; the small number keeps points above one another from dividing by zero.
+            short, up = (flat + 1e-30).as_kind(kind), top.as_kind(kind)
 
-            def keep(square, position):
+            def keep(square, approximate, position):
                 like = context.get_value_type(kinds[position].dtype)
-                for n, value in enumerate(_wave(*(v.as_kind(like) for v in _inverse_and_rest(square, turns)))):
+                inverse, rest = _path(square, approximate.as_kind(_FLOAT), like)
+                for n, value in enumerate(_wave(inverse * same(values[7]).as_kind(like), rest)):
                     value.store(access.part(position, slot, n, block))
 
-            keep(flat + top * top, 9)
+            keep(flat + top * top, short + up * up, 10)
             if direct:
                 dz = own - second[2]
-                keep(flat + dz * dz, 10)
-            # Coordinates in the table, in its own precision; 1e-30 keeps points above one another from dividing by zero.
-            rho, up = (flat + 1e-30).as_kind(kind).call("sqrt"), top.as_kind(kind)
-            low, left = up + number(3, kind), rho + number(1, kind)
+                keep(flat + dz * dz, flat + dz * dz, 11)
+            rho = short.call("sqrt")
+            low, left = up + z_scale, rho + rho_scale
             both = 1.0 / (low * left)
-            i, s = (rho * low * (both * number(2, kind))).whole_and_rest(last_rho)
-            j, t = (up * left * (both * number(4, kind)) - number(5, kind)).whole_and_rest(last_z)
+            i, s = (rho * low * (both * rho_nodes)).whole_and_rest(last_rho)
+            j, t = (up * left * (both * z_nodes) - z_start).whole_and_rest(last_z)
 
             def whole_lanes(constant):
                 return ir.Constant(j.type, [ir.Constant(j.type.element, constant)] * _AT_ONCE)
 
             parity = builder.and_(j, whole_lanes(1))
-            place = builder.mul(i, Lanes.same(builder, stride, _AT_ONCE).value)
+            place = builder.mul(i, same(stride).value)
             place = builder.add(place, builder.shl(builder.sub(j, parity), whole_lanes(3)))
-            place = builder.add(place, builder.mul(parity, Lanes.same(builder, odd, _AT_ONCE).value))
-            Lanes(builder, place).store(access.at(12, slot))
-            for n, value in enumerate(_spline_weights(s)):
-                value.store(access.part(11, slot, n, block))
-            a, b, c, d = _spline_weights(t)
+            place = builder.add(place, builder.mul(parity, same(odd).value))
+            Lanes(builder, place).store(access.at(13, slot))
+            for n, value in enumerate(_six_spline_weights(s)):
+                value.store(access.part(12, slot, n, block))
+            a, b, c, d = _six_spline_weights(t)
             for start_lane in range(0, _AT_ONCE, 4):
                 two = [start_lane + n // 2 + _AT_ONCE * (n % 2) for n in range(8)]
                 low_two, high_two = a.pick(two, b), c.pick(two, d)
                 four = low_two.pick([(n // 4) * 2 + n % 2 + 8 * (n // 2 % 2) for n in range(16)], high_two)
                 first = builder.add(slot, access.whole(start_lane))
-                four.store(access.at(11, builder.mul(access.whole(4), builder.add(block, first))))
+                four.store(access.at(12, builder.mul(access.whole(4), builder.add(block, first))))
             return context.get_dummy_value()
 
         return types.void(*kinds), generate
@@ -148,17 +149,18 @@ def _make_finish(direct):
             access = _Access(context, builder, kinds, values)
             slot, offset, plane = values[4], values[8], values[9]
             stride, block = (builder.sext(builder.load(access.at(5, access.whole(n))), slot.type) for n in (2, 4))
+            table_rows = [access.part(6, access.whole(0), n, stride) for n in range(_NEIGHBOURS)]
             rows = []
             for pair in range(8):
                 place = builder.add(slot, access.whole(pair))
                 position = builder.sext(builder.load(access.at(3, place)), slot.type)
                 lower = upper = None
-                for n in range(_NEIGHBOURS):
+                for n, table_row in enumerate(table_rows):
                     weight = Lanes.same(builder, builder.load(access.part(2, place, n, block)), 16)
-                    one = Lanes.load(builder, access.at(6, position), 16) * weight
-                    two = Lanes.load(builder, access.at(6, builder.add(position, access.whole(16))), 16) * weight
+                    node = builder.gep(table_row, [position])
+                    one = Lanes.load(builder, node, 16) * weight
+                    two = Lanes.load(builder, builder.gep(node, [access.whole(16)]), 16) * weight
                     lower, upper = (one, two) if lower is None else (lower + one, upper + two)
-                    position = builder.add(position, stride)
                 four = Lanes.load(builder, access.at(2, builder.mul(access.whole(4), builder.add(block, place))), 4)
                 total = lower * four.pick([0] * 8 + [1] * 8) + upper * four.pick([2] * 8 + [3] * 8)
                 rows.append(total.pick(range(8)) + total.pick(range(8, 16)))
@@ -182,15 +184,17 @@ def _make_fill(direct):
     prepare, finish = _make_prepare(direct), _make_finish(direct)
 
     @njit(**FAST_JIT_OPTIONS)
-    def fill(x, y, z, x2, y2, z2, count, numbers, sizes, table, out, plane, image, straight, weights, index, tail):
-        """Fill eight planes of (Q, count) in ``out``, flat, each ``plane`` apart; x2, y2, z2 are padded to sixteens."""
+    def fill(x, y, z, x2, y2, z2, count, turns, grid, sizes, table, out, plane, image, straight, weights, index, tail):
+        """Fill eight planes of (Q, count) in ``out``, flat, each ``plane`` apart; x2, y2, z2 are padded to sixteens.
+
+        Lengths are in wavelengths and ``turns`` is 1 over the wavelength, so that the kernels come out in 1/m."""
         block = sizes[4]
         for begin in range(0, count, block):
             end = min(begin + block, count)
             whole = begin + (end - begin) // 8 * 8
             for i in range(x.size):
                 for j in range(begin, end, 16):
-                    prepare(x[i], y[i], z[i], x2, y2, z2, j, numbers, sizes, image, straight, weights, index, j - begin)
+                    prepare(x[i], y[i], z[i], x2, y2, z2, j, turns, grid, sizes, image, straight, weights, index, j - begin)
                 for j in range(begin, whole, 8):
                     finish(image, straight, weights, index, j - begin, sizes, table, out, i * count + j, plane)
                 if whole < end:

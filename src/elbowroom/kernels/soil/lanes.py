@@ -105,14 +105,11 @@ class Lanes:
         return Lanes(self.builder, convert(self.value, target))
 
     def whole_and_rest(self, largest: Any) -> tuple[Any, Lanes]:
-        """Return whole parts between 0 and ``largest`` (an int32 scalar) as int32 lanes, and what is left."""
+        """Return whole parts up to ``largest`` (an int32 scalar) as int32 lanes, and what is left; numbers above -1 only."""
         builder = self.builder
-        kind = ir.VectorType(_INT32, self.count)
         limit = Lanes.same(builder, largest, self.count).value
-        zero = ir.Constant(kind, [ir.Constant(_INT32, 0)] * self.count)
-        whole = builder.fptosi(self.value, kind)
+        whole = builder.fptosi(self.value, limit.type)
         whole = builder.select(builder.icmp_signed("<", whole, limit), whole, limit)
-        whole = builder.select(builder.icmp_signed(">", whole, zero), whole, zero)
         return whole, self - Lanes(builder, builder.sitofp(whole, self.value.type))
 
     def pick(self, which: Sequence[int], other: Lanes | None = None) -> Lanes:
