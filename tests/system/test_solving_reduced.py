@@ -1,9 +1,9 @@
-"""Stations that the reduced solver must take: alone, close together, mixed, with networks, over both grounds."""
+"""Stations that the reduced solver must take: alone, close together, mixed, with networks, over every ground."""
 
 import numpy as np
 import pytest
 
-from elbowroom.geometry.grounds import FreeSpace, PerfectGround
+from elbowroom.geometry.grounds import FreeSpace, PerfectGround, Soil
 from elbowroom.geometry.shapes import log_periodic, monopole
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.job.solve import solve
@@ -33,6 +33,7 @@ STATIONS = {
     "crossing in the air": lambda: beside(LINE, (0.1, 0.2, 0.05), rotation_deg=90.0),
     "monopole and crossed dipole": lambda: [Placed(monopole(length_m=0.5, wire_radius_m=0.003)), Placed(crossed(), (1.1, 0.4, 0.0), 30.0)],
     "tilted": lambda: beside(crossed(), (1.5, 0.4, 0.0), rotation_deg=40.0, tilt_east_deg=6.0, tilt_north_deg=-4.0),
+    "equal designs made anew": lambda: [Placed(crossed(), (1.5 * n, 0.3 * n, 0.0), 35.0 * n) for n in range(3)],
     "different heights": lambda: beside(crossed(), (1.3, 0.4, 0.4)),
     "log-periodic antennas": lambda: beside(LOG_PERIODIC, (1.35, 0.3, 0.0), rotation_deg=25.0),
     "log-periodic and dipole": lambda: [Placed(LOG_PERIODIC), Placed(LINE, (1.4, 0.2, 0.0))],
@@ -45,10 +46,10 @@ def solved_both(placed, ground, tolerance=TOLERANCE, **options):
     return direct, solve(station, FREQUENCY_HZ, solver="reduced", tolerance=tolerance, **options)
 
 
-@pytest.mark.parametrize("ground", [FreeSpace(), PerfectGround()], ids=["free space", "perfect ground"])
+@pytest.mark.parametrize("ground", [FreeSpace(), PerfectGround(), Soil(10.0, 0.01)], ids=["free space", "perfect ground", "soil"])
 @pytest.mark.parametrize("name", STATIONS)
 def test_reduced__equals_direct_within_its_tolerance_and_its_statement(name, ground):
-    if isinstance(ground, FreeSpace) and "monopole" in name:
+    if not ground.conducting and "monopole" in name:
         pytest.skip("a foot stands on a conducting ground")
     direct, reduced = solved_both(STATIONS[name](), ground)
     s = reduced.statistics
@@ -122,3 +123,17 @@ def test_reduced__finer_tolerances_are_nearer():
     for solution, error, tolerance in zip(solutions, errors, tolerances, strict=True):
         assert error <= max(solution.statistics.pattern_error, 1e-6)
         assert solution.statistics.pattern_error <= tolerance
+
+
+def test_reduced__equal_designs_need_not_be_one_object():
+    placed = beside(LOG_PERIODIC, (1.35, 0.3, 0.0), rotation_deg=25.0)
+    twin = log_periodic(
+        height_m=1.4, wire_radius_m=0.002, tau=0.82, sigma=0.07, longest_half_length_m=0.6, elements=3, feeder_impedance_ohm=200.0
+    )
+    assert twin is not LOG_PERIODIC
+    twins = [placed[0], Placed(twin, (1.35, 0.3, 0.0), rotation_deg=25.0)]
+    one, other = (
+        solve(Station(p, PerfectGround()), FREQUENCY_HZ, solver="reduced", tolerance=1e-3).coupled.loaded_admittance
+        for p in (placed, twins)
+    )
+    np.testing.assert_allclose(other, one, atol=1e-6 * np.abs(one).max())

@@ -1,12 +1,14 @@
 """A segment of a band in which a station's matrix is interpolated: assembled at a few frequencies, solved at any.
 
-The mesh and the functions of each antenna are held over the segment.  The functions are those of its ends and its middle
-together, made orthogonal and cut until a few antennas, and then the whole station, meet the tolerance.  At some frequencies
-between the nodes, where interpolation is worst, the residual of the full system is worked out as after any reduced solve: the
-error found there holds what the functions and what the interpolation left out.  At every other frequency the sensitivity of the
-currents to small errors of the matrix is measured by a random one; where a resonance makes it larger than at the checked
-frequencies the stated error grows with it, and where that, or a scattering matrix that gives more power than it gets, breaks
-the tolerance, the residual is worked out there too, and if need be the frequency is assembled for itself.
+The mesh and the functions of each antenna are held over the segment.  The functions are those of all nodes together, made
+orthogonal and cut until a few antennas, and then the whole station, meet the tolerance.  At some frequencies between the nodes,
+where interpolation is worst, the residual of the full system is worked out as after any reduced solve: the error found there
+holds what the functions and what the interpolation left out.  At every other frequency the sensitivity of the currents to small
+errors of the matrix is measured by a random one; where a resonance makes it larger than at the checked frequencies the stated
+error grows with it, and where that, or a scattering matrix that gives more power than it gets, breaks the tolerance, the
+residual is worked out there too, and if need be the frequency is assembled for itself.
+
+Features too narrow to be met by any channel are sought in `elbowroom.system.band_features`.
 """
 
 from __future__ import annotations
@@ -23,6 +25,15 @@ from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.mesh import MeshSettings
 from elbowroom.geometry.stations import Station
 from elbowroom.system.assembly import Progress, single_threaded_blas
+from elbowroom.system.band_features import (
+    SINGLE_FIT,
+    STANDS_OUT,
+    Feature,
+    narrow_poles,
+    probe_answers,
+    probe_sources,
+    scanned,
+)
 from elbowroom.system.band_interpolation import MatrixSamples, OwnBlocks, band_nodes, intervals_for, own_blocks, reach_of
 from elbowroom.system.discretisation import Discretisation, FarSettings, discretise
 from elbowroom.system.factorisation import Factors
@@ -47,6 +58,18 @@ INTERPOLATION_SHARE = 0.02
 
 PROBES = 12
 """Ports whose currents are disturbed to measure how sensitive they are."""
+
+MOST_SCANNED = 8
+"""Own blocks, of designs and heights, that are looked at for narrow resonances."""
+
+FEWEST_PROBED = 12
+"""Solved frequencies from which the array is looked at for narrow resonances."""
+
+RESONANT = 5.0
+"""Ratio of sensitivities from which a frequency counts as resonant."""
+
+CHECKED_WIDTH, MOST_RESONANCES = 0.02, 2
+"""Half-width, in the segment's width, of resonances at which functions are checked, and how many of them."""
 
 MOST_ROUNDS = 3
 """Times that a segment is begun again with more functions when a checked frequency exceeds the tolerance."""
@@ -211,6 +234,8 @@ class BandSegment:
         Functions of the segment.
     checked : dict of float to (float, float)
         Stated pattern error and sensitivity at the frequencies at which the residual was worked out [Hz].
+    probed : dict of float to complex128 (K,)
+        What random sources inside a few antennas drive there, at the frequencies that were solved [Hz].
     counts : SegmentCounts
         What it has cost.
     seconds : dict
@@ -248,6 +273,7 @@ class BandSegment:
         self.seconds: dict[str, float] = {}
         self._clock = time.perf_counter()
         self.checked: dict[float, tuple[float, float]] = {}
+        self.probed: dict[float, ComplexArray] = {}
         first = discretise(station, low_hz, self_blocks=False, **self._options)  # type: ignore[arg-type]
         intervals = intervals_for(high_hz - low_hz, reach_of(first), INTERPOLATION_SHARE * self.settings.tolerance)
         self.nodes = band_nodes(low_hz, high_hz, intervals)
@@ -291,48 +317,64 @@ class BandSegment:
 
     def _build(self) -> None:
         """Choose functions, assemble at all nodes and check; again with more functions where they do not serve."""
-        nodes = self._at_nodes
-        three = [_Node(nodes[q], self.reduction, self.reference_ohm) for q in (0, len(nodes) // 2, len(nodes) - 1)]
-        candidates = united_candidates(three[1].discretisation, [n.candidates for n in three])
+        nodes = []
+        for done, d in enumerate(self._at_nodes):
+            nodes.append(_Node(d, self.reduction, self.reference_ohm))
+            self._tell("functions", (done + 1) / len(self._at_nodes))
+        middle, top = nodes[len(nodes) // 2], nodes[-1]
+        candidates = united_candidates(middle.discretisation, [n.candidates for n in nodes])
         self._lap("functions")
         cuts = []
-        for node in three:
+        for node in (nodes[0], middle, top):
             node.candidates = candidates
             cuts.append(node._pilot_cut())
         cut = min(cuts)
         self._lap("pilot")
+        self._checkers = {
+            f: _Node(self._discretised(f), self.reduction, self.reference_ohm, []) for f in map(float, self.check_frequencies())
+        }
+        self._lap("checks")
+        before = np.inf
         for round_ in range(MOST_ROUNDS):
-            top = three[-1]
             top.solved_with(candidates, cut)
             candidates, cut, self.space = top.candidates, top.cut, top.space
             self._count(assemblies=1, factorisations=1, checks=1)
             self._lap("first solve")
-            self._sample(three)
+            self._sample(nodes)
+            self._check_at_resonances()
             worst = self._check()
             complete = all(c.count(cut) == c.most for c in candidates)
-            if worst <= self.settings.tolerance or complete or round_ == MOST_ROUNDS - 1:
+            # At a narrow resonance more functions may not help: rounding and skeletons count there as much.
+            if worst <= self.settings.tolerance or complete or round_ == MOST_ROUNDS - 1 or worst > 0.5 * before:
                 break
+            before = worst
             cut *= min(0.6, 0.5 * np.sqrt(self.settings.tolerance / worst))
-        for node in three:
-            node.matrix = None
+        self._checkers = {}
+        self._at_nodes = []
 
-    def _sample(self, ready: list[_Node]) -> None:
-        """Assemble the matrix at all nodes in the functions of the segment."""
-        top = ready[-1]
-        assert top.matrix is not None
+    def _sample(self, nodes: list[_Node]) -> None:
+        """Assemble the matrix at all nodes in the functions of the segment; the last has it already."""
+        top = nodes[-1]
         self.samples = MatrixSamples(top.discretisation, self.space, self.nodes, top.dtype)
-        self.samples.add(len(self.nodes) - 1, top.matrix)
-        top.matrix = None
-        known = {id(node.discretisation): node for node in ready}
-        for q, d in enumerate(self._at_nodes[:-1]):
-            node = known.get(id(d)) or _Node(d, self.reduction, self.reference_ohm, top.candidates)
-            node.matrix_in(self.space)
+        for q, node in reversed(list(enumerate(nodes))):
+            if node is not top:
+                node.matrix_in(self.space)
+                self._count(assemblies=1)
             assert node.matrix is not None
             self.samples.add(q, node.matrix)
             node.matrix = None
-            self._count(assemblies=1)
-            self._tell("assemble", (q + 2) / len(self.nodes))
+            self._tell("assemble", (len(nodes) - q) / len(nodes))
         self._lap("assemble")
+
+    def _check_at_resonances(self) -> None:
+        """Have the residual worked out at the narrowest resonances of designs, which ask most of the functions."""
+        widest = CHECKED_WIDTH * (self.high_hz - self.low_hz)
+        narrowest = sorted(self._design_features(widest), key=lambda found: found.half_width_hz)[:MOST_RESONANCES]
+        for found in narrowest:
+            # Places shift a little with the functions; once looked at, a neighbourhood is not looked at again.
+            if all(abs(found.frequency_hz - f) > widest for f in self._checkers):
+                node = _Node(self._discretised(found.frequency_hz), self.reduction, self.reference_ohm, [])
+                self._checkers[found.frequency_hz] = node
 
     def check_frequencies(self) -> np.ndarray:
         """Return frequencies between nodes at which interpolation is least certain, the topmost interval always among them."""
@@ -341,12 +383,12 @@ class BandSegment:
         return np.asarray(between[chosen])
 
     def _check(self) -> float:
-        self.checked = {}
-        worst = 0.0
-        for f in self.check_frequencies():
-            error, sensitivity = self._residual_at(float(f))
-            self.checked[float(f)] = (error.pattern, sensitivity)
-            self._port_error = max(error.port_matrix, getattr(self, "_port_error", 0.0))
+        self.checked, self.probed = {}, {}
+        self._port_error = worst = 0.0
+        for f in self._checkers:
+            error, sensitivity = self._residual_at(f)
+            self.checked[f] = (error.pattern, sensitivity)
+            self._port_error = max(error.port_matrix, self._port_error)
             worst = max(worst, error.pattern)
         self._lap("checks")
         return worst
@@ -355,14 +397,9 @@ class BandSegment:
         """Return the error at a frequency from the residual of the full system, and the sensitivity there."""
         d = self.own.at(frequency_hz)
         currents, factors = self._port_currents(d)
-        node = _Node(self._discretised(frequency_hz), self.reduction, self.reference_ohm, self._no_candidates)
-        error = node.error_of(self.space, currents.currents, factors)
+        error = self._checkers[frequency_hz].error_of(self.space, currents.currents, factors)
         self._count(checks=1)
         return error, self._sensitivity(d, currents.currents, factors)
-
-    @property
-    def _no_candidates(self) -> list[Candidates]:
-        return []
 
     def _port_currents(self, d: Discretisation) -> tuple[PortCurrents, Factors]:
         matrix = self.samples.at(d, self.reference_ohm)
@@ -373,19 +410,25 @@ class BandSegment:
         return made
 
     def _sensitivity(self, d: Discretisation, currents: ComplexArray, factors: Factors) -> float:
-        """Return how much currents of some ports change, relatively, when every entry of own blocks changes by a random part."""
+        """Return how much currents of some ports change, relatively, when every entry of own blocks changes by a random part.
+
+        What random sources inside a few antennas drive there is kept beside it, in ``probed``.
+        """
         ports = np.unique(np.linspace(0, d.n_ports - 1, min(PROBES, d.n_ports)).round().astype(int))
         own = own_blocks(d, self.space, self.reference_ohm)
         disturbed: dict[int, ComplexArray] = {}
         x = currents[:, ports]
-        right = np.empty_like(x)
+        sources = probe_sources(self.space)
+        right = np.empty((self.space.size, len(ports) + sources.shape[1]), dtype=complex)
         for a, k in enumerate(d.kind_of):
             if id(own[k]) not in disturbed:
                 signs = np.triu(np.random.default_rng(len(own[k])).choice([-1.0, 1.0], size=own[k].shape))
                 disturbed[id(own[k])] = own[k] * (signs + np.triu(signs, 1).T)
-            right[self.space.of(a)] = disturbed[id(own[k])] @ x[self.space.of(a)]
-        change = factors.solve(right)
-        return float(np.max(np.linalg.norm(change, axis=0) / np.linalg.norm(x, axis=0)))
+            right[self.space.of(a), : len(ports)] = disturbed[id(own[k])] @ x[self.space.of(a)]
+        right[:, len(ports) :] = sources
+        found = factors.solve(right)
+        self.probed[d.frequency_hz] = probe_answers(self.space, found[:, len(ports) :])
+        return float(np.max(np.linalg.norm(found[:, : len(ports)], axis=0) / np.linalg.norm(x, axis=0)))
 
     def solve(self, frequency_hz: float) -> ChannelSolution:
         """Return the station solved at a frequency of the segment [Hz], to the tolerance wherever that can be reached.
@@ -405,7 +448,7 @@ class BandSegment:
         sensitivity = self._sensitivity(d, currents.currents, factors)
         error, port_error = self.stated_error(sensitivity), self._port_error * self._raised(sensitivity)
         if error > tolerance:
-            node = _Node(self._discretised(frequency_hz), self.reduction, self.reference_ohm, self._no_candidates)
+            node = _Node(self._discretised(frequency_hz), self.reduction, self.reference_ohm, [])
             found = node.error_of(self.space, currents.currents, factors)
             self._count(checks=1)
             self.checked[frequency_hz] = (found.pattern, sensitivity)
@@ -423,12 +466,50 @@ class BandSegment:
         )  # fmt: skip
         return ChannelSolution(d, currents, self.space, isolated, statistics, sensitivity)
 
+    def features(self, widest_hz: float) -> list[Feature]:
+        """Return the resonances whose half-width is at most so much [Hz], of designs alone and of the array as solved so far.
+
+        Those of a design are found wherever they lie and however narrow they are; in the array they come in groups close by, one
+        of each antenna and polarisation.  Those that only the array has are found once it is solved at frequencies about as far
+        apart as the resonances between are wide in all, in the precision of the factors.
+        """
+        found = self._design_features(widest_hz)
+        if len(self.probed) >= FEWEST_PROBED:
+            nodes = np.array(sorted(self.probed))
+            values = np.array([self.probed[f] for f in nodes])
+            for pole, height in narrow_poles(nodes, values, SINGLE_FIT, widest_hz):
+                if height > STANDS_OUT:
+                    found.append(Feature(pole.real, abs(pole.imag), "array"))
+        return sorted(found)
+
+    def _design_features(self, widest_hz: float) -> list[Feature]:
+        found: list[Feature] = []
+        rng = np.random.default_rng(0)
+        with single_threaded_blas():
+            for k in self.own.distinct()[:MOST_SCANNED]:
+                basis = self.space.bases[k]
+                assert basis is not None
+                block = self.own.loaded_in(k, basis, self.reference_ohm)
+                sources = rng.normal(size=(basis.shape[1], 3))
+
+                def answer(f: float, block=block, sources=sources) -> ComplexArray:  # type: ignore[no-untyped-def]
+                    return np.asarray(sources.T @ np.linalg.solve(block(f), sources), dtype=complex).ravel()
+
+                name = self.own.name_of(k)
+                found += [Feature(f, width, name) for f, width in scanned(answer, self.low_hz, self.high_hz, widest_hz)]
+        return found
+
     def _raised(self, sensitivity: float) -> float:
         return max(1.0, sensitivity / min(known for _, known in self.checked.values()))
 
     def stated_error(self, sensitivity: float) -> float:
-        """Return the error stated for a frequency of some sensitivity, from those that were checked."""
-        return max(error * max(1.0, sensitivity / known) for error, known in self.checked.values())
+        """Return the error stated for a frequency of some sensitivity, from those that were checked.
+
+        In proportion to the sensitivity, but never below what was found where nothing resonates.
+        """
+        least = min(known for _, known in self.checked.values())
+        usual = max(known for _, known in self.checked.values() if known < RESONANT * least)
+        return max(error * max(sensitivity, min(known, usual)) / known for error, known in self.checked.values())
 
     def _assembled(self, frequency_hz: float) -> ChannelSolution:
         """Return the station assembled at a frequency, on the segment's mesh."""

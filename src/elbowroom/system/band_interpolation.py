@@ -14,6 +14,7 @@ References
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import replace
 
@@ -23,10 +24,12 @@ from elbowroom.base.arrays import AnyComplexArray, ComplexArray, FloatArray
 from elbowroom.base.constants import SPEED_OF_LIGHT
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.base.threads import available_cores
+from elbowroom.kernels.basis import overlap_matrix
 from elbowroom.system.assembly import single_threaded_blas
 from elbowroom.system.discretisation import Discretisation, Kind, attachments
 from elbowroom.system.factorisation import TiledSymmetric
-from elbowroom.system.self_block import loss_and_loads
+from elbowroom.system.networks import attach_ports
+from elbowroom.system.self_block import internal_impedance, loss_and_loads
 from elbowroom.system.spaces import CurrentSpace
 
 
@@ -134,6 +137,45 @@ class OwnBlocks:
             blocks |= dict.fromkeys(kinds, 0.5 * (made + made.T))
         kinds_now = [Kind(q.antenna, q.mesh, q.orientation, q.height, blocks[k]) for k, q in enumerate(model.kinds)]
         return replace(model, frequency_hz=float(frequency_hz), kinds=kinds_now)
+
+    def loaded_in(self, kind: int, basis: ComplexArray, reference_ohm: float) -> Callable[[float], ComplexArray]:
+        """Return what gives the loaded own block of a kind in some functions (N, n), (n, n) [ohm], at a frequency [Hz].
+
+        Quick enough to be asked hundreds of times.
+        """
+        model = self._model.kinds[kind]
+        antenna, mesh = model.antenna, model.mesh
+        first = next(kinds[0] for kinds in self._shared.values() if kind in kinds)
+        samples = basis.T @ self._samples[first] @ basis
+        overlap = overlap_matrix(mesh.order)
+        materials: dict[tuple[float, float, float], ComplexArray] = {}
+        for e in range(mesh.n_elements):
+            wire = antenna.wires[mesh.wire[e]]
+            if wire.conductivity is not None:
+                key = (wire.radius, wire.conductivity, wire.relative_permeability)
+                functions = mesh.expansion[e] @ basis
+                materials.setdefault(key, np.zeros((basis.shape[1],) * 2, dtype=complex))
+                materials[key] += 0.5 * mesh.length[e] * (functions.T @ overlap @ functions)
+        gaps, loads = mesh.gap_vectors @ basis, mesh.load_vectors @ basis
+
+        def at(frequency_hz: float) -> ComplexArray:
+            block = np.tensordot(node_weights(self.nodes, frequency_hz) / frequency_hz, samples, axes=1)
+            for material, matrix in materials.items():
+                block += internal_impedance(*material, frequency_hz) * matrix
+            for load, vector in zip(antenna.loads, loads, strict=True):
+                block += load.impedance(2.0 * np.pi * frequency_hz) * np.outer(vector, vector)
+            block += gaps.T @ attach_ports(antenna, frequency_hz, reference_ohm).loading @ gaps
+            return np.asarray(0.5 * (block + block.T))
+
+        return at
+
+    def name_of(self, kind: int) -> str:
+        """Return the name of a kind's design."""
+        return self._model.kinds[kind].antenna.name
+
+    def distinct(self) -> list[int]:
+        """Return one kind for each own block there is."""
+        return [kinds[0] for kinds in self._shared.values()]
 
 
 class MatrixSamples:

@@ -169,9 +169,10 @@ def reduced_candidates(
         Skeletons, by which neighbours are heard.
     """
     d = discretisation
-    groups: dict[tuple[int, int], list[int]] = {}
+    # Equal designs share a mesh, and must share functions as they share own blocks, though they be told apart as objects.
+    groups: dict[int, list[int]] = {}
     for k, kind in enumerate(d.kinds):
-        groups.setdefault((id(kind.antenna), id(kind.mesh)), []).append(k)
+        groups.setdefault(id(kind.mesh), []).append(k)
     found: dict[int, Candidates] = {}
     for kinds in groups.values():
         made = _candidates_of(d, kinds, answers, settings, filler, distances, table)
