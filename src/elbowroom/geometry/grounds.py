@@ -18,8 +18,8 @@ TABLE_TOLERANCE = 1e-5
 
 TOLERANCE_RANGE = (1e-8, 1e-3)
 
-LARGEST_PERMITTIVITY, LARGEST_CONDUCTIVITY = 100.0, 1e8
-"""Beyond water and beyond metals [-], [S/m]: another unit or a slip."""
+LARGEST_PERMITTIVITY, LARGEST_CONDUCTIVITY = 100.0, 1e4
+"""Beyond water, and two thousand times beyond the sea [-], [S/m]: another unit, a slip, or a perfect plane."""
 
 MOST_MOISTURE = 0.55
 """Largest volumetric water content of the polynomial of :class:`MoistSoil`."""

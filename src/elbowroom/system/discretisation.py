@@ -375,7 +375,8 @@ def discretise(
                 images[image_key] = block + ground_block(ground, samples, samples, wavenumber_of(frequency_hz))
             block = images[image_key]
         kind_of[a] = index_of[key] = len(kinds)
-        kinds.append(Kind(placed.antenna, made, placed.orientation, height, block))
+        # Of designs that are equal, one object stands for all: others tell designs apart by it.
+        kinds.append(Kind(designs[which], made, placed.orientation, height, block))
 
     unknowns = np.array([kinds[k].mesh.n_unknowns for k in kind_of])
     ports = np.array([len(p.antenna.ports) for p in station])
