@@ -7,7 +7,7 @@ import numpy as np
 from elbowroom.base.arrays import FloatArray
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.kernels.point_kernels import PointKernels, Workspace
-from elbowroom.kernels.soil.fill_numba import fill_with_direct, fill_without
+from elbowroom.kernels.soil.fill_numba import fill_pairs
 from elbowroom.kernels.soil.table import SoilTable
 
 _LANES = 16
@@ -43,13 +43,21 @@ def fill_soil(table: SoilTable, points: FloatArray, points2: FloatArray, work: W
     _check_reach(table, points, points2)
     rows, count = points.shape[1], points2.shape[1]
     # Planes whose distance is a large power of two would share the same few lines of the cache.
-    plane = rows * count + 72
-    flat = work.array("soil", (8 * plane,))
+    plane = -(-rows * count // 16) * 16 + 80
+    flat = work.array("soil", (8 * plane + 16,))
+    begin = -flat.ctypes.data % 64 // flat.itemsize
+    flat = flat[begin : begin + 8 * plane]
     turns = table.wavenumber / (2.0 * np.pi)
     padded = np.empty((3, -(-count // _LANES) * _LANES))
     np.multiply(points2, turns, out=padded[:, :count])
     padded[:, count:] = padded[:, count - 1 : count]
-    scales = (turns * table.rho_scale_m, 1.0 / table.rho_per_node, turns * table.z_scale_m, 1.0 / table.z_per_node, table.z_start / table.z_per_node)
+    scales = (
+        turns * table.rho_scale_m,
+        1.0 / table.rho_per_node,
+        turns * table.z_scale_m,
+        1.0 / table.z_per_node,
+        table.z_start / table.z_per_node,
+    )
     grid = np.array(scales, dtype=table.coefficients.dtype)
     nodes, stride, odd = table.aligned
     n_rho, n_z, _ = table.coefficients.shape
@@ -57,13 +65,12 @@ def fill_soil(table: SoilTable, points: FloatArray, points2: FloatArray, work: W
     kind = nodes.dtype
     scratch = (
         np.empty(2 * _BLOCK, dtype=kind),
-        np.empty(2 * _BLOCK, dtype=flat.dtype),
+        np.empty(2 * _BLOCK, dtype=flat.dtype) if direct else None,
         np.empty(8 * _BLOCK, dtype=kind),
         np.empty(_BLOCK, dtype=np.int32),
     )
-    run = fill_with_direct if direct else fill_without
     x, y, z = turns * points
-    run(x, y, z, *padded, count, turns, grid, sizes, nodes, flat, plane, *scratch, np.empty(64, dtype=flat.dtype))
+    fill_pairs(x, y, z, *padded, count, turns, grid, sizes, nodes, flat, plane, *scratch, np.empty(64, dtype=flat.dtype))
     kernels = flat.reshape(8, plane)[:, : rows * count].reshape(4, 2, rows, count)
     return PointKernels(kernels[0], kernels[1], kernels[2], kernels[3])
 
@@ -85,5 +92,8 @@ def _check_reach(table: SoilTable, points: FloatArray, points2: FloatArray) -> N
         return
     farthest = max(float(np.hypot(points[0, i] - points2[0], points[1, i] - points2[1]).max()) for i in range(points.shape[1]))
     if not farthest <= table.rho_max_m * (1.0 + 1e-9):
-        msg = f"horizontal distance of points: expected at most {table.rho_max_m:g} m, which the ground's table covers, got {farthest:g} m"
+        msg = (
+            f"horizontal distance of points: expected at most {table.rho_max_m:g} m, which the ground's table covers, "
+            f"got {farthest:g} m"
+        )
         raise ModelRangeError(msg)

@@ -106,7 +106,7 @@ class GroundResponse:
         With A = -k^2 e and B = h, equal at L = 0, delta = (A - B)/L^2 is carried along, so that w needs no division by L^2.
         """
         k2 = self.wavenumber**2
-        level = u0 * u0 + k2
+        level: ComplexArray = u0 * u0 + k2
         assert self.bottom is not None
         u = np.sqrt(level - k2 * self.bottom)
         a, b, delta = -k2 * self.bottom / u, u, -1.0 / u

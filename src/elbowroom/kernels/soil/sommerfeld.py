@@ -1,6 +1,6 @@
 """The four kernels of a ground by quadrature over vertical wavenumbers.
 
-S[f](rho, Z) = integral over L from 0 of f(L) (L/u0) J0(L rho) exp(-u0 Z) dL, so that S[1] = exp(-jkR)/R with R^2 = rho^2 + Z^2, and
+S[f](rho, Z) = integral over L from 0 of f(L) (L/u0) J0(L rho) exp(-u0 Z) dL, so that S[1] = exp(-jkR)/R, R^2 = rho^2 + Z^2, and
 
     P = S[Gh],  N = S[-Gh + k^2 w],  K = S[-Ge + k^2 w],  V = S[-u0 w]
 
@@ -8,11 +8,12 @@ S[f](rho, Z) = integral over L from 0 of f(L) (L/u0) J0(L rho) exp(-u0 Z) dL, so
 the propagating waves, then along u0 = v through the evanescent ones.  Panels are halved until the coefficients are resolved on
 each, which finds the branch points of soils and the poles of sheets without being told, then cut to the phase of the
 Bessel function.  Beyond every singularity the Bessel function splits into Hankel functions that decay on the vertical lines
-L = L_b +- jt, which serve all distances but the shortest (Sommerfeld's contours; Michalski and Mosig 1997 review them, from memory).
+L = L_b +- jt, which serve all distances but the shortest (Michalski and Mosig 1997 review such contours; from memory).
 """
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from functools import cache
 
@@ -114,7 +115,7 @@ class GroundQuadrature:
         beyond = self._corner_v * 2.0 ** np.arange(1, max(1, int(np.ceil(np.log2(self._end_v / self._corner_v)))) + 1)
         self._v_panels = self._resolve(np.array([*first, *beyond]), lambda s: s + 0j)
 
-    def _resolve(self, breaks: FloatArray, path) -> FloatArray:  # type: ignore[no-untyped-def]
+    def _resolve(self, breaks: FloatArray, path: Callable[[FloatArray], ComplexArray]) -> FloatArray:
         """Halve panels until the four coefficients are resolved on each; return (n, 2) ends."""
         x, _ = _rule(16)
         last = _last_legendre(16)
@@ -167,8 +168,8 @@ class GroundQuadrature:
         weights = np.concatenate([1j * k * np.sin(theta) * -weight, weight_v + 0j])
         return _Nodes(level, u0, _four(self.response, u0) * weights)
 
-    def _vertical(self, rho_min: float, rho_max: float) -> tuple[FloatArray, _Nodes, _Nodes]:
-        """Return t and the nodes at L_b + jt and L_b - jt, without their Hankel functions."""
+    def _vertical(self, rho_min: float, rho_max: float) -> tuple[_Nodes, _Nodes]:
+        """Return the nodes at L_b + jt and L_b - jt, without their Hankel functions."""
         end = DECAY / rho_min
         breaks = [end]
         while breaks[-1] > min(0.5 * self.response.wavenumber, 4.0 / rho_max):
@@ -182,7 +183,7 @@ class GroundQuadrature:
             u0 = np.sqrt(level * level - self.response.wavenumber**2)
             factor = 0.5j * sign * weight * level / u0
             sides.append(_Nodes(level, u0, _four(self.response, u0) * factor))
-        return t, sides[0], sides[1]
+        return sides[0], sides[1]
 
     def kernels(self, rho: FloatArray, z: FloatArray) -> ComplexArray:
         """Return P, N, K and k V, each times R exp(+jkR), on a grid.
@@ -225,7 +226,7 @@ class GroundQuadrature:
         total = _real_times_complex(bessel, axis.sources(z))
         if near:
             return total
-        t, up, down = self._vertical(rho_min, rho_max)
+        up, down = self._vertical(rho_min, rho_max)
         argument = np.multiply.outer(rho, up.level)
         hankel = hankel1e(0, argument) * np.exp(1j * argument)
         # H0(2) of the conjugate argument is the conjugate of H0(1).
