@@ -492,3 +492,19 @@ def test_draw_antenna__of_two_ports_over_a_ground_and_of_one_with_a_network_in_f
     ):
         with pytest.raises(ModelRangeError, match="one "):
             draw([], tmp_path / "none.png")
+
+
+def test_draw_from_above__arrows_that_reach_past_the_wires_are_not_cut_off():
+    """The corners of a bow-tie are farther from its centre than its ends along the co-polarisation, and arrows are as long."""
+    import matplotlib.pyplot as plt
+
+    from elbowroom.geometry.shapes import bow_tie
+    from elbowroom.job.oneantenna import alone
+    from elbowroom.job.pictures.layouts import draw_from_above, port_colours
+
+    station = alone(bow_tie(half_length_m=0.35, flare_deg=90.0, height_m=0.9, wire_radius_m=0.003))
+    figure, axes = plt.subplots()
+    draw_from_above(axes, station, port_colours(station))
+    reach = 0.35 * np.sqrt(2.0)
+    assert axes.get_xlim()[1] > reach
+    plt.close(figure)

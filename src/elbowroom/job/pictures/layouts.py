@@ -156,12 +156,13 @@ def draw_from_above(
     middle_of_gap, level = _port_places(station)
     arrow = np.maximum(reach, 1e-3)[owner]
     heading = station.port_nominal_phi_rad
+    tips = middle_of_gap[:, :2] + arrow[:, None] * np.array([np.cos(heading), np.sin(heading)]).T
     port_of = np.array([n.port for n in station.port_names])
     for name, colour in colours.items():
         mine = level & (port_of == name)
         axes.quiver(
             *middle_of_gap[mine, :2].T,
-            *(arrow[mine] * np.array([np.cos(heading[mine]), np.sin(heading[mine])])),
+            *(tips - middle_of_gap[:, :2])[mine].T,
             angles="xy", scale_units="xy", scale=1.0, units="dots", width=2.6 if few else 1.4,
             headwidth=4.0, headlength=4.5, headaxislength=4.0, color=colour, zorder=3,
         )  # fmt: skip
@@ -186,7 +187,8 @@ def draw_from_above(
                 zorder=5,
                 path_effects=HALO,
             )
-    low, high = flat.reshape(-1, 2).min(axis=0), flat.reshape(-1, 2).max(axis=0)
+    shown = np.concatenate([flat.reshape(-1, 2), tips[level]])
+    low, high = shown.min(axis=0), shown.max(axis=0)
     half = max(0.54 * float(np.max(high - low)), 0.3)
     middle = 0.5 * (low + high)
     axes.set_xlim(middle[0] - half, middle[0] + half)
