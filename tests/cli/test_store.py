@@ -228,6 +228,22 @@ def test_prune__takes_damage_and_leftovers_but_no_other_version(command, job, st
     assert store.keys() == [own_key(store)]
 
 
+def test_prune__keeps_port_matrices_of_units_without_currents(command, job, store):
+    from elbowroom.job.dropping import PORTS_SCHEMA, drop_currents
+    from elbowroom.job.jobfile import read_job
+    from elbowroom.job.pipeline import JobRun
+
+    own = own_key(store)
+    drop_currents(JobRun(read_job(job)), 110e6)
+    matrices = Hdf5Store(store.folder.parent, PORTS_SCHEMA)
+    record = matrices.get(own)
+    matrices.put(OTHER, record)
+    assert "1 units" in command("store", "list", job).out
+    command("store", "prune", job, "--remove", "--other-versions")
+    assert matrices.keys() == [own]
+    assert store.keys() == []
+
+
 def test_prune__leaves_young_units_when_told(command, job, store):
     command("store", "prune", job, "--remove", "--older-than-days", 1)
     assert OTHER in store

@@ -10,7 +10,7 @@ import pytest
 from elbowroom.base.arrays import ArraySpec
 from elbowroom.base.errors import SolveError
 from elbowroom.job import sharing
-from elbowroom.job.sharing import others_first, working_on
+from elbowroom.job.sharing import working_on
 from elbowroom.store import Hdf5Store, MemoryStore, Record, Schema, content_key
 
 SCHEMA = Schema("numbers", 1, (ArraySpec("x", ("n",), "f", "m", "numbers"),))
@@ -78,12 +78,3 @@ def test_working_on__two_at_once_solve_each_unit_once(store):
         thread.join(30.0)
         assert not thread.is_alive()
     assert sorted(solved) == sorted(keys)
-
-
-def test_others_first(store):
-    keys = [content_key(n) for n in range(4)]
-    store.put(keys[1], RECORD)
-    with store.claim(keys[0]), store.claim(keys[1]):
-        # what is in the store needs no waiting, claimed or not
-        assert others_first(store, keys) == [1, 2, 3, 0]
-    assert others_first(store, keys) == [0, 1, 2, 3]

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 
 from elbowroom.store.records import Record, Store
@@ -55,26 +55,3 @@ def working_on(store: Store, key: str, waiting: Waiting | None = None) -> Iterat
         if waiting is not None and holder is not None:
             waiting(f"waiting for {holder}", 0.0)
         time.sleep(LOOK_AGAIN_SECONDS)
-
-
-def others_first(store: Store, keys: Sequence[str]) -> list[int]:
-    """Return the order of work on units: first what nobody works on, in the order given, then what others work on.
-
-    Parameters
-    ----------
-    store : Store
-        The store.
-    keys : sequence of str
-        Keys of the units.
-
-    Returns
-    -------
-    list of int
-        Indices into ``keys``.
-
-    Raises
-    ------
-    StoreError
-        If the store cannot be read.
-    """
-    return sorted(range(len(keys)), key=lambda i: keys[i] not in store and store.claimed(keys[i]) is not None)

@@ -11,6 +11,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from elbowroom.base.errors import ElbowroomError, StoreError
+from elbowroom.job.dropping import PORTS_SCHEMA
 from elbowroom.job.solve import SOLUTION_SCHEMA
 from elbowroom.store import Hdf5Store, Schema
 from elbowroom.store.care import SCHEMA_FOLDER, UnitEntry, entries, left_behind, schema_folders
@@ -111,7 +112,7 @@ class Needs:
         if unit.key in self.keys:
             return True
         frequency = unit.attributes.get("frequency_hz")
-        if not is_current(unit) or isinstance(frequency, bool) or not isinstance(frequency, (int, float)):
+        if schema_of(unit) is None or isinstance(frequency, bool) or not isinstance(frequency, (int, float)):
             return False
         if not min(self.run.frequencies_hz) < frequency < max(self.run.frequencies_hz):
             return False
@@ -168,15 +169,16 @@ def schemas_in(folder: Path) -> list[Schema]:
     return [Schema(match[1], int(match[2]), ()) for match in matches if match is not None]
 
 
-def is_current(unit: UnitEntry) -> bool:
-    """Return whether this version of the program reads units of that schema."""
-    return (unit.schema_name, unit.schema_version) == (SOLUTION_SCHEMA.name, SOLUTION_SCHEMA.version)
+def schema_of(unit: UnitEntry) -> Schema | None:
+    """Return the schema of a unit if this version of the program reads such units, else None."""
+    known = {(schema.name, schema.version): schema for schema in (SOLUTION_SCHEMA, PORTS_SCHEMA)}
+    return known.get((unit.schema_name, unit.schema_version))
 
 
 def set_aside(unit: UnitEntry) -> list[DamageReport]:
     """Move a damaged unit out of the way, as a run that meets it does; return what was done."""
     reports: list[DamageReport] = []
-    schema = SOLUTION_SCHEMA if is_current(unit) else Schema(unit.schema_name, unit.schema_version, ())
+    schema = schema_of(unit) or Schema(unit.schema_name, unit.schema_version, ())
     Hdf5Store(unit.path.parents[1], schema, report=reports.append).get(unit.key)
     return reports
 
@@ -284,7 +286,7 @@ def plan_pruning(
         why = ""
         if unit.key in working or any(need.includes(unit) for need in needs):
             pass
-        elif is_current(unit):
+        elif schema_of(unit) is not None:
             why = "damaged" if unit.problem is not None else "needed by no job"
         elif other_versions:
             why = f"of another version ({unit.path.parent.name})"
