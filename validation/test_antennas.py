@@ -194,31 +194,44 @@ OPTIMUM = [(0.782, 0.138, 7.0), (0.822, 0.148, 7.5), (0.865, 0.157, 8.0), (0.918
 """tau, sigma and directivity [dB] of optimum designs, after Carrel 1961 (from memory)."""
 
 
-@pytest.mark.parametrize(("tau", "sigma", "published"), OPTIMUM)
-def test_log_periodic__directivity(record, tau, sigma, published):
-    """Against the induced-EMF method for thin elements, and against the published contours for elements of h/a = 177.
+OFF_OPTIMUM = [(0.8, 0.08), (0.865, 0.08), (0.9, 0.06), (0.92, 0.12)]
 
-    Tolerances.  Sinusoidal currents leave out terms of relative order 1/Omega, Omega = 2 ln(2h/a).  Contours as first drawn were
-    1 to 2 dB too high (P. C. Butson and G. T. Thompson, IEEE Trans. AP-24, 1976; from memory) and later prints are lowered by
-    1 dB; C. A. Balanis (Antenna Theory, figure 11.13 and example 11.1: 8 dB at tau 0.865, sigma 0.157; from memory) prints the
-    lowered ones and says that the error was 1 to 2 dB, so that they still count to 1 dB.  The induced-EMF method at h/a = 177
-    gives 6.6, 7.3, 8.1 and 9.2 dB; a feeder of 400 ohm or elements of h/a = 1000 lower it by about 1 dB.
+
+@pytest.mark.parametrize(("tau", "sigma"), [point[:2] for point in OPTIMUM] + OFF_OPTIMUM)
+def test_log_periodic__directivity_of_thin_elements_is_that_of_carrels_method(record, tau, sigma):
+    """Tolerance: sinusoidal currents leave out terms of relative order 1/Omega, Omega = 2 ln(2h/a).
+
+    Between h/a of 1e3 and 1e7 the two draw nearer; the limit of their difference is 0 within 0.15 dB at all eight points, of which
+    0.05 to 0.2 dB are uncertainty of the fit.
     """
     slenderness = 1e4
     thin = log_periodic_alone(tau, sigma, slenderness)
     solved = solve_alone(thin, mesh=LIGHT)
     power = radiated_power(solved.discretisation, solved.currents[:, 0], n=24)
-    backwards = decibels(directivity(solved, theta=pi, power=power))
+    expected = decibels(induced_emf_directivity(thin))
     record(
-        f"log-periodic, tau {tau}, thin: directivity [dB]", decibels(directivity(solved, power=power)),
-        decibels(induced_emf_directivity(thin)), absolute=2.0 * decibels(1.0 + 0.5 / np.log(2.0 * slenderness)),
-        source="Carrel's method 1961", wrong=[backwards, 2.15],
+        f"log-periodic, tau {tau}, sigma {sigma}, thin: directivity [dB]", decibels(directivity(solved, power=power)), expected,
+        absolute=2.0 * decibels(1.0 + 0.5 / np.log(2.0 * slenderness)), source="Carrel's method 1961",
+        wrong=[decibels(directivity(solved, theta=pi, power=power)), 2.15, expected - 1.0, expected + 1.0],
     )  # fmt: skip
+
+
+@pytest.mark.parametrize(("tau", "sigma", "published"), OPTIMUM)
+def test_log_periodic__directivity_of_optimum_designs(record, tau, sigma, published):
+    """Against the published contours, for elements of h/a = 177.
+
+    Tolerance.  Contours as first drawn were 1 to 2 dB too high (P. C. Butson and G. T. Thompson, IEEE Trans. AP-24, 1976; from
+    memory) and later prints are lowered by 1 dB; C. A. Balanis (Antenna Theory, figure 11.13 and example 11.1: 8 dB at tau 0.865,
+    sigma 0.157; from memory) prints the lowered ones and says that the error was 1 to 2 dB, so that they still count to 1 dB.
+    The induced-EMF method at h/a = 177 gives 6.6, 7.3, 8.1 and 9.2 dB; a feeder of 400 ohm or elements of h/a = 1000 lower it by
+    about 1 dB.
+    """
     found = []
     for frequency in tau ** -np.array([0.0, 0.5]):
         solved = solve_alone(log_periodic_alone(tau, sigma, 177.0), mesh=LIGHT, frequency_hz=FREQUENCY_HZ * frequency)
         power = radiated_power(solved.discretisation, solved.currents[:, 0], n=24)
         found.append(directivity(solved, frequency=frequency, power=power))
+    backwards = decibels(directivity(solved, theta=pi, frequency=frequency, power=power))
     record(
         f"log-periodic, tau {tau}, h/a = 177: directivity [dB]", decibels(np.mean(found)), published, absolute=1.0,
         source="Carrel 1961, optimum designs (memory)", wrong=[backwards, 2.15, published - 2.15],
