@@ -14,7 +14,7 @@ L = L_b +- jt, which serve all distances but the shortest (Michalski and Mosig 1
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cache
 
 import numpy as np
@@ -40,6 +40,9 @@ _RULES = ((16, 6.0), (24, 15.0), (32, 24.0))
 """Gauss rules and the half phase across a panel up to which each is exact to 1e-10 beside a resolved coefficient."""
 
 _DEEPEST = 48
+
+_TRACE = 1e-7
+"""Loss tangent, and resistance of a mesh over its reactance, below which it is taken to be this."""
 
 
 @cache
@@ -80,6 +83,26 @@ def _four(response: GroundResponse, u0: ComplexArray) -> ComplexArray:
     return np.stack([gh, k2w - gh, k2w - ge, -k * u0 * w])
 
 
+def _off_the_path(response: GroundResponse) -> GroundResponse:
+    """Return the ground with a trace of loss if it has none: the waves it guides are poles that must not lie on the path."""
+
+    def lossy(eps: complex) -> complex:
+        return complex(eps.real, min(eps.imag, -_TRACE * eps.real))
+
+    if response.sheet is None and not response.layers:
+        return response
+    sheet = response.sheet
+    if sheet is not None:
+        sheet = replace(sheet, loss=complex(max(sheet.loss.real, _TRACE * sheet.reactance), sheet.loss.imag))
+    return replace(
+        response,
+        permittivity=lossy(response.permittivity),
+        sheet=sheet,
+        layers=tuple((thickness, lossy(eps)) for thickness, eps in response.layers),
+        bottom=None if response.bottom is None else lossy(response.bottom),
+    )
+
+
 class GroundQuadrature:
     """Evaluates the kernels of one ground on grids of distance and height.
 
@@ -100,7 +123,7 @@ class GroundQuadrature:
         if not (np.isfinite(z_min_m) and z_min_m > 0.0):
             msg = f"sum of heights above the ground [m]: expected more than 0, got {z_min_m!r}"
             raise ModelRangeError(msg)
-        self.response = response
+        self.response = _off_the_path(response)
         self.z_min_m = float(z_min_m)
         k = response.wavenumber
         soils = [response.permittivity, *(eps for _, eps in response.layers)]
