@@ -191,3 +191,38 @@ def test_antenna__bad_files_are_named(command, file):
     (file.parent / "file").write_text("")
     nowhere = command("antenna", file, "--frequency-hz", 150e6, "--no-convergence", "--output", file.parent / "file")
     assert nowhere.code == 7
+
+
+def test_antenna__over_soil_tells_what_the_ground_takes(command, file):
+    def figures(*options):
+        outcome = command("antenna", file, "--frequency-hz", 150e6, "--no-convergence", "--json", *options)
+        assert outcome.code == 0, outcome.all
+        return next(f for f in map(json.loads, outcome.out.splitlines()) if f["kind"] == "figures")
+
+    plane, bare, mesh = figures(), figures("--soil", 10, 0.01), figures("--soil", 10, 0.01, "--wire-mesh", 0.1, 0.001)
+    assert plane["ground_loss"] == 0.0
+    assert bare["ground_loss"] > 2.0 * mesh["ground_loss"] > 0.02
+    for found in (plane, bare, mesh):
+        # one port, so that all that is accepted goes into sky, wires and ground; the power balance of the model is good to 1e-4
+        assert found["radiation_efficiency"] + found["wire_loss"] + found["ground_loss"] == pytest.approx(1.0, abs=2e-4)
+        assert found["wire_loss"] > 0.0
+    shown = command("antenna", file, "--frequency-hz", 150e6, "--no-convergence", "--soil", 10, 0.01).out
+    assert "relative permittivity 10" in shown
+    assert "into ground: part of the accepted power" in " ".join(shown.split())
+
+
+@pytest.mark.parametrize(
+    ("options", "code", "told"),
+    [
+        (("--wire-mesh", 0.1, 0.001), 2, "give --soil"),
+        (("--soil", 10, 0.01, "--ground", "free-space"), 2, "expected one of them"),
+        (("--soil", 0.5, 0.01), 4, "relative_permittivity 0.5"),
+        (("--soil", "nan", 0.01), 4, "relative_permittivity"),
+        (("--soil", 10, 0.01, "--wire-mesh", 0.1, 0.05), 4, "wire_radius_m 0.05"),
+        (("--soil", 10, 0.01, "--height-m", -0.8), 3, "ground"),
+    ],
+)
+def test_antenna__bad_soil_is_refused(command, file, options, code, told):
+    outcome = command("antenna", file, "--frequency-hz", 150e6, *options)
+    assert outcome.code == code
+    assert told in " ".join(outcome.all.split())

@@ -11,7 +11,7 @@ import pytest
 from elbowroom.base.errors import ExportError, JobFileError
 from elbowroom.geometry.antennas import Antenna, Port
 from elbowroom.geometry.directions import hemisphere_grid, unit_vectors
-from elbowroom.geometry.grounds import FreeSpace, PerfectGround
+from elbowroom.geometry.grounds import FreeSpace, PerfectGround, Soil
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import Wire
 from elbowroom.job.beamfields import beam_fields, mean_nominal_phi_rad
@@ -91,6 +91,7 @@ def test_compare__of_identical_beams__finds_no_difference(pair):
     same = SimpleNamespace(
         beam=pair.isolated_beam, isolated_beam=pair.isolated_beam, embedded_patterns=pair.isolated_patterns, station=pair.station,
         discretisation=pair.discretisation, frequency_hz=pair.frequency_hz, statistics=pair.statistics,
+        power_parts=pair.power_parts,
     )  # fmt: skip
     (row,) = compare_beams(replace(fields_, solution=same, coupled=fields_.isolated))
     assert row.largest_difference_db == FLOOR_DB
@@ -105,7 +106,7 @@ def test_compare__a_beam_scaled_by_a_complex_factor__keeps_its_shape(pair):
     scaled = SimpleNamespace(
         beam=lambda *a, **k: (0.5 + 0.5j) * pair.isolated_beam(*a, **k), isolated_beam=pair.isolated_beam,
         embedded_patterns=pair.isolated_patterns, station=pair.station, discretisation=pair.discretisation,
-        frequency_hz=pair.frequency_hz, statistics=pair.statistics,
+        frequency_hz=pair.frequency_hz, statistics=pair.statistics, power_parts=pair.power_parts,
     )  # fmt: skip
     (row,) = compare_beams(replace(fields_, solution=scaled, coupled=(0.5 + 0.5j) * fields_.isolated))
     assert row.main_lobe_shape_difference_db < -200.0
@@ -212,3 +213,23 @@ def test_compare__narrow_beams_on_a_coarse_sky__are_not_misjudged():
     assert coarse.coupled_directivity_db == pytest.approx(fine.coupled_directivity_db, abs=0.05)
     assert coarse.coupled_sidelobe_db == pytest.approx(fine.coupled_sidelobe_db, abs=0.3)
     assert coarse.coupled_peak_offset_deg < 0.2
+
+
+def test_compare__over_soil_beams_tell_what_the_ground_takes():
+    wires = [Wire((0.0, -0.45, 0.7), (0.0, 0.45, 0.7), 0.003, conductivity=1e5)]
+    design = Antenna("rod", wires, [Port("x", 0)])
+    beams = [Beam("up", "x"), Beam("low", "x", 50.0, 90.0)]
+    found = {}
+    for ground in (PerfectGround(), Soil(10.0, 0.01)):
+        solution = solve(Station([Placed(design, (0, 0, 0)), Placed(design, (1.1, 0.2, 0))], ground), 150e6)
+        found[ground.name] = compare_beams(beam_fields(solution, beams, SKY, 100.0))
+        mixed = beam_fields(solution, beams, SKY, ["open", 100.0])
+        assert all(np.isnan(row.radiation_efficiency) and np.isnan(row.ground_loss) for row in compare_beams(mixed))
+    for rows_ in found.values():
+        for row in rows_:
+            assert row.radiation_efficiency + row.wire_loss + row.ground_loss == pytest.approx(1.0, abs=1e-9)
+            assert row.wire_loss > 1e-3
+    assert all(row.ground_loss == 0.0 for row in found["perfect"])
+    assert all(0.1 < row.ground_loss < 0.7 for row in found["soil"])
+    # two beams of one station do not lose the same
+    assert found["soil"][0].ground_loss != pytest.approx(found["soil"][1].ground_loss, rel=0.02)

@@ -13,6 +13,7 @@ from elbowroom.cli.common import checked_folder, make_screen, modes
 
 if TYPE_CHECKING:
     from elbowroom.cli.screen import Screen
+    from elbowroom.geometry.grounds import Ground
     from elbowroom.geometry.stations import Station
     from elbowroom.job.oneantenna import AntennaFigures, PatternCut
     from elbowroom.store import Hdf5Store
@@ -26,6 +27,7 @@ SHOWN = {
     "front to back [dB]": "{front_to_back_db:.1f}",
     "cross-polar [dB]": "{cross_polar_db:.1f}",
     "efficiency [%]": "{radiation_efficiency:.2%}",
+    "into ground [%]": "{ground_loss:.2%}",
     "change of Z [%]": "{impedance_change:.2%}",
     "of pattern [dB]": "{pattern_change_db:.0f}",
 }
@@ -67,6 +69,14 @@ def _frequencies(
     "--ground", type=click.Choice(["perfect", "free-space"]), default="perfect", show_default=True,
     help="What the antenna stands on.",
 )  # fmt: skip
+@click.option(
+    "--soil", nargs=2, type=float, metavar="PERMITTIVITY S_PER_M",
+    help="Or soil: relative permittivity and conductivity [S/m], as 10 0.01.",
+)  # fmt: skip
+@click.option(
+    "--wire-mesh", nargs=2, type=float, metavar="PITCH_M RADIUS_M",
+    help="A bonded square mesh on the soil: distance and radius of its wires [m], as 0.1 0.0015.",
+)  # fmt: skip
 @click.option("--frequency-hz", "listed", type=float, multiple=True, metavar="HZ", help="Frequency; may be given several times.")
 @click.option("--start-hz", type=float, metavar="HZ", help="Or first frequency of a band,")
 @click.option("--stop-hz", type=float, metavar="HZ", help="last frequency")
@@ -84,7 +94,8 @@ def _frequencies(
 )
 @modes
 def antenna(
-    file: Path, ground: str, listed: tuple[float, ...], start_hz: float | None, stop_hz: float | None, step_hz: float | None,
+    file: Path, ground: str, soil: tuple[float, float] | None, wire_mesh: tuple[float, float] | None,
+    listed: tuple[float, ...], start_hz: float | None, stop_hz: float | None, step_hz: float | None,
     termination: complex, height_m: float, mesh: str, convergence: bool, output: Path | None, store_folder: Path | None,
     mode: str | None,
 ) -> None:  # fmt: skip
@@ -101,7 +112,6 @@ def antenna(
         msg = f"--height-m {height_m}: expected a number of metres"
         raise click.UsageError(msg)
     from elbowroom import __version__
-    from elbowroom.geometry.grounds import GROUNDS
     from elbowroom.job.antennafile import read_antenna
     from elbowroom.job.oneantenna import alone, write_figures
     from elbowroom.job.pictures import picture_name
@@ -109,10 +119,11 @@ def antenna(
     screen = make_screen(mode)
     design = read_antenna(file)
     folder = checked_folder(output or file.parent / "results")
-    station = alone(design, GROUNDS[ground], height_m=height_m)
+    under = _ground(ground, soil, wire_mesh)
+    station = alone(design, under, height_m=height_m)
     about = [
         f"antenna {design.name!r} from {file}; ports {', '.join(p.name for p in design.ports)}",
-        f"ground {ground}, origin at {height_m:g} m, every port terminated with {_text(termination)} ohm, mesh {mesh}",
+        f"ground {under.describe()}, origin at {height_m:g} m, every port terminated with {_text(termination)} ohm, mesh {mesh}",
     ]
     for line in about:
         screen.say(f"  {line}")
@@ -120,10 +131,25 @@ def antenna(
     rows, cuts = _solve(station, frequencies, termination, mesh, convergence, kept, screen)
     table = folder / Path(picture_name("antenna", file.stem)).with_suffix(".csv").name
     write_figures(rows, table, (f"elbowroom {__version__}", *about))
-    _show(rows, screen, free_space=ground == "free-space", convergence=convergence)
+    _show(rows, screen, free_space=under.open_below, convergence=convergence)
     screen.wrote(table, "all figures and what they mean")
     _draw(station, rows, cuts, folder, file.stem, termination, screen, convergence=convergence)
     screen.say("results of a model, not a measurement")
+
+
+def _ground(name: str, soil: tuple[float, float] | None, wire_mesh: tuple[float, float] | None) -> Ground:
+    """Return the ground that the options ask for."""
+    from elbowroom.geometry.grounds import GROUNDS, MeshOnSoil, Soil
+
+    if soil is None:
+        if wire_mesh is not None:
+            msg = "--wire-mesh: the soil below the mesh is missing; give --soil"
+            raise click.UsageError(msg)
+        return GROUNDS[name]
+    if name != "perfect":
+        msg = f"--ground {name} and --soil: expected one of them"
+        raise click.UsageError(msg)
+    return Soil(*soil) if wire_mesh is None else MeshOnSoil(Soil(*soil), *wire_mesh)
 
 
 def _text(termination: complex) -> str:
@@ -179,6 +205,7 @@ def _show(rows: list[AntennaFigures], screen: Screen, *, free_space: bool, conve
     from dataclasses import asdict
 
     left_out = set() if free_space else {"front to back [dB]"}
+    left_out |= set() if any(row.ground_loss > 0.0 for row in rows) else {"into ground [%]"}
     left_out |= set() if convergence else {"change of Z [%]", "of pattern [dB]"}
     shown = {title: style for title, style in SHOWN.items() if title not in left_out}
 
@@ -195,6 +222,8 @@ def _show(rows: list[AntennaFigures], screen: Screen, *, free_space: bool, conve
         "directivity: largest in the sky; gain: realised, with the mismatch; widths: in the vertical planes along and across the "
         "co-polarisation; cross-polar: largest within half power, Ludwig's third definition"
     )
+    if "into ground [%]" in shown:
+        screen.say("into ground: part of the accepted power that the ground takes; it is in the gain, not in the directivity")
     if convergence:
         screen.say("change: on the finer mesh, about the error of these figures")
 

@@ -46,6 +46,7 @@ SHOWN = {
     "largest difference [dB]": "largest_difference_db",
     "main lobe shape [dB]": "main_lobe_shape_difference_db",
     "antenna spread [dB]": "antenna_spread_db",
+    "radiated part": "radiation_efficiency",
 }
 """Columns of the table on the screen; the file has all."""
 

@@ -13,7 +13,7 @@ from pathlib import Path
 import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
-from elbowroom.base.errors import JobFileError
+from elbowroom.base.errors import JobFileError, ModelRangeError
 from elbowroom.geometry.directions import Directions, hemisphere_grid, ludwig3, unit_vectors
 from elbowroom.job.beamfields import BeamFields, beam_fields, mean_nominal_phi_rad
 from elbowroom.job.files import write_explained_csv
@@ -59,6 +59,10 @@ MEANINGS = {
     "main_lobe_difference_db": "largest |coupled - isolated| within half power of the isolated peak, below that peak",
     "main_lobe_shape_difference_db": "the same after the best complex factor on the isolated beam, as gain calibration finds",
     "antenna_spread_db": "rms of the antennas' embedded patterns about their mean, in the direction pointed at, below that mean",
+    "radiation_efficiency": "radiated over accepted power while the ports are driven through their terminations by the beam's "
+    "weights; not part of directivity; nan where the ports cannot be driven so",
+    "wire_loss": "power lost in the metal of wires over accepted power",
+    "ground_loss": "power lost in the ground over accepted power; 0 over free space or a perfect plane",
     "sky_step_deg": "step of the sky on which lobes were looked for and means were taken; peaks are searched between its points",
     "relative_residual": "of the linear system that was solved; nan where fewer functions than unknowns were solved for",
     "mesh_error": "relative change of an isolated antenna's port admittance on a finer mesh",
@@ -101,6 +105,9 @@ class BeamComparison:
     main_lobe_difference_db: float
     main_lobe_shape_difference_db: float
     antenna_spread_db: float
+    radiation_efficiency: float
+    wire_loss: float
+    ground_loss: float
     sky_step_deg: float
     relative_residual: float
     mesh_error: float
@@ -351,6 +358,19 @@ def _antenna_spread_db(fields_: BeamFields, index: int) -> float:
     return decibels(float(np.mean(total_power(each - mean)) / total_power(mean))) if total_power(mean) > 0.0 else float("nan")
 
 
+def power_shares(fields_: BeamFields) -> dict[str, FloatArray]:
+    """Return what becomes of the power that beams accept when they are sent: ``radiated``, ``wires``, ``ground``, each (B,).
+
+    Parts of the accepted power; NaN where the terminations leave no way to drive the ports.
+    """
+    names = ("radiated", "wires", "ground")
+    try:
+        parts = fields_.solution.power_parts(fields_.weights, termination=fields_.termination, integrate_sky=False)
+    except ModelRangeError:
+        return dict.fromkeys(names, np.full(len(fields_.weights), np.nan))
+    return {name: parts.fraction(name) for name in names}
+
+
 def compare_beams(fields_: BeamFields) -> list[BeamComparison]:
     """Compare coupled with isolated beams at one frequency.
 
@@ -382,6 +402,7 @@ def compare_beams(fields_: BeamFields) -> list[BeamComparison]:
         d = fields_.directions
     assert d.weights_sr is not None
     nominal_phi_rad = mean_nominal_phi_rad(fields_.solution.station, fields_.weights)
+    power_share = power_shares(fields_)
     rows = []
     for index, beam in enumerate(fields_.beams):
         coupled, isolated = fields_.coupled[index], fields_.isolated[index]
@@ -437,6 +458,9 @@ def compare_beams(fields_: BeamFields) -> list[BeamComparison]:
                 main_lobe_difference_db=decibels(float(difference[lobe].max()) / i.peak_power),
                 main_lobe_shape_difference_db=decibels(float(shape_difference.max()) / i.peak_power),
                 antenna_spread_db=_antenna_spread_db(fields_, index),
+                radiation_efficiency=float(power_share["radiated"][index]),
+                wire_loss=float(power_share["wires"][index]),
+                ground_loss=float(power_share["ground"][index]),
                 sky_step_deg=step_deg,
                 relative_residual=statistics.relative_residual,
                 mesh_error=statistics.mesh_error,

@@ -29,6 +29,7 @@ from elbowroom.job.checks import Problem, check_station
 from elbowroom.job.compare import decibels, half_power_width_deg, refined_peak, total_power
 from elbowroom.job.files import write_explained_csv
 from elbowroom.job.solve import solution_key, solve, strategy_of
+from elbowroom.radiation.power import LEAST_LOSSY_DEGREE
 from elbowroom.radiation.solution import Solution, antenna_power_gain
 from elbowroom.store.records import Store
 from elbowroom.system.discretisation import FarSettings
@@ -64,7 +65,10 @@ MEANINGS = {
     "largest co-polar level there (Ludwig's third definition); nan for a port of vertical polarisation",
     "nominal_phi_deg": "direction of co-polarisation at zenith, east towards north",
     "radiation_efficiency": "radiated over accepted power, by quadrature over the sphere; loss of wires, loads and networks and "
-    "what other ports take is not radiated; 1 without them, but for the error of the model's power balance",
+    "what other ports take is not radiated, nor what goes into soil; 1 without them, but for the error of the model's power "
+    "balance",
+    "wire_loss": "power lost in the metal of wires over accepted power",
+    "ground_loss": "power lost in the ground over accepted power; 0 over free space or a perfect plane",
     "impedance_change": "|Z on the finer mesh / Z - 1|",
     "reflection_change": "magnitude of the change of the complex reflection on the finer mesh",
     "directivity_change_db": "change of the directivity, at the same peak direction, on the finer mesh",
@@ -97,6 +101,8 @@ class AntennaFigures:
     cross_polar_db: float
     nominal_phi_deg: float
     radiation_efficiency: float
+    wire_loss: float
+    ground_loss: float
     impedance_change: float
     reflection_change: float
     directivity_change_db: float
@@ -248,20 +254,26 @@ def sphere_for(solution: Solution) -> Directions:
     Michielssen, Song (eds.), Fast and Efficient Algorithms in Computational Electromagnetics, 2001, section 3.3; from memory),
     with d = 8; power takes twice that.  A ground's image is within the radius, too.
     """
-    grounded = not solution.station.ground.open_below
+    ground = solution.station.ground
     size = _electrical_radius(solution)
     order = int(np.ceil(size + 1.8 * 8.0 ** (2.0 / 3.0) * size ** (1.0 / 3.0))) + 2
-    return sphere_quadrature(2 * order, hemisphere=grounded)
+    degree = max(2 * order, LEAST_LOSSY_DEGREE) if ground.lossy else 2 * order
+    return sphere_quadrature(degree, hemisphere=not ground.open_below)
 
 
 @dataclass(frozen=True, eq=False)
 class _Response:
-    """What the ports of an antenna answer with: scattering (P, P), peak-search patterns (P, D, 2), mean realised gain (P,)."""
+    """What the ports of an antenna answer with: scattering (P, P), peak-search patterns (P, D, 2), mean realised gain (P,).
+
+    And the power lost in wires and ground (P,) for unit power sent.
+    """
 
     scattering: ComplexArray
     impedance: ComplexArray
     sky: ComplexArray
     mean_gain: FloatArray
+    wires: FloatArray
+    ground: FloatArray
 
 
 def _gain(solution: Solution, field: ComplexArray, termination: complex) -> FloatArray:
@@ -274,11 +286,14 @@ def _response(solution: Solution, sky: Directions, termination: complex) -> _Res
     sphere = sphere_for(solution)
     whole = solution.embedded_patterns(sphere.theta_rad, sphere.phi_rad, termination=termination)
     power = _gain(solution, whole, termination).sum(axis=-1)
+    parts = solution.power_parts(np.eye(len(ports)), termination=termination, integrate_sky=False)
     return _Response(
         solution.scattering_matrix(termination),
         np.array([solution.port_matrix("Z", [p], termination=termination)[0, 0] for p in ports]),
         solution.embedded_patterns(sky.theta_rad, sky.phi_rad, termination=termination),
         np.asarray(sphere.integrate(power)) / (4.0 * np.pi),
+        parts.wires,
+        parts.ground,
     )
 
 
@@ -401,6 +416,8 @@ def _figures(
         cross_polar_db=decibels(float(np.max(np.abs(cross[within])) ** 2 / np.max(np.abs(co[within])) ** 2)) if level else nan,
         nominal_phi_deg=float(np.degrees(nominal)),
         radiation_efficiency=float(mean / accepted) if accepted > LEAST_ACCEPTED else nan,
+        wire_loss=float(here.wires[port] / accepted) if accepted > LEAST_ACCEPTED else nan,
+        ground_loss=float(here.ground[port] / accepted) if accepted > LEAST_ACCEPTED else nan,
         impedance_change=changes[0],
         reflection_change=changes[1],
         directivity_change_db=changes[2],

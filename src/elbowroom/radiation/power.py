@@ -28,7 +28,7 @@ class PowerParts:
     accepted : float64 (B,)
         Net power into all ports; what terminations of other ports take is taken off.
     radiated : float64 (B,)
-        Through the sky: by quadrature of the far field.
+        Through the sky: by quadrature of the far field, unless it was to be the rest.
     wires : float64 (B,)
         Heat in the metal of the antennas' wires.
     loads : float64 (B,)
@@ -84,6 +84,8 @@ def power_parts(
     reference_ohm: float,
     voltage: ComplexArray,
     current: ComplexArray,
+    *,
+    integrate_sky: bool = True,
 ) -> PowerParts:
     """Return where power goes for given voltages and currents of all ports.
 
@@ -99,6 +101,9 @@ def power_parts(
         That resistance [ohm].
     voltage, current : complex128 (B, P)
         At the ports [V], [A]; effective values.
+    integrate_sky : bool, optional
+        Whether to integrate the far field where no ground takes power, too, which tells the error of the power balance; without,
+        what is left of the accepted power counts as radiated there.
     """
     d = discretisation
     source = (voltage + reference_ohm * current).T
@@ -122,10 +127,10 @@ def power_parts(
         gap_current = kind.mesh.gap_vectors @ mine
         gap_voltage = ports.transfer @ source[d.ports_of(a)] - ports.loading @ gap_current
         entered += np.sum((gap_voltage * gap_current.conj()).real, axis=0)
-    radiated = _radiated(d, space, coordinates)
+    lossy = d.station.ground.lossy
+    radiated = _radiated(d, space, coordinates) if lossy or integrate_sky else entered - wires - loads
     rest = entered - radiated - wires - loads
     nothing = np.zeros_like(rest)
-    lossy = d.station.ground.lossy
     return PowerParts(
         accepted, radiated, wires, loads, accepted - entered, rest if lossy else nothing, nothing if lossy else rest
     )

@@ -245,7 +245,7 @@ class Solution:
         whole = scattering_from_loaded(self.coupled.loaded_admittance, self.reference_ohm)
         return *driven_ports(whole, self.reference_ohm, reflection, table), table
 
-    def power_parts(self, weights: ArrayLike, *, termination: Termination = 100.0) -> PowerParts:
+    def power_parts(self, weights: ArrayLike, *, termination: Termination = 100.0, integrate_sky: bool = True) -> PowerParts:
         """Return where the power goes that ports accept while they are driven at once.
 
         Weights and terminations as in :meth:`active_impedance`; the weights of a receiving beam give the parts of the beam sent
@@ -257,6 +257,8 @@ class Solution:
             w.
         termination : number, "open", "short" or one of these per port, optional
             What the ports see [ohm].
+        integrate_sky : bool, optional
+            See :func:`elbowroom.radiation.power.power_parts`.
 
         Raises
         ------
@@ -264,7 +266,10 @@ class Solution:
             As :meth:`active_impedance`.
         """
         voltage, current, _ = self._driven(weights, termination)
-        return power_parts(self.discretisation, self.space, self.coupled.currents, self.reference_ohm, voltage, current)
+        return power_parts(
+            self.discretisation, self.space, self.coupled.currents, self.reference_ohm, voltage, current,
+            integrate_sky=integrate_sky,
+        )  # fmt: skip
 
     def isolated_impedance(self, antenna: int) -> ComplexArray:
         """Return the impedance matrix [ohm] of the ports of one antenna standing alone over the ground."""
