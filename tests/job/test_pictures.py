@@ -4,6 +4,7 @@ import logging
 import os
 import struct
 import zlib
+from contextlib import contextmanager
 from pathlib import Path
 
 import matplotlib
@@ -431,6 +432,20 @@ def test_draw_element_spread__dead_ports_and_other_units_stay_out(solution, tmp_
         draw_element_spread(solution, "x", tmp_path / "n.png", taking_part=[True])
 
 
+def keep_figures(monkeypatch, module):
+    """Return a list that a module's figures are added to as they are finished."""
+    figures = []
+
+    @contextmanager
+    def kept(*arguments, **options):
+        with sheet(*arguments, **options) as figure:
+            yield figure
+            figures.append(figure)
+
+    monkeypatch.setattr(module, "sheet", kept)
+    return figures
+
+
 @pytest.mark.parametrize("frequencies", [1, 2])
 def test_draw_impedance__reflections_above_one_are_not_cut_off(frequencies, tmp_path, monkeypatch):
     """Behind a termination of negative resistance: |(Z - Z_T*)/(Z + Z_T)| exceeds 1."""
@@ -438,20 +453,7 @@ def test_draw_impedance__reflections_above_one_are_not_cut_off(frequencies, tmp_
     from elbowroom.system.terminations import ActiveImpedance
 
     made = [port_impedances(solve(cluster(2), f), [ActiveImpedance(-20.0), 50.0, 50.0, 50.0]) for f in (140e6, 150e6)]
-    figures = []
-
-    def kept(*arguments, **options):
-        from contextlib import contextmanager
-
-        @contextmanager
-        def manager():
-            with sheet(*arguments, **options) as figure:
-                yield figure
-                figures.append(figure)
-
-        return manager()
-
-    monkeypatch.setattr(module, "sheet", kept)
+    figures = keep_figures(monkeypatch, module)
     looks_drawn(draw_impedance(made[:frequencies], tmp_path / "z.png", ports=["x"]))
     largest = max(item.coupled_reflection.max() for item in made[:frequencies])
     assert largest > 1.05
@@ -508,3 +510,18 @@ def test_draw_from_above__arrows_that_reach_past_the_wires_are_not_cut_off():
     reach = 0.35 * np.sqrt(2.0)
     assert axes.get_xlim()[1] > reach
     plt.close(figure)
+
+
+def test_draw_antenna_gain__of_a_dipole_in_free_space__shows_neither_rounding_nor_names_of_nothing(tmp_path, monkeypatch):
+    """It has no front and no width across: round it every direction is as good."""
+    from elbowroom.job.oneantenna import alone, antenna_figures, solve_alone
+    from elbowroom.job.pictures import antenna as module
+
+    figures = keep_figures(monkeypatch, module)
+    rows = antenna_figures(solve_alone(alone(dipole(height=1.0, direction=(1.0, 0.0, 0.0))), 150e6))
+    module.draw_antenna_gain(rows, tmp_path / "g.png", free_space=True)
+    panels = {axes.get_title(loc="left"): axes for axes in figures[0].axes}
+    low, high = panels["front to back"].get_ylim()
+    assert high - low >= 0.999
+    named = [text.get_text() for text in panels["half-power width"].get_legend().get_texts()]
+    assert named == ["port p, along"]

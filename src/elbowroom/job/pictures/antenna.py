@@ -140,7 +140,9 @@ class _Curves:
                 y = _values(rows, name)
                 y = y if change is None else change(y)
                 y = y if least is None else np.where(y < least, np.nan, y)
-                shown |= bool(np.any(np.isfinite(y)))
+                if not np.any(np.isfinite(y)):
+                    continue
+                shown = True
                 label_of = f"port {printable(shortened(port, 12))}" + (f", {called}" if called else "")
                 # Ports alike lie on one another; later ones are thinner, so that both show.
                 axes.plot(
@@ -308,6 +310,7 @@ def draw_antenna_gain(
         )  # fmt: skip
         if free_space:
             curves.panel(panels[1, 2], "front to back", "peak over opposite direction [dB]", ("front_to_back_db", "-", ""))
+            _wide(panels[1, 2], 1.0)
         else:
             curves.panel(panels[1, 2], "where the peak lies", "zenith angle [deg]", ("peak_zenith_angle_deg", "-", ""))
             _wide(panels[1, 2], 5.0)
