@@ -10,7 +10,7 @@ import pytest
 from elbowroom.base.arrays import ArraySpec
 from elbowroom.base.errors import SolveError
 from elbowroom.job import sharing
-from elbowroom.job.sharing import working_on
+from elbowroom.job.sharing import worked_elsewhere, working_on
 from elbowroom.store import Hdf5Store, MemoryStore, Record, Schema, content_key
 
 SCHEMA = Schema("numbers", 1, (ArraySpec("x", ("n",), "f", "m", "numbers"),))
@@ -78,3 +78,13 @@ def test_working_on__two_at_once_solve_each_unit_once(store):
         thread.join(30.0)
         assert not thread.is_alive()
     assert sorted(solved) == sorted(keys)
+
+
+def test_worked_elsewhere__by_claims_on_what_is_missing(store):
+    keys = [content_key(n) for n in range(4)]
+    store.put(keys[1], RECORD)
+    with store.claim(keys[0]), store.claim(keys[1]):
+        # what is in the store needs no waiting, claimed or not
+        assert [worked_elsewhere(store, [key]) for key in keys] == [True, False, False, False]
+        assert worked_elsewhere(store, keys)
+    assert not worked_elsewhere(store, keys)

@@ -32,20 +32,19 @@ class RunProgress:
         Where it is told.
     items : sequence of WorkItem
         All of them.
-    seconds : dict of int to float
-        Predicted time of each item, by its number [s].
     workers : int
         Items at a time.
     """
 
     SHARES: ClassVar = {"assemble": (0.0, 0.25), "factorise": (0.25, 0.55), "port excitations": (0.8, 0.2)}
 
-    def __init__(self, screen: Screen, items: list[WorkItem], seconds: dict[int, float], workers: int) -> None:
-        self.screen, self.seconds, self.workers = screen, seconds, workers
-        self.total = sum(seconds.values()) or 1.0
+    def __init__(self, screen: Screen, items: list[WorkItem], workers: int) -> None:
+        self.screen, self.workers = screen, workers
+        self.seconds = {item.number: item.seconds for item in items}
+        self.total = sum(self.seconds.values()) or 1.0
         self.all = len(items)
         self.finished = self.failed = 0
-        self.done = 0.0
+        self.done = self.taken = self.foreseen = 0.0
         self.since: dict[int, float] = {}
         self.stage_reached: dict[int, float] = {}
         self.number_of = {f: item.number for item in items for f in item.frequencies_hz}
@@ -70,15 +69,21 @@ class RunProgress:
             self.bar.stop()
 
     @property
+    def running(self) -> list[int]:
+        """Numbers of the items being worked on: the first that were given to the workers; others wait in a scheduler's queue."""
+        return list(self.since)[: self.workers]
+
+    @property
     def reached(self) -> float:
-        """Predicted seconds of what is done."""
+        """Predicted seconds of what is done; units still running count by what finished ones took against their predictions."""
         now, part = time.monotonic(), 0.0
-        for number, since in self.since.items():
+        pace = self.taken / self.foreseen if self.foreseen else 1.0
+        for number in self.running:
             whole = self.seconds.get(number, 0.0)
             if number in self.stage_reached:
                 part += self.stage_reached[number] * whole
             else:
-                part += min(now - since, UNFINISHED * whole)
+                part += min((now - self.since[number]) / pace, UNFINISHED * whole)
         return min(self.done + part, self.total)
 
     @property
@@ -92,14 +97,14 @@ class RunProgress:
     def counts(self) -> dict[str, float]:
         """Return what JSON lines say of the whole run."""
         return {
-            "finished": self.finished, "running": len(self.since), "failed": self.failed, "units": self.all,
+            "finished": self.finished, "running": len(self.running), "failed": self.failed, "units": self.all,
             "fraction_of_all": self.reached / self.total, "left_seconds": self.left_seconds,
         }  # fmt: skip
 
     def summary(self) -> str:
         """Return the state of the run in a few words."""
         parts = [f"{self.finished} of {self.all} done"]
-        parts += [f"{len(self.since)} running"] if self.since else []
+        parts += [f"{len(self.running)} running"] if self.since else []
         parts += [f"{self.failed} failed"] if self.failed else []
         return ", ".join(parts)
 
@@ -127,8 +132,13 @@ class RunProgress:
     def ended(self, item: WorkItem, seconds: float, good: bool) -> None:
         """Count an item as finished or failed, however long it took."""
         told = item.number in self.stage_reached
+        before = set(self.running)
         self.since.pop(item.number, None)
         self.stage_reached.pop(item.number, None)
+        self.since |= {number: time.monotonic() for number in self.running if number not in before}
+        if good:
+            self.taken += seconds
+            self.foreseen += self.seconds.get(item.number, 0.0)
         self.done += self.seconds.get(item.number, 0.0)
         self.finished += good
         self.failed += not good

@@ -4,9 +4,8 @@ from __future__ import annotations
 
 import contextlib
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, NamedTuple
 
 import click
 
@@ -27,8 +26,7 @@ MOST_ROWS = 100
 """Units that get a line of the table each; more would be read by nobody."""
 
 
-@dataclass(frozen=True)
-class Wish:
+class Wish(NamedTuple):
     """What the user wants of a run.
 
     Attributes
@@ -171,17 +169,15 @@ def _tell_plan(campaign: Campaign, split: Split, wish: Wish, screen: Screen) -> 
 def _solve(campaign: Campaign, split: Split, wish: Wish, screen: Screen) -> dict[int, UnitFailure]:
     """Solve what is missing; return the failures by the place of their unit in the campaign."""
     from elbowroom.cli.progress import RunProgress
-    from elbowroom.job.engine.campaign import seconds_with
     from elbowroom.job.engine.items import UnitFailure
     from elbowroom.job.engine.runner import run_items
 
     alone = wish.cluster is None and wish.workers is None and campaign.here(split)
     items = campaign.items(split.threads, longest_first=not alone)
-    seconds = {item.number: seconds_with(item) for item in items}
     place_of = {id(unit): i for i, unit in enumerate(campaign.units)}
     failures: dict[int, UnitFailure] = {}
     with _log(wish.log or campaign.runs[0].job.store_folder / LOG_FILE) as log, contextlib.ExitStack() as stack:
-        progress = RunProgress(screen, items, seconds, 1 if alone else split.workers)
+        progress = RunProgress(screen, items, 1 if alone else split.workers)
         workers, described = _workers(split, wish, alone, progress.stage)
         # Ended even if nothing is begun.
         stack.callback(workers.stop)

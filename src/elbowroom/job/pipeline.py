@@ -2,20 +2,20 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from elbowroom.base.errors import ElbowroomError, GeometryError, JobFileError
+from elbowroom.base.errors import JobFileError
 from elbowroom.geometry.stations import Station
 from elbowroom.job.checks import Problem, StationMeshes, check_station
 from elbowroom.job.groundchecks import HORIZON_NOTE, LOW_BEAM_DEG
 from elbowroom.job.jobfile import Job
 from elbowroom.job.jobtables import OnePort
-from elbowroom.job.plan import Prediction, predict_reduced, predict_station, refuse_if_too_large, total
+from elbowroom.job.plan import Prediction, predict_reduced, predict_station
 from elbowroom.job.sampling import FunctionCounts
 from elbowroom.job.solve import SOLUTION_SCHEMA, StationKeys, chosen_solver, solve, strategy_of
 from elbowroom.store import Hdf5Store
@@ -52,14 +52,6 @@ class Unit:
     key: str
     stored: bool
     prediction: Prediction
-
-
-@dataclass(frozen=True)
-class Failure:
-    """A unit that could not be solved, and why."""
-
-    frequency_hz: float
-    error: ElbowroomError
 
 
 class JobRun:
@@ -101,7 +93,7 @@ class JobRun:
         self._solvers: dict[float, str] = {}
         self._functions: FunctionCounts | None = None
         self._keys, self._meshes = StationKeys(self.station), StationMeshes(self.station)
-        options = {} if report is None else {"report": report}
+        options: dict[str, Any] = {} if report is None else {"report": report}
         self.store = Hdf5Store(job.store_folder, SOLUTION_SCHEMA, **options)
 
     @property
@@ -198,29 +190,6 @@ class JobRun:
         """Return the store's file of the unit at a frequency [Hz]."""
         return self.store.path_of(self.key(frequency_hz))
 
-    def prepare(self) -> list[Unit]:
-        """Check model, store and machine before any work, and return the plan.
-
-        Raises
-        ------
-        GeometryError
-            If the model has errors; all are listed.
-        StoreError
-            If the store cannot be written.
-        ResourceError
-            If a unit needs more memory, or the store more disk, than there is.
-        """
-        errors = tuple(p.text for p in self.problems() if p.severity == "error")
-        if errors:
-            msg = f"{self.job.path}: the station cannot be modelled"
-            raise GeometryError(msg, problems=errors)
-        units = self.plan()
-        missing = [u for u in units if not u.stored]
-        if missing:
-            self.store.check_writable()
-            refuse_if_too_large(total([u.prediction for u in missing]), folder=self.job.store_folder)
-        return units
-
     def stored_solution(self, frequency_hz: float) -> Solution:
         """Return the solution at a frequency [Hz] from the store; solve nothing.
 
@@ -254,11 +223,3 @@ class JobRun:
             progress=tell,
             single_storage=self.single_storage,
         )
-
-    def solutions(self, progress: UnitProgress | None = None) -> Iterator[Solution | Failure]:
-        """Solve one frequency after another; a unit that fails does not stop the others."""
-        for frequency in self.frequencies_hz:
-            try:
-                yield self.solution(frequency, progress)
-            except ElbowroomError as error:
-                yield Failure(frequency, error)

@@ -9,8 +9,8 @@ from __future__ import annotations
 import shutil
 import time
 from collections import Counter
-from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass, replace
 from functools import lru_cache
 from pathlib import Path
 
@@ -45,6 +45,10 @@ EXCITATION_OPERATIONS = {"mixed": 42.0, "double": 16.0, "single": 7.0}
 """Operations per n^2 P of solving for the ports, in single-precision operations: 4.4, 1.6 and 0.74 s for n = 8192 and
 P = 256 at 165 GFLOP/s, measured.  Mixed takes two solves and one product with the matrix in double."""
 
+DESIGN_OPERATIONS = 1.6e7
+"""Operations per pair of elements of one antenna for its own block, there and on the finer mesh that states the error, in one
+thread, at the rate of single-precision products with all; measured with dipoles (22 elements) and log-periodic antennas (188)."""
+
 REDUCED_DESIGN_SECONDS = 0.8
 """Meshes, functions and skeletons of a design of 64 unknowns [s]; measured."""
 
@@ -68,12 +72,15 @@ class Prediction:
         Wall time [s], with an error of tens of per cent.
     n_unknowns : int
         Unknowns of the largest solve.
+    serial_seconds : float
+        Part of the time that no number of threads shortens [s].
     """
 
     memory_bytes: int
     disk_bytes: int
     seconds: float
     n_unknowns: int = 0
+    serial_seconds: float = 0.0
 
 
 def predict(
@@ -181,14 +188,19 @@ def predict_station(
     text_bytes: int = 0,
 ) -> list[Prediction]:
     """Return what each frequency of a station takes, see `predict` and `total`; its meshes may be given."""
-    meshes = meshes or StationMeshes(station)
-    return [
-        predict(
-            meshes.unknowns(frequency, mesh_settings(mesh)), len(station.port_names), len(station), precision,
-            operations_per_second=operations_per_second, single_storage=single_storage, text_bytes=text_bytes,
-        )
-        for frequency in frequencies_hz
-    ]  # fmt: skip
+    meshes, settings = meshes or StationMeshes(station), mesh_settings(mesh)
+    rate = calibrated_rate() if operations_per_second is None else operations_per_second
+    predictions = []
+    for frequency in frequencies_hz:
+        made = [(m, count) for _, m, count in meshes.at(wavelength_of(frequency), settings)]
+        unknowns = sum(m.n_unknowns * count for m, count in made)
+        whole = predict(
+            unknowns, len(station.port_names), len(station), precision,
+            operations_per_second=rate, single_storage=single_storage, text_bytes=text_bytes,
+        )  # fmt: skip
+        serial = sum(DESIGN_OPERATIONS * m.n_elements**2 / rate for m, _ in made)
+        predictions.append(replace(whole, seconds=whole.seconds + serial, serial_seconds=serial))
+    return predictions
 
 
 def predicted_functions(station: Station, frequency_hz: float, tolerance: float) -> int:
@@ -252,8 +264,9 @@ def predict_reduced(
     n = float(predicted_functions(station, frequency_hz, tolerance) if functions is None else functions)
     p, antennas = float(len(station.port_names)), len(station)
     own = unknowns / antennas
+    serial = len(station.designs) * REDUCED_DESIGN_SECONDS * (own / 64.0) ** 1.5
     seconds = (
-        len(station.designs) * REDUCED_DESIGN_SECONDS * (own / 64.0) ** 1.5
+        serial
         + REDUCED_PAIR_OPERATIONS * antennas**2 * own / 64.0 / rate
         + 4.0 / 3.0 * n**3 / (FACTOR_EFFICIENCY * rate)
         + EXCITATION_OPERATIONS["single"] * n**2 * p / rate
@@ -264,7 +277,7 @@ def predict_reduced(
     made = meshes.at(wavelength_of(frequency_hz), settings)
     functions_stored = sum(m.n_unknowns * n / antennas * kinds for (_, m, _), kinds in zip(made, meshes.kind_counts, strict=True))
     disk = stored_bytes(unknowns, n, p, antennas, np.ceil(p / antennas), functions_stored, single=single_storage) + text_bytes
-    return Prediction(int(memory), int(disk), float(seconds), unknowns)
+    return Prediction(int(memory), int(disk), float(seconds), unknowns, float(serial))
 
 
 def total(predictions: Sequence[Prediction]) -> Prediction:
@@ -274,6 +287,7 @@ def total(predictions: Sequence[Prediction]) -> Prediction:
         sum(p.disk_bytes for p in predictions),
         sum(p.seconds for p in predictions),
         max((p.n_unknowns for p in predictions), default=0),
+        sum(p.serial_seconds for p in predictions),
     )
 
 
@@ -404,6 +418,24 @@ def refuse_if_too_large(prediction: Prediction, *, folder: str | Path | None = N
     ResourceError
         If there is too little memory or disk.
     """
+    found = lacking(prediction, {} if folder is None else {Path(folder): prediction.disk_bytes}, available_bytes)
+    if found:
+        msg = too_large(found)
+        raise ResourceError(msg)
+
+
+def lacking(prediction: Prediction, disk_bytes: Mapping[Path, int], available_bytes: int | None = None) -> list[str]:
+    """Return which memory or disk does not suffice, with figures; nothing if all is well.
+
+    Parameters
+    ----------
+    prediction : Prediction
+        Its memory counts.
+    disk_bytes : mapping of Path to int
+        What is added to each folder, which need not exist yet [byte]; folders on one disk share what is free.
+    available_bytes : int, optional
+        Memory to compare with [byte]; by default what is available now.
+    """
     available = available_memory_bytes() if available_bytes is None else available_bytes
     found = []
     if prediction.memory_bytes > available:
@@ -411,19 +443,27 @@ def refuse_if_too_large(prediction: Prediction, *, folder: str | Path | None = N
             f"{format_bytes(prediction.memory_bytes)} of memory needed for {prediction.n_unknowns} unknowns, "
             f"{format_bytes(available)} available"
         )
-    if folder is not None:
-        place = Path(folder).absolute()
+    disks: dict[int, tuple[Path, Path, int]] = {}
+    for folder, count in disk_bytes.items():
+        place = folder.absolute()
         while not place.exists() and place != place.parent:
             place = place.parent
+        device = place.stat().st_dev
+        shown, _, before = disks.get(device, (folder, place, 0))
+        disks[device] = (shown, place, before + count)
+    for shown, place, count in disks.values():
         free = shutil.disk_usage(place).free
-        if prediction.disk_bytes > free:
-            found.append(f"{format_bytes(prediction.disk_bytes)} of disk needed in {folder}, {format_bytes(free)} free")
-    if found:
-        msg = (
-            f"this job is too large here: {'; '.join(found)}; nothing was started. Take fewer antennas, the default mesh "
-            "or a lower top frequency, or a machine with more of it"
-        )
-        raise ResourceError(msg)
+        if count > free:
+            found.append(f"{format_bytes(count)} of disk needed in {shown}, {format_bytes(free)} free")
+    return found
+
+
+def too_large(found: Sequence[str]) -> str:
+    """Return the message of a refusal from what `lacking` found."""
+    return (
+        f"this job is too large here: {'; '.join(found)}; nothing was started. Take fewer antennas or frequencies, the "
+        "default mesh or a lower top frequency, or a machine with more of it"
+    )
 
 
 def format_bytes(count: float) -> str:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 
 from elbowroom.store.records import Record, Store
@@ -55,3 +55,14 @@ def working_on(store: Store, key: str, waiting: Waiting | None = None) -> Iterat
         if waiting is not None and holder is not None:
             waiting(f"waiting for {holder}", 0.0)
         time.sleep(LOOK_AGAIN_SECONDS)
+
+
+def worked_elsewhere(store: Store, keys: Sequence[str]) -> bool:
+    """Return whether another run works on one of some units now; those in the store need no work, claimed or not.
+
+    Raises
+    ------
+    StoreError
+        If the store cannot be read.
+    """
+    return any(key not in store and store.claimed(key) is not None for key in keys)

@@ -5,7 +5,7 @@ Units of stations that are turned or shifted copies have one key; those that sha
 
 from __future__ import annotations
 
-import shutil
+from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -13,9 +13,10 @@ from pathlib import Path
 from elbowroom.base.errors import GeometryError, JobFileError, ResourceError
 from elbowroom.base.threads import available_cores
 from elbowroom.job.engine.items import StationWork, WorkItem, solve_units
-from elbowroom.job.engine.split import SMALL_SECONDS, Split, choose_split, thread_gain
+from elbowroom.job.engine.split import SMALL_SECONDS, Split, choose_split
 from elbowroom.job.pipeline import JobRun
-from elbowroom.job.plan import Prediction, available_memory_bytes, format_bytes, limit_of_memory_bytes, total
+from elbowroom.job.plan import Prediction, lacking, limit_of_memory_bytes, too_large, total
+from elbowroom.job.sharing import worked_elsewhere
 from elbowroom.job.solve import stored_statistics
 from elbowroom.system.solving import SolveStatistics
 
@@ -151,35 +152,15 @@ class Campaign:
             self.predict(sampled=True)
             found = self._lacking()
         if found:
-            msg = (
-                f"this job is too large here: {'; '.join(found)}; nothing was started. Take fewer antennas or "
-                "frequencies, the default mesh or a lower top frequency, or a machine with more of it"
-            )
+            msg = too_large(found)
             raise ResourceError(msg)
 
     def _lacking(self) -> list[str]:
         """Return which memory or disk does not suffice, with figures."""
-        found, available = [], available_memory_bytes()
-        largest = self.total()
-        if largest.memory_bytes > available:
-            found.append(
-                f"{format_bytes(largest.memory_bytes)} of memory needed for {largest.n_unknowns} unknowns, "
-                f"{format_bytes(available)} available"
-            )
-        disks: dict[int, tuple[Path, int]] = {}
+        disk: Counter[Path] = Counter()
         for unit in self.to_solve:
-            folder = unit.run.job.store_folder
-            place = folder.absolute()
-            while not place.exists() and place != place.parent:
-                place = place.parent
-            device = place.stat().st_dev
-            shown, count = disks.get(device, (folder, 0))
-            disks[device] = (shown, count + (unit.prediction.disk_bytes if unit.prediction else 0))
-        for folder, count in disks.values():
-            free = shutil.disk_usage(folder if folder.exists() else folder.absolute().parent).free
-            if count > free:
-                found.append(f"{format_bytes(count)} of disk needed in {folder}, {format_bytes(free)} free")
-        return found
+            disk[unit.run.job.store_folder] += unit.prediction.disk_bytes if unit.prediction else 0
+        return lacking(self.total(), disk)
 
     def read_stored(self) -> None:
         """Read stored units to the last byte, if they are few; what is damaged is set aside, told, and to be solved again."""
@@ -211,14 +192,7 @@ class Campaign:
             return Split(1, cores)
         run, frequency = largest
         nominal = run.predicted(frequency, operations_per_second=NOMINAL_RATE)
-        return choose_split(
-            len(self.units),
-            nominal.seconds,
-            nominal.memory_bytes,
-            cores=cores,
-            memory_bytes=limit_of_memory_bytes(),
-            solver=run.solver_at(frequency),
-        )
+        return choose_split(len(self.units), nominal, cores=cores, memory_bytes=limit_of_memory_bytes())
 
     def _largest(self) -> tuple[JobRun, float] | None:
         """Return job and frequency of the largest unit: the highest of a job, as meshes get finer, of the largest station."""
@@ -279,23 +253,13 @@ class Campaign:
     def elsewhere(self, item: WorkItem) -> bool:
         """Return whether another run works on what is missing of an item."""
         store = next(u.run.store for u in self.units if u.key == item.keys[0])
-        for key in item.keys:
-            if key not in store:
-                holder = store.claimed(key)
-                return holder is not None and holder.state == "working"
-        return False
-
-
-def seconds_with(item: WorkItem) -> float:
-    """Return the predicted time of an item with its own number of threads [s]."""
-    cores = available_cores()
-    return item.prediction.seconds * thread_gain(cores) / thread_gain(min(item.threads, cores))
+        return worked_elsewhere(store, item.keys)
 
 
 def predicted_seconds(campaign: Campaign, split: Split) -> float:
     """Return the predicted time of what is to be solved with so many workers and threads [s], the longest first."""
     free = [0.0] * split.workers
     for item in campaign.items(split.threads):
-        free[0] += seconds_with(item)
+        free[0] += item.seconds
         free.sort()
     return max(free)

@@ -15,8 +15,9 @@ from pathlib import Path
 from typing import Any
 
 from elbowroom.base.errors import ElbowroomError, ResourceError
-from elbowroom.base.threads import threads
+from elbowroom.base.threads import available_cores, threads
 from elbowroom.geometry.stations import Station
+from elbowroom.job.engine.split import seconds_with
 from elbowroom.job.plan import Prediction
 from elbowroom.system.solving import SolveStatistics
 
@@ -128,6 +129,12 @@ class WorkItem:
     payload: Any
     prediction: Prediction
     threads: int = 1
+
+    @property
+    def seconds(self) -> float:
+        """Predicted time with its number of threads on a machine like this one [s]."""
+        cores = available_cores()
+        return seconds_with(self.prediction, min(self.threads, cores), cores)
 
     def failed(self, cause: str, exit_code: int, details: str = "") -> tuple[UnitFailure, ...]:
         """Return the failure of all of it."""
