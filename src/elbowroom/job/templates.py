@@ -14,7 +14,7 @@ from elbowroom.base.errors import ExportError, JobFileError
 TEMPLATES = {
     "small": "seven antennas, two frequencies, a few seconds",
     "demo": "an invented station of 240 antennas, five frequencies from 60 to 300 MHz, minutes per frequency",
-    "log-periodic": "an invented station of 16 log-periodic antennas, three frequencies from 80 to 350 MHz, a minute or two",
+    "log-periodic": "an invented station of 16 log-periodic antennas, three frequencies from 80 to 350 MHz, two or three minutes",
 }
 """What there is to start from, and what it is."""
 
