@@ -14,6 +14,7 @@ from elbowroom import __version__
 from elbowroom.base.errors import ElbowroomError, ExportError
 from elbowroom.cli.antenna import antenna
 from elbowroom.cli.common import FREQUENCIES, JOB, JOBS, exit_on, make_screen, modes, open_job, open_jobs
+from elbowroom.cli.grounds import grounds
 from elbowroom.cli.ports import ports
 from elbowroom.cli.results import compare, draw, export, run
 from elbowroom.cli.solving import Wish, solve_all, workers_options
@@ -204,7 +205,7 @@ def solve(
     exit_on(solve_all(open_jobs(jobs, frequencies_hz, screen), screen, wish))
 
 
-for _command in (antenna, compare, draw, export, ports, run, store):
+for _command in (antenna, compare, draw, export, grounds, ports, run, store):
     cli.add_command(_command)
 
 
