@@ -40,8 +40,9 @@ _RULES = ((16, 6.0), (24, 15.0), (32, 24.0))
 """Gauss rules and the half phase across a panel up to which each is exact to 1e-10 beside a resolved coefficient."""
 
 _DEEPEST = 48
+_MOST_OPEN = 400
 
-_TRACE = 1e-7
+_TRACE = 1e-8
 """Loss tangent, and resistance of a mesh over its reactance, below which it is taken to be this."""
 
 
@@ -152,7 +153,8 @@ class GroundQuadrature:
             fine = tail * np.minimum(1.0, 100.0 * half) <= RESOLVED
             done.append(open_[fine])
             open_ = open_[~fine]
-            if not open_.size:
+            # Rounding beside a pole can keep panels from ever looking resolved.
+            if not open_.size or len(open_) > _MOST_OPEN:
                 break
             middle = open_.mean(axis=1)
             open_ = np.concatenate([np.stack([open_[:, 0], middle], axis=1), np.stack([middle, open_[:, 1]], axis=1)])

@@ -1,0 +1,125 @@
+"""Kernels of real ground: error, time and size of their tables on held-out points, and the fill against that of a perfect plane.
+
+Run ``python validation/benchmarks/measure_soil.py`` for all, or name some: ``tables fine fill``.  Threads: run with
+``OMP_NUM_THREADS=1``.  Absolute times on a shared machine are not evidence; the two sides of each ratio are timed in turn in the
+same process.
+"""
+
+from __future__ import annotations
+
+import argparse
+import math
+import time
+
+import numpy as np
+from stations import best_of
+
+from elbowroom.base.constants import VACUUM_PERMITTIVITY, wavenumber_of
+from elbowroom.kernels.point_kernels import Workspace
+from elbowroom.kernels.points_numba import fill_image
+from elbowroom.kernels.soil.fill import fill_soil
+from elbowroom.kernels.soil.response import GroundResponse, bare_soil, mesh_on_soil
+from elbowroom.kernels.soil.sommerfeld import GroundQuadrature
+from elbowroom.kernels.soil.table import SoilTable, build_table
+
+SOILS = ((3.0, 1e-4), (5.0, 1e-3), (10.0, 1e-2), (15.0, 3e-3), (25.0, 5e-2), (30.0, 1e-1))
+"""Relative permittivity and conductivity [S/m], from dry sand to wet clay; invented but common values."""
+
+HARD = (30.0, 1e-3)
+"""Wet soil that hardly conducts: the wave through it reaches across the station."""
+
+FREQUENCIES_HZ = (50e6, 150e6, 350e6)
+WIDTH_M, HIGHEST_M = 41.0, 6.0
+
+
+def response(soil: tuple[float, float], frequency_hz: float, pitch_m: float | None = None) -> GroundResponse:
+    """Return the response of a soil, bare or under a mesh of 1 mm wires."""
+    eps = soil[0] - 1j * soil[1] / (2.0 * math.pi * frequency_hz * VACUUM_PERMITTIVITY)
+    k = wavenumber_of(frequency_hz)
+    return bare_soil(k, eps) if pitch_m is None else mesh_on_soil(k, eps, pitch_m, 1e-3, 0.05 + 0.05j)
+
+
+def held_out_error(table: SoilTable, ground: GroundResponse, rng: np.random.Generator) -> float:
+    """Return the largest error times R at points the table has not seen, the lowest heights always among them."""
+    low, high = table.z_min_m, table.z_max_m
+    rho = np.concatenate([[0.0, WIDTH_M], WIDTH_M * rng.random(250), 2.0 * rng.random(150), 10.0 ** rng.uniform(-3.0, 0.0, 50)])
+    z = np.concatenate([[low, 1.01 * low, 1.1 * low, high], low * (high / low) ** rng.random(16)])
+    exact = GroundQuadrature(ground, low).kernels(rho, z)
+    found = np.moveaxis(table.smooth(rho[:, None], z), -1, 0)
+    found[3] *= ground.wavenumber
+    return float(np.abs(found - exact).max())
+
+
+def _tables(tolerance: float, lowest_m: float, seconds: float, megabytes: float | None) -> None:
+    rng = np.random.default_rng(1)
+    worst = [0.0, 0.0, 0.0]
+    size_told = "" if megabytes is None else f", {megabytes:g} MB"
+    print(f"tables from {lowest_m:g} m to {tolerance:g}: target {seconds:g} s{size_told}")
+    for soil in (*SOILS, HARD):
+        for frequency in FREQUENCIES_HZ:
+            for pitch in (None, 0.1):
+                ground = response(soil, frequency, pitch)
+                made: list[SoilTable] = []
+                elapsed = best_of(lambda: made.append(build_table(ground, WIDTH_M, lowest_m, HIGHEST_M, tolerance)), 3)  # noqa: B023
+                table, error = made[-1], held_out_error(made[-1], ground, rng)
+                print(
+                    f"  eps {soil[0]:g}, {soil[1]:g} S/m, {frequency / 1e6:g} MHz, {'mesh' if pitch else 'bare'}: "
+                    f"error {error:.1e} (own {table.error:.1e}), {elapsed:.3f} s, {table.nbytes / 1e6:.2f} MB, "
+                    f"{table.coefficients.shape[0]} x {table.coefficients.shape[1]} nodes"
+                )
+                if soil != HARD and pitch is None:
+                    worst = [max(a, b) for a, b in zip(worst, (error, elapsed, table.nbytes / 1e6), strict=True)]
+    print(f"  worst of the six bare soils: error {worst[0]:.1e}, {worst[1]:.3f} s, {worst[2]:.2f} MB")
+
+
+def tables() -> None:
+    """Tables as they are made by default; targets 1e-5 from 0.1 m on, 0.15 s, 1.6 MB."""
+    _tables(1e-5, 0.1, 0.15, 1.6)
+
+
+def fine() -> None:
+    """Tables for the direct solver's last digits; targets 1e-7 from 0.2 m on, 0.2 s."""
+    _tables(1e-7, 0.2, 0.2, None)
+
+
+def fill() -> None:
+    """Rate of the fill against that over a perfect plane; at most 3.5 times, 2.2 if it can be."""
+    rng = np.random.default_rng(0)
+    # One antenna's skeleton points against those of a run of sixteen others, as the fill of a station asks for them.
+    own = rng.uniform(-0.6, 0.6, (3, 70))
+    own[2] = rng.uniform(0.3, 1.5, 70)
+    places = np.array([rng.uniform(2.0, 25.0, 16), rng.uniform(2.0, 25.0, 16), np.zeros(16)])
+    others = (own[:, None, :] + places[:, :, None]).reshape(3, -1)
+    for soil, frequency, tolerance in ((SOILS[2], 150e6, 1e-5), (HARD, 350e6, 1e-5), (SOILS[2], 150e6, 1e-7)):
+        table = build_table(response(soil, frequency), WIDTH_M, 0.2, HIGHEST_M, tolerance)
+        for single in (True, False):
+            work = Workspace(single)
+            planes = [work.array(f"plane {n}", (own.shape[1], others.shape[1])) for n in range(4)]
+            fill_soil(table, own, others, work, direct=True)
+            fill_image(*own, *others, table.wavenumber, *planes)
+            plane, ground = math.inf, math.inf
+            for _ in range(40):
+                plane = min(plane, best_of(lambda: fill_image(*own, *others, table.wavenumber, *planes), 2))  # noqa: B023
+                ground = min(ground, best_of(lambda: fill_soil(table, own, others, work, direct=True), 2))  # noqa: B023
+            print(
+                f"fill, eps {soil[0]:g}, {frequency / 1e6:g} MHz, table to {tolerance:g}, {'single' if single else 'double'}: "
+                f"{planes[0].size / ground / 1e6:.0f} M/s, perfect plane {planes[0].size / plane / 1e6:.0f} M/s, "
+                f"ratio {ground / plane:.2f} (at most 3.5, aim 2.2)"
+            )
+
+
+MEASUREMENTS = {"tables": tables, "fine": fine, "fill": fill}
+
+
+def main() -> None:
+    """Run the measurements that were named, or all."""
+    parser = argparse.ArgumentParser(description=__doc__)
+    parser.add_argument("names", nargs="*", choices=[[], *MEASUREMENTS], help="which to run; all by default")
+    for name in parser.parse_args().names or MEASUREMENTS:
+        start = time.perf_counter()
+        MEASUREMENTS[name]()
+        print(f"({name}: {time.perf_counter() - start:.0f} s)")
+
+
+if __name__ == "__main__":
+    main()
