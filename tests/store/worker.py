@@ -4,6 +4,8 @@ kill <seconds> <first unit>   fork a process that stores unit after unit, kill i
 race <times>                  fork two processes that store records of their own under one key, wait for both
 claims <processes> <times>    fork processes that claim one unit again and again; 0 if never two had it together
 hold <key> [<silence>]        fork a process that claims a unit and waits; "lost" when it sees that it has it no more
+lines <deed>                  fork a process that does a deed and count the lines of the store's code it runs
+strike <deed> <line>          fork a process that does a deed and kills itself before that line
 reap                          wait for the process that held
 """
 
@@ -18,6 +20,7 @@ from pathlib import Path
 sys.path.insert(0, str(Path(__file__).parents[1]))
 
 from elbowroom.store import Hdf5Store
+from elbowroom.store.packs import unpack, write_pack
 from elbowroom.store.unitfile import library_versions
 from store.samples import SCHEMA, key_of, record_of
 
@@ -75,6 +78,51 @@ def hold(folder: str, key: str, silence: float) -> None:
         print("lost", flush=True)
 
 
+def replace_unit(folder: str) -> None:
+    Hdf5Store(folder, SCHEMA).put(key_of(0), record_of(1))
+
+
+def claim_and_release(folder: str) -> None:
+    with Hdf5Store(folder, SCHEMA).claim(key_of(0)):
+        pass
+
+
+def set_aside(folder: str) -> None:
+    Hdf5Store(folder, SCHEMA, report=lambda _: None).get(key_of(2))
+
+
+def add_pack(folder: str) -> None:
+    unpack(Path(folder) / "carried.pack", Path(folder), report=lambda _: None)
+
+
+def make_pack(folder: str) -> None:
+    write_pack(Path(folder) / "new.pack", [Hdf5Store(folder, SCHEMA).path_of(key_of(0))], replace=True)
+
+
+DEEDS = {deed.__name__: deed for deed in (replace_unit, claim_and_release, set_aside, add_pack, make_pack)}
+
+
+def traced(deed, folder: str, strike_at: int) -> int:
+    """Do a deed; before the line of that number, end as by a kill -9; return the number of lines run."""
+    count = 0
+
+    def each_line(frame, event, _):
+        nonlocal count
+        if event == "line":
+            if count == strike_at:
+                os.kill(os.getpid(), signal.SIGKILL)
+            count += 1
+        return each_line
+
+    def each_call(frame, event, _):
+        return each_line if "/elbowroom/store/" in frame.f_code.co_filename else None
+
+    sys.settrace(each_call)
+    deed(folder)
+    sys.settrace(None)
+    return count
+
+
 def main(folder: str) -> None:
     library_versions()  # slow once, then known to every process that is forked
     print("ready", flush=True)
@@ -96,6 +144,16 @@ def main(folder: str) -> None:
         elif command == "hold":
             silence = float(arguments[1]) if len(arguments) > 1 else 40.0
             holder = forked(lambda key=arguments[0], after=silence: hold(folder, key, after))
+        elif command == "lines":
+            reader, writer = os.pipe()
+            child = forked(lambda name=arguments[0], w=writer: os.write(w, b"%d" % traced(DEEDS[name], folder, -1)))
+            os.waitpid(child, 0)
+            print("lines", os.read(reader, 20).decode(), flush=True)
+            os.close(reader)
+            os.close(writer)
+        elif command == "strike":
+            child = forked(lambda name=arguments[0], n=int(arguments[1]): traced(DEEDS[name], folder, n))
+            print("status", os.waitpid(child, 0)[1], flush=True)
         elif command == "reap":
             print("status", os.waitpid(holder, 0)[1], flush=True)
         else:
