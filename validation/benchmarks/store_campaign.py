@@ -190,10 +190,10 @@ def being_written(folder: Path) -> set[str]:
 
 
 def workers_of(process: subprocess.Popen) -> list[int]:
-    """Return the process numbers of a run's workers: its children without Python's own helper."""
+    """Return the process numbers of a run's workers: Python has a helper among its children that is none."""
     try:
         children = psutil.Process(process.pid).children(recursive=True)
-        return [child.pid for child in children if not any("resource_tracker" in word for word in child.cmdline())]
+        return [child.pid for child in children if any("spawn_main" in word for word in child.cmdline())]
     except psutil.Error:
         return []
 
