@@ -42,7 +42,7 @@ class RunProgress:
         self.screen, self.workers = screen, workers
         self.seconds = {item.number: item.seconds for item in items}
         self.total = sum(self.seconds.values()) or 1.0
-        self.all = len(items)
+        self.all = sum(len(item.frequencies_hz) for item in items)
         self.finished = self.failed = 0
         self.done = self.taken = self.foreseen = 0.0
         self.since: dict[int, float] = {}
@@ -129,23 +129,23 @@ class RunProgress:
         if fraction >= 1.0:
             self.screen.emit("progress", frequency_hz=frequency_hz, stage=stage, **self.counts())
 
-    def ended(self, item: WorkItem, seconds: float, good: bool) -> None:
-        """Count an item as finished or failed, however long it took."""
+    def ended(self, item: WorkItem, seconds: float, failed: int) -> None:
+        """Count the units of an item as finished, some as failed, however long it took [s]."""
         told = item.number in self.stage_reached
         before = set(self.running)
         self.since.pop(item.number, None)
         self.stage_reached.pop(item.number, None)
         self.since |= {number: time.monotonic() for number in self.running if number not in before}
-        if good:
+        if not failed:
             self.taken += seconds
             self.foreseen += self.seconds.get(item.number, 0.0)
         self.done += self.seconds.get(item.number, 0.0)
-        self.finished += good
-        self.failed += not good
+        self.finished += len(item.frequencies_hz) - failed
+        self.failed += failed
         if not told and self.screen.mode == "normal" and self.bar is None:
             self.last_line = time.monotonic()
             left = "" if self.finished + self.failed == self.all else f", {readable_seconds(self.left_seconds)} left"
-            state = f"solved in {readable_seconds(seconds)}" if good else "failed"
+            state = "failed" if failed else f"solved in {readable_seconds(seconds)}"
             self.screen.say(f"  {item.label}: {state} ({self.summary()}{left})")
         if not told:
             self.last_json = time.monotonic()

@@ -181,7 +181,7 @@ def _solve(campaign: Campaign, split: Split, wish: Wish, screen: Screen) -> dict
         workers, described = _workers(split, wish, alone, progress.stage)
         # Ended even if nothing is begun.
         stack.callback(workers.stop)
-        log.info("%d units to solve, %d in the store; %s", len(items), len(campaign.units) - len(items), described)
+        log.info("%d units to solve, %d in the store; %s", progress.all, sum(u.stored for u in campaign.units), described)
         screen.say(described)
         events = stack.enter_context(contextlib.closing(run_items(items, workers, elsewhere=campaign.elsewhere)))
         stack.enter_context(progress)
@@ -202,7 +202,7 @@ def _solve(campaign: Campaign, split: Split, wish: Wish, screen: Screen) -> dict
                     screen.warn(f"{item.label}: {note}")
                     log.warning("%s: %s", item.label, note)
                 bad = [o for o in event.result.outcomes if isinstance(o, UnitFailure)]
-                progress.ended(item, event.result.seconds, not bad)
+                progress.ended(item, event.result.seconds, len(bad))
                 for index, outcome in enumerate(event.result.outcomes):
                     for unit in campaign.units_of(item, index):
                         if isinstance(outcome, UnitFailure):
