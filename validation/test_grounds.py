@@ -10,6 +10,8 @@ References
 .. [3] M. Kontorovich 1963; J. R. Wait 1962: averaged boundary conditions of a bonded square mesh.  From memory.
 """
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -22,8 +24,9 @@ from elbowroom.geometry.wires import Wire
 from elbowroom.job.solve import solve
 from elbowroom.kernels.quadrature import sample_mesh
 from elbowroom.radiation.patterns import station_patterns
+from elbowroom.system.assembly import PairFiller
 from elbowroom.system.discretisation import discretise
-from elbowroom.system.plane_waves import direction_frame
+from elbowroom.system.plane_waves import direction_frame, kind_vectors
 from elbowroom.system.reduction import ReductionSettings
 from elbowroom.system.solving import solve_direct, solve_isolated
 from elbowroom.system.solving_reduced import solve_reduced
@@ -121,6 +124,47 @@ def test_far_field__is_what_a_plane_wave_drives(record, ground):
     record(
         f"far field and plane-wave drive, {ground.name}", np.abs(found - drive).max() / np.abs(drive).max(), 0.0,
         absolute=1e-9, wrong=wrong, source="reciprocity (Harrington 1961, 3-8), Fresnel coefficients (Balanis, chapter 4)",
+    )  # fmt: skip
+
+
+@pytest.mark.parametrize("ground", [SOIL, MESH], ids=["soil", "mesh on soil"])
+@pytest.mark.parametrize("upright", [True, False], ids=["theta", "phi"])
+def test_far_field__is_the_limit_of_coupling_at_long_range(record, ground, upright):
+    """Reaction of a rod with one far away, from the tables, against its far field: apart by a term of order 1/r.
+
+    Finer tables than by default: charges of a rod cancel at long range, and the tables' errors do not.
+    """
+    ground = replace(ground, tolerance=1e-6) if isinstance(ground, Soil) else replace(ground, soil=Soil(8.0, 0.02, 1e-6))
+    theta, height = np.deg2rad(60.0), 0.9
+    own = np.array([0.0, 0.0, 1.0]) if upright else np.array([0.0, 1.0, 0.0])
+    theirs = np.array([np.cos(theta), 0.0, -np.sin(theta)]) if upright else own
+
+    def rod(u, z):
+        middle = np.array([0.0, 0.0, z])
+        return Antenna("rod", [Wire(middle - 0.3 * u, middle + 0.3 * u, 1e-4)], [Port("p", 0)])
+
+    apart = []
+    for distance in (60.0, 120.0, 240.0):
+        place = (distance * np.sin(theta), 0.0, distance * np.cos(theta))
+        d = discretise(
+            Station([Placed(rod(own, height), (0, 0, 0)), Placed(rod(theirs, 0.0), place)], ground),
+            FREQUENCY_HZ,
+            self_blocks=False,
+        )
+        found = PairFiller(d).sampled_blocks(0, np.array([1]), 3)[0]
+        vectors = kind_vectors(d.kinds[0], d.ground, direction_frame([theta], [0.0]), K, circumference=False)[:, 0]
+        sampled = d.kinds[1].samples(distance, K, 1e-8)
+        moments = theirs @ np.moveaxis(sampled.currents, 0, 1).sum(axis=0)
+        wave = -1j * K * IMPEDANCE_OF_VACUUM * np.exp(-1j * K * distance) / (4.0 * np.pi * distance)
+        last = -np.outer(moments, wave * vectors[:, 0 if upright else 1])
+        strongest = np.unravel_index(np.argmax(np.abs(last)), last.shape)
+        apart.append(complex(found[strongest] / last[strongest] - 1.0))
+    # doubling the range halves what they are apart by; taking it off leaves the second order
+    second = abs(2.0 * apart[1] - apart[0])
+    assert abs(apart[2]) < abs(apart[1]) < abs(apart[0]) < 0.1
+    record(
+        f"coupling at long range over the far field, {ground.name}", 1.0 + 2.0 * apart[2] - apart[1], 1.0,
+        absolute=0.5 * second + 1e-5, wrong=1.0 + apart[2], source=HALF_SPACE,
     )  # fmt: skip
 
 
