@@ -19,8 +19,8 @@ from elbowroom.kernels.soil.response import GroundResponse
 from elbowroom.kernels.soil.sommerfeld import GroundQuadrature
 from elbowroom.kernels.soil.splines import even_spline_coefficients, spline_basis, spline_weights
 
-SINGLE_FROM = 2e-6
-"""Tables of this tolerance and more are kept in single precision."""
+SINGLE_FROM = 5e-6
+"""Tables of this tolerance and more are kept and read in single precision, which costs up to 1e-6."""
 
 _SPLINE_ERROR = 1.0 / 384.0
 """Error of an interpolating cubic spline over the fourth difference of its samples (Hall 1968 has 5/384 for the worst)."""
@@ -187,9 +187,9 @@ def build_table(response: GroundResponse, rho_max_m: float, z_min_m: float, z_ma
     rho_test = np.concatenate([[0.0, rho_max], rho_max * rng.random(40), np.minimum(rho_max, 20.0 * z_low) * rng.random(24)])
     z_test = np.concatenate([[z_min, z_max], z_min * (z_max / z_min) ** rng.random(6)])
     exact = quadrature.kernels(rho_test, z_test)
-    share = 0.4
+    share, dtype = 0.4, np.float32 if tolerance >= SINGLE_FROM else np.float64
     for _ in range(_ATTEMPTS):
-        table = _tabulate(quadrature, scale, count, rho_end, heights, (z_low, z_high), share * tolerance)
+        table = _tabulate(quadrature, scale, count, rho_end, heights, (z_low, z_high), share * tolerance, dtype)
         found = np.moveaxis(table.smooth(rho_test[:, None], z_test), -1, 0)
         found[3] *= response.wavenumber
         error = float(np.abs(found - exact).max())
@@ -247,22 +247,30 @@ def _plan_distances(
     step = np.minimum(0.25 * np.hypot(z_low, places / 4.0), 0.35 / max(quadrature.corner, k))
     rho = np.abs(places[:, None] + step[:, None] * np.arange(-3.0, 4.0))
     values = quadrature.kernels(rho.ravel(), z).reshape(4, len(places), 7, len(z))
-    rows = (
-        np.array([[0, 0, -1, 0, 1, 0, 0], [0, 0, 1, -2, 1, 0, 0], [0, -1, 2, 0, -2, 1, 0], [0, 1, -4, 6, -4, 1, 0]], dtype=float)
-        * np.array([0.5, 1.0, 0.5, 1.0])[:, None]
+    differences = [
+        ([0, 0, -1, 0, 1, 0, 0], 0.5),
+        ([0, 0, 1, -2, 1, 0, 0], 1.0),
+        ([0, -1, 2, 0, -2, 1, 0], 0.5),
+        ([0, 1, -4, 6, -4, 1, 0], 1.0),
+        ([1, -6, 15, -20, 15, -6, 1], 1.0),
+    ]
+    orders = (1, 2, 3, 4, 6)
+    d1, d2, d3, d4, d6 = (
+        factor * np.einsum("j,apjz->apz", np.array(row, dtype=float), values) / step[:, None] ** order
+        for (row, factor), order in zip(differences, orders, strict=True)
     )
-    d1, d2, d3, d4 = np.einsum("mj,apjz->mapz", rows, values) / (step[:, None] ** np.arange(1.0, 5.0)[:, None, None, None])
+    # Squared wavenumber of what varies fastest at each place.
+    rapid = np.abs(d6).max(axis=(0, 2)) / np.maximum(np.abs(d4).max(axis=(0, 2)), 1e-300)
     best = (_DISTANCES_M[0], np.inf)
     for a in _DISTANCES_M:
         # Chain rule for rho(s) = a s/(1 - s).
         q = (places + a)[:, None]
         r1, r2, r3, r4 = q**2 / a, 2.0 * q**3 / a**2, 6.0 * q**4 / a**3, 24.0 * q**5 / a**4
         fourth = np.abs(d4 * r1**4 + 6.0 * d3 * r1**2 * r2 + d2 * (3.0 * r2**2 + 4.0 * r1 * r3) + d1 * r4).max(axis=(0, 2))
-        second = np.abs(d2 * r1**2 + d1 * r2).max(axis=(0, 2))
         spacings = (allowed / (_SPLINE_ERROR * fourth)) ** 0.25
         for _ in range(4):
             # Waves of few nodes each, allowed where they are weak, are missed by more than the fourth power says.
-            excess = 1.0 + 0.3 * spacings**2 * fourth / second
+            excess = 1.0 + 0.2 * (spacings * r1[:, 0]) ** 2 * rapid
             spacings = (allowed / (_SPLINE_ERROR * fourth * excess)) ** 0.25
         spacing = spacings.min()
         count = rho_max / (rho_max + a) / spacing
@@ -279,6 +287,7 @@ def _tabulate(
     heights: _Heights,
     z_range: tuple[float, float],
     allowed: float,
+    dtype: type,
 ) -> SoilTable:
     """Return the table on a grid of distances; as many heights as the spline between them asks for."""
     # The spline's last few intervals are less good: they lie beyond the end.
@@ -302,9 +311,7 @@ def _tabulate(
         n_z = int(np.ceil(1.2 * n_z))
     coefficients = even_spline_coefficients(np.matmul(up, parts))
     return SoilTable(
-        coefficients=np.ascontiguousarray(
-            coefficients[: count + 2], dtype=np.float32 if allowed >= 0.1 * SINGLE_FROM else np.float64
-        ),
+        coefficients=np.ascontiguousarray(coefficients[: count + 2], dtype=dtype),
         wavenumber=quadrature.response.wavenumber,
         rho_scale_m=scale,
         rho_per_node=float(s[1]),
