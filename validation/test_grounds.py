@@ -144,7 +144,7 @@ def test_far_field__is_the_limit_of_coupling_at_long_range(record, ground, uprig
         return Antenna("rod", [Wire(middle - 0.3 * u, middle + 0.3 * u, 1e-4)], [Port("p", 0)])
 
     apart = []
-    for distance in (60.0, 120.0, 240.0):
+    for distance in (100.0, 200.0, 400.0):
         place = (distance * np.sin(theta), 0.0, distance * np.cos(theta))
         d = discretise(
             Station([Placed(rod(own, height), (0, 0, 0)), Placed(rod(theirs, 0.0), place)], ground),
