@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import os
 import shutil
+import subprocess
 
 import numpy as np
 import pytest
@@ -13,6 +14,7 @@ from elbowroom.base.arrays import ArraySpec
 from elbowroom.job.solve import SOLUTION_SCHEMA
 from elbowroom.store import Hdf5Store, Record, Schema, StoreDamageWarning, content_key
 from elbowroom.store.processes import this_machine
+from store.samples import try_mount, unmount
 
 OTHER = content_key("a unit of another job")
 LATER = Schema("station-solution", SOLUTION_SCHEMA.version + 1, SOLUTION_SCHEMA.arrays)
@@ -350,3 +352,30 @@ def test_list__survives_units_of_unknown_schemas(command, job, store):
     assert outcome.code == 0
     assert "3 units" in outcome.out
     assert command("store", "verify", store.folder.parent).code == 0
+
+
+def test_read_only_disk__is_looked_at_and_not_changed(command, job, tmp_path):
+    disk = tmp_path / "disk"
+    pack = tmp_path / "p"
+    assert command("store", "pack", job.parent / "store", pack).code == 0
+    if not try_mount(disk):
+        pytest.skip("mounts are not allowed here, and no folder is read-only for an administrator")
+    try:
+        assert command("store", "unpack", pack, disk / "store").code == 0
+        subprocess.run(["mount", "-o", "remount,ro", str(disk)], check=True)
+        assert "2 units" in command("store", "list", disk / "store").out
+        assert command("store", "verify", disk / "store").code == 0
+        assert command("store", "pack", disk / "store", tmp_path / "again").code == 0
+        assert (tmp_path / "again").read_bytes() == pack.read_bytes()
+        outcome = command("store", "prune", disk / "store", "--only-named", "--remove")
+        assert outcome.code == 6
+        assert "Read-only file system" in outcome.err
+        outcome = command("store", "prune", disk / "store", "--only-named", "--older-than-days", "1")
+        assert outcome.code == 6
+        assert "mounted read-only" in outcome.err
+        outcome = command("store", "unpack", pack, disk / "other")
+        assert outcome.code == 6
+        assert "mounted read-only" in outcome.err
+        assert "2 units" in command("store", "list", disk / "store").out
+    finally:
+        unmount(disk)

@@ -16,7 +16,7 @@ from elbowroom.job.solve import SOLUTION_SCHEMA
 from elbowroom.store import Hdf5Store, Schema
 from elbowroom.store.care import SCHEMA_FOLDER, UnitEntry, entries, left_behind, schema_folders
 from elbowroom.store.claims import Holder
-from elbowroom.store.disk import Disk, same_file
+from elbowroom.store.disk import Disk, explained, flush_folder, same_file
 from elbowroom.store.records import DamageReport
 
 if TYPE_CHECKING:
@@ -278,6 +278,7 @@ def plan_pruning(
             msg = f"{holder} works on a unit that no known job needs; name its job (--job), or wait until it has ended"
             raise StoreError(msg, path=folder)
     plan = Pruning([need.path for need in needs])
+    now: dict[Path, float] = {}
     for unit in entries(folder):
         try:
             found = os.lstat(unit.path)
@@ -290,8 +291,12 @@ def plan_pruning(
             why = "damaged" if unit.problem is not None else "needed by no job"
         elif other_versions:
             why = f"of another version ({unit.path.parent.name})"
-        if why and older_than_days > 0.0 and _age_days(unit.path.parent, found) < older_than_days:
-            why = ""
+        if why and older_than_days > 0.0:
+            if unit.path.parent not in now:
+                now[unit.path.parent] = _disk_time(unit.path.parent)
+            # a time in the future, left by a clock that was set back, is no age
+            if now[unit.path.parent] - found.st_mtime < older_than_days * SECONDS_PER_DAY:
+                why = ""
         if why and not stat.S_ISDIR(found.st_mode):
             plan.removals.append(Removal(unit.path, found.st_size, why, unit, (found.st_dev, found.st_ino)))
         else:
@@ -302,9 +307,12 @@ def plan_pruning(
     return plan
 
 
-def _age_days(folder: Path, found: os.stat_result) -> float:
-    """Return the age of a file by the clock of its disk; a time in the future, left by a clock set back, is no age."""
-    return max(Disk(folder).time() - found.st_mtime, 0.0) / SECONDS_PER_DAY
+def _disk_time(folder: Path) -> float:
+    """Return the time by the clock of the disk [s]."""
+    try:
+        return Disk(folder).time()
+    except OSError as cause:
+        raise explained(cause, folder, "cannot be written to, which telling the age of its files takes") from cause
 
 
 def carry_out(plan: Pruning, folder: Path) -> tuple[list[Removal], list[str]]:
@@ -312,8 +320,6 @@ def carry_out(plan: Pruning, folder: Path) -> tuple[list[Removal], list[str]]:
 
     What has changed since the plan was made stays, as does a unit that somebody works on by now.
     """
-    from elbowroom.store.disk import flush_folder
-
     gone, stayed = [], []
     working = {key for key, holder in claims_in(folder).items() if holder.state == "working"}
     for removal in plan.removals:
