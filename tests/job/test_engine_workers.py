@@ -6,12 +6,14 @@ import signal
 import subprocess
 import sys
 import time
+import warnings
 from pathlib import Path
 
 import psutil
 import pytest
 
 import engine_work as work
+from elbowroom.base.errors import ResourceError
 from elbowroom.job.engine.items import UnitFailure
 from elbowroom.job.engine.local import InProcess, ProcessWorkers
 from elbowroom.job.engine.runner import MOST_TRIES, run_items
@@ -159,3 +161,29 @@ def test_parent_killed__its_workers_end(tmp_path):
     while any(map(alive, workers)):
         assert time.monotonic() < deadline, "orphans"
         time.sleep(0.1)
+
+
+def test_killed_worker_of_a_cluster__its_item_is_done_again(tmp_path):
+    pytest.importorskip("distributed", reason="Dask distributed is not installed (extra 'cluster')")
+    from elbowroom.job.engine.cluster import DaskWorkers, connect
+
+    items = [work.item(n, work.killed_once if n == 1 else work.recorded, str(tmp_path)) for n in range(3)]
+    items.append(work.item(3, work.refused))
+    with warnings.catch_warnings():
+        # of its own: sockets and event loops closed late, ports in use
+        warnings.simplefilter("ignore")
+        ended, events = outcomes_of(items, DaskWorkers(connect("local", workers=1)))
+    assert [isinstance(ended[n][0], UnitFailure) for n in range(4)] == [False, False, False, True]
+    assert 1 in [e.item.number for e in events if e.kind == "again"]
+    assert ended[3][0].cause == "item 3 cannot be solved"
+
+
+def test_cluster_of_crowded_workers__is_refused():
+    distributed = pytest.importorskip("distributed", reason="Dask distributed is not installed (extra 'cluster')")
+    from elbowroom.job.engine.cluster import DaskWorkers
+
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")
+        cluster = distributed.LocalCluster(n_workers=1, threads_per_worker=2, processes=False, dashboard_address=None)
+        with pytest.raises(ResourceError, match="takes several units at a time.*--nthreads 1"):
+            DaskWorkers(distributed.Client(cluster))

@@ -160,7 +160,9 @@ def inspect(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> N
             screen.say("no problems found in the model")
     if not errors:
         rows = []
-        run.sample_functions()
+        if any(run.solver_at(f) == "reduced" for f in run.frequencies_hz):
+            screen.say("functions of the reduced solver are made at up to three frequencies, to tell memory and disk")
+            run.sample_functions()
         for unit in run.plan():
             mesh = mesh_statistics(run.station, unit.frequency_hz, run.job.mesh)
             p = unit.prediction

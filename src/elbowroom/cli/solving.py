@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import contextlib
+import sys
 from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, NamedTuple
@@ -105,7 +106,8 @@ def solve_all(runs: list[JobRun], screen: Screen, wish: Wish | None = None) -> l
     campaign = Campaign(runs)
     campaign.read_stored()
     campaign.predict(sampled=wish.plan_only)
-    campaign.check()
+    # Where workers are elsewhere, so is the memory that counts; it is looked at when they are known.
+    campaign.check(available_bytes=None if wish.cluster is None else sys.maxsize)
     split = campaign.split(wish.workers, wish.threads)
     _tell_plan(campaign, split, wish, screen)
     if wish.plan_only:
@@ -178,9 +180,11 @@ def _solve(campaign: Campaign, split: Split, wish: Wish, screen: Screen) -> dict
     failures: dict[int, UnitFailure] = {}
     with _log(wish.log or campaign.runs[0].job.store_folder / LOG_FILE) as log, contextlib.ExitStack() as stack:
         progress = RunProgress(screen, items, 1 if alone else split.workers)
-        workers, described = _workers(split, wish, alone, progress.stage)
+        workers, described, memory_bytes = _workers(split, wish, alone, progress.stage)
         # Ended even if nothing is begun.
         stack.callback(workers.stop)
+        if memory_bytes:
+            campaign.check(available_bytes=memory_bytes)
         log.info("%d units to solve, %d in the store; %s", progress.all, sum(u.stored for u in campaign.units), described)
         screen.say(described)
         events = stack.enter_context(contextlib.closing(run_items(items, workers, elsewhere=campaign.elsewhere)))
@@ -216,8 +220,8 @@ def _solve(campaign: Campaign, split: Split, wish: Wish, screen: Screen) -> dict
     return failures
 
 
-def _workers(split: Split, wish: Wish, alone: bool, stage: Callable[[float, str, float], None]) -> tuple[Workers, str]:
-    """Return who does the work, and a line that says so."""
+def _workers(split: Split, wish: Wish, alone: bool, stage: Callable[[float, str, float], None]) -> tuple[Workers, str, int]:
+    """Return who does the work, a line that says so, and the memory [byte] that each has elsewhere; 0 if unknown."""
     from elbowroom.job.engine.local import InProcess, ProcessWorkers
     from elbowroom.job.plan import available_memory_bytes
 
@@ -226,12 +230,13 @@ def _workers(split: Split, wish: Wish, alone: bool, stage: Callable[[float, str,
         from elbowroom.job.engine.cluster import DaskWorkers, connect
 
         workers = DaskWorkers(connect(wish.cluster, workers=split.workers))
-        return workers, f"solving on a cluster of {workers.workers} workers, each unit with {each}"
+        return workers, f"solving on a cluster of {workers.workers} workers, each unit with {each}", workers.memory_bytes
     if alone:
-        return InProcess(stage), f"solving in this process with {each}"
+        return InProcess(stage), f"solving in this process with {each}", 0
     return (
         ProcessWorkers(split.workers, available_memory_bytes()),
         f"solving in {split.workers} worker process{'es' if split.workers > 1 else ''}, each with {each}",
+        0,
     )
 
 

@@ -126,8 +126,13 @@ class Campaign:
         """Return what all units to be solved take one after another with all cores."""
         return total([u.prediction for u in self.to_solve if u.prediction is not None])
 
-    def check(self) -> None:
+    def check(self, *, available_bytes: int | None = None) -> None:
         """Refuse what cannot work, before anything is started; `predict` comes first.
+
+        Parameters
+        ----------
+        available_bytes : int, optional
+            Memory of whoever solves [byte]; that of this machine by default.
 
         Raises
         ------
@@ -147,20 +152,20 @@ class Campaign:
             return
         for run in {u.run.job.store_folder: u.run for u in self.to_solve}.values():
             run.store.check_writable()
-        found = self._lacking()
+        found = self._lacking(available_bytes)
         if found and any(u.run.solver_at(u.frequency_hz) == "reduced" for u in self.to_solve):
             self.predict(sampled=True)
-            found = self._lacking()
+            found = self._lacking(available_bytes)
         if found:
             msg = too_large(found)
             raise ResourceError(msg)
 
-    def _lacking(self) -> list[str]:
+    def _lacking(self, available_bytes: int | None) -> list[str]:
         """Return which memory or disk does not suffice, with figures."""
         disk: Counter[Path] = Counter()
         for unit in self.to_solve:
             disk[unit.run.job.store_folder] += unit.prediction.disk_bytes if unit.prediction else 0
-        return lacking(self.total(), disk)
+        return lacking(self.total(), disk, available_bytes)
 
     def read_stored(self) -> None:
         """Read stored units to the last byte, if they are few; what is damaged is set aside, told, and to be solved again."""
