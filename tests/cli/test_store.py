@@ -14,7 +14,7 @@ from elbowroom.base.arrays import ArraySpec
 from elbowroom.job.solve import SOLUTION_SCHEMA
 from elbowroom.store import Hdf5Store, Record, Schema, StoreDamageWarning, content_key
 from elbowroom.store.processes import this_machine
-from store.samples import try_mount, unmount
+from store.samples import limited_disk, temporaries, try_mount, unmount
 
 OTHER = content_key("a unit of another job")
 LATER = Schema("station-solution", SOLUTION_SCHEMA.version + 1, SOLUTION_SCHEMA.arrays)
@@ -379,3 +379,22 @@ def test_read_only_disk__is_looked_at_and_not_changed(command, job, tmp_path):
         assert "2 units" in command("store", "list", disk / "store").out
     finally:
         unmount(disk)
+
+
+def test_solve__on_a_disk_that_fills_up__keeps_what_it_has_and_goes_on_later(command, job, store, change, tmp_path):
+    change(job, "frequency_hz = [110e6]", "frequency_hz = [110e6, 120e6]")
+    own = own_key(store)
+    size = store.path_of(own).stat().st_size
+    with limited_disk(tmp_path / "unused", mount=False) as leave:
+        leave(size // 2)
+        outcome = command("solve", job)
+        assert outcome.code == 6, outcome.all
+        assert "File too large" in outcome.all
+        assert "Traceback" not in outcome.all
+        leave(None)
+    assert set(store.keys()) == {own, OTHER}
+    assert store.verify(own) is None
+    assert temporaries(store.folder) == []
+    assert list(store.folder.glob("*.claim")) == []
+    assert "1 to solve" in command("solve", job).out
+    assert len(store.keys()) == 3
