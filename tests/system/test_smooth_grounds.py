@@ -6,13 +6,14 @@ import pytest
 from numpy.testing import assert_allclose
 
 from elbowroom.base.errors import GeometryError
-from elbowroom.geometry.grounds import PerfectGround, Soil
+from elbowroom.geometry.grounds import PerfectGround, Soil, TabulatedSoil
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.kernels import grounds
 from elbowroom.kernels.grounds import PerfectGroundKernels, PointKernels
 from elbowroom.kernels.points import free_kernel
 from elbowroom.radiation.patterns import station_patterns
 from elbowroom.system.assembly import PairFiller, antenna_distances
+from elbowroom.system.band import BandSegment, SegmentSettings
 from elbowroom.system.discretisation import discretise, extent_of
 from elbowroom.system.ground_blocks import ground_block, ring_samples
 from elbowroom.system.interactions import SkeletonInteractions, SkeletonTable, carried_field
@@ -20,7 +21,7 @@ from elbowroom.system.plane_waves import direction_frame
 from elbowroom.system.reduction import ReductionSettings
 from elbowroom.system.solving import mesh_error, solve_direct, solve_isolated
 from elbowroom.system.solving_reduced import ReducedStation, solve_reduced
-from helpers import FREQUENCY_HZ, crossed, dipole
+from helpers import FREQUENCY_HZ, cluster, crossed, dipole
 
 ANY_SOIL = Soil(10.0, 0.01)
 PLACES = [(0.0, 0.0, 0.0), (1.5, 0.3, 0.2), (-0.6, 1.7, 0.0), (3.0, 3.5, 0.0), (-2.0, -1.0, 0.1)]
@@ -39,6 +40,9 @@ class MirrorAsCorrection(PerfectGroundKernels):
 
     def __init__(self, ground, frequency_hz, extent):
         self.extent = extent
+
+    def at(self, frequency_hz):
+        return self
 
     def serving(self, extent):
         return self
@@ -247,3 +251,17 @@ def test_wires_in_or_on_soil__are_refused(height, told):
 def test_antennas__their_distances_do_not_depend_on_the_ground(fake):
     first, second = (antenna_distances(discretise(station(g), FREQUENCY_HZ)) for g in (ANY_SOIL, PerfectGround()))
     assert_allclose(first, second, rtol=0.0, atol=0.0)
+
+
+def test_band_segment__over_soil_reflects_as_at_the_frequency_asked_for():
+    """Matrices between their nodes are interpolated, the ground of a pattern is not."""
+    ground = TabulatedSoil((50e6, 140e6, 350e6), (14.0, 10.0, 6.0), (0.01, 0.02, 0.03))
+    segment = BandSegment(Station(cluster(3).placed, ground), 130e6, 155e6, SegmentSettings(1e-4))
+    made = segment.solve(141.7e6)
+    exact = discretise(segment.station, 141.7e6, mesh_hz=segment.high_hz)
+    currents, _ = solve_direct(exact, precision="double")
+    frame = direction_frame([0.2, 1.2], [0.3, 2.0])
+    found = station_patterns(made.discretisation, made.currents.currents, frame, space=made.space)
+    expected = station_patterns(exact, currents.currents, frame)
+    assert relative(found, expected) < 1e-5
+    assert made.discretisation.ground.response.wavenumber == exact.wavenumber

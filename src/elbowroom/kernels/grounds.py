@@ -41,6 +41,10 @@ class GroundKernels(Protocol):
         """
         ...
 
+    def at(self, frequency_hz: float) -> GroundKernels:
+        """Return the fields of the same ground at another frequency [Hz]."""
+        ...
+
     def serving(self, extent: Extent) -> GroundKernels:
         """Return the fields of the same ground for points within an extent: the same object if it serves already."""
         ...
@@ -77,6 +81,10 @@ class FreeSpaceKernels:
         """Return None: nothing is reflected."""
         return
 
+    def at(self, frequency_hz: float) -> FreeSpaceKernels:
+        """Return itself."""
+        return self
+
     def serving(self, extent: Extent) -> FreeSpaceKernels:
         """Return itself."""
         return self
@@ -107,6 +115,10 @@ class PerfectGroundKernels:
         """Return (-1, +1) at every angle."""
         ones = np.ones(np.shape(theta_rad), dtype=complex)
         return -ones, ones
+
+    def at(self, frequency_hz: float) -> PerfectGroundKernels:
+        """Return itself."""
+        return self
 
     def serving(self, extent: Extent) -> PerfectGroundKernels:
         """Return itself."""

@@ -64,7 +64,7 @@ class LossyGroundKernels:
     has_correction = True
 
     def __init__(self, ground: Ground, frequency_hz: float, extent: Extent) -> None:
-        self.ground, self.frequency_hz, self.extent = ground.at(frequency_hz), frequency_hz, extent
+        self.ground, self.frequency_hz, self.extent = ground, frequency_hz, extent
         self.response = ground_response(ground, frequency_hz)
         self._table: SoilTable | None = None
         self._lock = Lock()
@@ -84,17 +84,28 @@ class LossyGroundKernels:
         """Return the direct kernel with what the ground adds, for horizontal and vertical currents and for charges."""
         from elbowroom.kernels.soil.fill import fill_soil
 
+        self._same(wavenumber)
         return fill_soil(self.table(), points, points2, work, direct=True)
 
     def correction(self, points: FloatArray, points2: FloatArray, wavenumber: float, work: Workspace) -> PointKernels:
         """Return what the ground adds to the direct kernel."""
         from elbowroom.kernels.soil.fill import fill_soil
 
+        self._same(wavenumber)
         return fill_soil(self.table(), points, points2, work, direct=False)
 
     def reflection(self, theta_rad: FloatArray, wavenumber: float) -> tuple[ComplexArray, ComplexArray]:
         """Return (Gh, Ge) of plane waves at zenith angles; both are -1 at the horizon."""
+        self._same(wavenumber)
         return self.response.reflection(np.minimum(theta_rad, 0.5 * np.pi))
+
+    def _same(self, wavenumber: float) -> None:
+        """See to it that nobody asks one frequency's ground about another."""
+        assert abs(wavenumber - self.response.wavenumber) < 1e-9 * wavenumber
+
+    def at(self, frequency_hz: float) -> LossyGroundKernels:
+        """Return the fields of the same ground at another frequency [Hz]; itself at its own."""
+        return self if frequency_hz == self.frequency_hz else LossyGroundKernels(self.ground, frequency_hz, self.extent)
 
     def serving(self, extent: Extent) -> LossyGroundKernels:
         """Return kernels for points within an extent: itself if its tables reach as far."""
