@@ -7,7 +7,7 @@ import numpy as np
 from elbowroom.base.arrays import FloatArray
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.kernels.point_kernels import PointKernels, Workspace
-from elbowroom.kernels.soil.fill_numba import fill_pairs
+from elbowroom.kernels.soil.fill_numba import fill_pairs, reach
 from elbowroom.kernels.soil.table import SoilTable
 
 _LANES = 16
@@ -47,18 +47,10 @@ def fill_soil(table: SoilTable, points: FloatArray, points2: FloatArray, work: W
     flat = work.array("soil", (8 * plane + 16,))
     begin = -flat.ctypes.data % 64 // flat.itemsize
     flat = flat[begin : begin + 8 * plane]
-    turns = table.wavenumber / (2.0 * np.pi)
+    turns, grid = table.scales
     padded = np.empty((3, -(-count // _LANES) * _LANES))
     np.multiply(points2, turns, out=padded[:, :count])
     padded[:, count:] = padded[:, count - 1 : count]
-    scales = (
-        turns * table.rho_scale_m,
-        1.0 / table.rho_per_node,
-        turns * table.z_scale_m,
-        1.0 / table.z_per_node,
-        table.z_start / table.z_per_node,
-    )
-    grid = np.array(scales, dtype=table.coefficients.dtype)
     nodes, stride, odd = table.aligned
     n_rho, n_z, _ = table.coefficients.shape
     sizes = np.array([n_rho - 4, n_z - 4, stride, odd, _BLOCK], dtype=np.int32)
@@ -76,8 +68,7 @@ def fill_soil(table: SoilTable, points: FloatArray, points2: FloatArray, work: W
 
 
 def _check_reach(table: SoilTable, points: FloatArray, points2: FloatArray) -> None:
-    low = float(points[2].min() + points2[2].min())
-    high = float(points[2].max() + points2[2].max())
+    low, high, diagonal = reach(points, points2)
     slack = 1e-9 * (1.0 + table.z_max_m)
     if not (low >= table.z_min_m - slack and high <= table.z_max_m + slack):
         msg = (
@@ -85,11 +76,9 @@ def _check_reach(table: SoilTable, points: FloatArray, points2: FloatArray) -> N
             f"covers, got {low:g} to {high:g} m"
         )
         raise ModelRangeError(msg)
-    # Corners of the boxes around the points first; all pairs only where that is not enough.
-    reach = [max(points[n].max() - points2[n].min(), points2[n].max() - points[n].min()) for n in (0, 1)]
-    farthest = float(np.hypot(*reach))
-    if farthest <= table.rho_max_m:
+    if diagonal <= table.rho_max_m:
         return
+    # The boxes' corners may be farther apart than any pair.
     farthest = max(float(np.hypot(points[0, i] - points2[0], points[1, i] - points2[1]).max()) for i in range(points.shape[1]))
     if not farthest <= table.rho_max_m * (1.0 + 1e-9):
         msg = (

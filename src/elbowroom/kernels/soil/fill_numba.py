@@ -6,11 +6,14 @@ kernels) lie side by side and are interpolated together, one pair after another;
 before and after work on eight pairs at a time.  Reciprocal roots start from single precision and one step of Newton's.
 """
 
+import math
+
+import numpy as np
 from llvmlite import ir
 from numba import njit, types
 from numba.extending import intrinsic
 
-from elbowroom.kernels.accelerate import FAST_JIT_OPTIONS
+from elbowroom.kernels.accelerate import FAST_JIT_OPTIONS, JIT_OPTIONS
 from elbowroom.kernels.points_numba import C0, C1, C2, C3, C4, C5, S0, S1, S2, S3, S4, S5
 from elbowroom.kernels.soil.lanes import Lanes, transpose
 
@@ -191,3 +194,23 @@ def fill_pairs(x, y, z, x2, y2, z2, count, turns, grid, sizes, table, out, plane
                 for part in range(8):
                     for j in range(whole, end):
                         out[part * plane + i * count + j] = tail[8 * part + j - whole]
+
+
+@njit(**JIT_OPTIONS)
+def reach(points, points2):
+    """Return lowest and highest sum of heights and the diagonal of the boxes around two sets (3, Q); all NaN if any is."""
+    low, high = np.empty((2, 3)), np.empty((2, 3))
+    total = 0.0
+    for n in range(3):
+        for side, values in enumerate((points, points2)):
+            least = most = values[n, 0]
+            for q in range(values.shape[1]):
+                v = values[n, q]
+                total += v
+                least, most = min(least, v), max(most, v)
+            low[side, n], high[side, n] = least, most
+    if not np.isfinite(total):
+        return np.nan, np.nan, np.nan
+    across = max(high[0, 0] - low[1, 0], high[1, 0] - low[0, 0])
+    along = max(high[0, 1] - low[1, 1], high[1, 1] - low[0, 1])
+    return low[0, 2] + low[1, 2], high[0, 2] + high[1, 2], math.hypot(across, along)

@@ -92,6 +92,14 @@ class SoilTable:
             places[1, :, : n_z - 1] = places[0, :, 1:n_z]
         return flat, stride, n_rho * stride if copies == 2 else parts
 
+    @cached_property
+    def scales(self) -> tuple[float, FloatArray]:
+        """Return 1 over the wavelength [1/m], and what turns distances in wavelengths into places in the table."""
+        turns = self.wavenumber / (2.0 * np.pi)
+        along, upwards = 1.0 / self.rho_per_node, 1.0 / self.z_per_node
+        numbers = (turns * self.rho_scale_m, along, turns * self.z_scale_m, upwards, self.z_start * upwards)
+        return turns, np.array(numbers, dtype=self.coefficients.dtype)
+
     def to_arrays(self) -> dict[str, np.ndarray]:
         """Return everything as arrays, for a store."""
         names = [name for name in self.__dataclass_fields__ if name != "coefficients"]
