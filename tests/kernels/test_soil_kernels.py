@@ -297,7 +297,7 @@ def test_fill__keeps_planes_that_matrix_products_take(tables):
         ((2, 5.0), "heights"),
         ((2, -0.4), "heights"),
         ((2, math.nan), "heights"),
-        ((0, math.nan), "distance"),
+        ((0, math.nan), "nan"),
     ],
 )
 def test_fill__refuses_points_the_table_does_not_reach(tables, shift, what):
