@@ -89,8 +89,7 @@ def test_own_blocks__with_loss_loads_and_images_equal_those_computed(ground):
     loads = [Load(wire=0, position=0.25, gap=0.01, resistance_ohm=5.0, inductance_h=1e-7, capacitance_f=1e-11)]
     antenna = Antenna("loaded", wires=wires, ports=[Port("x", wire=0, gap=0.01)], loads=loads)
     station = Station([Placed(antenna, (0.0, 0.0, 0.0)), Placed(antenna, (2.0, 0.0, 0.5), tilt_east_deg=5.0)], ground)
-    first = discretise(station, LOW, mesh_hz=HIGH, self_blocks=False)
-    nodes = band_nodes(LOW, HIGH, 2 * intervals_for(HIGH - LOW, reach_of(first), 1e-6))
+    nodes = band_nodes(LOW, HIGH, 2 * intervals_for(HIGH - LOW, reach_of(station), 1e-6))
     own = OwnBlocks([discretise(station, float(f), mesh_hz=HIGH) for f in nodes])
     exact = discretise(station, 141.7e6, mesh_hz=HIGH)
     made = own.at(141.7e6)

@@ -68,9 +68,9 @@ def dipoles() -> None:
     subprocess.run(["rm", "-rf", folder], check=True)
     solution, _ = timed(benchmark_station(), 350e6, solver="reduced", tolerance=1e-4)
     start = time.perf_counter()
-    from elbowroom.job.solve import SOLUTION_SCHEMA, _to_record
+    from elbowroom.job.solve import SOLUTION_SCHEMA, to_record
 
-    Hdf5Store(folder, SOLUTION_SCHEMA).put("0" * 64, _to_record(solution, {}))
+    Hdf5Store(folder, SOLUTION_SCHEMA).put("0" * 64, to_record(solution, {}))
     solution.beam(solution.pointing_weights(0.3, 0.2, port="x"), sky.theta_rad, sky.phi_rad)
     seconds = time.perf_counter() - start
     print(f"storing it and one beam on a 1-degree hemisphere: {seconds:.2f} s = {seconds / unit:.2f} U (target 0.7)")

@@ -249,6 +249,7 @@ def _emit_unit(campaign: Campaign, unit: CampaignUnit, state: str, screen: Scree
             "solver": s.strategy, "unknowns": s.n_unknowns, "functions": s.n_functions, "ports": s.n_ports,
             "relative_residual": None if reduced else s.relative_residual, "mesh_error": s.mesh_error,
             "pattern_error": s.pattern_error, "port_matrix_error": s.port_matrix_error, "seconds": sum(s.seconds.values()),
+            "origin": s.origin,
         }  # fmt: skip
         unit.state = state
     if len(campaign.runs) > 1:
@@ -268,7 +269,7 @@ def _show(campaign: Campaign, failures: dict[int, UnitFailure], screen: Screen) 
         reduced = s.strategy == "reduced"
         first = unit.frequency_hz / 1e6 if len(campaign.runs) == 1 else campaign.label_of(unit)
         rows.append(
-            [first, unit.state, s.strategy, s.n_unknowns, s.n_functions if reduced else "", s.n_ports,
+            [first, unit.state, s.strategy, s.origin, s.n_unknowns, s.n_functions if reduced else "", s.n_ports,
              "" if reduced else f"{s.relative_residual:.1e}", f"{s.mesh_error:.1e}", f"{s.pattern_error:.1e}" if reduced else "",
              readable_seconds(sum(s.seconds.values()))]
         )  # fmt: skip
@@ -277,10 +278,14 @@ def _show(campaign: Campaign, failures: dict[int, UnitFailure], screen: Screen) 
     elif rows:
         screen.table(
             "Solutions",
-            ["frequency [MHz]" if len(campaign.runs) == 1 else "unit", "state", "solver", "unknowns", "functions", "ports",
-             "residual", "mesh error", "pattern error", "solve time"],
+            ["frequency [MHz]" if len(campaign.runs) == 1 else "unit", "state", "solver", "origin", "unknowns", "functions",
+             "ports", "residual", "mesh error", "pattern error", "solve time"],
             rows,
         )  # fmt: skip
+        screen.say(
+            "origin: matrix assembled at that frequency, or interpolated along frequency and solved, or currents of solved "
+            "frequencies interpolated;"
+        )
         screen.say("residual: of the linear system; mesh error: change of an isolated antenna's admittance on a finer mesh;")
         screen.say(
             "pattern error: of embedded patterns (100-ohm ports) relative to their peaks, against all unknowns of the mesh"

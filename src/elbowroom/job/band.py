@@ -69,15 +69,14 @@ class SegmentPlan:
     between: tuple[float, ...] = ()
 
 
-def widest_segment(station: Station, frequency_hz: float, tolerance: float, mesh: str | MeshSettings = "default") -> float:
-    """Return the width of a segment [Hz] that begins at a frequency [Hz]."""
-    reach = reach_of(discretise(station, frequency_hz, mesh=mesh, self_blocks=False))
-    low, high = 0.0, WIDEST_SHARE * frequency_hz
-    if intervals_for(high, reach, INTERPOLATION_SHARE * tolerance) <= MOST_INTERVALS:
+def widest_segment(reach_m: float, low_hz: float, tolerance: float) -> float:
+    """Return the width of a segment [Hz] that begins at a frequency [Hz], for a reach from `reach_of` [m]."""
+    low, high = 0.0, WIDEST_SHARE * low_hz
+    if intervals_for(high, reach_m, INTERPOLATION_SHARE * tolerance) <= MOST_INTERVALS:
         return high
     for _ in range(40):
         middle = 0.5 * (low + high)
-        if intervals_for(middle, reach, INTERPOLATION_SHARE * tolerance) <= MOST_INTERVALS:
+        if intervals_for(middle, reach_m, INTERPOLATION_SHARE * tolerance) <= MOST_INTERVALS:
             low = middle
         else:
             high = middle
@@ -114,7 +113,6 @@ def plan_segments(
     frequencies_hz: Sequence[float],
     tolerance: float,
     *,
-    mesh: str | MeshSettings = "default",
     solve_step_hz: float | None = None,
 ) -> list[SegmentPlan]:
     """Return the segments of a band; channels that are in none are better solved one by one.
@@ -127,8 +125,6 @@ def plan_segments(
         Channels, rising [Hz].
     tolerance : float
         Error of embedded patterns that is aimed at.
-    mesh : str or MeshSettings, optional
-        Mesh.
     solve_step_hz : float, optional
         About how far apart channels are solved [Hz]; all are by default.
 
@@ -141,6 +137,7 @@ def plan_segments(
     solved = np.asarray(solved_channels(frequencies_hz, solve_step_hz))
     if len(solved) < FEWEST_CHANNELS:
         return []
+    reach = reach_of(station)
     widths: dict[float, float] = {}
 
     def edges(share: float) -> list[int]:
@@ -149,7 +146,7 @@ def plan_segments(
         while found[-1] < len(solved) - 1:
             start = float(solved[found[-1]])
             if start not in widths:
-                widths[start] = widest_segment(station, start, tolerance, mesh)
+                widths[start] = widest_segment(reach, start, tolerance)
             last = int(np.searchsorted(solved, start + share * widths[start] * (1.0 + 1e-9), side="right")) - 1
             found.append(max(last, found[-1] + 1))
         return found
@@ -268,8 +265,9 @@ class SegmentChannels:
         if self._segment is None:
             plan = self.plan
             self._segment = BandSegment(
-                self.station, plan.low_hz, plan.high_hz, SegmentSettings(self.tolerance), progress=self._progress, **self._options
-            )  # type: ignore[arg-type]
+                self.station, plan.low_hz, plan.high_hz, SegmentSettings(self.tolerance), progress=self._progress,
+                **self._options,  # type: ignore[arg-type]
+            )  # fmt: skip
         return self._segment
 
     def solved(self, frequency_hz: float) -> Solution:
@@ -476,7 +474,7 @@ def solve_band(
     """
     from elbowroom.job.solve import solve
 
-    plans = plan_segments(station, frequencies_hz, tolerance, mesh=mesh, solve_step_hz=solve_step_hz)
+    plans = plan_segments(station, frequencies_hz, tolerance, solve_step_hz=solve_step_hz)
     current: SegmentChannels | None = None
     for f in frequencies_hz:
         plan = next((p for p in plans if p.low_hz <= f <= p.high_hz), None)

@@ -17,6 +17,7 @@ from elbowroom.base.errors import JobFileError, ModelRangeError
 from elbowroom.geometry.directions import Directions, hemisphere_grid, ludwig3, unit_vectors
 from elbowroom.job.beamfields import BeamFields, beam_fields, mean_nominal_phi_rad
 from elbowroom.job.files import write_explained_csv
+from elbowroom.system.solving import ORIGIN_MEANING
 
 CUT_STEP_DEG = 0.05
 """Step of the great circles on which half-power widths are read; the crossing itself is interpolated."""
@@ -68,6 +69,7 @@ MEANINGS = {
     "mesh_error": "relative change of an isolated antenna's port admittance on a finer mesh",
     "pattern_error": "of embedded patterns with 100-ohm terminations relative to their peaks, against solving for all unknowns "
     "of the mesh",
+    "origin": ORIGIN_MEANING,
 }
 
 
@@ -112,6 +114,7 @@ class BeamComparison:
     relative_residual: float
     mesh_error: float
     pattern_error: float
+    origin: str
 
 
 def decibels(power_ratio: float) -> float:
@@ -465,6 +468,7 @@ def compare_beams(fields_: BeamFields) -> list[BeamComparison]:
                 relative_residual=statistics.relative_residual,
                 mesh_error=statistics.mesh_error,
                 pattern_error=statistics.pattern_error,
+                origin=statistics.origin,
             )
         )
     return rows

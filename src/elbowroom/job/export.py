@@ -22,6 +22,7 @@ from elbowroom.geometry.directions import Directions, ludwig3
 from elbowroom.job.beamfields import BeamFields, mean_nominal_phi_rad
 from elbowroom.job.files import written_whole
 from elbowroom.radiation.solution import Solution
+from elbowroom.system.solving import ORIGIN_MEANING
 from elbowroom.system.terminations import Termination
 
 TABLE_FORMAT = "elbowroom-beam-table"
@@ -187,8 +188,8 @@ def export_hdf5(
     (F, B, T, H, 2) complex, ``weight`` (F, B, P) complex, ``beam_name`` and ``beam_port`` (B), ``pointing_theta_rad`` and
     ``pointing_phi_rad`` (B), ``nominal_phi_rad`` (B), ``port_name`` (P), ``port_nominal_phi_rad`` (P), ``termination_ohm``
     (F, P) text, ``antenna_name`` (A), ``antenna_position_m`` (A, 3), ``relative_residual``,
-    ``mesh_error`` and ``pattern_error`` (F); with element patterns ``embedded_pattern`` and ``isolated_pattern``
-    (F, P, T, H, 2) complex.  Every dataset has a ``unit``; axes are HDF5 dimension scales.
+    ``mesh_error`` and ``pattern_error`` (F), ``origin`` (F) text; with element patterns ``embedded_pattern`` and
+    ``isolated_pattern`` (F, P, T, H, 2) complex.  Every dataset has a ``unit``; axes are HDF5 dimension scales.
     The phase centre of every pattern is the station's origin.
     """
     settings = settings or TableSettings()
@@ -228,6 +229,8 @@ class _TableWriter:
         ):
             made = self._make(name, np.full(n_frequencies, np.nan), "1", text)
             made.dims[0].attach_scale(file["frequency_hz"])
+        made = self._make("origin", _text([""] * n_frequencies), "1", ORIGIN_MEANING)
+        made.dims[0].attach_scale(file["frequency_hz"])
         if beams:
             self._axis("beam_name", _text([b.name for b in beams]), "1", "Names of the beams")
             pointing = np.array([b.direction_rad for b in beams])
@@ -300,6 +303,7 @@ class _TableWriter:
         file["relative_residual"][index] = solution.statistics.relative_residual
         file["mesh_error"][index] = solution.statistics.mesh_error
         file["pattern_error"][index] = solution.statistics.pattern_error
+        file["origin"][index] = solution.statistics.origin
         file["termination_ohm"][index] = _termination_text(termination, len(solution.port_names))
         phi = directions.phi_rad
         if ready.beams:
@@ -374,7 +378,7 @@ def export_csv(
             writer.writerows(_csv_rows(each, settings))
             s = each.solution.statistics
             file.write(f"# at {each.solution.frequency_hz:.12g} Hz: relative_residual {s.relative_residual:.3g}, ")
-            file.write(f"mesh_error {s.mesh_error:.3g}, pattern_error {s.pattern_error:.3g}\n")
+            file.write(f"mesh_error {s.mesh_error:.3g}, pattern_error {s.pattern_error:.3g}, origin {s.origin}\n")
         if count == 0:
             msg = "nothing to export: no frequency is solved"
             raise ExportError(msg)

@@ -35,6 +35,11 @@ shift_north_m``
 ``[band] frequency_hz``          list of frequencies [Hz], in any order; they are solved in rising order
 ``[band] start_hz, stop_hz,      instead of the list: start, start + step, ... up to stop, stop included if a
 step_hz``                        whole number of steps away [Hz]
+``[band] segments``              ``"auto"``: where the reduced method solves many channels, matrices are assembled at a
+                                 few frequencies and interpolated to the channels, within the tolerance; ``"none"``:
+                                 every frequency is assembled for itself
+``[band] solve_step_hz``         about how far apart channels are solved [Hz]; those in between are interpolated from
+                                 them where the estimated error allows, else solved too; all are solved by default
 ``[station] as_built``           CSV file of offsets from the layout, added before turn and shift (see
                                  `elbowroom.geometry.offsets`); none by default
 ``[station.damage] missing``     antennas whose structure is absent
@@ -176,6 +181,9 @@ def read_job(path: str | Path) -> Job:
                 problems.append("termination.amplifier_off: required key is missing beside station.damage.amplifier_off")
         _check_beams(beams, port_names, problems)
         beams = _alive(beams, port_names, damage, problems)
+    if parts.get("band") is not None and parts.get("solver") is not None:
+        if parts["band"].solve_step_hz is not None and parts["solver"].method == "direct":
+            problems.append('band.solve_step_hz: channels are interpolated by the reduced method; solver.method is "direct"')
     if problems or layout is None or designs is None or station_table is None:
         fail(file, "job file", problems)
     return Job(
@@ -205,6 +213,8 @@ def read_job(path: str | Path) -> Job:
         damage=damage,
         store_precision=parts["store"].precision,
         store_currents=parts["store"].currents,
+        segments=parts["band"].segments,
+        solve_step_hz=parts["band"].solve_step_hz,
     )
 
 

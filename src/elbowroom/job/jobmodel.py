@@ -130,6 +130,10 @@ class Job:
         ``"double"``, or ``"single"`` for currents in half the room.
     store_currents : str
         ``"keep"``, or ``"drop"`` once tables and pictures are made.
+    segments : str
+        ``"auto"``, or ``"none"``: every frequency is assembled for itself.
+    solve_step_hz : float or None
+        About how far apart channels are solved, the others being made from them [Hz].
     """
 
     path: Path
@@ -158,6 +162,8 @@ class Job:
     damage: Damage = field(default_factory=Damage)
     store_precision: str = "double"
     store_currents: str = "keep"
+    segments: str = "auto"
+    solve_step_hz: float | None = None
 
     @property
     def termination(self) -> PortTermination:
@@ -253,6 +259,8 @@ class Job:
             *self._as_built_lines(),
             *self.damage.lines(),
             f"band.frequency_hz = {band} ({len(f)} in all)",
+            f"band.segments = {self.segments}",
+            *([] if self.solve_step_hz is None else [f"band.solve_step_hz = {self.solve_step_hz:.10g}"]),
             *self.terminations.lines(),
             f"solver.method = {self.solver}",
             f"solver.mesh = {self.mesh}",

@@ -132,10 +132,15 @@ class BandTable(Table):
     start_hz: _Hertz | None = None
     stop_hz: _Hertz | None = None
     step_hz: Annotated[float, Field(gt=0.0)] | None = None
+    segments: Literal["auto", "none"] = "auto"
+    solve_step_hz: Annotated[float, Field(gt=0.0)] | None = None
 
     @model_validator(mode="after")
     def _whole(self) -> BandTable:
         self.frequencies()
+        if self.segments == "none" and self.solve_step_hz is not None:
+            msg = 'solve_step_hz needs segments, which are switched off by segments = "none"'
+            raise ValueError(msg)
         return self
 
     def frequencies(self) -> tuple[float, ...]:

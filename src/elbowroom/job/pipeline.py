@@ -11,11 +11,20 @@ import numpy as np
 
 from elbowroom.base.errors import JobFileError
 from elbowroom.geometry.stations import Station
+from elbowroom.job.band import FEWEST_CHANNELS, SegmentPlan, plan_segments
+from elbowroom.job.channels import ChannelSettings, StoredSegment, channel_key
 from elbowroom.job.checks import Problem, StationMeshes, check_station
 from elbowroom.job.groundchecks import HORIZON_NOTE, LOW_BEAM_DEG
 from elbowroom.job.jobfile import Job
 from elbowroom.job.jobtables import OnePort
-from elbowroom.job.plan import Prediction, predict_reduced, predict_station
+from elbowroom.job.plan import (
+    SEGMENT_FUNCTIONS,
+    Prediction,
+    in_segment,
+    predict_reduced,
+    predict_station,
+    predicted_functions,
+)
 from elbowroom.job.sampling import FunctionCounts
 from elbowroom.job.solve import SOLUTION_SCHEMA, StationKeys, chosen_solver, solve, strategy_of
 from elbowroom.store import Hdf5Store
@@ -92,6 +101,8 @@ class JobRun:
             self.frequencies_hz = job.frequencies_hz
         self._solvers: dict[float, str] = {}
         self._functions: FunctionCounts | None = None
+        self._segments: list[SegmentPlan] | None = None
+        self._stored_segment: StoredSegment | None = None
         self._keys, self._meshes = StationKeys(self.station), StationMeshes(self.station)
         options: dict[str, Any] = {} if report is None else {"report": report}
         self.store = Hdf5Store(job.store_folder, SOLUTION_SCHEMA, **options)
@@ -145,10 +156,51 @@ class JobRun:
         from elbowroom.system.discretisation import FarSettings
         from elbowroom.system.self_block import NearSettings
 
+        plan = self.segment_of(frequency_hz)
+        if plan is not None:
+            return channel_key(self._keys, plan, self.channel_settings, frequency_hz, solved=frequency_hz in plan.solved)
         strategy = strategy_of(
             self.solver_at(frequency_hz), self.job.precision, self.job.tolerance, single_storage=self.single_storage
         )
         return self._keys.key(frequency_hz, mesh_settings(self.job.mesh), NearSettings(), FarSettings(), strategy)
+
+    def needed_keys(self) -> frozenset[str]:
+        """Return the keys of all units that serve this job: of its frequencies, and of solved ones that others are made from."""
+        found = {self.key(f) for f in self.frequencies_hz}
+        for plan in self.segments:
+            if plan.between:
+                every = (*plan.solved, *plan.between)
+                found |= {channel_key(self._keys, plan, self.channel_settings, f, solved=True) for f in every}
+        return frozenset(found)
+
+    @property
+    def channel_settings(self) -> ChannelSettings:
+        """How channels of segments are solved and kept."""
+        return ChannelSettings(self.job.mesh, self.job.tolerance, self.job.solve_step_hz, self.single_storage)
+
+    @property
+    def segments(self) -> list[SegmentPlan]:
+        """Segments of the job's whole band, whichever of its frequencies were chosen."""
+        if self._segments is None:
+            job = self.job
+            self._segments = []
+            if job.segments == "auto" and job.solver != "direct" and len(job.frequencies_hz) >= FEWEST_CHANNELS:
+                reduced = [f for f in job.frequencies_hz if self.solver_at(f) == "reduced"]
+                self._segments = plan_segments(self.station, reduced, job.tolerance, solve_step_hz=job.solve_step_hz)
+        return self._segments
+
+    def segment_of(self, frequency_hz: float) -> SegmentPlan | None:
+        """Return the segment that a frequency [Hz] is solved in, or None where it is assembled for itself."""
+        return next((plan for plan in self.segments if plan.low_hz <= frequency_hz <= plan.high_hz), None)
+
+    def _channel(self, plan: SegmentPlan) -> StoredSegment:
+        """Return the segment's channels; only one segment is held at a time."""
+        if self._stored_segment is None or self._stored_segment.plan is not plan:
+            about = {"title": self.job.title, "job_file": self.job.text}
+            self._stored_segment = StoredSegment(
+                self.station, plan, self.channel_settings, self.store, keys=self._keys, attributes=about
+            )
+        return self._stored_segment
 
     @property
     def single_storage(self) -> bool:
@@ -175,6 +227,13 @@ class JobRun:
         if self.solver_at(frequency_hz) == "direct":
             return predict_station(self.station, [frequency_hz], job.mesh, job.precision, **common)[0]
         functions = None if self._functions is None else self._functions.at(frequency_hz)
+        plan = self.segment_of(frequency_hz)
+        if plan is not None:
+            known = predicted_functions(self.station, frequency_hz, job.tolerance) if functions is None else functions
+            shared = predict_reduced(
+                self.station, frequency_hz, job.mesh, job.tolerance, functions=SEGMENT_FUNCTIONS * known, **common
+            )
+            return in_segment(shared, SEGMENT_FUNCTIONS * known, job.tolerance, solved=frequency_hz in plan.solved)
         return predict_reduced(self.station, frequency_hz, job.mesh, job.tolerance, functions=functions, **common)
 
     def sample_functions(self) -> None:
@@ -198,6 +257,9 @@ class JobRun:
         StoreError
             If the store does not hold it whole.
         """
+        plan = self.segment_of(frequency_hz)
+        if plan is not None:
+            return self._channel(plan).solution(frequency_hz, only_stored=True)
         found = solve(
             self.station, frequency_hz, solver=self.solver_at(frequency_hz), mesh=self.job.mesh, precision=self.job.precision,
             tolerance=self.job.tolerance, store=self.store, only_stored=True, single_storage=self.single_storage,
@@ -211,6 +273,9 @@ class JobRun:
             if progress is not None:
                 progress(frequency_hz, stage, fraction)
 
+        plan = self.segment_of(frequency_hz)
+        if plan is not None:
+            return self._channel(plan).solution(frequency_hz, tell)
         return solve(
             self.station,
             frequency_hz,

@@ -55,6 +55,13 @@ REDUCED_DESIGN_SECONDS = 0.8
 REDUCED_PAIR_OPERATIONS = 9.0e6
 """Operations a pair of antennas of 64 unknowns costs, interactions and error estimate together; measured."""
 
+SEGMENT_FUNCTIONS, SEGMENT_MATRICES = 1.15, 8.0
+"""Functions of a segment over those of one frequency, and matrices of it that are held at once; measured, at 350 MHz."""
+
+SEGMENT_SHARE, BETWEEN_SHARE = 0.5, 0.2
+"""Time of a channel whose matrix is interpolated, its part in the segment's own included, and of one that is made from others,
+over that of solving it alone; measured, rounded up."""
+
 _CALIBRATION_ORDER = 1024
 
 
@@ -278,6 +285,26 @@ def predict_reduced(
     functions_stored = sum(m.n_unknowns * n / antennas * kinds for (_, m, _), kinds in zip(made, meshes.kind_counts, strict=True))
     disk = stored_bytes(unknowns, n, p, antennas, np.ceil(p / antennas), functions_stored, single=single_storage) + text_bytes
     return Prediction(int(memory), int(disk), float(seconds), unknowns, float(serial))
+
+
+def in_segment(alone: Prediction, functions: float, tolerance: float, *, solved: bool) -> Prediction:
+    """Return what a channel takes whose matrix is interpolated, or that is made from solved ones, given what it takes alone.
+
+    Parameters
+    ----------
+    alone : Prediction
+        With the functions of the segment.
+    functions : float
+        Functions of all antennas together.
+    tolerance : float
+        Of the reduced solver.
+    solved : bool
+        Whether the channel is solved.
+    """
+    entry = 8.0 if tolerance >= 3e-5 else 16.0
+    samples = SEGMENT_MATRICES * entry * 0.5 * functions * (functions + TILE_ORDER)
+    share = SEGMENT_SHARE if solved else BETWEEN_SHARE
+    return replace(alone, memory_bytes=int(alone.memory_bytes + samples), seconds=share * alone.seconds)
 
 
 def total(predictions: Sequence[Prediction]) -> Prediction:

@@ -23,7 +23,15 @@ from elbowroom.system.assembly import Progress
 from elbowroom.system.discretisation import Discretisation, FarSettings, discretise
 from elbowroom.system.reduction import ReductionSettings
 from elbowroom.system.self_block import NearSettings
-from elbowroom.system.solving import REFERENCE_OHM, PortCurrents, SolveStatistics, mesh_error, solve_direct, solve_isolated
+from elbowroom.system.solving import (
+    ORIGINS,
+    REFERENCE_OHM,
+    PortCurrents,
+    SolveStatistics,
+    mesh_error,
+    solve_direct,
+    solve_isolated,
+)
 from elbowroom.system.solving_reduced import solve_reduced
 from elbowroom.system.spaces import CurrentSpace, all_unknowns
 
@@ -170,7 +178,8 @@ HALVED = ("currents_per_volt", "functions", "isolated_currents_per_volt")
 """Arrays that single-precision storage halves.  Port matrices stay: impedances are differences of what they hold."""
 
 
-def _to_record(solution: Solution, attributes: dict[str, Any], *, single_storage: bool = False) -> Record:
+def to_record(solution: Solution, attributes: dict[str, Any], *, single_storage: bool = False) -> Record:
+    """Return what the store keeps of a solution, with more attributes for the reader of the file."""
     d = solution.discretisation
     widest = int(np.diff(d.port_offsets).max())
     isolated_currents = np.zeros((d.n_unknowns, widest), dtype=complex)
@@ -208,6 +217,7 @@ def _to_record(solution: Solution, attributes: dict[str, Any], *, single_storage
             "n_functions": s.n_functions,
             "pattern_error": s.pattern_error,
             "port_matrix_error": s.port_matrix_error,
+            "origin": s.origin,
             # Rounding depends on how sums are split among threads, and on nothing else of the machine at hand.
             "blas_threads": blas_threads(),
             "loop_threads": loop_threads(),
@@ -220,7 +230,7 @@ def _to_record(solution: Solution, attributes: dict[str, Any], *, single_storage
     return record
 
 
-def _fits(record: Record, d: Discretisation) -> bool:
+def record_fits(record: Record, d: Discretisation) -> bool:
     """Return whether a record was made from the same kinds of antenna; places that round alike may differ in kind."""
     a = record.arrays
     if not np.array_equal(a["unknown_offset"], d.unknown_offsets) or not np.array_equal(a["port_offset"], d.port_offsets):
@@ -247,10 +257,13 @@ def stored_statistics(record: Record) -> SolveStatistics:
         n_functions=int(attributes["n_functions"]),
         pattern_error=float(attributes["pattern_error"]),
         port_matrix_error=float(attributes["port_matrix_error"]),
+        # Files of before there were others hold what was assembled.
+        origin=attributes.get("origin", ORIGINS[0]),
     )
 
 
-def _from_record(record: Record, d: Discretisation) -> Solution:
+def from_record(record: Record, d: Discretisation) -> Solution:
+    """Return the solution that a record keeps of a station, meshed as it was, self blocks not needed; see `record_fits`."""
     a, attributes = dict(record.arrays), record.attributes
     for name in HALVED:
         a[name] = a[name].astype(np.complex128, copy=False)
@@ -378,8 +391,8 @@ def solve(
         record = store.get(key)
         if record is not None:
             found = discretise(station, frequency_hz, mesh=settings, near=near, far=far, self_blocks=False)
-            if _fits(record, found):
-                return _from_record(record, found)
+            if record_fits(record, found):
+                return from_record(record, found)
         if not only_stored:
             store.check_writable()
     if only_stored:
@@ -388,8 +401,8 @@ def solve(
     with nullcontext() if store is None else working_on(store, key, progress) as arrived:
         if arrived is not None:
             found = discretise(station, frequency_hz, mesh=settings, near=near, far=far, self_blocks=False)
-            if _fits(arrived, found):
-                return _from_record(arrived, found)
+            if record_fits(arrived, found):
+                return from_record(arrived, found)
         d = discretise(station, frequency_hz, mesh=settings, near=near, far=far)
         per_kind = solve_isolated(d)
         if chosen == "reduced":
@@ -401,5 +414,5 @@ def solve(
             statistics = replace(statistics, mesh_error=mesh_error(d, per_kind))
         solution = Solution(d, coupled, tuple(per_kind[k] for k in d.kind_of), REFERENCE_OHM, statistics, space)
         if store is not None:
-            store.put(key, _to_record(solution, attributes or {}, single_storage=single_storage))
+            store.put(key, to_record(solution, attributes or {}, single_storage=single_storage))
         return solution

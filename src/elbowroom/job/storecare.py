@@ -124,7 +124,7 @@ class Needs:
 
 def needs_of(run: JobRun) -> Needs:
     """Return what a job needs of its store."""
-    return Needs(run.job.path, frozenset(run.key(f) for f in run.frequencies_hz), run)
+    return Needs(run.job.path, run.needed_keys(), run)
 
 
 def jobs_beside(folder: Path) -> list[JobRun]:

@@ -274,8 +274,7 @@ class BandSegment:
         self._clock = time.perf_counter()
         self.checked: dict[float, tuple[float, float]] = {}
         self.probed: dict[float, ComplexArray] = {}
-        first = discretise(station, low_hz, self_blocks=False, **self._options)  # type: ignore[arg-type]
-        intervals = intervals_for(high_hz - low_hz, reach_of(first), INTERPOLATION_SHARE * self.settings.tolerance)
+        intervals = intervals_for(high_hz - low_hz, reach_of(station), INTERPOLATION_SHARE * self.settings.tolerance)
         self.nodes = band_nodes(low_hz, high_hz, intervals)
         fine = band_nodes(low_hz, high_hz, OWN_FACTOR * intervals)
         made = []

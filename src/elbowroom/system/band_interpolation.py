@@ -24,6 +24,7 @@ from elbowroom.base.arrays import AnyComplexArray, ComplexArray, FloatArray
 from elbowroom.base.constants import SPEED_OF_LIGHT
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.base.threads import available_cores
+from elbowroom.geometry.stations import Station
 from elbowroom.kernels.basis import overlap_matrix
 from elbowroom.system.assembly import single_threaded_blas
 from elbowroom.system.discretisation import Discretisation, Kind, attachments
@@ -79,18 +80,24 @@ def intervals_for(span_hz: float, reach_m: float, tolerance: float) -> int:
     return n
 
 
-def reach_of(discretisation: Discretisation) -> float:
+def reach_of(station: Station) -> float:
     """Return the largest extra path [m] of waves between antennas over the distance of their places.
 
     From one end of an antenna to another and past the image: what is left in the phase of interactions once that of the places
     is taken out, and what an antenna's own block holds.
     """
     reach = 0.0
-    for kind in discretisation.kinds:
-        ends = np.array([[w.start, w.end] for w in kind.antenna.wires]).reshape(-1, 3) @ kind.orientation.T
+    seen: set[tuple] = set()
+    for placed in station:
+        key = (id(placed.antenna), placed.tilt_east_deg, placed.tilt_north_deg, placed.position[2])
+        if key in seen:
+            continue
+        seen.add(key)
+        ends = np.array([[w.start, w.end] for w in placed.antenna.wires]).reshape(-1, 3) @ placed.orientation.T
         sideways = float(np.linalg.norm(ends[:, :2], axis=1).max())
-        top = float(ends[:, 2].max() + kind.height)
-        upright = float(np.ptp(ends[:, 2])) if discretisation.station.ground.open_below else 2.0 * top
+        upright = float(np.ptp(ends[:, 2]))
+        if not station.ground.open_below:
+            upright = 2.0 * float(ends[:, 2].max() + placed.position[2])
         reach = max(reach, float(np.hypot(2.0 * sideways, upright)))
     return reach
 

@@ -32,6 +32,12 @@ N_PROBES = 16
 ORIGINS = ("assembled", "interpolated matrix", "interpolated currents")
 """Where a solution comes from: its own matrix, one interpolated along frequency, or solutions at other frequencies."""
 
+ORIGIN_MEANING = (
+    "assembled: the matrix is that of the frequency; interpolated matrix: it was interpolated along frequency and solved; "
+    "interpolated currents: currents were interpolated between solved frequencies"
+)
+"""For the reader of tables."""
+
 PRECISIONS = ("mixed", "single", "double")
 
 

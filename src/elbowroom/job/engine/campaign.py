@@ -12,6 +12,7 @@ from pathlib import Path
 
 from elbowroom.base.errors import GeometryError, JobFileError, ResourceError
 from elbowroom.base.threads import available_cores
+from elbowroom.job.channels import SegmentWork, solve_segment
 from elbowroom.job.engine.items import StationWork, WorkItem, solve_units
 from elbowroom.job.engine.split import SMALL_SECONDS, Split, choose_split
 from elbowroom.job.pipeline import JobRun
@@ -221,9 +222,11 @@ class Campaign:
         longest_first : bool, optional
             So that no long one is left alone at the end; otherwise in the order of the units.
         """
-        made = []
+        made = self._segment_items(threads)
         for unit in self.to_solve:
             run, job = unit.run, unit.run.job
+            if run.segment_of(unit.frequency_hz) is not None:
+                continue
             about = {"title": job.title, "job_file": job.text}
             work = StationWork(
                 run.station,
@@ -244,6 +247,30 @@ class Campaign:
         if longest_first:
             made.sort(key=lambda item: -item.prediction.seconds)
         return [replace(item, number=i) for i, item in enumerate(made)]
+
+    def _segment_items(self, threads: int) -> list[WorkItem]:
+        """Return one item for the channels of each segment: they share its matrices."""
+        groups: dict[tuple[int, float], list[CampaignUnit]] = {}
+        for unit in self.to_solve:
+            plan = unit.run.segment_of(unit.frequency_hz)
+            if plan is not None:
+                groups.setdefault((id(unit.run), plan.low_hz), []).append(unit)
+        made = []
+        for units in groups.values():
+            run, job = units[0].run, units[0].run.job
+            plan = run.segment_of(units[0].frequency_hz)
+            assert plan is not None
+            work = SegmentWork(run.station, plan, run.channel_settings, {"title": job.title, "job_file": job.text})
+            label = self.label_of(units[0])
+            if len(units) > 1:
+                label = f"{label} to {units[-1].frequency_hz / 1e6:.10g} MHz"
+            made.append(
+                WorkItem(
+                    0, label, tuple(u.frequency_hz for u in units), tuple(u.key for u in units), job.store_folder.absolute(),
+                    solve_segment, work, total([u.prediction for u in units if u.prediction is not None]), threads,
+                )
+            )  # fmt: skip
+        return made
 
     def label_of(self, unit: CampaignUnit) -> str:
         """Return what a unit is called: its frequency, and its job where there are several."""

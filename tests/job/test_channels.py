@@ -1,0 +1,297 @@
+"""Bands of many channels: segments, what is solved and what is made from it, units in the store, job files."""
+
+import numpy as np
+import pytest
+
+from elbowroom.base.errors import JobFileError, ModelRangeError, SolveError, StoreError
+from elbowroom.geometry.directions import hemisphere_grid
+from elbowroom.geometry.grounds import PerfectGround
+from elbowroom.geometry.stations import Placed, Station
+from elbowroom.job.band import FEWEST_CHANNELS, SegmentChannels, SegmentPlan, plan_segments, solve_band, solved_channels
+from elbowroom.job.engine.campaign import Campaign
+from elbowroom.job.engine.items import run_item
+from elbowroom.job.jobfile import read_job
+from elbowroom.job.pipeline import JobRun
+from elbowroom.job.solve import solve
+from elbowroom.radiation.solution import Solution
+from elbowroom.system.discretisation import discretise
+from elbowroom.system.solving import solve_direct, solve_isolated
+from helpers import cluster, dipole
+
+TOLERANCE = 1e-3
+SKY = hemisphere_grid(15.0)
+STEP = 1e6
+CHANNELS = tuple(140e6 + STEP * i for i in range(18))
+FINE = tuple(np.sort([*CHANNELS, 140.31e6, 147.5e6, 150.017e6, 156.9e6]))
+
+
+def station_of(count=3):
+    level = dipole(height=0.8, direction=(1.0, 0.0, 0.0))
+    return Station([Placed(level, p.position) for p in cluster(count)], PerfectGround())
+
+
+def in_full(station, frequency_hz, mesh_hz):
+    d = discretise(station, frequency_hz, mesh_hz=mesh_hz)
+    coupled, statistics = solve_direct(d, precision="double")
+    alone = solve_isolated(d)
+    return Solution(d, coupled, tuple(alone[k] for k in d.kind_of), 100.0, statistics)
+
+
+def pattern_error(solution, mesh_hz):
+    exact = in_full(solution.station, solution.frequency_hz, mesh_hz)
+    a, b = (s.embedded_patterns(SKY.theta_rad, SKY.phi_rad) for s in (exact, solution))
+    return float(np.max(np.linalg.norm(a - b, axis=-1).max(axis=1) / np.linalg.norm(a, axis=-1).max(axis=1)))
+
+
+# --- which channels are solved, and in which segment
+
+
+@pytest.mark.parametrize("step", [1e6, 0.7e6, 3e6])
+def test_solved_channels__are_channels_no_farther_apart_than_the_step_and_a_channel(step):
+    channels = 100e6 + 1e5 * np.arange(101)
+    solved = solved_channels(channels, step)
+    assert set(solved) <= set(channels)
+    assert (solved[0], solved[-1]) == (channels[0], channels[-1])
+    assert np.diff(solved).max() <= step + 1e5 * (1.0 + 1e-9)
+    assert len(solved) <= 10e6 / step + 2
+
+
+def test_solved_channels__all_without_a_step_and_none_out_of_order():
+    assert solved_channels(CHANNELS, None) == CHANNELS
+    with pytest.raises(ModelRangeError, match="rising"):
+        solved_channels([2e8, 1e8], 1e6)
+    with pytest.raises(ModelRangeError, match="positive"):
+        solved_channels(CHANNELS, 0.0)
+
+
+@pytest.mark.parametrize("tolerance", [1e-3, 1e-4])
+def test_segments__cover_the_band_with_ends_in_common(tolerance):
+    channels = tuple(np.arange(50e6, 350.1e6, 1e6))
+    plans = plan_segments(station_of(), channels, tolerance)
+    assert plans[0].low_hz == 50e6
+    assert plans[-1].high_hz == 350e6
+    for one, other in zip(plans[:-1], plans[1:], strict=True):
+        assert one.high_hz == other.low_hz
+    assert set(channels) == {f for p in plans for f in p.solved}
+    assert min(len(p.solved) for p in plans) >= FEWEST_CHANNELS
+
+
+def test_segments__a_finer_tolerance_and_a_larger_antenna_make_them_narrower():
+    channels = tuple(np.arange(50e6, 350.1e6, 1e6))
+    coarse = len(plan_segments(station_of(), channels, 1e-3))
+    assert len(plan_segments(station_of(), channels, 1e-5)) > coarse
+    tall = Station([Placed(dipole(height=4.0, direction=(1.0, 0.0, 0.0)))], PerfectGround())
+    assert len(plan_segments(tall, channels, 1e-3)) > coarse
+
+
+def test_segments__few_channels_are_solved_one_by_one():
+    assert plan_segments(station_of(), CHANNELS[: FEWEST_CHANNELS - 1], TOLERANCE) == []
+    wide = tuple(np.arange(50e6, 350.1e6, 15e6))
+    assert len(wide) > FEWEST_CHANNELS
+    assert plan_segments(station_of(), wide, TOLERANCE) == []
+
+
+# --- solutions
+
+
+@pytest.fixture(scope="module")
+def band():
+    return list(solve_band(station_of(), FINE, tolerance=TOLERANCE, solve_step_hz=STEP))
+
+
+def test_band__every_channel_says_what_it_is_and_meets_its_statement(band):
+    assert [s.frequency_hz for s in band] == list(FINE)
+    for solution in band:
+        s = solution.statistics
+        between = solution.frequency_hz not in CHANNELS
+        assert s.origin == ("interpolated currents" if between else "interpolated matrix")
+        assert 0.0 < s.pattern_error <= TOLERANCE
+    for index in (0, 1, 8, 9, len(FINE) - 2):
+        assert pattern_error(band[index], CHANNELS[-1]) <= band[index].statistics.pattern_error
+
+
+def test_band__channels_serve_like_any_solution(band):
+    solution = band[FINE.index(147.5e6)]
+    exact = in_full(solution.station, 147.5e6, CHANNELS[-1])
+    theta, phi = np.array([0.2, 0.9]), np.array([0.3, -1.0])
+    for seen in (50.0, "open", "short"):
+        np.testing.assert_allclose(
+            solution.isolated_patterns(theta, phi, termination=seen), exact.isolated_patterns(theta, phi, termination=seen),
+            atol=1e-4 * np.abs(exact.isolated_patterns(theta, phi, termination=seen)).max(),
+        )  # fmt: skip
+        weights = solution.pointing_weights(0.3, 0.2)
+        beam = exact.beam(weights, theta, phi, termination=seen)
+        np.testing.assert_allclose(solution.beam(weights, theta, phi, termination=seen), beam, atol=0.01 * np.abs(beam).max())
+    # All of 1 % would be seen: antennas alone differ by more.
+    alone = exact.isolated_beam(weights, theta, phi, termination=100.0)
+    assert np.abs(alone - exact.beam(weights, theta, phi)).max() > 0.02 * np.abs(alone).max()
+    s = solution.scattering_matrix()
+    np.testing.assert_array_equal(s, s.T)
+    assert np.linalg.svd(s, compute_uv=False).max() <= 1.0 + TOLERANCE
+
+
+def test_band__without_a_step_every_channel_is_solved_and_single_ones_are_alone():
+    channels = (*CHANNELS, 250e6)
+    solutions = list(solve_band(station_of(2), channels, tolerance=TOLERANCE))
+    assert [s.statistics.origin for s in solutions] == ["interpolated matrix"] * len(CHANNELS) + ["assembled"]
+
+
+def test_segment__channels_whose_estimate_is_too_large_are_solved():
+    # Too few and too far apart to be interpolated between: the estimate says so.
+    plan = SegmentPlan(100e6, 160e6, tuple(np.arange(100e6, 161e6, 10e6)), tuple(np.arange(101e6, 160e6, 2e6)))
+    segment = SegmentChannels(station_of(2), plan, TOLERANCE)
+    added = segment.complete()
+    assert added
+    assert set(added) < set(plan.between)
+    counts = segment.counts
+    assert counts.solved == len(plan.solved) + len(added)
+    made = [segment.solution(f) for f in plan.between]
+    assert {s.statistics.origin for s in made} == {"interpolated matrix", "interpolated currents"}
+    for s in made[::4]:
+        assert s.statistics.pattern_error <= TOLERANCE
+        assert pattern_error(s, plan.high_hz) <= s.statistics.pattern_error
+    assert segment.complete() == []
+    assert segment.counts.interpolated == len(plan.between) - len(added)
+
+
+def test_segment__channels_beside_a_narrow_resonance_are_solved(monkeypatch):
+    from elbowroom.system.band import BandSegment
+    from elbowroom.system.band_features import Feature
+
+    plan = SegmentPlan(140e6, 157e6, CHANNELS, tuple(np.arange(150.05e6, 150.95e6, 0.1e6)))
+    monkeypatch.setattr(BandSegment, "features", lambda *_: [Feature(150.52e6, 1e3, "array")])
+    segment = SegmentChannels(station_of(2), plan, TOLERANCE)
+    assert [round(f / 1e4) for f in segment.complete()] == [15045, 15055]
+    assert segment.solution(float(plan.between[4])).statistics.origin == "interpolated matrix"
+    assert segment.solution(float(plan.between[0])).statistics.origin == "interpolated currents"
+
+
+def test_segment__one_that_gives_power_is_solved(monkeypatch):
+    plan = SegmentPlan(140e6, 157e6, CHANNELS, (150.3e6,))
+    segment = SegmentChannels(station_of(2), plan, TOLERANCE)
+    monkeypatch.setattr("elbowroom.job.band.is_passive", lambda *_: False)
+    assert segment.solution(150.3e6).statistics.origin == "interpolated matrix"
+
+
+def test_segment__what_is_not_solved_is_told_where_nothing_may_be():
+    segment = SegmentChannels(station_of(2), SegmentPlan(140e6, 157e6, CHANNELS), TOLERANCE)
+    segment.solve_missing = False
+    with pytest.raises(SolveError, match="140 MHz is not solved yet"):
+        segment.solution(140e6)
+
+
+# --- jobs and stores
+
+DIPOLE = "[[wire]]\nstart_m = [-0.47, 0, 0.8]\nend_m = [0.47, 0, 0.8]\nradius_m = 0.002\n[[port]]\nname = 'x'\nwire = 0\n"
+JOB = """
+[station]
+layout = "layout.csv"
+antenna = "dipole.toml"
+[band]
+start_hz = 140e6
+stop_hz = 157e6
+step_hz = 500e3
+solve_step_hz = 1e6
+[solver]
+method = "reduced"
+tolerance = 1e-3
+"""
+
+
+@pytest.fixture
+def folder(tmp_path):
+    (tmp_path / "dipole.toml").write_text(DIPOLE)
+    (tmp_path / "layout.csv").write_text("name,east_m,north_m\nA1,0,0\nA2,1.5,0.3\n")
+    (tmp_path / "job.toml").write_text(JOB)
+    return tmp_path
+
+
+def run_of(folder, old="", new="", **options):
+    (folder / "job.toml").write_text(JOB.replace(old, new, 1) if old else JOB)
+    return JobRun(read_job(folder / "job.toml"), **options)
+
+
+def test_job__channels_are_units_of_the_store_that_say_what_they_are(folder):
+    run = run_of(folder)
+    assert len(Campaign([run]).to_solve) == len(run.frequencies_hz) == 35
+    first = [run.solution(f) for f in run.frequencies_hz[:5]]
+    origins = [s.statistics.origin for s in first]
+    assert origins == ["interpolated matrix", "interpolated currents"] * 2 + ["interpolated matrix"]
+    again = run_of(folder)
+    for solution in first:
+        stored = again.stored_solution(solution.frequency_hz)
+        assert stored.statistics.origin == solution.statistics.origin
+        assert stored.statistics.pattern_error == solution.statistics.pattern_error
+        np.testing.assert_array_equal(stored.coupled.currents, solution.coupled.currents)
+        np.testing.assert_array_equal(stored.coupled.loaded_admittance, solution.coupled.loaded_admittance)
+        directions = np.array([0.2, 0.9]), np.array([0.3, -1.0])
+        np.testing.assert_allclose(stored.embedded_patterns(*directions), solution.embedded_patterns(*directions), rtol=1e-12)
+    # The half channel needs all solved ones, and they are there now.
+    assert sum(u.stored for u in Campaign([again]).units) == 18 + 2
+    with pytest.raises(StoreError, match=r"143\.5 MHz is not in the store"):
+        again.stored_solution(143.5e6)
+
+
+def test_job__segments_do_not_depend_on_which_frequencies_are_chosen(folder):
+    whole, part = run_of(folder), run_of(folder, frequencies_hz=[150e6, 150.5e6])
+    assert [part.key(f) for f in part.frequencies_hz] == [whole.key(150e6), whole.key(150.5e6)]
+    assert part.needed_keys() >= {part.key(f) for f in part.frequencies_hz}
+
+
+def test_job__keys_tell_tolerance_segment_step_and_storage_apart(folder):
+    keys = [run_of(folder).key(150.5e6)]
+    for old, new in (
+        ("tolerance = 1e-3", "tolerance = 1e-4"),
+        ("stop_hz = 157e6", "stop_hz = 158e6"),
+        ("solve_step_hz = 1e6", "solve_step_hz = 2e6\nsegments = 'auto'"),
+        ("solve_step_hz = 1e6", ""),
+        ("solve_step_hz = 1e6", "segments = 'none'"),
+        ("[solver]", "[store]\nprecision = 'single'\n[solver]"),
+    ):
+        keys.append(run_of(folder, old, new).key(150.5e6))
+    # A step of 2 MHz leaves too few to share matrices, as "none" does: both assemble for themselves, and are one unit.
+    assert keys[3] == keys[5]
+    assert len(set(keys)) == 6
+
+
+def test_job__none_assembles_every_frequency(folder):
+    run = run_of(folder, "solve_step_hz = 1e6", "segments = 'none'", frequencies_hz=[150e6])
+    assert run.segments == []
+    assert run.solution(150e6).statistics.origin == "assembled"
+    reference = solve(run.station, 150e6, solver="reduced", tolerance=1e-3)
+    np.testing.assert_array_equal(run.solution(150e6).coupled.currents, reference.coupled.currents)
+
+
+def test_job__a_direct_solver_makes_no_channels(folder):
+    with pytest.raises(JobFileError) as caught:
+        run_of(folder, 'method = "reduced"', 'method = "direct"')
+    assert "solve_step_hz" in caught.value.problems[0]
+    assert run_of(folder, 'solve_step_hz = 1e6\n[solver]\nmethod = "reduced"', '[solver]\nmethod = "direct"').segments == []
+
+
+def test_job__a_step_needs_segments(folder):
+    with pytest.raises(JobFileError) as caught:
+        run_of(folder, "solve_step_hz = 1e6", "solve_step_hz = 1e6\nsegments = 'none'")
+    assert "segments" in caught.value.problems[0]
+
+
+def test_job__settings_are_shown(folder):
+    lines = run_of(folder).job.resolved_lines()
+    assert "band.segments = auto" in lines
+    assert "band.solve_step_hz = 1000000" in lines
+
+
+def test_campaign__a_segment_is_one_item(folder):
+    campaign = Campaign([run_of(folder)])
+    campaign.predict()
+    items = campaign.items(1)
+    assert len(items) == 1
+    assert len(items[0].frequencies_hz) == 35
+    assert items[0].label == "140 MHz to 157 MHz"
+    result = run_item(items[0])
+    assert [o.state for o in result.outcomes] == ["solved"] * 35
+    origins = [o.statistics.origin for o in result.outcomes]
+    assert origins == ["interpolated matrix", "interpolated currents"] * 17 + ["interpolated matrix"]
+    assert Campaign([run_of(folder)]).to_solve == []
+    again = run_item(items[0])
+    assert [o.state for o in again.outcomes] == ["from store"] * 35
