@@ -95,29 +95,36 @@ def ground_block(ground: GroundKernels, samples: RingSamples, samples2: RingSamp
     """
     current = np.sqrt(wavenumber * IMPEDANCE_OF_VACUUM / (4.0 * np.pi))
     charge = np.sqrt(IMPEDANCE_OF_VACUUM / (4.0 * np.pi * wavenumber))
-    x, y, z = current * samples.currents
-    x2, y2, z2 = current * samples2.currents
-    q, q2 = charge * samples.charge, charge * samples2.charge
-    count2 = samples2.points.shape[1]
+    n, n2, count2 = samples.charge.shape[1], samples2.charge.shape[1], samples2.points.shape[1]
     flat2 = samples2.points.reshape(3, -1)
-    total: ComplexArray = np.zeros((x.shape[1], x2.shape[1]), dtype=complex)
+    level2 = np.concatenate([current * samples2.currents[0], current * samples2.currents[1]], axis=1)
+    upright2, charge2 = current * samples2.currents[2], charge * samples2.charge
+    crossed2 = wavenumber * np.concatenate([upright2, charge2], axis=1)
+    total = np.zeros((2, n, n2))
     work = Workspace()
     step = max(1, MOST_KERNELS // (RING_POINTS * flat2.shape[1]))
-
-    def mean(kernel: FloatArray) -> ComplexArray:
-        rings = kernel.reshape(2, -1, RING_POINTS, count2, RING_POINTS).mean(axis=(2, 4))
-        return np.asarray(rings[0] + 1j * rings[1])
-
     for first in range(0, samples.points.shape[1], step):
         rows = slice(first, first + step)
         points = np.ascontiguousarray(samples.points[:, rows].reshape(3, -1))
         kernels = ground.correction(points, flat2, wavenumber, work)
         assert kernels is not None  # of a ground that has one
-        level = mean(kernels.horizontal)
-        total += x[rows].T @ (level @ x2) + y[rows].T @ (level @ y2)
-        total += z[rows].T @ (mean(kernels.vertical) @ z2) - q[rows].T @ (mean(kernels.charge) @ q2)
+        # Weights are real: real and imaginary parts of the kernels meet them apart.
+        level = _ring_mean(kernels.horizontal, count2) @ level2
+        upright = _ring_mean(kernels.vertical, count2) @ upright2
+        charges = _ring_mean(kernels.charge, count2) @ charge2
         if kernels.cross is not None:
-            cross = wavenumber * mean(kernels.cross)
-            total -= z[rows].T @ (cross @ q2) + q[rows].T @ (cross @ z2)
+            crossed = _ring_mean(kernels.cross, count2) @ crossed2
+            charges = charges + crossed[..., :n2]
+            upright = upright - crossed[..., n2:]
+        for part, weights in ((level[..., :n2], samples.currents[0]), (level[..., n2:], samples.currents[1])):
+            total += (current * weights[rows]).T @ part
+        total += (current * samples.currents[2][rows]).T @ upright - (charge * samples.charge[rows]).T @ charges
     # Both factors of Z are imaginary: Z = j (sum of kernels).
-    return np.asarray(1j * total)
+    return np.asarray(1j * (total[0] + 1j * total[1]))
+
+
+def _ring_mean(kernel: FloatArray, count2: int) -> FloatArray:
+    """Return the mean (2, Q, Q') of a kernel over the rings of both its points."""
+    last = kernel.reshape(2, -1, RING_POINTS, count2, RING_POINTS)
+    inner = sum(last[..., i] for i in range(RING_POINTS))
+    return np.asarray(sum(inner[:, :, i] for i in range(RING_POINTS)) / RING_POINTS**2)  # type: ignore[index,call-overload]
