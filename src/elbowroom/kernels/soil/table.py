@@ -275,6 +275,8 @@ def _plan_distances(
         q = (places + a)[:, None]
         r1, r2, r3, r4 = q**2 / a, 2.0 * q**3 / a**2, 6.0 * q**4 / a**3, 24.0 * q**5 / a**4
         fourth = np.abs(d4 * r1**4 + 6.0 * d3 * r1**2 * r2 + d2 * (3.0 * r2**2 + 4.0 * r1 * r3) + d1 * r4).max(axis=(0, 2))
+        # Soil that is air sends nothing back.
+        fourth = np.maximum(fourth, 1e-30)
         spacings = (allowed / (_SPLINE_ERROR * fourth)) ** 0.25
         for _ in range(4):
             # Waves of few nodes each, allowed where they are weak, are missed by more than the fourth power says.
