@@ -126,5 +126,6 @@ def ground_block(ground: GroundKernels, samples: RingSamples, samples2: RingSamp
 def _ring_mean(kernel: FloatArray, count2: int) -> FloatArray:
     """Return the mean (2, Q, Q') of a kernel over the rings of both its points."""
     last = kernel.reshape(2, -1, RING_POINTS, count2, RING_POINTS)
-    inner = sum(last[..., i] for i in range(RING_POINTS))
-    return np.asarray(sum(inner[:, :, i] for i in range(RING_POINTS)) / RING_POINTS**2)  # type: ignore[index,call-overload]
+    # Sums of a few strided parts: half the time of a mean over two axes.
+    inner = last[..., 0] + last[..., 1] + last[..., 2]
+    return np.asarray((inner[:, :, 0] + inner[:, :, 1] + inner[:, :, 2]) / RING_POINTS**2)
