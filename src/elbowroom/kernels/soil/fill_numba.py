@@ -1,9 +1,11 @@
-"""Compiled fill over real ground: the direct kernel and a bicubic table look-up, eight pairs of points at a time.
+"""Compiled fill over real ground: the direct kernel and a bicubic table look-up.
 
-What keeps the compiler from vectorising such a loop is the look-up: every pair reads another place of the table, and gathering
-128 numbers for each of eight pairs costs more than all the rest.  Here the eight numbers of a table node (four complex
-kernels) lie side by side and are interpolated together, one pair after another; then eight pairs are transposed.  The steps
-before and after work on eight pairs at a time.  Reciprocal roots start from single precision and one step of Newton's.
+What keeps the compiler from vectorising such a loop is the look-up: every pair of points reads another place of the table, and
+gathering 128 numbers for each costs more than all the rest.  Here the eight numbers of a table node (four complex kernels) lie
+side by side and are interpolated together, one pair after another; then eight pairs are transposed.  The steps before the
+look-up work on sixteen pairs at a time and leave what they find in short arrays: weights are then spread by loads, where
+shuffles would be the bottleneck.  Reciprocal roots start from single precision and take one step of Newton's.  Measured
+and not kept: the next row prepared while one is looked up, the preparation cut into shorter loops, division-free places.
 """
 
 import math
