@@ -223,6 +223,7 @@ def test_compare__over_soil_beams_tell_what_the_ground_takes():
     for ground in (PerfectGround(), Soil(10.0, 0.01)):
         solution = solve(Station([Placed(design, (0, 0, 0)), Placed(design, (1.1, 0.2, 0))], ground), 150e6)
         found[ground.name] = compare_beams(beam_fields(solution, beams, SKY, 100.0))
+        # the open port and the loaded one are driven together
         mixed = beam_fields(solution, beams, SKY, ["open", 100.0])
         assert all(np.isnan(row.radiation_efficiency) and np.isnan(row.ground_loss) for row in compare_beams(mixed))
     for rows_ in found.values():

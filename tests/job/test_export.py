@@ -11,7 +11,7 @@ import pytest
 from elbowroom.base.errors import ExportError, StoreError
 from elbowroom.geometry.antennas import Antenna, Port
 from elbowroom.geometry.directions import hemisphere_grid
-from elbowroom.geometry.grounds import PerfectGround
+from elbowroom.geometry.grounds import PerfectGround, Soil
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import Wire
 from elbowroom.job.beamfields import beam_fields
@@ -46,6 +46,8 @@ def test_hdf5__read_with_plain_h5py__is_what_was_computed(tables, tmp_path):
         assert "not a measurement" in file.attrs["warning"]
         assert "exp(+j omega t)" in file.attrs["conventions"]
         assert file.attrs["job_file"] == "schema = 1\n"
+        assert file.attrs["ground"] == "perfect"
+        assert "horizon" not in file.attrs
         assert file["frequency_hz"][:] == pytest.approx([100e6, 150e6])
         assert list(file["beam_name"].asstr()) == ["up", "low"]
         assert list(file["port_name"].asstr()) == ["A001/x", "A001/y", "A002/x", "A002/y"]
@@ -61,6 +63,9 @@ def test_hdf5__read_with_plain_h5py__is_what_was_computed(tables, tmp_path):
                 np.testing.assert_array_equal(file[name][f].reshape(2, -1, 2), field)
             np.testing.assert_array_equal(file["weight"][f], table.weights)
             assert file["mesh_error"][f] == table.solution.statistics.mesh_error
+            # one of the two ports of "low" is open and the other is not: it cannot be sent
+            np.testing.assert_allclose(file["radiation_efficiency"][f], [1.0, np.nan], atol=1e-9)
+            np.testing.assert_array_equal(file["ground_loss"][f], [0.0, np.nan])
             assert file["relative_residual"][f] == table.solution.statistics.relative_residual
         # every axis of a field knows its scale
         assert [d.keys()[0] for d in file["coupled_beam"].dims] == [
@@ -73,7 +78,7 @@ def test_hdf5__read_with_plain_h5py__is_what_was_computed(tables, tmp_path):
         for name, dataset in file.items():
             assert dataset.attrs["unit"], name
             assert dataset.attrs["description"], name
-            if dataset.dtype.kind in "fc":
+            if dataset.dtype.kind in "fc" and name not in ("radiation_efficiency", "ground_loss"):  # told above
                 assert np.all(np.isfinite(dataset[...])), name
 
 
@@ -195,3 +200,20 @@ def test_table__of_a_silent_beam__cannot_be_divided_by_its_peak(tables, tmp_path
     silent = replace(tables[0], coupled=np.zeros_like(tables[0].coupled))
     with pytest.raises(ExportError, match="no peak"):
         export_csv(tmp_path / "b.csv", [silent], settings=TableSettings(normalisation="peak"))
+
+
+def test_hdf5__over_soil__tells_the_ground_and_what_it_takes(tmp_path):
+    station = Station([Placed(crossed(), (0.0, 0.0, 0.0)), Placed(crossed(), (0.0, 1.0, 0.0))], ground=Soil(10.0, 0.01))
+    solution = solve(station, 100e6)
+    table = beam_fields(solution, BEAMS, SKY, 100.0)
+    export_hdf5(tmp_path / "beams.h5", [table], 1)
+    with h5py.File(tmp_path / "beams.h5") as file:
+        assert file.attrs["ground"] == station.ground.describe()
+        assert "horizon" in file.attrs["horizon"]
+        parts = solution.power_parts(table.weights)
+        np.testing.assert_allclose(file["radiation_efficiency"][0], parts.radiation_efficiency)
+        np.testing.assert_allclose(file["ground_loss"][0], parts.fraction("ground"))
+        assert 0.1 < file["ground_loss"][0, 0] < 0.9
+        assert [d[0].name for d in file["ground_loss"].dims] == ["/frequency_hz", "/beam_name"]
+        # the horizon
+        np.testing.assert_allclose(np.abs(file["coupled_beam"][0, 0, -1]), 0.0, atol=1e-9)

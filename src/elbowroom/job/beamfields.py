@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
+from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.directions import Directions
 from elbowroom.geometry.stations import Station
 from elbowroom.job.jobfile import Beam
@@ -104,3 +105,22 @@ def beam_fields(
         solution.beam(weights, theta, phi, termination=termination),
         solution.isolated_beam(weights, theta, phi, termination=termination),
     )
+
+
+def power_shares(fields_: BeamFields) -> dict[str, FloatArray]:
+    """Return what becomes of the power that beams accept when they are sent: ``radiated``, ``wires``, ``ground``, each (B,).
+
+    Parts of the accepted power; NaN where the terminations leave no way to drive the ports.
+    """
+    names = ("radiated", "wires", "ground")
+
+    def shares(weights: ComplexArray) -> FloatArray:
+        try:
+            parts = fields_.solution.power_parts(weights, termination=fields_.termination, integrate_sky=False)
+        except ModelRangeError:
+            # Beams that cannot be driven leave the others as they are.
+            each = [shares(one[None]) for one in weights] if len(weights) > 1 else []
+            return np.concatenate(each, axis=1) if each else np.full((len(names), len(weights)), np.nan)
+        return np.array([parts.fraction(name) for name in names])
+
+    return dict(zip(names, shares(fields_.weights), strict=True))

@@ -13,9 +13,9 @@ from pathlib import Path
 import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
-from elbowroom.base.errors import JobFileError, ModelRangeError
+from elbowroom.base.errors import JobFileError
 from elbowroom.geometry.directions import Directions, hemisphere_grid, ludwig3, unit_vectors
-from elbowroom.job.beamfields import BeamFields, beam_fields, mean_nominal_phi_rad
+from elbowroom.job.beamfields import BeamFields, beam_fields, mean_nominal_phi_rad, power_shares
 from elbowroom.job.files import write_explained_csv
 from elbowroom.system.solving import ORIGIN_MEANING
 
@@ -359,19 +359,6 @@ def _antenna_spread_db(fields_: BeamFields, index: int) -> float:
     each = each * np.exp(-1j * fields_.solution.discretisation.wavenumber * path)[:, None]
     mean = each.mean(axis=0)
     return decibels(float(np.mean(total_power(each - mean)) / total_power(mean))) if total_power(mean) > 0.0 else float("nan")
-
-
-def power_shares(fields_: BeamFields) -> dict[str, FloatArray]:
-    """Return what becomes of the power that beams accept when they are sent: ``radiated``, ``wires``, ``ground``, each (B,).
-
-    Parts of the accepted power; NaN where the terminations leave no way to drive the ports.
-    """
-    names = ("radiated", "wires", "ground")
-    try:
-        parts = fields_.solution.power_parts(fields_.weights, termination=fields_.termination, integrate_sky=False)
-    except ModelRangeError:
-        return dict.fromkeys(names, np.full(len(fields_.weights), np.nan))
-    return {name: parts.fraction(name) for name in names}
 
 
 def compare_beams(fields_: BeamFields) -> list[BeamComparison]:

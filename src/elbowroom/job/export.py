@@ -19,8 +19,9 @@ import numpy as np
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import ExportError
 from elbowroom.geometry.directions import Directions, ludwig3
-from elbowroom.job.beamfields import BeamFields, mean_nominal_phi_rad
+from elbowroom.job.beamfields import BeamFields, mean_nominal_phi_rad, power_shares
 from elbowroom.job.files import written_whole
+from elbowroom.job.groundchecks import HORIZON_NOTE
 from elbowroom.radiation.solution import Solution
 from elbowroom.system.solving import ORIGIN_MEANING
 from elbowroom.system.terminations import Termination
@@ -128,6 +129,7 @@ def table_head(title: str, job_text: str, settings: TableSettings) -> dict[str, 
         "conventions": CONVENTIONS,
         "components": components,
         "normalisation": normalised,
+        "radiation_efficiency": "radiated over accepted power while ports are driven by the beam's weights; part of no pattern",
         "coupled": "weighted sum of embedded element patterns: every port of the station terminated, all antennas coupled",
         "isolated": "weighted sum of isolated element patterns: each antenna alone at its place, same ground and termination",
         "stated_error": "relative_residual of the linear system; mesh_error: relative change of an isolated antenna's port "
@@ -186,7 +188,8 @@ def export_hdf5(
     -----
     Datasets: ``frequency_hz`` (F), ``theta_rad`` (T), ``phi_rad`` (H), ``component`` (2), ``coupled_beam`` and ``isolated_beam``
     (F, B, T, H, 2) complex, ``weight`` (F, B, P) complex, ``beam_name`` and ``beam_port`` (B), ``pointing_theta_rad`` and
-    ``pointing_phi_rad`` (B), ``nominal_phi_rad`` (B), ``port_name`` (P), ``port_nominal_phi_rad`` (P), ``termination_ohm``
+    ``pointing_phi_rad`` (B), ``nominal_phi_rad`` (B), ``radiation_efficiency`` and ``ground_loss`` (F, B),
+    ``port_name`` (P), ``port_nominal_phi_rad`` (P), ``termination_ohm``
     (F, P) text, ``antenna_name`` (A), ``antenna_position_m`` (A, 3), ``relative_residual``,
     ``mesh_error`` and ``pattern_error`` (F), ``origin`` (F) text; with element patterns ``embedded_pattern`` and
     ``isolated_pattern`` (F, P, T, H, 2) complex.  Every dataset has a ``unit``; axes are HDF5 dimension scales.
@@ -273,6 +276,9 @@ class _TableWriter:
     def _station(self, solution: Solution) -> None:
         """Write what does not change over frequency."""
         station = solution.station
+        self.file.attrs["ground"] = station.ground.describe()
+        if station.ground.lossy:
+            self.file.attrs["horizon"] = HORIZON_NOTE
         count = len(station.port_names)
         self._axis("port_name", _text([str(n) for n in station.port_names]), "1", "Ports as antenna/port")
         nominal = self._make(
@@ -285,6 +291,14 @@ class _TableWriter:
         if self.beams:
             kind = {"dtype": np.complex128, "fillvalue": np.complex128(np.nan)}
             self._over_frequency("weight", ("beam_name", "port_name"), "1", "Weight of each port in each beam", **kind)
+            for name, text in (
+                (
+                    "radiation_efficiency",
+                    "Radiated over accepted power of each coupled beam when sent; nan if it cannot be",
+                ),
+                ("ground_loss", "Power lost in the ground over accepted power, likewise"),
+            ):
+                self._over_frequency(name, ("beam_name",), "1", text, dtype=float, fillvalue=np.nan)
         if self.settings.elements:
             self._field("embedded_pattern", "port_name", count, "Embedded element patterns")
             self._field("isolated_pattern", "port_name", count, "Isolated element patterns")
@@ -310,6 +324,8 @@ class _TableWriter:
             nominal = mean_nominal_phi_rad(solution.station, ready.weights)
             file["nominal_phi_rad"][:] = nominal
             file["weight"][index] = ready.weights
+            shares = power_shares(ready)
+            file["radiation_efficiency"][index], file["ground_loss"][index] = shares["radiated"], shares["ground"]
             for name, field in (("coupled_beam", ready.coupled), ("isolated_beam", ready.isolated)):
                 file[name][index] = _as_asked(field, settings, phi, nominal).reshape(len(field), *self.shape, 2)
         if settings.elements:

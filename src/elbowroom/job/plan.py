@@ -55,6 +55,9 @@ REDUCED_DESIGN_SECONDS = 0.8
 REDUCED_PAIR_OPERATIONS = 9.0e6
 """Operations a pair of antennas of 64 unknowns costs, interactions and error estimate together; measured."""
 
+SOIL_PAIR_COST, SOIL_ASSEMBLY_COST = 1.7, 2.5
+"""Time of pairs in the reduced solver and of assembly in the direct one over soil, over that on a perfect plane; measured."""
+
 SEGMENT_FUNCTIONS, SEGMENT_MATRICES = 1.15, 8.0
 """Functions of a segment over those of one frequency, and matrices of it that are held at once; measured, at 350 MHz."""
 
@@ -206,7 +209,8 @@ def predict_station(
             operations_per_second=rate, single_storage=single_storage, text_bytes=text_bytes,
         )  # fmt: skip
         serial = sum(DESIGN_OPERATIONS * m.n_elements**2 / rate for m, _ in made)
-        predictions.append(replace(whole, seconds=whole.seconds + serial, serial_seconds=serial))
+        more = (SOIL_ASSEMBLY_COST - 1.0) * ASSEMBLY_OPERATIONS * unknowns**2 / rate if station.ground.lossy else 0.0
+        predictions.append(replace(whole, seconds=whole.seconds + more + serial, serial_seconds=serial))
     return predictions
 
 
@@ -274,7 +278,7 @@ def predict_reduced(
     serial = len(station.designs) * REDUCED_DESIGN_SECONDS * (own / 64.0) ** 1.5
     seconds = (
         serial
-        + REDUCED_PAIR_OPERATIONS * antennas**2 * own / 64.0 / rate
+        + (SOIL_PAIR_COST if station.ground.lossy else 1.0) * REDUCED_PAIR_OPERATIONS * antennas**2 * own / 64.0 / rate
         + 4.0 / 3.0 * n**3 / (FACTOR_EFFICIENCY * rate)
         + EXCITATION_OPERATIONS["single"] * n**2 * p / rate
     )
