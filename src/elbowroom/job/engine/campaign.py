@@ -236,6 +236,7 @@ class Campaign:
                 job.tolerance,
                 run.single_storage,
                 about,
+                run.store.schema,
             )
             assert unit.prediction is not None  # predict() comes first
             made.append(

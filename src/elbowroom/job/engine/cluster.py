@@ -9,7 +9,7 @@ from __future__ import annotations
 from typing import TYPE_CHECKING, Any
 
 from elbowroom.base.errors import ResourceError
-from elbowroom.job.engine.items import ItemResult, WorkItem, run_item_apart
+from elbowroom.job.engine.items import ItemResult, WorkItem, run_item
 from elbowroom.job.engine.runner import Ended
 
 if TYPE_CHECKING:
@@ -117,7 +117,7 @@ class DaskWorkers:
 
     def start(self, item: WorkItem) -> None:
         """Give an item to the scheduler."""
-        future = self._client.submit(run_item_apart, item, pure=False, retries=0)
+        future = self._client.submit(run_item, item, pure=False, retries=0)
         self._running[future] = item
 
     def wait(self, seconds: float) -> list[Ended]:

@@ -19,6 +19,7 @@ from elbowroom.base.threads import available_cores, threads
 from elbowroom.geometry.stations import Station
 from elbowroom.job.engine.split import seconds_with
 from elbowroom.job.plan import Prediction
+from elbowroom.store.records import Schema, StoreDamageWarning
 from elbowroom.system.solving import SolveStatistics
 
 Tell = Callable[[float, str, float], None]
@@ -155,6 +156,8 @@ class StationWork:
         As in `elbowroom.job.solve.solve`.
     attributes : dict
         Stored beside the results.
+    schema : Schema
+        Of the store.
     """
 
     station: Station
@@ -164,6 +167,7 @@ class StationWork:
     tolerance: float
     single_storage: bool
     attributes: dict[str, Any]
+    schema: Schema
 
 
 def solve_units(item: WorkItem, tell: Tell | None = None) -> list[UnitReport | UnitFailure]:
@@ -181,11 +185,11 @@ def solve_units(item: WorkItem, tell: Tell | None = None) -> list[UnitReport | U
     list of UnitReport or UnitFailure
         In the order of the frequencies.
     """
-    from elbowroom.job.solve import SOLUTION_SCHEMA, solve
+    from elbowroom.job.solve import solve
     from elbowroom.store import Hdf5Store
 
     task: StationWork = item.payload
-    store = Hdf5Store(item.store_folder, SOLUTION_SCHEMA)
+    store = Hdf5Store(item.store_folder, task.schema)
     outcomes: list[UnitReport | UnitFailure] = []
     for frequency, key, solver in zip(item.frequencies_hz, item.keys, task.solvers, strict=True):
         worked: list[str] = []
@@ -220,23 +224,17 @@ def described(error: Exception) -> tuple[str, int, str]:
 
 
 def run_item(item: WorkItem, tell: Tell | None = None) -> ItemResult:
-    """Do an item with its number of threads in this process; whatever is wrong with it comes back as failures."""
+    """Do an item with its number of threads in this process; whatever is wrong with it comes back as failures and notes."""
     clock = time.perf_counter()
-    with threads(item.threads):
+    with threads(item.threads), warnings.catch_warnings(record=True) as caught:
+        # Damaged files are told in any case; other warnings as whoever runs this has chosen.
+        warnings.simplefilter("always", StoreDamageWarning)
         try:
             outcomes = tuple(item.work(item, tell))
         except Exception as error:
             outcomes = item.failed(*described(error))
-    return ItemResult(outcomes, time.perf_counter() - clock, _peak_bytes())
-
-
-def run_item_apart(item: WorkItem) -> ItemResult:
-    """Do an item in a process of its own, whose screen nobody watches: warnings come back with the result."""
-    with warnings.catch_warnings(record=True) as caught:
-        warnings.simplefilter("default")
-        result = run_item(item)
-    notes = tuple(dict.fromkeys(str(w.message) for w in caught))
-    return ItemResult(result.outcomes, result.seconds, result.peak_bytes, notes)
+    notes = tuple(dict.fromkeys(str(warning.message) for warning in caught))
+    return ItemResult(outcomes, time.perf_counter() - clock, _peak_bytes(), notes)
 
 
 def _peak_bytes() -> int:

@@ -20,7 +20,7 @@ from multiprocessing import resource_tracker
 from multiprocessing.process import BaseProcess
 from types import FrameType
 
-from elbowroom.job.engine.items import ItemResult, Tell, WorkItem, run_item, run_item_apart
+from elbowroom.job.engine.items import ItemResult, Tell, WorkItem, run_item
 from elbowroom.job.engine.runner import Ended
 
 GRACE_SECONDS = 5.0
@@ -80,10 +80,10 @@ class _Slot:
             self.executor = ProcessPoolExecutor(1, mp_context=context, initializer=_prepare_worker)
             before = {p.pid for p in multiprocessing.active_children()}
             with _without_interrupts():
-                future = self.executor.submit(run_item_apart, item)
+                future = self.executor.submit(run_item, item)
             self.process = next((p for p in multiprocessing.active_children() if p.pid not in before), None)
             return future
-        return self.executor.submit(run_item_apart, item)
+        return self.executor.submit(run_item, item)
 
     def gone(self) -> str:
         """Return how a process ended that was not asked to, and forget it."""
