@@ -7,8 +7,9 @@ import pytest
 from scipy.integrate import quad_vec
 
 from elbowroom.base.constants import VACUUM_PERMITTIVITY, wavenumber_of
-from elbowroom.base.errors import ModelRangeError
+from elbowroom.base.errors import ModelRangeError, SolveError
 from elbowroom.kernels.point_kernels import Workspace
+from elbowroom.kernels.soil import table as table_module
 from elbowroom.kernels.soil.fill import fill_soil
 from elbowroom.kernels.soil.response import GroundResponse, MeshSheet, bare_soil, layered_soil, mesh_on_soil
 from elbowroom.kernels.soil.sommerfeld import GroundQuadrature, kernels_at
@@ -203,6 +204,19 @@ def test_table__kernels_are_those_of_the_quadrature_in_their_units():
     distance = np.hypot(rho[:, None], z)
     assert (np.abs(found - expected) * distance).max() < 2e-5 / K
     assert np.all(np.abs(expected) * distance > 1e-3)
+
+
+def test_table__that_misses_its_tolerance_is_made_again_and_then_refused(monkeypatch):
+    good = build_table(MOIST, 41.0, 0.3, 2.0)
+    # A plan that takes the error of splines for a ten-thousandth of what it is asks for a tenth of the nodes.
+    monkeypatch.setattr(table_module, "_SPLINE_ERROR", 1e-4 / 384.0)
+    monkeypatch.setattr(table_module, "_ATTEMPTS", 12)
+    again = build_table(MOIST, 41.0, 0.3, 2.0)
+    assert again.error < again.tolerance
+    assert again.coefficients.shape[0] > 0.5 * good.coefficients.shape[0]
+    monkeypatch.setattr(table_module, "_ATTEMPTS", 1)
+    with pytest.raises(SolveError, match=r"held-out points, expected 1\.0e-05"):
+        build_table(MOIST, 41.0, 0.3, 2.0)
 
 
 BAD = {

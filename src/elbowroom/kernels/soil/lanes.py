@@ -1,7 +1,8 @@
 """Vector code spelled out: eight samples at a time, for loops that the compiler does not vectorise by itself.
 
 A :class:`Lanes` is a value of the compiler's intermediate language on which ordinary arithmetic can be written.  It is general
-LLVM code, so that it compiles on any processor; a machine with shorter vectors takes several instructions for one.
+LLVM code, so that it compiles on any processor; a machine with shorter vectors takes several instructions for one.  Compiled
+code that is kept between runs does not notice a change of this module: touch ``fill_numba`` after one.
 """
 
 from __future__ import annotations

@@ -205,7 +205,7 @@ def build_table(response: GroundResponse, rho_max_m: float, z_min_m: float, z_ma
             numbers = table.to_arrays()["numbers"].copy()
             numbers[-5:] = rho_max, z_min, z_max, tolerance, error
             return SoilTable.from_arrays({"coefficients": table.coefficients, "numbers": numbers})
-        count, share = int(np.ceil(1.35 * count)), 0.4 * share
+        count, share = int(np.ceil(1.35 * count)), 0.6 * share
     msg = f"table of the ground's kernels: error {error:.1e} on held-out points, expected {tolerance:.1e}"
     raise SolveError(msg)
 
