@@ -23,6 +23,7 @@ from elbowroom.kernels.soil.fill import fill_soil
 from elbowroom.kernels.soil.response import GroundResponse, bare_soil, mesh_on_soil
 from elbowroom.kernels.soil.sommerfeld import GroundQuadrature
 from elbowroom.kernels.soil.table import SoilTable, build_table
+from elbowroom.system.assembly import PairFiller, antenna_distances
 from elbowroom.system.discretisation import discretise
 from elbowroom.system.interactions import SkeletonInteractions, SkeletonTable
 
@@ -117,9 +118,20 @@ def fill() -> None:
 
 
 def station() -> None:
-    """Blocks between antennas of a reduced solve, kernels and their products: real ground against a perfect plane."""
+    """Blocks between antennas, kernels and their products, real ground against a perfect plane; at most 3.5 times, aim 2.2."""
     rng = np.random.default_rng(2)
     base = benchmark_station(64)
+    fillers = []
+    for ground in (PerfectGround(), Soil(10.0, 0.01)):
+        d = discretise(replace(base, ground=ground), 150e6, self_blocks=False)
+        filler = PairFiller(d)
+        fillers.append((filler, filler.level_of(float(np.median(antenna_distances(d)[0, 1:])))))
+        fillers[-1][0].sampled_blocks(0, np.arange(1, 17), fillers[-1][1])
+    best = [math.inf, math.inf]
+    for _ in range(25):
+        for n, (filler, level) in enumerate(fillers):
+            best[n] = min(best[n], best_of(lambda: filler.sampled_blocks(0, np.arange(1, 17), level), 1))  # noqa: B023
+    print(f"station, direct solver, 150 MHz: blocks over soil take {best[1] / best[0]:.2f} times those over a perfect plane")
     for frequency, functions, tolerance in ((150e6, 12, 5e-6), (350e6, 20, 5e-7)):
         for single in (True, False):
             interactions = []
@@ -141,7 +153,7 @@ def station() -> None:
                     best[n] = min(best[n], best_of(run, 1))
             points = interactions[0].weights(0, 1).points.shape[1]
             print(
-                f"station, {frequency / 1e6:g} MHz, {points} points, {functions} functions an antenna, "
+                f"station, reduced solver, {frequency / 1e6:g} MHz, {points} points, {functions} functions an antenna, "
                 f"{'single' if single else 'double'}: blocks over soil take {best[1] / best[0]:.2f} times those over a perfect plane"
             )
 
