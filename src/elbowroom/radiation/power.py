@@ -9,6 +9,7 @@ import numpy as np
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.constants import IMPEDANCE_OF_VACUUM
 from elbowroom.geometry.directions import Directions, sphere_quadrature
+from elbowroom.radiation.beams import current_beams
 from elbowroom.radiation.patterns import CHUNK_DIRECTIONS, station_patterns
 from elbowroom.system.discretisation import Discretisation, attachments, extent_of
 from elbowroom.system.plane_waves import direction_frame
@@ -143,9 +144,11 @@ def _radiated(d: Discretisation, space: CurrentSpace, coordinates: ComplexArray)
     assert sky.weights_sr is not None  # of a quadrature
     weights = sky.weights_sr
     total = np.zeros(coordinates.shape[1])
+    # Beam by beam, or all at once: the second pays from about a dozen on.
+    evaluate = current_beams if coordinates.shape[1] < 12 else station_patterns
     for first in range(0, frame.count, CHUNK_DIRECTIONS):
         rows = slice(first, min(first + CHUNK_DIRECTIONS, frame.count))
-        field = station_patterns(d, coordinates, frame.part(rows), space=space)
+        field = evaluate(d, coordinates, frame.part(rows), space=space)
         total += np.sum(np.abs(field) ** 2, axis=-1) @ weights[rows]
     # |E| = k eta |F|/(4 pi r), and |E|^2/eta through the sphere
     return np.asarray(d.wavenumber**2 * IMPEDANCE_OF_VACUUM / (4.0 * np.pi) ** 2 * total)
