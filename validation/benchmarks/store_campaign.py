@@ -63,11 +63,23 @@ def start(job: Path, *, workers: bool = False) -> subprocess.Popen:
     # how sums are split among threads decides their last bits, and workers get one thread each
     command = [sys.executable, "-m", "elbowroom", "solve", str(job), "--quiet", "--threads", "1"]
     command += ["--workers", "2"] if workers else []
-    # a file, because workers that survive their main process keep a pipe open
-    with open(job.with_name("complaints.txt"), "w") as complaints:
-        return subprocess.Popen(
+    # a file for each, because workers that survive their main process keep a pipe open
+    new = job.with_name("complaints.txt")
+    with open(new, "w") as complaints:
+        process = subprocess.Popen(
             command, stdout=subprocess.DEVNULL, stderr=complaints, env=environment, start_new_session=True, text=True
         )
+    new.rename(_complaints(job, process))
+    return process
+
+
+def _complaints(job: Path, process: subprocess.Popen) -> Path:
+    return job.with_name(f"complaints-{process.pid}.txt")
+
+
+def is_fault(complaint: str) -> bool:
+    """Return whether a run fell over; what a worker that was told to end says of where it was is none."""
+    return "Traceback" in complaint and "Exception ignored" not in complaint
 
 
 def finish(process: subprocess.Popen, job: Path) -> tuple[int, str]:
@@ -78,7 +90,7 @@ def finish(process: subprocess.Popen, job: Path) -> tuple[int, str]:
         end_orphans(process.pid)
         process.wait()
         code = -99
-    complaint = job.with_name("complaints.txt").read_text()
+    complaint = _complaints(job, process).read_text()
     return code, complaint if code != -99 else f"still running after {LONGEST_RUN_SECONDS:g} s: {complaint}"
 
 
@@ -274,7 +286,7 @@ def kill_at_random(reference: Reference, n_kills: int, rng: np.random.Generator,
         when = f"after kill {tally.kills.total()}"
         if process.pid not in victims and code not in (0, SolveError.exit_code):
             tally.failures.append(f"{when}: killed workers ended the run with code {code}: {complaint.strip()[-300:]}")
-        if "Traceback" in complaint:
+        if is_fault(complaint):
             tally.failures.append(f"{when}: {complaint.strip()[-600:]}")
         check_store(reference, tally, when)
         if victims:
