@@ -24,13 +24,15 @@ from elbowroom.base.arrays import AnyComplexArray, ComplexArray, FloatArray
 from elbowroom.base.constants import SPEED_OF_LIGHT
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.base.threads import available_cores
+from elbowroom.geometry.antennas import Antenna
+from elbowroom.geometry.mesh import Mesh
 from elbowroom.geometry.stations import Station
 from elbowroom.kernels.basis import overlap_matrix
 from elbowroom.system.assembly import single_threaded_blas
 from elbowroom.system.discretisation import Discretisation, Kind, attachments
 from elbowroom.system.factorisation import TiledSymmetric
 from elbowroom.system.networks import attach_ports
-from elbowroom.system.self_block import internal_impedance, loss_and_loads
+from elbowroom.system.self_block import internal_impedance
 from elbowroom.system.spaces import CurrentSpace
 
 
@@ -102,6 +104,53 @@ def reach_of(station: Station) -> float:
     return reach
 
 
+class _Losses:
+    """Wire loss and loads of one design on one mesh, quick at any frequency: few materials, one number each to be worked out.
+
+    The sums are those of :func:`elbowroom.system.self_block.loss_and_loads`.
+
+    Parameters
+    ----------
+    antenna : Antenna
+        The design.
+    mesh : Mesh
+        Its elements.
+    """
+
+    def __init__(self, antenna: Antenna, mesh: Mesh) -> None:
+        self.antenna = antenna
+        self.loads: ComplexArray | FloatArray = mesh.load_vectors
+        self.materials: dict[tuple[float, float, float], ComplexArray | FloatArray] = {}
+        overlap = overlap_matrix(mesh.order)
+        for e in range(mesh.n_elements):
+            wire = antenna.wires[mesh.wire[e]]
+            if wire.conductivity is None:
+                continue
+            key = (wire.radius, wire.conductivity, wire.relative_permeability)
+            matrix = self.materials.setdefault(key, np.zeros((mesh.n_unknowns, mesh.n_unknowns)))
+            own = np.flatnonzero(mesh.expansion[e].any(axis=0))
+            functions = mesh.expansion[e][:, own]
+            matrix[np.ix_(own, own)] += 0.5 * mesh.length[e] * (functions.T @ overlap @ functions)
+        self.size = mesh.n_unknowns
+
+    def inside(self, basis: ComplexArray) -> _Losses:
+        """Return the same between some functions (N, n)."""
+        other = _Losses.__new__(_Losses)
+        other.antenna, other.size = self.antenna, basis.shape[1]
+        other.loads = self.loads @ basis
+        other.materials = {key: basis.T @ matrix @ basis for key, matrix in self.materials.items()}
+        return other
+
+    def at(self, frequency_hz: float) -> ComplexArray:
+        """Return the matrix at a frequency [Hz], (N, N) [ohm]."""
+        total = np.zeros((self.size, self.size), dtype=complex)
+        for material, matrix in self.materials.items():
+            total += internal_impedance(*material, frequency_hz) * matrix
+        for load, vector in zip(self.antenna.loads, self.loads, strict=True):
+            total += load.impedance(2.0 * np.pi * frequency_hz) * np.outer(vector, vector)
+        return total
+
+
 class OwnBlocks:
     """Own blocks of every kind of antenna at any frequency of a segment.
 
@@ -118,33 +167,37 @@ class OwnBlocks:
         self._shared: dict[int, list[int]] = {}
         for k, kind in enumerate(first.kinds):
             self._shared.setdefault(id(kind.self_block), []).append(k)
+        self._losses: dict[int, _Losses] = {}
         # What is smooth: no loss, no loads, no 1/f of the charges.
         self._samples: dict[int, ComplexArray] = {}
         for kinds in self._shared.values():
             k = kinds[0]
+            losses = self._losses_of(k)
             self._samples[k] = np.stack(
-                [
-                    d.frequency_hz * (d.kinds[k].self_block - loss_and_loads(d.kinds[k].antenna, d.kinds[k].mesh, d.frequency_hz))
-                    for d in discretisations
-                ]
+                [d.frequency_hz * (d.kinds[k].self_block - losses.at(d.frequency_hz)) for d in discretisations]
             )
+
+    def _losses_of(self, kind: int) -> _Losses:
+        """Return the losses of a kind; kinds of one mesh share them."""
+        model = self._model.kinds[kind]
+        if id(model.mesh) not in self._losses:
+            self._losses[id(model.mesh)] = _Losses(model.antenna, model.mesh)
+        return self._losses[id(model.mesh)]
 
     def at(self, frequency_hz: float) -> Discretisation:
         """Return the station at a frequency of the segment [Hz], on the mesh of the segment."""
         weights = node_weights(self.nodes, frequency_hz) / frequency_hz
         model = self._model
         blocks: dict[int, ComplexArray] = {}
-        lossy: dict[tuple[int, int], ComplexArray] = {}
+        lossy: dict[int, ComplexArray] = {}
         for kinds in self._shared.values():
-            kind = model.kinds[kinds[0]]
-            key = (id(kind.antenna), id(kind.mesh))
-            if key not in lossy:
-                lossy[key] = loss_and_loads(kind.antenna, kind.mesh, frequency_hz)
-            made = np.tensordot(weights, self._samples[kinds[0]], axes=1) + lossy[key]
+            losses = self._losses_of(kinds[0])
+            if id(losses) not in lossy:
+                lossy[id(losses)] = losses.at(frequency_hz)
+            made = np.tensordot(weights, self._samples[kinds[0]], axes=1) + lossy[id(losses)]
             blocks |= dict.fromkeys(kinds, 0.5 * (made + made.T))
         kinds_now = [Kind(q.antenna, q.mesh, q.orientation, q.height, blocks[k]) for k, q in enumerate(model.kinds)]
-        ground = model.ground.at(float(frequency_hz))
-        return replace(model, frequency_hz=float(frequency_hz), kinds=kinds_now, ground=ground)
+        return replace(model, frequency_hz=float(frequency_hz), kinds=kinds_now)
 
     def loaded_in(self, kind: int, basis: ComplexArray, reference_ohm: float) -> Callable[[float], ComplexArray]:
         """Return what gives the loaded own block of a kind in some functions (N, n), (n, n) [ohm], at a frequency [Hz].
@@ -152,27 +205,14 @@ class OwnBlocks:
         Quick enough to be asked hundreds of times.
         """
         model = self._model.kinds[kind]
-        antenna, mesh = model.antenna, model.mesh
         first = next(kinds[0] for kinds in self._shared.values() if kind in kinds)
         samples = basis.T @ self._samples[first] @ basis
-        overlap = overlap_matrix(mesh.order)
-        materials: dict[tuple[float, float, float], ComplexArray] = {}
-        for e in range(mesh.n_elements):
-            wire = antenna.wires[mesh.wire[e]]
-            if wire.conductivity is not None:
-                key = (wire.radius, wire.conductivity, wire.relative_permeability)
-                functions = mesh.expansion[e] @ basis
-                materials.setdefault(key, np.zeros((basis.shape[1],) * 2, dtype=complex))
-                materials[key] += 0.5 * mesh.length[e] * (functions.T @ overlap @ functions)
-        gaps, loads = mesh.gap_vectors @ basis, mesh.load_vectors @ basis
+        losses, gaps = self._losses_of(kind).inside(basis), model.mesh.gap_vectors @ basis
 
         def at(frequency_hz: float) -> ComplexArray:
             block = np.tensordot(node_weights(self.nodes, frequency_hz) / frequency_hz, samples, axes=1)
-            for material, matrix in materials.items():
-                block += internal_impedance(*material, frequency_hz) * matrix
-            for load, vector in zip(antenna.loads, loads, strict=True):
-                block += load.impedance(2.0 * np.pi * frequency_hz) * np.outer(vector, vector)
-            block += gaps.T @ attach_ports(antenna, frequency_hz, reference_ohm).loading @ gaps
+            block += losses.at(frequency_hz)
+            block += gaps.T @ attach_ports(model.antenna, frequency_hz, reference_ohm).loading @ gaps
             return np.asarray(0.5 * (block + block.T))
 
         return at
