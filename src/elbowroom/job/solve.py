@@ -382,6 +382,9 @@ def solve(
     if solver not in SOLVERS:
         msg = f"solver {solver!r}: expected {', '.join(SOLVERS)}"
         raise ModelRangeError(msg)
+    if not (np.isfinite(frequency_hz) and frequency_hz > 0.0):
+        msg = f"frequency {frequency_hz!r} Hz: expected a positive number"
+        raise ModelRangeError(msg)
     settings, near, far = mesh_settings(mesh), near or NearSettings(), far or FarSettings()
     chosen = chosen_solver(station, frequency_hz, settings, solver)
     strategy = strategy_of(chosen, precision, tolerance, with_mesh_error=with_mesh_error, single_storage=single_storage)
