@@ -5,7 +5,7 @@ import pytest
 
 from elbowroom.base.errors import JobFileError, ModelRangeError, SolveError, StoreError
 from elbowroom.geometry.directions import hemisphere_grid
-from elbowroom.geometry.grounds import PerfectGround
+from elbowroom.geometry.grounds import PerfectGround, TabulatedSoil
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.job.band import FEWEST_CHANNELS, SegmentChannels, SegmentPlan, plan_segments, solve_band, solved_channels
 from elbowroom.job.engine.campaign import Campaign
@@ -89,6 +89,15 @@ def test_segments__few_channels_are_solved_one_by_one():
     wide = tuple(np.arange(50e6, 350.1e6, 15e6))
     assert len(wide) > FEWEST_CHANNELS
     assert plan_segments(station_of(), wide, TOLERANCE) == []
+
+
+def test_segments__never_pass_over_an_entry_of_the_grounds_table():
+    def plans(*entries):
+        soil = TabulatedSoil(entries, tuple(10.0 + i % 2 for i in range(len(entries))), (0.01,) * len(entries))
+        return plan_segments(Station(station_of().placed, soil), CHANNELS, TOLERANCE)
+
+    assert len(plans(100e6, 200e6)) == len(plans(CHANNELS[0], CHANNELS[-1])) == 1
+    assert plans(100e6, 148.3e6, 200e6) == []
 
 
 # --- solutions

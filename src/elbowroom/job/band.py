@@ -18,8 +18,9 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from elbowroom.base.arrays import ComplexArray
+from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import ModelRangeError, SolveError
+from elbowroom.geometry.grounds import MeshOnSoil, TabulatedSoil
 from elbowroom.geometry.mesh import MeshSettings
 from elbowroom.geometry.stations import Station
 from elbowroom.radiation.solution import Solution
@@ -83,6 +84,13 @@ def widest_segment(reach_m: float, low_hz: float, tolerance: float) -> float:
     return low
 
 
+def ground_kinks(station: Station) -> FloatArray:
+    """Return the frequencies [Hz] at which constants of the ground change their course: no polynomial passes over them."""
+    ground = station.ground
+    soil = ground.soil if isinstance(ground, MeshOnSoil) else ground
+    return np.array(soil.frequency_hz if isinstance(soil, TabulatedSoil) else ())
+
+
 def solved_channels(frequencies_hz: Sequence[float], solve_step_hz: float | None) -> tuple[float, ...]:
     """Return which channels are solved: the nearest ones to multiples of a step from the first, and the last.
 
@@ -117,6 +125,8 @@ def plan_segments(
 ) -> list[SegmentPlan]:
     """Return the segments of a band; channels that are in none are better solved one by one.
 
+    Segments within which the ground's table has an entry are left out: between entries it is linear, and bends there.
+
     Parameters
     ----------
     station : Station
@@ -137,7 +147,7 @@ def plan_segments(
     solved = np.asarray(solved_channels(frequencies_hz, solve_step_hz))
     if len(solved) < FEWEST_CHANNELS:
         return []
-    reach = reach_of(station)
+    reach, kinks = reach_of(station), ground_kinks(station)
     widths: dict[float, float] = {}
 
     def edges(share: float) -> list[int]:
@@ -161,7 +171,7 @@ def plan_segments(
     plans = []
     for first, last in zip(chosen[:-1], chosen[1:], strict=True):
         own = solved[first : last + 1]
-        if len(own) < FEWEST_CHANNELS:
+        if len(own) < FEWEST_CHANNELS or np.any((kinks > own[0]) & (kinks < own[-1])):
             continue
         inside = channels[(channels >= own[0]) & (channels <= own[-1])]
         between = np.setdiff1d(inside, own)
