@@ -97,6 +97,7 @@ def test_campaign__threads_do_not_depend_on_what_is_stored_or_asked_for_again(jo
     monkeypatch.setattr(campaign_module, "available_cores", lambda: 4)
     monkeypatch.setattr(campaign_module, "NOMINAL_RATE", 1e9)
     found = Campaign([JobRun(read_job(job))])
+    found.predict()
     whole = found.split()
     assert whole.threads == 1
     for u in found.units[:-1]:
@@ -127,3 +128,56 @@ def test_predicted_seconds__is_the_longest_worker(job, monkeypatch):
     assert predicted_seconds(found, Split(2, 1)) == pytest.approx(5.0)
     assert predicted_seconds(found, Split(1, 1)) == pytest.approx(8.0)
     assert math.isclose(found.total().seconds, 8.0)
+
+
+def test_split__counts_what_is_solved_together_as_one(job, monkeypatch):
+    band = [100e6 + 1e6 * i for i in range(40)]
+    job.write_text(job.read_text().replace("[110e6, 165e6]", str(band)))
+    monkeypatch.setattr(campaign_module, "available_cores", lambda: 4)
+    monkeypatch.setattr(campaign_module, "NOMINAL_RATE", 1e9)
+    run = JobRun(read_job(job))
+    assert Campaign([run]).split().workers == 4
+
+    class Segment:
+        low_hz, high_hz = band[0], band[-1]
+
+    monkeypatch.setattr(run, "segment_of", lambda frequency_hz: Segment)
+    monkeypatch.setattr(run, "key", lambda frequency_hz: f"{int(frequency_hz):064x}")
+    monkeypatch.setattr(run, "predicted", lambda frequency_hz, **options: unit())
+    # one item: all cores are its own
+    assert Campaign([run]).split() == Split(1, 4)
+
+
+def test_progress__counts_units_by_what_they_took(capsys):
+    from elbowroom.cli.progress import RunProgress
+    from elbowroom.cli.screen import Screen
+    from engine_work import good, item
+
+    items = [item(n, good, frequencies=(1e8, 2e8) if n == 0 else (1e8,)) for n in range(3)]
+    progress = RunProgress(Screen("normal"), items, 2)
+    for one in items:
+        progress.started(one)
+    assert progress.counts()["running"] == 2  # the third waits in a queue
+    progress.ended(items[0], 2.0, 1)
+    assert (progress.finished, progress.failed, progress.all) == (1, 1, 4)
+    progress.ended(items[1], 2.0, 0)
+    progress.ended(items[2], 2.0, 0)
+    assert progress.counts()["fraction_of_all"] == 1.0
+    assert progress.left_seconds == 0.0
+    said = capsys.readouterr().out
+    assert "item 0: failed (1 of 4 done, 2 running, 1 failed" in said
+    assert "item 2: solved in 2.0 s (3 of 4 done, 1 failed)" in said
+
+
+def test_progress__stages_of_several_frequencies_of_one_item():
+    from elbowroom.cli.progress import RunProgress
+    from elbowroom.cli.screen import Screen
+    from engine_work import good, item
+
+    one = item(0, good, frequencies=(1e8, 2e8))
+    progress = RunProgress(Screen("quiet"), [one], 1)
+    progress.started(one)
+    progress.stage(1e8, "port excitations", 1.0)
+    assert progress.counts()["fraction_of_all"] == pytest.approx(0.5)
+    progress.stage(2e8, "assemble", 1.0)
+    assert progress.counts()["fraction_of_all"] == pytest.approx(0.5 + 0.5 * 0.25)

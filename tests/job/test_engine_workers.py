@@ -185,5 +185,5 @@ def test_cluster_of_crowded_workers__is_refused():
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")
         cluster = distributed.LocalCluster(n_workers=1, threads_per_worker=2, processes=False, dashboard_address=None)
-        with pytest.raises(ResourceError, match="takes several units at a time.*--nthreads 1"):
+        with pytest.raises(ResourceError, match=r"takes several units at a time.*--nthreads 1"):
             DaskWorkers(distributed.Client(cluster))

@@ -47,7 +47,8 @@ class RunProgress:
         self.done = self.taken = self.foreseen = 0.0
         self.since: dict[int, float] = {}
         self.stage_reached: dict[int, float] = {}
-        self.number_of = {f: item.number for item in items for f in item.frequencies_hz}
+        self.begun: dict[int, dict[float, float]] = {}
+        self.sizes = {item.number: len(item.frequencies_hz) for item in items}
         self.start = self.last_line = self.last_json = time.monotonic()
         self.bar: Progress | None = None
         if screen.mode == "normal" and screen.out.is_terminal:
@@ -117,9 +118,13 @@ class RunProgress:
 
     def stage(self, frequency_hz: float, stage: str, fraction: float) -> None:
         """Move on inside a unit that this process works on."""
-        number = self.number_of.get(frequency_hz, -1)
+        number = next(iter(self.since), -1)  # this process does one item at a time
         start, share = self.SHARES.get(stage, (0.0, 0.0))
-        self.stage_reached[number] = start + share * fraction
+        begun = self.begun.setdefault(number, {})
+        begun[frequency_hz] = start + share * fraction
+        # Of an item with several frequencies, those begun before are finished.
+        before = len(begun) - 1
+        self.stage_reached[number] = (before + begun[frequency_hz]) / self.sizes.get(number, 1)
         label = f"{frequency_hz / 1e6:g} MHz: {stage}"
         if self.bar is not None:
             self._show(label)

@@ -64,11 +64,6 @@ class CampaignUnit:
     state: str = "from store"
 
     @property
-    def place(self) -> tuple[Path, str]:
-        """Store and key: what makes two units one."""
-        return self.run.job.store_folder.resolve(), self.key
-
-    @property
     def path(self) -> Path:
         """The unit's file, present or not."""
         return self.run.store.path_of(self.key)
@@ -96,14 +91,15 @@ class Campaign:
             msg = f"{', '.join(sorted(twice))} is given more than once"
             raise JobFileError(msg)
         self.units: list[CampaignUnit] = []
-        first: dict[tuple[Path, str], CampaignUnit] = {}
+        # By store and key: what makes two units one.
+        self._same: dict[tuple[Path, str], list[CampaignUnit]] = {}
         for run in self.runs:
+            folder = run.job.store_folder.resolve()
             for frequency in run.frequencies_hz:
                 key = run.key(frequency)
-                unit = CampaignUnit(run, frequency, key, key in run.store)
-                unit.twin = first.get(unit.place)
-                first.setdefault(unit.place, unit)
-                self.units.append(unit)
+                same = self._same.setdefault((folder, key), [])
+                same.append(CampaignUnit(run, frequency, key, key in run.store, twin=same[0] if same else None))
+                self.units.append(same[-1])
 
     @property
     def to_solve(self) -> list[CampaignUnit]:
@@ -175,10 +171,9 @@ class Campaign:
             return
         for unit in stored:
             record = unit.run.store.get(unit.key)
-            for same in self.units:
-                if same.place == unit.place:
-                    same.stored = record is not None
-                    same.statistics = None if record is None else stored_statistics(record)
+            for same in self._same[unit.run.job.store_folder.resolve(), unit.key]:
+                same.stored = record is not None
+                same.statistics = None if record is None else stored_statistics(record)
 
     def split(self, workers: int | None = None, threads: int | None = None) -> Split:
         """Return how many workers solve these jobs, with how many threads each.
@@ -193,24 +188,15 @@ class Campaign:
             return Split(workers or max(1, cores // threads), threads)
         if workers is not None:
             return Split(workers, max(1, cores // workers))
-        largest = self._largest()
-        if largest is None:
+        groups = [group for run in self.runs for group in _groups(run)]
+        if not groups:
             return Split(1, cores)
-        run, frequency = largest
-        nominal = run.predicted(frequency, operations_per_second=NOMINAL_RATE)
-        return choose_split(len(self.units), nominal, cores=cores, memory_bytes=limit_of_memory_bytes())
-
-    def _largest(self) -> tuple[JobRun, float] | None:
-        """Return job and frequency of the largest unit: the highest of a job, as meshes get finer, of the largest station."""
-        found = [(run, run.frequencies_hz[-1]) for run in self.runs if run.frequencies_hz]
-        if len(found) > 1:
-            found.sort(key=lambda pair: pair[0].predicted(pair[1], operations_per_second=NOMINAL_RATE).seconds)
-        return found[-1] if found else None
+        largest = max((group.nominal() for group in groups if group.run_ends), key=lambda p: p.seconds)
+        return choose_split(len(groups), largest, cores=cores, memory_bytes=limit_of_memory_bytes())
 
     def here(self, split: Split) -> bool:
-        """Return whether what is left is so little, or one unit only, that this process does it sooner than any worker."""
-        left = self.to_solve
-        return len(left) <= 1 or (split.workers == 1 and self.total().seconds <= SMALL_SECONDS)
+        """Return whether what is left is so little, or one item only, that this process does it sooner than any worker."""
+        return len(self.items(split.threads)) <= 1 or (split.workers == 1 and self.total().seconds <= SMALL_SECONDS)
 
     def items(self, threads: int, *, longest_first: bool = True) -> list[WorkItem]:
         """Return the work that is to be done.
@@ -280,13 +266,37 @@ class Campaign:
 
     def units_of(self, item: WorkItem, index: int) -> list[CampaignUnit]:
         """Return all units that a frequency of an item serves, by its index."""
-        place = (item.store_folder.resolve(), item.keys[index])
-        return [u for u in self.units if u.place == place]
+        return self._same[item.store_folder.resolve(), item.keys[index]]
 
     def elsewhere(self, item: WorkItem) -> bool:
         """Return whether another run works on what is missing of an item."""
-        store = next(u.run.store for u in self.units if u.key == item.keys[0])
-        return worked_elsewhere(store, item.keys)
+        return worked_elsewhere(self.units_of(item, 0)[0].run.store, item.keys)
+
+
+@dataclass(frozen=True)
+class _Group:
+    """Frequencies of a job that are solved together, stored or not."""
+
+    run: JobRun
+    frequencies_hz: tuple[float, ...]
+    run_ends: bool
+    """Whether it is the last of its job: the largest, as meshes get finer with frequency."""
+
+    def nominal(self) -> Prediction:
+        """Return what it takes at the nominal rate, every frequency counted like the highest."""
+        count = len(self.frequencies_hz)
+        each = self.run.predicted(self.frequencies_hz[-1], operations_per_second=NOMINAL_RATE)
+        return replace(each, seconds=count * each.seconds, serial_seconds=count * each.serial_seconds)
+
+
+def _groups(run: JobRun) -> list[_Group]:
+    """Return how the frequencies of a job fall into items if nothing is stored."""
+    found: dict[float, list[float]] = {}
+    for frequency in run.frequencies_hz:
+        plan = run.segment_of(frequency)
+        found.setdefault(frequency if plan is None else plan.low_hz, []).append(frequency)
+    groups = [tuple(group) for group in found.values()]
+    return [_Group(run, group, index == len(groups) - 1) for index, group in enumerate(groups)]
 
 
 def predicted_seconds(campaign: Campaign, split: Split) -> float:
