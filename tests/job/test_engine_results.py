@@ -5,7 +5,8 @@ import warnings
 import numpy as np
 import pytest
 
-from elbowroom.base.threads import available_cores, blas_threads, loop_threads, threads
+from elbowroom.base.machine import available_cores
+from elbowroom.base.threads import blas_threads, loop_threads, threads
 from elbowroom.geometry.grounds import PerfectGround
 from elbowroom.geometry.shapes import log_periodic
 from elbowroom.geometry.stations import Placed, Station, turned

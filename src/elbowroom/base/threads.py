@@ -2,16 +2,12 @@
 
 from __future__ import annotations
 
-import os
 from collections.abc import Iterator
 from contextlib import contextmanager
 
+from elbowroom.base.machine import available_cores
+
 _limit: int | None = None
-
-
-def available_cores() -> int:
-    """Return the number of cores this process may use."""
-    return len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else (os.cpu_count() or 1)
 
 
 def loop_threads() -> int:

@@ -140,9 +140,9 @@ def layout(
 @modes
 def inspect(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> None:
     """Look at JOB without solving: settings, problems of the model, meshes, predicted time, memory and disk."""
+    from elbowroom.base.machine import available_memory_bytes
     from elbowroom.cli.screen import readable_bytes, readable_seconds
     from elbowroom.job.checks import mesh_statistics
-    from elbowroom.job.plan import available_memory_bytes
 
     screen = make_screen(mode)
     run = open_job(job, frequencies_hz, screen)

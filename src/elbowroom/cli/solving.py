@@ -222,8 +222,8 @@ def _solve(campaign: Campaign, split: Split, wish: Wish, screen: Screen) -> dict
 
 def _workers(split: Split, wish: Wish, alone: bool, stage: Callable[[float, str, float], None]) -> tuple[Workers, str, int]:
     """Return who does the work, a line that says so, and the memory [byte] that each has elsewhere; 0 if unknown."""
+    from elbowroom.base.machine import available_memory_bytes
     from elbowroom.job.engine.local import InProcess, ProcessWorkers
-    from elbowroom.job.plan import available_memory_bytes
 
     each = f"{split.threads} thread{'s' if split.threads > 1 else ''}"
     if wish.cluster is not None:

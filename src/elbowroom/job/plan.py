@@ -9,7 +9,7 @@ from __future__ import annotations
 import shutil
 import time
 from collections import Counter
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from functools import lru_cache
 from pathlib import Path
@@ -18,6 +18,7 @@ import numpy as np
 
 from elbowroom.base.constants import wavelength_of, wavenumber_of
 from elbowroom.base.errors import ModelRangeError, ResourceError
+from elbowroom.base.machine import available_memory_bytes
 from elbowroom.geometry.mesh import MeshSettings, mesh_settings
 from elbowroom.geometry.stations import Station
 from elbowroom.job.checks import StationMeshes
@@ -339,97 +340,6 @@ def calibrated_rate() -> float:
         a @ a
         best = min(best, time.perf_counter() - clock)
     return 8.0 * n**3 / best
-
-
-def available_memory_bytes(root: str | Path = "/") -> int:
-    """Return the memory this process can still take [byte].
-
-    The least of what the machine has free, what control groups (both versions) leave and what the limit on the process's
-    address space leaves.
-
-    Parameters
-    ----------
-    root : str or Path, optional
-        Where ``proc`` and ``sys`` are found; for tests.
-    """
-    import psutil
-
-    bounds = [int(psutil.virtual_memory().available), *_control_group_bounds(Path(root))]
-    try:
-        import resource
-    except ImportError:  # no such limit on this system
-        return max(min(bounds), 0)
-    soft, _ = resource.getrlimit(resource.RLIMIT_AS)
-    if soft != resource.RLIM_INFINITY:
-        bounds.append(soft - int(psutil.Process().memory_info().vms))
-    return max(min(bounds), 0)
-
-
-def limit_of_memory_bytes(root: str | Path = "/") -> int:
-    """Return the memory that this process and its children may take if nothing else runs [byte].
-
-    What the machine has, or the least limit of its control groups.
-
-    Parameters
-    ----------
-    root : str or Path, optional
-        Where ``proc`` and ``sys`` are found; for tests.
-    """
-    import psutil
-
-    limits = [int(psutil.virtual_memory().total)]
-    for folder, (limit_name, _, _) in _control_groups(Path(root)):
-        try:
-            limits.append(int((folder / limit_name).read_text()))
-        except (OSError, ValueError):  # "max" is no number and no limit
-            continue
-    return min(limits)
-
-
-def _control_groups(root: Path) -> Iterator[tuple[Path, tuple[str, str, str]]]:
-    """Yield the folders of this process's control groups and of those above, with the names of what is read there."""
-    try:
-        lines = (root / "proc/self/cgroup").read_text().splitlines()
-    except OSError:
-        return
-    for line in lines:
-        parts = line.split(":", 2)
-        if len(parts) != 3:
-            continue
-        number, controllers, group = parts
-        if number == "0" and not controllers:
-            mount, names = root / "sys/fs/cgroup", ("memory.max", "memory.current", "inactive_file")
-        elif "memory" in controllers.split(","):
-            mount = root / "sys/fs/cgroup/memory"
-            names = ("memory.limit_in_bytes", "memory.usage_in_bytes", "total_inactive_file")
-        else:
-            continue
-        # Every group above sets a limit too; inside a container the path may name folders only seen outside.
-        path = [part for part in group.split("/") if part and part != ".."]
-        for depth in range(len(path), -1, -1):
-            yield mount.joinpath(*path[:depth]), names
-
-
-def _control_group_bounds(root: Path) -> list[int]:
-    found = (_group_bound(folder, *names) for folder, names in _control_groups(root))
-    return [bound for bound in found if bound is not None]
-
-
-def _group_bound(folder: Path, limit_name: str, usage_name: str, cache_name: str) -> int | None:
-    try:
-        limit = int((folder / limit_name).read_text())
-        usage = int((folder / usage_name).read_text())
-    except (OSError, ValueError):  # "max" is no number and no limit
-        return None
-    cache = 0
-    try:
-        for line in (folder / "memory.stat").read_text().splitlines():
-            if line.startswith(cache_name + " "):
-                cache = int(line.split()[1])
-    except (OSError, ValueError):
-        pass
-    # file pages not lately used are given back before anything is refused
-    return limit - max(usage - cache, 0)
 
 
 def refuse_if_too_large(prediction: Prediction, *, folder: str | Path | None = None, available_bytes: int | None = None) -> None:

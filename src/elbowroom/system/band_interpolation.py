@@ -23,7 +23,7 @@ import numpy as np
 from elbowroom.base.arrays import AnyComplexArray, ComplexArray, FloatArray
 from elbowroom.base.constants import SPEED_OF_LIGHT
 from elbowroom.base.errors import ModelRangeError
-from elbowroom.base.threads import available_cores
+from elbowroom.base.threads import loop_threads
 from elbowroom.geometry.antennas import Antenna
 from elbowroom.geometry.mesh import Mesh
 from elbowroom.geometry.stations import Station
@@ -283,7 +283,7 @@ class MatrixSamples:
                     turned[own, own] = 0.0
             self.samples[key][node] = turned.ravel()
 
-        with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
+        with single_threaded_blas(), ThreadPoolExecutor(loop_threads()) as pool:
             list(pool.map(take, self.samples))
 
     def at(self, discretisation: Discretisation, reference_ohm: float) -> TiledSymmetric:
@@ -307,7 +307,7 @@ class MatrixSamples:
                     tile[here, here] = own[d.kind_of[a]].T
             matrix.tiles[key] = tile.T
 
-        with single_threaded_blas(), ThreadPoolExecutor(available_cores()) as pool:
+        with single_threaded_blas(), ThreadPoolExecutor(loop_threads()) as pool:
             list(pool.map(fill, self.samples))
         return matrix
 

@@ -11,12 +11,12 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 
 from elbowroom.base.errors import GeometryError, JobFileError, ResourceError
-from elbowroom.base.threads import available_cores
+from elbowroom.base.machine import available_cores, limit_of_memory_bytes
 from elbowroom.job.channels import SegmentWork, solve_segment
 from elbowroom.job.engine.items import StationWork, WorkItem, solve_units
 from elbowroom.job.engine.split import SMALL_SECONDS, Split, choose_split
 from elbowroom.job.pipeline import JobRun
-from elbowroom.job.plan import Prediction, lacking, limit_of_memory_bytes, too_large, total
+from elbowroom.job.plan import Prediction, lacking, too_large, total
 from elbowroom.job.sharing import worked_elsewhere
 from elbowroom.job.solve import stored_statistics
 from elbowroom.system.solving import SolveStatistics

@@ -15,7 +15,8 @@ from pathlib import Path
 from typing import Any
 
 from elbowroom.base.errors import ElbowroomError, ResourceError
-from elbowroom.base.threads import available_cores, threads
+from elbowroom.base.machine import available_cores
+from elbowroom.base.threads import threads
 from elbowroom.geometry.stations import Station
 from elbowroom.job.engine.split import seconds_with
 from elbowroom.job.plan import Prediction
