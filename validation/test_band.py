@@ -9,8 +9,9 @@ from elbowroom.geometry.directions import sphere_quadrature
 from elbowroom.geometry.grounds import FreeSpace, PerfectGround
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import Wire
-from elbowroom.job.band import solve_band
+from elbowroom.job.band import SegmentChannels, SegmentPlan, solve_band
 from elbowroom.system.band import BandSegment, SegmentSettings
+from elbowroom.system.band_currents import CurrentSamples
 
 CHANNELS = np.sort(np.concatenate([140e6 + 1e6 * np.arange(18), [140.5e6, 147.53e6, 155.5e6]]))
 
@@ -92,3 +93,39 @@ def test_resonance__of_a_line_with_lossy_wires_is_as_wide_as_its_loss(conductivi
     assert found.half_width_hz == pytest.approx(expected, rel=0.03)
     # Open ends lengthen a line by about its spacing.
     assert 0.96 * middle < found.frequency_hz < middle
+
+
+def test_resonance__channels_beside_a_narrow_one_meet_their_statement():
+    """A lossless line of some kilohertz, channels a hundred times farther apart: what lies beside it is solved or made well.
+
+    Identity: the same matrix, solved at the channel itself.  Currents of the solved channels know nothing of the resonance but its
+    tail; without solves near it the channels there would be off by what it does.
+    """
+    wires = [Wire((-0.48, 0.0, 1.0), (0.48, 0.0, 1.0), radius=0.002)]
+    wires += [Wire((0.1 + x, -0.45, 0.85), (0.3 + x, 0.45, 0.85), radius=0.0005) for x in (0.0, 0.008)]
+    antenna = Antenna("dipole over a line", wires=wires, ports=[Port("x", wire=0, position=0.5, gap=0.01)])
+    station = Station([Placed(antenna)], FreeSpace())
+    segment = SegmentChannels(station, SegmentPlan(154e6, 170e6, tuple(np.arange(154e6, 170.1e6, 1e6))), 1e-3)
+    found = segment.segment.features(5e5)[0]
+    assert found.half_width_hz < 1e4
+    plain = CurrentSamples(station.positions, segment.segment.space.offsets, np.array([0, 1]), [0])
+    nodes = [segment.solved(f) for f in segment.plan.solved]
+    for node in nodes:
+        plain.add(node.frequency_hz, node.coupled.currents)
+    worst = 0.0
+    for offset in (-30.0, -6.0, -1.0, 0.4, 1.5, 10.0, 100.0):
+        f = found.frequency_hz + offset * found.half_width_hz
+        exact = segment.segment_solution(f)
+        made = segment.solution(f)
+        lagrange = plain._polynomial(f)
+        blind = plain.combined_ports(f, lagrange, [nodes[i].coupled.loaded_admittance for i in lagrange.nodes])
+        error, missed = (
+            np.linalg.norm(y - exact.coupled.loaded_admittance) / np.linalg.norm(exact.coupled.loaded_admittance)
+            for y in (made.coupled.loaded_admittance, blind)
+        )
+        print(f"{offset:+g} half-widths: {made.statistics.origin}, admittance off by {error:.1e}, stated "
+              f"{made.statistics.pattern_error:.1e}; a polynomial through solved channels {missed:.1e}")  # fmt: skip
+        assert error <= made.statistics.pattern_error
+        worst = max(worst, missed)
+    print(f"{segment.counts.solved} solved, {segment.counts.interpolated} interpolated, {segment.counts.assembled} assembled")
+    assert worst > 1e-3

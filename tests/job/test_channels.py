@@ -14,6 +14,7 @@ from elbowroom.job.jobfile import read_job
 from elbowroom.job.pipeline import JobRun
 from elbowroom.job.solve import solve
 from elbowroom.radiation.solution import Solution
+from elbowroom.system.band_features import Feature
 from elbowroom.system.discretisation import discretise
 from elbowroom.system.solving import solve_direct, solve_isolated
 from helpers import cluster, dipole
@@ -164,15 +165,23 @@ def test_segment__channels_whose_estimate_is_too_large_are_solved():
 
 
 def test_segment__channels_beside_a_narrow_resonance_are_solved(monkeypatch):
-    from elbowroom.system.band import BandSegment
-    from elbowroom.system.band_features import Feature
-
-    plan = SegmentPlan(140e6, 157e6, CHANNELS, tuple(np.arange(150.05e6, 150.95e6, 0.1e6)))
-    monkeypatch.setattr(BandSegment, "features", lambda *_: [Feature(150.52e6, 1e3, "array")])
+    plan = SegmentPlan(140e6, 157e6, CHANNELS, tuple(np.arange(150.05e6, 150.96e6, 0.1e6)))
+    monkeypatch.setattr("elbowroom.job.band.narrow_features", lambda *_: [Feature(150.52e6, 1e3, "array")])
     segment = SegmentChannels(station_of(2), plan, TOLERANCE)
-    assert [round(f / 1e4) for f in segment.complete()] == [15045, 15055]
-    assert segment.solution(float(plan.between[4])).statistics.origin == "interpolated matrix"
-    assert segment.solution(float(plan.between[0])).statistics.origin == "interpolated currents"
+    added = {round(f / 1e4) for f in segment.complete()}
+    # The nearest, and one on either side at growing distances.
+    assert {15055, 15045} <= added
+    assert len(added) < len(plan.between)
+    origins = {round(f / 1e4): segment.solution(f).statistics.origin for f in plan.between}
+    assert {f for f, origin in origins.items() if origin == "interpolated matrix"} == added
+
+
+def test_segment__resonances_far_from_what_is_asked_for_cost_nothing(monkeypatch):
+    plan = SegmentPlan(140e6, 157e6, CHANNELS)
+    monkeypatch.setattr("elbowroom.job.band.narrow_features", lambda *_: [Feature(150.52e6, 1e3, "array")])
+    segment = SegmentChannels(station_of(2), plan, TOLERANCE)
+    assert segment.solution(144.3e6).statistics.origin == "interpolated currents"
+    assert segment.counts.solved == len(CHANNELS)
 
 
 def test_segment__one_that_gives_power_is_solved(monkeypatch):

@@ -145,7 +145,7 @@ def measure(name: str, antenna: Antenna, count: int, options: argparse.Namespace
             single_seconds, single = single_seconds + spent, single + 1
             own_mesh.add(pattern_errors(alone, found, options.sky), found.statistics.pattern_error)
         part.features = part.segment.features(0.5 * options.step)
-        features += part.features
+        features += part.features or []
         for f in asked[(asked > plan.low_hz) & (asked < plan.high_hz)]:
             before = part.counts
             made, spent = timed(lambda f=float(f), part=part: part.solution(f))  # type: ignore[misc]

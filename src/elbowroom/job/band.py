@@ -25,10 +25,17 @@ from elbowroom.geometry.mesh import MeshSettings
 from elbowroom.geometry.stations import Station
 from elbowroom.radiation.solution import Solution
 from elbowroom.system.assembly import Progress
-from elbowroom.system.band import INTERPOLATION_SHARE, BandSegment, SegmentSettings, is_passive
+from elbowroom.system.band import (
+    INTERPOLATION_SHARE,
+    BandSegment,
+    SegmentSettings,
+    is_passive,
+    narrow_features,
+    segment_discretisations,
+)
 from elbowroom.system.band_currents import CurrentSamples, Weighting
 from elbowroom.system.band_features import Feature
-from elbowroom.system.band_interpolation import intervals_for, reach_of
+from elbowroom.system.band_interpolation import OwnBlocks, intervals_for, reach_of
 from elbowroom.system.discretisation import FarSettings, discretise
 from elbowroom.system.reduction_error import sampled_antennas
 from elbowroom.system.self_block import NearSettings
@@ -43,11 +50,9 @@ WIDEST_SHARE = 0.6
 FEWEST_CHANNELS = 16
 """Solved channels of a segment below which solving them one by one is as quick; measured."""
 
-SEEDS = 3.0
-"""Half-widths of a resonance to either side within which channels are solved."""
-
-MOST_SEEDS = 12
-"""Channels solved around one resonance before any estimate."""
+SEED_RATIO, LEAST_SEED_HZ, SEEDED_STEPS = 3.0, 100.0, 2.0
+"""Ratio of the distances from a narrow resonance at which the station is solved, the least of them [Hz], and steps of solving
+from a channel within which resonances are seen to."""
 
 
 @dataclass(frozen=True)
@@ -229,7 +234,7 @@ class SegmentChannels:
 
     Attributes
     ----------
-    features : list of Feature
+    features : list of Feature or None
         Narrow resonances, known once channels between solved ones were asked for.
     """
 
@@ -254,7 +259,9 @@ class SegmentChannels:
         self._samples: CurrentSamples | None = None
         self._node_errors: dict[float, tuple[float, float]] = {}
         self._counts = BandCounts()
-        self.features: list[Feature] = []
+        self._probes: dict[float, tuple[complex, ...]] = {}
+        self._own: OwnBlocks | None = None
+        self.features: list[Feature] | None = None
         self.solve_missing = True
 
     def _remember(self, frequency_hz: float, solution: Solution) -> None:
@@ -314,7 +321,9 @@ class SegmentChannels:
         """Take a solved channel among those from which others are made, if it is in the segment's functions."""
         solution = self.solved(frequency_hz)
         if not self._is_sample(solution):
+            self._node_errors.setdefault(frequency_hz, (np.inf, np.inf))
             return
+        self._probes[frequency_hz] = solution.statistics.probes
         d = solution.discretisation
         if self._samples is None:
             positions = self.station.positions
@@ -385,20 +394,51 @@ class SegmentChannels:
             open_ = [f for f in failing if f not in done]
         return added
 
+    def _known_features(self) -> list[Feature]:
+        """Return the narrow resonances of the segment, from what is known of solved channels; no matrix is assembled for it."""
+        if self.features is None:
+            step = float(np.diff(self.plan.solved).max())
+            if self._own is None:
+                self._own = self._segment.own if self._segment is not None else self._own_blocks()
+            space = self.solved(self.plan.solved[0]).space
+            probed = {f: np.array(probes) for f, probes in self._probes.items() if probes}
+            self.features = narrow_features(self._own, space, probed, 0.5 * step, REFERENCE_OHM)
+        return self.features
+
+    def _own_blocks(self) -> OwnBlocks:
+        plan = self.plan
+        _, made = segment_discretisations(
+            self.station, plan.low_hz, plan.high_hz, self.tolerance, {**self._options, "mesh_hz": plan.high_hz}
+        )
+        return OwnBlocks(made)
+
     def _seeds(self, wanted: np.ndarray) -> list[float]:
-        """Return channels next to narrow resonances."""
+        """Return where the station is solved around narrow resonances that are near channels wanted [Hz].
+
+        At distances from a resonance that grow by a factor, so that quotients and estimates meet it; on channels, where there
+        are channels between solved ones, so that they are found again in a store.
+        """
         if not self.solve_missing or not len(wanted):
             return []
         step = float(np.diff(self.plan.solved).max())
-        if not self.features:
-            self.features = self.segment.features(0.5 * step)
-        seeds: set[float] = set()
-        for feature in self.features:
-            order = np.argsort(np.abs(wanted - feature.frequency_hz), kind="stable")
-            near = [f for f in wanted[order] if abs(f - feature.frequency_hz) <= SEEDS * feature.half_width_hz]
-            spread = near[:: max(1, len(near) // MOST_SEEDS)][:MOST_SEEDS]
-            # The two nearest, however narrow it is.
-            seeds |= {float(f) for f in [*spread, *wanted[order[:2]]]}
+        grid = np.asarray(self.plan.between)
+        taken = sorted(self._node_errors)
+        seeds: list[float] = []
+        for feature in self._known_features():
+            if np.abs(wanted - feature.frequency_hz).min() > SEEDED_STEPS * step:
+                continue
+            distance = max(feature.half_width_hz, LEAST_SEED_HZ)
+            ladder = [0.0]
+            while distance < step:
+                ladder += [-distance, distance]
+                distance *= SEED_RATIO
+            for offset in ladder:
+                place = float(np.clip(feature.frequency_hz + offset, self.plan.low_hz, self.plan.high_hz))
+                if len(grid):
+                    place = float(grid[np.argmin(np.abs(grid - place))])
+                room = 0.3 * max(abs(offset), feature.half_width_hz, LEAST_SEED_HZ)
+                if all(abs(place - f) > min(room, 0.3 * abs(f - feature.frequency_hz) + room) for f in (*taken, *seeds)):
+                    seeds.append(place)
         return sorted(seeds)
 
     def solution(self, frequency_hz: float) -> Solution:

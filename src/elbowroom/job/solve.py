@@ -218,6 +218,7 @@ def to_record(solution: Solution, attributes: dict[str, Any], *, single_storage:
             "pattern_error": s.pattern_error,
             "port_matrix_error": s.port_matrix_error,
             "origin": s.origin,
+            "probes": [[z.real, z.imag] for z in s.probes],
             # Rounding depends on how sums are split among threads, and on nothing else of the machine at hand.
             "blas_threads": blas_threads(),
             "loop_threads": loop_threads(),
@@ -259,6 +260,7 @@ def stored_statistics(record: Record) -> SolveStatistics:
         port_matrix_error=float(attributes["port_matrix_error"]),
         # Files of before there were others hold what was assembled.
         origin=attributes.get("origin", ORIGINS[0]),
+        probes=tuple(complex(*z) for z in attributes.get("probes", [])),
     )
 
 

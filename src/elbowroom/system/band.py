@@ -16,11 +16,12 @@ from __future__ import annotations
 import time
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 from scipy.linalg import cholesky, solve_triangular
 
-from elbowroom.base.arrays import ComplexArray
+from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.mesh import MeshSettings
 from elbowroom.geometry.stations import Station
@@ -208,6 +209,86 @@ class SegmentSettings:
             raise ModelRangeError(msg)
 
 
+def segment_discretisations(
+    station: Station,
+    low_hz: float,
+    high_hz: float,
+    tolerance: float,
+    options: dict[str, Any],
+    *,
+    progress: Progress | None = None,
+) -> tuple[FloatArray, list[Discretisation]]:
+    """Return the frequencies [Hz] at which a segment is assembled, and the station at these and halfway between.
+
+    Parameters
+    ----------
+    station : Station
+        Antennas and ground.
+    low_hz, high_hz : float
+        Ends of the segment [Hz].
+    tolerance : float
+        Error of embedded patterns that is aimed at.
+    options : dict
+        For :func:`elbowroom.system.discretisation.discretise`.
+    progress : callable, optional
+        Told the stage and the fraction done.
+    """
+    intervals = intervals_for(high_hz - low_hz, reach_of(station), INTERPOLATION_SHARE * tolerance)
+    fine = band_nodes(low_hz, high_hz, OWN_FACTOR * intervals)
+    made = []
+    for done, f in enumerate(fine):
+        made.append(discretise(station, float(f), **options))
+        if progress is not None:
+            progress("own blocks", (done + 1) / len(fine))
+    return band_nodes(low_hz, high_hz, intervals), made
+
+
+def narrow_features(
+    own: OwnBlocks, space: CurrentSpace, probed: dict[float, ComplexArray], widest_hz: float, reference_ohm: float
+) -> list[Feature]:
+    """Return the resonances of a segment whose half-width is at most so much [Hz], of designs alone and of the array.
+
+    Those of a design are found wherever they lie and however narrow they are; in the array they come in groups close by, one of
+    each antenna and polarisation.  Those that only the array has are found from the solved frequencies, in the precision of their
+    factors, where these are not much farther apart than the array's resonances are wide as a whole.
+
+    Parameters
+    ----------
+    own : OwnBlocks
+        Own blocks of the segment.
+    space : CurrentSpace
+        Its functions.
+    probed : dict of float to complex128 (K,)
+        What random sources inside a few antennas drive there, at solved frequencies [Hz].
+    widest_hz : float
+        Largest half-width [Hz].
+    reference_ohm : float
+        Resistance across every port [ohm].
+    """
+    found: list[Feature] = []
+    rng = np.random.default_rng(0)
+    low_hz, high_hz = float(own.nodes[0]), float(own.nodes[-1])
+    with single_threaded_blas():
+        for k in own.distinct()[:MOST_SCANNED]:
+            basis = space.bases[k]
+            assert basis is not None
+            block = own.loaded_in(k, basis, reference_ohm)
+            sources = rng.normal(size=(basis.shape[1], 3))
+
+            def answer(f: float, block=block, sources=sources) -> ComplexArray:  # type: ignore[no-untyped-def]
+                return np.asarray(sources.T @ np.linalg.solve(block(f), sources), dtype=complex).ravel()
+
+            name = own.name_of(k)
+            found += [Feature(f, width, name) for f, width in scanned(answer, low_hz, high_hz, widest_hz)]
+    if len(probed) >= FEWEST_PROBED:
+        nodes = np.array(sorted(probed))
+        values = np.array([probed[f] for f in nodes])
+        for pole, height in narrow_poles(nodes, values, SINGLE_FIT, widest_hz):
+            if height > STANDS_OUT:
+                found.append(Feature(pole.real, abs(pole.imag), "array"))
+    return sorted(found)
+
+
 class BandSegment:
     """A station between two frequencies, to be solved at any in between.
 
@@ -274,13 +355,9 @@ class BandSegment:
         self._clock = time.perf_counter()
         self.checked: dict[float, tuple[float, float]] = {}
         self.probed: dict[float, ComplexArray] = {}
-        intervals = intervals_for(high_hz - low_hz, reach_of(station), INTERPOLATION_SHARE * self.settings.tolerance)
-        self.nodes = band_nodes(low_hz, high_hz, intervals)
-        fine = band_nodes(low_hz, high_hz, OWN_FACTOR * intervals)
-        made = []
-        for done, f in enumerate(fine):
-            made.append(self._discretised(f))
-            self._tell("own blocks", (done + 1) / len(fine))
+        self.nodes, made = segment_discretisations(
+            station, low_hz, high_hz, self.settings.tolerance, self._options, progress=progress
+        )
         self.own = OwnBlocks(made)
         self._at_nodes = made[::OWN_FACTOR]
         ends = (self._at_nodes[0], self._at_nodes[-1])
@@ -368,7 +445,9 @@ class BandSegment:
     def _check_at_resonances(self) -> None:
         """Have the residual worked out at the narrowest resonances of designs, which ask most of the functions."""
         widest = CHECKED_WIDTH * (self.high_hz - self.low_hz)
-        narrowest = sorted(self._design_features(widest), key=lambda found: found.half_width_hz)[:MOST_RESONANCES]
+        narrowest = sorted(
+            narrow_features(self.own, self.space, {}, widest, self.reference_ohm), key=lambda found: found.half_width_hz
+        )[:MOST_RESONANCES]
         for found in narrowest:
             # Places shift a little with the functions; once looked at, a neighbourhood is not looked at again.
             if all(abs(found.frequency_hz - f) > widest for f in self._checkers):
@@ -461,42 +540,13 @@ class BandSegment:
         statistics = SolveStatistics(
             "reduced", "single" if self.samples.dtype == np.complex64 else "double", d.n_unknowns, d.n_ports, float("nan"),
             mesh_error=self.mesh_error, seconds=seconds, n_functions=self.space.size, pattern_error=error,
-            port_matrix_error=port_error, origin="interpolated matrix",
+            port_matrix_error=port_error, origin="interpolated matrix", probes=tuple(map(complex, self.probed[d.frequency_hz])),
         )  # fmt: skip
         return ChannelSolution(d, currents, self.space, isolated, statistics, sensitivity)
 
     def features(self, widest_hz: float) -> list[Feature]:
-        """Return the resonances whose half-width is at most so much [Hz], of designs alone and of the array as solved so far.
-
-        Those of a design are found wherever they lie and however narrow they are; in the array they come in groups close by, one
-        of each antenna and polarisation.  Those that only the array has are found once it is solved at frequencies about as far
-        apart as the resonances between are wide in all, in the precision of the factors.
-        """
-        found = self._design_features(widest_hz)
-        if len(self.probed) >= FEWEST_PROBED:
-            nodes = np.array(sorted(self.probed))
-            values = np.array([self.probed[f] for f in nodes])
-            for pole, height in narrow_poles(nodes, values, SINGLE_FIT, widest_hz):
-                if height > STANDS_OUT:
-                    found.append(Feature(pole.real, abs(pole.imag), "array"))
-        return sorted(found)
-
-    def _design_features(self, widest_hz: float) -> list[Feature]:
-        found: list[Feature] = []
-        rng = np.random.default_rng(0)
-        with single_threaded_blas():
-            for k in self.own.distinct()[:MOST_SCANNED]:
-                basis = self.space.bases[k]
-                assert basis is not None
-                block = self.own.loaded_in(k, basis, self.reference_ohm)
-                sources = rng.normal(size=(basis.shape[1], 3))
-
-                def answer(f: float, block=block, sources=sources) -> ComplexArray:  # type: ignore[no-untyped-def]
-                    return np.asarray(sources.T @ np.linalg.solve(block(f), sources), dtype=complex).ravel()
-
-                name = self.own.name_of(k)
-                found += [Feature(f, width, name) for f, width in scanned(answer, self.low_hz, self.high_hz, widest_hz)]
-        return found
+        """Return the narrow resonances known so far; see :func:`narrow_features`."""
+        return narrow_features(self.own, self.space, self.probed, widest_hz, self.reference_ohm)
 
     def _raised(self, sensitivity: float) -> float:
         return max(1.0, sensitivity / min(known for _, known in self.checked.values()))

@@ -68,6 +68,8 @@ class SolveStatistics:
     origin : str
         One of `ORIGINS`: whether the matrix was assembled at this frequency, or interpolated along frequency and factored, or
         currents were interpolated between solved frequencies.  Stated errors hold what interpolation adds.
+    probes : tuple of complex
+        What random sources inside a few antennas drive there, by which resonances are found along frequency; may be empty.
     """
 
     strategy: str
@@ -81,6 +83,7 @@ class SolveStatistics:
     pattern_error: float = 0.0
     port_matrix_error: float = 0.0
     origin: str = "assembled"
+    probes: tuple[complex, ...] = ()
 
 
 @dataclass(frozen=True)
