@@ -14,6 +14,7 @@ from elbowroom.job.groundchecks import HORIZON_NOTE
 from elbowroom.job.jobfile import read_job
 from elbowroom.job.pipeline import JobRun
 from elbowroom.job.solve import solution_key
+from elbowroom.job.templates import write_template
 from elbowroom.system.discretisation import FarSettings
 from elbowroom.system.self_block import NearSettings
 
@@ -185,3 +186,15 @@ def test_job__beams_near_the_horizon_over_soil_are_doubted(job):
     over_soil = job(SOIL + "relative_permittivity = 10\nconductivity_s_per_m = 0.01")
     assert any(HORIZON_NOTE in str(p) for p in JobRun(over_soil).problems())
     assert not any(HORIZON_NOTE in str(p) for p in JobRun(job("")).problems())
+
+
+def test_template__its_ground_is_one(tmp_path):
+    write_template("small", tmp_path)
+    path = tmp_path / "job.toml"
+    lines = path.read_text().splitlines()
+    first = lines.index("# [station.ground]")
+    block = [line.removeprefix("# ") for line in lines[first : first + 6]]
+    kept = [line for line in lines if not line.startswith("ground =")]
+    at = kept.index("[band]")
+    path.write_text("\n".join([*kept[:at], *block, *kept[at:]]))
+    assert read_job(path).ground == MeshOnSoil(Soil(10.0, 0.01), 0.1, 0.0015)
