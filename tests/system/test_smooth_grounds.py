@@ -11,6 +11,7 @@ from elbowroom.geometry.stations import Placed, Station
 from elbowroom.kernels import grounds
 from elbowroom.kernels.grounds import PerfectGroundKernels, PointKernels
 from elbowroom.kernels.points import free_kernel
+from elbowroom.kernels.soil.table import build_table
 from elbowroom.radiation.patterns import station_patterns
 from elbowroom.system.assembly import PairFiller, antenna_distances
 from elbowroom.system.band import BandSegment, SegmentSettings
@@ -265,3 +266,36 @@ def test_band_segment__over_soil_reflects_as_at_the_frequency_asked_for():
     expected = station_patterns(exact, currents.currents, frame)
     assert relative(found, expected) < 1e-5
     assert made.discretisation.ground.response.wavenumber == exact.wavenumber
+
+
+def test_tables__are_made_once_for_a_frequency_and_shared_by_all_who_ask(monkeypatch):
+    made = []
+
+    def counted(response, *where, **options):
+        made.append((response, where))
+        return build_table(response, *where, **options)
+
+    monkeypatch.setattr("elbowroom.kernels.soil.table.build_table", counted)
+    d = discretise(station(ANY_SOIL), FREQUENCY_HZ)
+    solve_reduced(d, ReductionSettings(1e-4))
+    alone = solve_isolated(d)
+    mesh_error(d, alone)
+    station_patterns(d, solve_direct(d)[0].currents, direction_frame([0.3], [0.1]))
+    assert len(made) == 1
+    extent = extent_of(d.station)
+    assert made[0][1] == (extent.widest_m, 2.0 * extent.lowest_m, 2.0 * extent.highest_m)
+    # patterns alone need none
+    bare = discretise(station(ANY_SOIL), FREQUENCY_HZ, self_blocks=False)
+    station_patterns(bare, np.ones((bare.n_unknowns, 1), dtype=complex), direction_frame([0.3], [0.1]))
+    assert len(made) == 1
+
+
+def test_reduced_solution__over_soil_moves_farther_out_than_its_tables_reach():
+    grid = [(2.0 * i, 1.9 * j + 0.1 * i, 0.0) for i in range(2) for j in range(3)]
+    d = discretise(Station([Placed(crossed(), p) for p in grid], ANY_SOIL), FREQUENCY_HZ)
+    movable = ReducedStation(d, ReductionSettings(1e-4), movable=True)
+    assert movable.moved({1: (0.1, 1.8)}).discretisation.ground is d.ground
+    moved = movable.moved({5: (9.0, 8.0)})
+    fresh = discretise(moved.discretisation.station, FREQUENCY_HZ)
+    direct, _ = solve_direct(fresh)
+    assert relative(moved.currents.loaded_admittance, direct.loaded_admittance) < moved.statistics.pattern_error < 1e-3

@@ -197,7 +197,8 @@ class OwnBlocks:
             made = np.tensordot(weights, self._samples[kinds[0]], axes=1) + lossy[id(losses)]
             blocks |= dict.fromkeys(kinds, 0.5 * (made + made.T))
         kinds_now = [Kind(q.antenna, q.mesh, q.orientation, q.height, blocks[k]) for k, q in enumerate(model.kinds)]
-        return replace(model, frequency_hz=float(frequency_hz), kinds=kinds_now)
+        ground = model.ground.at(float(frequency_hz))
+        return replace(model, frequency_hz=float(frequency_hz), kinds=kinds_now, ground=ground)
 
     def loaded_in(self, kind: int, basis: ComplexArray, reference_ohm: float) -> Callable[[float], ComplexArray]:
         """Return what gives the loaded own block of a kind in some functions (N, n), (n, n) [ohm], at a frequency [Hz].
