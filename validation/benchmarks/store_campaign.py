@@ -25,7 +25,7 @@ from pathlib import Path
 import numpy as np
 import psutil
 
-from elbowroom.base.errors import SolveError
+from elbowroom.base.errors import ResourceError
 from elbowroom.job.jobfile import read_job
 from elbowroom.job.solve import SOLUTION_SCHEMA
 from elbowroom.store import Hdf5Store, Record, StoreDamageWarning, content_key
@@ -284,7 +284,8 @@ def kill_at_random(reference: Reference, n_kills: int, rng: np.random.Generator,
         if rng.random() < 0.5:
             end_orphans(orphans)
         when = f"after kill {tally.kills.total()}"
-        if process.pid not in victims and code not in (0, SolveError.exit_code):
+        # a unit whose worker was killed twice is given up, as one that needs more memory than there is
+        if process.pid not in victims and code not in (0, ResourceError.exit_code):
             tally.failures.append(f"{when}: killed workers ended the run with code {code}: {complaint.strip()[-300:]}")
         if is_fault(complaint):
             tally.failures.append(f"{when}: {complaint.strip()[-600:]}")
