@@ -181,3 +181,31 @@ def test_progress__stages_of_several_frequencies_of_one_item():
     assert progress.counts()["fraction_of_all"] == pytest.approx(0.5)
     progress.stage(2e8, "assemble", 1.0)
     assert progress.counts()["fraction_of_all"] == pytest.approx(0.5 + 0.5 * 0.25)
+
+
+def test_campaign__samples_stations_of_the_same_antennas_once(job, monkeypatch):
+    from elbowroom.job import sampling
+
+    asked = []
+
+    def needed(station, frequency_hz, mesh, tolerance):
+        asked.append((len(station), frequency_hz))
+        return 10 * len(station)
+
+    monkeypatch.setattr(sampling, "functions_needed", needed)
+    text = job.read_text().replace('method = "auto"', 'method = "reduced"')
+    job.write_text(text)
+    layout = job.parent / "layout.csv"
+    rows = layout.read_text().splitlines(keepends=True)
+    (job.parent / "fewer.csv").write_text("".join(rows[:-1]))
+    other = job.parent / "fewer.toml"
+    other.write_text(text.replace('layout = "layout.csv"', 'layout = "fewer.csv"'))
+    runs = [JobRun(read_job(job)), JobRun(read_job(other))]
+    assert [len(run.station) for run in runs] == [7, 6]
+    found = Campaign(runs)
+    found.predict()
+    assert not asked
+    found.predict(sampled=True)
+    assert asked == [(7, 110e6), (7, 165e6)]
+    whole, fewer = (found.units[i].prediction.disk_bytes for i in (0, 2))
+    assert fewer < whole

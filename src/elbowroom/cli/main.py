@@ -160,9 +160,6 @@ def inspect(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> N
             screen.say("no problems found in the model")
     if not errors:
         rows = []
-        if any(run.solver_at(f) == "reduced" for f in run.frequencies_hz):
-            screen.say("functions of the reduced solver are made at up to three frequencies, to tell memory and disk")
-            run.sample_functions()
         for unit in run.plan():
             mesh = mesh_statistics(run.station, unit.frequency_hz, run.job.mesh)
             p = unit.prediction
@@ -183,6 +180,10 @@ def inspect(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> N
             rows,
         )  # fmt: skip
         screen.say(f"memory available: {readable_bytes(available_memory_bytes())}")
+        if any(run.solver_at(f) == "reduced" for f in run.frequencies_hz):
+            screen.say(
+                "disk: to a third where the solver is reduced; 'elbowroom solve --plan' takes longer and tells within 10 %"
+            )
     if errors:
         sys.exit(3)
 

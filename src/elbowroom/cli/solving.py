@@ -105,6 +105,8 @@ def solve_all(runs: list[JobRun], screen: Screen, wish: Wish | None = None) -> l
                 screen.warn(problem.text)
     campaign = Campaign(runs)
     campaign.read_stored()
+    if wish.plan_only and any(u.run.solver_at(u.frequency_hz) == "reduced" for u in campaign.to_solve):
+        screen.say("making functions of the reduced solver at up to three frequencies of each station, to tell memory and disk")
     campaign.predict(sampled=wish.plan_only)
     # Where workers are elsewhere, so is the memory that counts; it is looked at when they are known.
     campaign.check(available_bytes=None if wish.cluster is None else sys.maxsize)

@@ -245,6 +245,19 @@ class JobRun:
         if reduced and self._functions is None:
             self._functions = FunctionCounts(self.station, reduced, self.job.mesh, self.job.tolerance)
 
+    def functions_as(self, other: JobRun) -> bool:
+        """Take the number of functions an antenna from another job, if that has the same antennas, band and solver; say whether."""
+        ours, theirs = self.job, other.job
+        same = (
+            self.station.designs == other.station.designs
+            and self.station.ground == other.station.ground
+            and self.frequencies_hz == other.frequencies_hz
+            and (ours.solver, ours.mesh, ours.tolerance) == (theirs.solver, theirs.mesh, theirs.tolerance)
+        )
+        if same and other._functions is not None:
+            self._functions = other._functions.scaled(len(self.station) / len(other.station))
+        return same
+
     def path_of(self, frequency_hz: float) -> Path:
         """Return the store's file of the unit at a frequency [Hz]."""
         return self.store.path_of(self.key(frequency_hz))

@@ -7,6 +7,7 @@ few frequencies, with the trial on a few antennas that decides how many serve, a
 
 from __future__ import annotations
 
+import copy
 from collections.abc import Sequence
 
 import numpy as np
@@ -63,6 +64,12 @@ class FunctionCounts:
         chosen = np.unique(np.linspace(0, len(frequencies_hz) - 1, min(MOST_SAMPLES, len(frequencies_hz))).astype(int))
         self._frequencies_hz = np.array([frequencies_hz[i] for i in chosen])
         self._counts = np.array([functions_needed(station, f, mesh, tolerance) for f in self._frequencies_hz], dtype=float)
+
+    def scaled(self, factor: float) -> FunctionCounts:
+        """Return the numbers for a station of so many times the antennas."""
+        other = copy.copy(self)
+        other._counts = factor * self._counts
+        return other
 
     def at(self, frequency_hz: float) -> float:
         """Return the number at a frequency [Hz], linear between samples."""

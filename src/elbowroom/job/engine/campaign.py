@@ -112,10 +112,16 @@ class Campaign:
         Parameters
         ----------
         sampled : bool, optional
-            Whether to make the functions of reduced units at a few frequencies, which takes seconds for each station.
+            Whether to make the functions of reduced units at a few frequencies, which takes seconds for each station; stations of
+            the same antennas are taken to need as many for each.
         """
-        for run in self.runs if sampled else ():
-            run.sample_functions()
+        wanting = {id(u.run) for u in self.to_solve} if sampled else set()
+        samples: list[JobRun] = []
+        for run in (r for r in self.runs if id(r) in wanting):
+            alike = next((other for other in samples if run.functions_as(other)), None)
+            if alike is None:
+                run.sample_functions()
+                samples.append(run)
         for unit in self.to_solve:
             unit.prediction = unit.run.predicted(unit.frequency_hz)
 
