@@ -246,7 +246,7 @@ class JobRun:
             self._functions = FunctionCounts(self.station, reduced, self.job.mesh, self.job.tolerance)
 
     def functions_as(self, other: JobRun) -> bool:
-        """Take the number of functions an antenna from another job, if that has the same antennas, band and solver; say whether."""
+        """Take the functions of each antenna from another job of the same antennas, band and solver; say whether it is one."""
         ours, theirs = self.job, other.job
         same = (
             self.station.designs == other.station.designs
