@@ -11,10 +11,12 @@ from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import Wire
 from elbowroom.job.checks import check_station
 from elbowroom.job.groundchecks import HORIZON_NOTE
+from elbowroom.job.groups import solve_group
 from elbowroom.job.jobfile import read_job
 from elbowroom.job.pipeline import JobRun
-from elbowroom.job.solve import solution_key
+from elbowroom.job.solve import SOLUTION_SCHEMA, solution_key, solve
 from elbowroom.job.templates import write_template
+from elbowroom.store import MemoryStore
 from elbowroom.system.discretisation import FarSettings
 from elbowroom.system.self_block import NearSettings
 
@@ -198,3 +200,39 @@ def test_template__its_ground_is_one(tmp_path):
     at = kept.index("[band]")
     path.write_text("\n".join([*kept[:at], *block, *kept[at:]]))
     assert read_job(path).ground == MeshOnSoil(Soil(10.0, 0.01), 0.1, 0.0015)
+
+
+@pytest.mark.parametrize("solver", ["direct", "reduced"])
+def test_store__gives_back_a_station_over_soil_as_it_was_solved(solver):
+    table = TabulatedSoil((50e6, 200e6), (12.0, 9.0), (0.01, 0.02))
+    wires = [Wire((0.0, -0.4, 0.8), (0.0, 0.4, 0.8), 0.002), Wire((-0.4, 0.0, 0.9), (0.4, 0.0, 0.9), 0.002)]
+    design = Antenna("cross", wires, [Port("y", 0), Port("x", 1)])
+    station = Station([Placed(design, (1.5 * n, 0.2 * n, 0.0)) for n in range(3)], MeshOnSoil(table, 0.1, 1e-3))
+    store = MemoryStore(SOLUTION_SCHEMA)
+    first = solve(station, 150e6, solver=solver, store=store)
+    again = solve(station, 150e6, solver=solver, store=store, only_stored=True)
+    theta, phi = np.array([0.1, 1.2]), np.array([0.3, 4.0])
+    np.testing.assert_array_equal(again.scattering_matrix(), first.scattering_matrix())
+    np.testing.assert_allclose(again.embedded_patterns(theta, phi), first.embedded_patterns(theta, phi), rtol=1e-12)
+    np.testing.assert_allclose(again.isolated_patterns(theta, phi), first.isolated_patterns(theta, phi), rtol=1e-12)
+    weights = first.pointing_weights(0.2, 0.0, port="x")
+    np.testing.assert_allclose(
+        again.power_parts(weights).fraction("ground"), first.power_parts(weights).fraction("ground"), rtol=1e-9
+    )
+    # the same numbers without a table of frequencies are the same station
+    constant = Station(station.placed, MeshOnSoil(table.at(150e6), 0.1, 1e-3))
+    solve(constant, 150e6, solver=solver, store=store, only_stored=True)
+
+
+def test_group__of_stations_over_soil_is_each_with_its_neighbours():
+    wires = [Wire((0.0, -0.4, 0.8), (0.0, 0.4, 0.8), 0.002)]
+    design = Antenna("rod", wires, [Port("y", 0)])
+    ground = Soil(10.0, 0.01)
+
+    def stand(east, name):
+        return Station([Placed(design, (east + 1.4 * n, 0.0, 0.0), name=f"{name}{n}") for n in range(2)], ground)
+
+    group = solve_group([stand(0.0, "A"), stand(8.0, "B")], 150e6, 100.0, tolerance=1e-5)
+    whole = solve(Station([*stand(0.0, "A").placed, *stand(8.0, "B").placed], ground), 150e6)
+    found = group[0].solution.impedance_matrix()[0, 0]
+    assert abs(found - whole.impedance_matrix()[0, 0]) < 1e-5 * abs(found)
