@@ -48,6 +48,17 @@ def test_grounds__takes_soil_and_mesh_from_the_job(command, job, change):
     assert states == ["from store"]
 
 
+def test_grounds__does_not_write_over_the_table_of_the_soil(command, job, change):
+    table = "frequency_hz,relative_permittivity,conductivity_s_per_m\n50e6,12,0.01\n300e6,9,0.02\n"
+    (job.parent / "grounds.csv").write_text(table)
+    change(job, "\n[band]", '\n[station.ground]\nkind = "soil"\nfile = "grounds.csv"\n[band]')
+    job.write_text("\n".join(line for line in job.read_text().splitlines() if not line.startswith("ground =")))
+    outcome = command("grounds", job, "--output", job.parent)
+    assert outcome.code == 7
+    assert "it is a file of the job itself" in outcome.all
+    assert (job.parent / "grounds.csv").read_text() == table
+
+
 @pytest.mark.parametrize(
     ("options", "code", "told"),
     [

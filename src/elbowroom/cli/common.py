@@ -87,8 +87,8 @@ def checked_output(run: JobRun, path: Path) -> Path:
     from elbowroom.base.errors import ExportError
 
     target, job = path.resolve(), run.job
-    own = [job.path, job.layout_path, *job.antenna_paths.values(), *([job.as_built_path] if job.as_built_path else [])]
-    if any(target == Path(p).resolve() for p in own):
+    own = [job.path, job.layout_path, *job.antenna_paths.values(), job.as_built_path, job.ground_path]
+    if any(target == Path(p).resolve() for p in own if p is not None):
         msg = f"cannot write {path}: it is a file of the job itself"
         raise ExportError(msg)
     if target.is_relative_to(job.store_folder.resolve()):

@@ -63,6 +63,7 @@ def grounds(
     own = open_job(job, frequencies_hz, screen)
     known = compared_grounds(own.job.ground, None if soil is None else Soil(*soil), wire_mesh)
     folder = checked_folder(output or own.job.output_folder)
+    table = checked_output(own, folder / "grounds.csv")
     about = [f"{name}: {ground.describe()}" for name, ground in known.items() if ground.describe() != name]
     for line in about:
         screen.say(f"  {line}")
@@ -73,7 +74,6 @@ def grounds(
         for name, ground in known.items()
     }
     rows = _compared(own, runs, known, screen)
-    table = checked_output(own, folder / "grounds.csv")
     write_ground_figures(rows, table, (f"elbowroom {__version__}; job {own.job.title}", *about))
     _show(rows, screen)
     screen.wrote(table, "all figures and what they mean")

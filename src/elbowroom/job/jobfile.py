@@ -209,6 +209,7 @@ def read_job(path: str | Path) -> Job:
         store_folder=folder / parts["store"].folder,
         output_folder=folder / parts["output"].folder,
         as_built_path=None if station_table.as_built is None else folder / station_table.as_built,
+        ground_path=folder / ground_table["file"] if ground_table is not None and "file" in ground_table else None,
         offsets=offsets,
         damage=damage,
         store_precision=parts["store"].precision,

@@ -120,6 +120,8 @@ class Job:
         Step of maps [deg].
     store_folder, output_folder : Path
         Where results go.
+    ground_path : Path or None
+        The table of the soil, if it has one.
     as_built_path : Path or None
         The file of offsets.
     offsets : Offsets or None
@@ -158,6 +160,7 @@ class Job:
     store_folder: Path
     output_folder: Path
     as_built_path: Path | None = None
+    ground_path: Path | None = None
     offsets: Offsets | None = None
     damage: Damage = field(default_factory=Damage)
     store_precision: str = "double"
