@@ -164,6 +164,7 @@ class Tally:
     damaged_files: int = 0
     caught_writing: int = 0
     caught_claimed: int = 0
+    ended_equal: bool = False
 
 
 def check_store(reference: Reference, tally: Tally, when: str) -> set[str]:
@@ -295,7 +296,9 @@ def kill_at_random(reference: Reference, n_kills: int, rng: np.random.Generator,
     end_orphans(orphans)
     check_store(reference, tally, "after the last kill")
     code, complaint = finish(start(job), job)
+    n_before = len(tally.failures)
     good = check_store(reference, tally, "at the end")
+    tally.ended_equal = good == set(reference.records) and len(tally.failures) == n_before
     if code != 0 or good != set(reference.records):
         tally.failures.append(f"the last run ended with code {code} and {len(good)} good units: {complaint.strip()[-300:]}")
     rest = [p.name for p in store.folder.iterdir() if p.name not in {f"{key}.h5" for key in reference.records}]
@@ -422,7 +425,7 @@ def main() -> None:
                 f"{tally.kills.total()} random kills ({', '.join(f'{n} of a {k} process' for k, n in sorted(tally.kills.items()))}): "
                 f"{tally.caught_writing} while a file was being written, {tally.caught_claimed} while a unit was claimed, "
                 f"{tally.damaged_files} damaged files found, {len(tally.failures)} failures; at the end all "
-                f"{len(reference.records)} units equal the undisturbed run's bit for bit: {not tally.failures}"
+                f"{len(reference.records)} units equal the undisturbed run's bit for bit: {tally.ended_equal}"
             )
             pair = Tally()
             n_stored = two_at_once(reference, pair)
