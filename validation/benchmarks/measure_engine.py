@@ -50,12 +50,13 @@ antenna = "antenna.toml"
 start_hz = {start:.6f}
 stop_hz = {stop:.6f}
 step_hz = {step:.6f}
+segments = "{segments}"
 [solver]
 method = "{method}"
 """
 
 
-def write_job(folder: Path, antennas: int, units: int, method: str, step_hz: float) -> Path:
+def write_job(folder: Path, antennas: int, units: int, method: str, step_hz: float, segments: str = "none") -> Path:
     """Write a job of some antennas at so many frequencies around 150 MHz and return its path."""
     folder.mkdir(parents=True)
     layout = random_disc(antennas, 17.5 * math.sqrt(antennas / 256), 1.4, 1)
@@ -63,7 +64,7 @@ def write_job(folder: Path, antennas: int, units: int, method: str, step_hz: flo
     (folder / "antenna.toml").write_text(ANTENNA)
     start = 150e6
     path = folder / "job.toml"
-    path.write_text(JOB.format(start=start, stop=start + (units - 1) * step_hz, step=step_hz, method=method))
+    path.write_text(JOB.format(start=start, stop=start + (units - 1) * step_hz, step=step_hz, segments=segments, method=method))
     return path
 
 
@@ -102,7 +103,6 @@ def throughput(antennas: int, units: int) -> None:
             folder = Path(place)
             warm = write_job(folder / "warm", 8, 1, method, 1e6)
             sequence_seconds(warm, folder / "warm-store")
-            # Steps so wide that every frequency is assembled for itself.
             job = write_job(folder / "job", count, units, method, 5e6)
             alone = sequence_seconds(job, folder / "sequence")
             seconds, split = engine_seconds(job, folder / "engine", None, None)
@@ -147,7 +147,7 @@ def idle(antennas: int, units: int) -> None:
     """Time of a run that finds everything in its store; target 5 s for 1,000 units, start of the program included."""
     with tempfile.TemporaryDirectory() as place:
         folder = Path(place)
-        job = write_job(folder / "job", 240, 1000, "auto", 0.05e6)
+        job = write_job(folder / "job", 240, 1000, "auto", 0.05e6, "auto")
         run = JobRun(read_job(job))
         small = MemoryStore(SOLUTION_SCHEMA)
         solve(benchmark_station(1), 150e6, store=small)
