@@ -91,7 +91,7 @@ def points_per_element(mesh: Mesh, distance: float | FloatArray, wavenumber: flo
     return np.clip(count, mesh.order // 2 + 1, LARGEST_RULE)
 
 
-def sample_mesh(mesh: Mesh, counts: np.ndarray) -> SampledCurrents:
+def sample_mesh(mesh: Mesh, counts: np.ndarray, panels: np.ndarray | None = None) -> SampledCurrents:
     """Sample the unknowns of a mesh with the given number of Gauss points on each element.
 
     Parameters
@@ -99,7 +99,9 @@ def sample_mesh(mesh: Mesh, counts: np.ndarray) -> SampledCurrents:
     mesh : Mesh
         Elements and unknowns.
     counts : int (E,)
-        Points on each element.
+        Points on each element, or on each of its panels.
+    panels : int (E,), optional
+        Equal panels that each element is cut into; one by default.
 
     Returns
     -------
@@ -111,13 +113,17 @@ def sample_mesh(mesh: Mesh, counts: np.ndarray) -> SampledCurrents:
     for e in range(mesh.n_elements):
         n = int(counts[e])
         u, w = nodes[n, :n], weights[n, :n]
+        if panels is not None and panels[e] > 1:
+            cut = int(panels[e])
+            u = ((u + 1.0 + 2.0 * np.arange(cut)[:, None]) / cut - 1.0).ravel()
+            w = np.tile(w / cut, cut)
         values, slopes = local_values(mesh.order, u)
         points.append(mesh.start[e] + 0.5 * (u[:, None] + 1.0) * (mesh.end[e] - mesh.start[e]))
         along = (0.5 * length[e] * w[:, None] * values) @ mesh.expansion[e]
         current.append(tangent[e][:, None, None] * along)
         # ds = (h/2) du cancels the h/2 of the derivative.
         charge.append((w[:, None] * slopes) @ mesh.expansion[e])
-        wire.append(np.full(n, mesh.wire[e]))
+        wire.append(np.full(u.size, mesh.wire[e]))
     return SampledCurrents(
         points=np.concatenate(points),
         current_weights=np.concatenate(current, axis=1),

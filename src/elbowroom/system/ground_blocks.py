@@ -69,9 +69,11 @@ def ring_samples(
     """
     placed = replace(mesh, start=start, end=end)
     clear = np.minimum(start[:, 2], end[:, 2]) + lowest
-    counts = points_per_element(placed, clear, wavenumber, tolerance)
-    sampled = sample_mesh(placed, counts)
-    element = np.repeat(np.arange(mesh.n_elements), counts)
+    # Long elements close to the ground are cut into panels twice as long as the way to the image.
+    panels = np.ceil(0.5 * placed.length / clear).astype(int)
+    counts = points_per_element(placed, clear * panels, wavenumber, tolerance)
+    sampled = sample_mesh(placed, counts, panels)
+    element = np.repeat(np.arange(mesh.n_elements), counts * panels)
     first, second = _across(placed.tangent)
     angle = 2.0 * np.pi * np.arange(RING_POINTS) / RING_POINTS
     ring = mesh.radius[:, None, None] * (
