@@ -1,5 +1,6 @@
 """Bands of many channels: segments, what is solved and what is made from it, units in the store, job files."""
 
+import h5py
 import numpy as np
 import pytest
 
@@ -313,3 +314,28 @@ def test_campaign__a_segment_is_one_item(folder):
     assert Campaign([run_of(folder)]).to_solve == []
     again = run_item(items[0])
     assert [o.state for o in again.outcomes] == ["from store"] * 35
+
+
+def test_outputs__tell_solved_from_interpolated_channels(folder):
+    from elbowroom.job.beamfields import beam_fields
+    from elbowroom.job.compare import compare_beams
+    from elbowroom.job.export import TableSettings, export_csv, export_hdf5
+    from elbowroom.job.portmatrices import active_ports, write_active_ports, write_port_matrices
+
+    run = run_of(folder, "[solver]", "[[beam]]\nname = 'all'\nport = 'x'\n[solver]", frequencies_hz=[150e6, 150.5e6])
+    fields = [beam_fields(run.solution(f), run.job.beams, SKY, run.termination_at(f)) for f in run.frequencies_hz]
+    wanted = ["interpolated matrix", "interpolated currents"]
+    assert [row.origin for f in fields for row in compare_beams(f)] == wanted
+    about = {"settings": TableSettings(), "title": "t", "job_text": ""}
+    export_hdf5(folder / "beams.h5", iter(fields), 2, **about)
+    with h5py.File(folder / "beams.h5") as file:
+        assert list(file["origin"].asstr()[:]) == wanted
+    export_csv(folder / "beams.csv", iter(fields), **about)
+    lines = (folder / "beams.csv").read_text().splitlines()
+    assert [line.split("origin ")[1] for line in lines if line.startswith("# at ")] == wanted
+    write_port_matrices(run, folder / "ports.s2p")
+    write_active_ports(active_ports(run), folder / "active.csv")
+    for name in ("ports.s2p", "active.csv"):
+        text = (folder / name).read_text()
+        assert "origin interpolated matrix at 150000000 Hz" in text
+        assert "origin interpolated currents at 150500000 Hz" in text

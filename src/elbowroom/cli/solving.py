@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import contextlib
 import sys
+from collections import Counter
 from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, NamedTuple
@@ -276,7 +277,11 @@ def _show(campaign: Campaign, failures: dict[int, UnitFailure], screen: Screen) 
              readable_seconds(sum(s.seconds.values()))]
         )  # fmt: skip
     if len(rows) > MOST_ROWS:
-        screen.say(f"{len(rows)} units: no table of so many; --json gives a line for each")
+        origins = Counter(u.statistics.origin for u in campaign.units if u.statistics is not None)
+        screen.say(
+            f"{len(rows)} units ({', '.join(f'{count} {origin}' for origin, count in origins.items())}): no table of so many; "
+            "--json gives a line for each"
+        )
     elif rows:
         screen.table(
             "Solutions",

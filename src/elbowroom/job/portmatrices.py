@@ -25,6 +25,7 @@ from elbowroom.job.pipeline import JobRun, UnitProgress
 from elbowroom.job.tomlfile import near_miss
 from elbowroom.job.touchstone import PortMatrices, ports_by_name
 from elbowroom.job.touchstonewriter import write_touchstone
+from elbowroom.system.solving import ORIGIN_MEANING, ORIGINS
 
 ABOUT_FILE = (
     "Results of a model, not a measurement. Time factor exp(+j omega t). Ports of the station that are not in this file are "
@@ -109,17 +110,29 @@ def port_matrices(
         msg = f"reference_ohm: expected one positive resistance, or {len(rows)}, got {reference_ohm!r}"
         raise ModelRangeError(msg)
     reference = np.broadcast_to(reference, (len(rows),)).copy()
-    matrices = np.array(
-        [
-            run.solution(frequency, progress).port_matrix(
-                parameter, rows, termination=run.termination_at(frequency), reference_ohm=reference
-            )
-            for frequency in run.frequencies_hz
-        ]
-    )
+    made, origins = [], []
+    for frequency in run.frequencies_hz:
+        solution = run.solution(frequency, progress)
+        seen = run.termination_at(frequency)
+        made.append(solution.port_matrix(parameter, rows, termination=seen, reference_ohm=reference))
+        origins.append(solution.statistics.origin)
+    matrices = np.array(made)
     names = run.station.port_names
     comments = (ABOUT_FILE, run.job.title, *(f"port {i}: {names[row]}" for i, row in enumerate(rows, start=1)))
+    comments += tuple(origin_lines(run.frequencies_hz, origins))
     return PortMatrices(np.array(run.frequencies_hz), parameter, matrices, reference, comments)
+
+
+def origin_lines(frequencies_hz: Sequence[float] | FloatArray, origins: Sequence[str]) -> list[str]:
+    """Return what to say of frequencies [Hz] whose matrix was not assembled for themselves, nothing if there are none."""
+    if set(origins) <= {ORIGINS[0]}:
+        return []
+    lines = [f"origin: {ORIGIN_MEANING}"]
+    for origin in ORIGINS:
+        there = [f"{f:.12g}" for f, own in zip(frequencies_hz, origins, strict=True) if own == origin]
+        if there:
+            lines.append(f"origin {origin} at {', '.join(there)} Hz")
+    return lines
 
 
 def write_port_matrices(
@@ -178,6 +191,8 @@ class ActivePorts:
         Active impedance [ohm]; NaN where a port has no weight.
     reflection : complex128 (F, B, P)
         Active reflection coefficient against the termination, or the reference asked for; NaN where a port has no weight.
+    origins : tuple of str
+        Where the solution at each frequency comes from, one of `elbowroom.system.solving.ORIGINS`.
     """
 
     frequency_hz: FloatArray
@@ -186,6 +201,7 @@ class ActivePorts:
     weights: ComplexArray
     impedance_ohm: ComplexArray
     reflection: ComplexArray
+    origins: tuple[str, ...] = ()
 
     def returned_power(self) -> FloatArray:
         """Return the part of the power sent into the driven ports of each beam that comes back to them, (F, B).
@@ -255,14 +271,21 @@ def active_ports(
     if not chosen:
         msg = "active impedance: no beam to drive the ports with; the job has no [[beam]] and none was given"
         raise ModelRangeError(msg)
-    weights, impedance, reflection = [], [], []
+    weights, impedance, reflection, origins = [], [], [], []
     for frequency in run.frequencies_hz:
         solution, seen = run.solution(frequency, progress), run.termination_at(frequency)
+        origins.append(solution.statistics.origin)
         weights.append(beam_weights(solution, chosen))
         impedance.append(solution.active_impedance(weights[-1], termination=seen))
         reflection.append(solution.active_reflection(weights[-1], termination=seen, reference_ohm=reference_ohm))
     return ActivePorts(
-        np.array(run.frequencies_hz), run.station.port_names, chosen, np.array(weights), np.array(impedance), np.array(reflection)
+        np.array(run.frequencies_hz),
+        run.station.port_names,
+        chosen,
+        np.array(weights),
+        np.array(impedance),
+        np.array(reflection),
+        tuple(origins),
     )
 
 
@@ -301,6 +324,7 @@ def write_active_ports(active: ActivePorts, path: str | Path, head: Iterable[str
         for line in (
             *head,
             "Ports driven at once.  Results of a model, not a measurement.",
+            *origin_lines(active.frequency_hz, active.origins),
             "Weights are source waves behind the terminations: a port is driven by 2 w sqrt(Re Z_T) behind its termination Z_T.",
             *(f"{name}: {meaning}" for name, meaning in ACTIVE_COLUMNS.items()),
         ):
