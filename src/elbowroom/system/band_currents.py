@@ -223,11 +223,12 @@ class CurrentSamples:
             self._misses[key] = (missed, _log_product(self.nodes[window], float(self.nodes[node])))
         return self._misses[key]
 
-    def _polynomial(self, frequency_hz: float) -> Weighting | None:
+    def _polynomial(self, frequency_hz: float, goal: float = 0.0) -> Weighting | None:
+        """Return the polynomial of the least estimated error, or the one of lowest degree that meets the goal."""
         best: Weighting | None = None
         near = self._window(frequency_hz, NEIGHBOURS)
         for size in WINDOWS:
-            if size > len(self.nodes) - 1:
+            if size > len(self.nodes) - 1 or (best is not None and best.error <= goal):
                 break
             window = self._window(frequency_hz, size)
             own = _log_product(self.nodes[window], frequency_hz)
@@ -294,7 +295,7 @@ class CurrentSamples:
         if not self.nodes[0] <= frequency_hz <= self.nodes[-1]:
             msg = f"{frequency_hz:.12g} Hz lies outside the solved frequencies, {self.nodes[0]:.12g} to {self.nodes[-1]:.12g} Hz"
             raise ModelRangeError(msg)
-        best = self._polynomial(frequency_hz)
+        best = self._polynomial(frequency_hz, goal)
         assert best is not None
         if best.error <= goal or len(self.nodes) < 2 * FOLDS:
             return best
