@@ -15,6 +15,7 @@ from elbowroom.geometry.antennas import Antenna
 from elbowroom.geometry.mesh import MeshSettings, mesh_settings
 from elbowroom.geometry.stations import Station, orientation_matrix
 from elbowroom.job.checks import StationMeshes
+from elbowroom.job.groundtables import kept_ground
 from elbowroom.job.sharing import working_on
 from elbowroom.radiation.solution import Solution
 from elbowroom.store.keys import content_key
@@ -408,7 +409,8 @@ def solve(
             found = discretise(station, frequency_hz, mesh=settings, near=near, far=far, self_blocks=False)
             if record_fits(arrived, found):
                 return from_record(arrived, found)
-        d = discretise(station, frequency_hz, mesh=settings, near=near, far=far)
+        ground = kept_ground(station, frequency_hz, store)
+        d = discretise(station, frequency_hz, mesh=settings, near=near, far=far, ground=ground)
         per_kind = solve_isolated(d)
         if chosen == "reduced":
             coupled, space, statistics = solve_reduced(d, ReductionSettings(tolerance), progress=progress)

@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING
 
 from elbowroom.base.errors import ElbowroomError, StoreError
 from elbowroom.job.dropping import PORTS_SCHEMA
+from elbowroom.job.groundtables import GROUND_SCHEMA, table_key
 from elbowroom.job.solve import SOLUTION_SCHEMA
 from elbowroom.store import Hdf5Store, Schema
 from elbowroom.store.care import SCHEMA_FOLDER, UnitEntry, entries, left_behind, schema_folders
@@ -124,7 +125,10 @@ class Needs:
 
 def needs_of(run: JobRun) -> Needs:
     """Return what a job needs of its store."""
-    return Needs(run.job.path, run.needed_keys(), run)
+    keys = run.needed_keys()
+    if run.station.ground.lossy:
+        keys |= {table_key(run.station, f) for f in run.frequencies_hz}
+    return Needs(run.job.path, keys, run)
 
 
 def jobs_beside(folder: Path) -> list[JobRun]:
@@ -171,7 +175,7 @@ def schemas_in(folder: Path) -> list[Schema]:
 
 def schema_of(unit: UnitEntry) -> Schema | None:
     """Return the schema of a unit if this version of the program reads such units, else None."""
-    known = {(schema.name, schema.version): schema for schema in (SOLUTION_SCHEMA, PORTS_SCHEMA)}
+    known = {(schema.name, schema.version): schema for schema in (SOLUTION_SCHEMA, PORTS_SCHEMA, GROUND_SCHEMA)}
     return known.get((unit.schema_name, unit.schema_version))
 
 

@@ -49,6 +49,14 @@ class GroundKernels(Protocol):
         """Return the fields of the same ground for points within an extent: the same object if it serves already."""
         ...
 
+    def tables(self) -> dict[str, np.ndarray] | None:
+        """Return what was worked out beforehand for this ground, for a store to keep, or None where there is nothing such."""
+        ...
+
+    def use_tables(self, arrays: dict[str, np.ndarray]) -> None:
+        """Take what :meth:`tables` returned for the same ground, frequency and extent instead of working it out."""
+        ...
+
     def self_images(self) -> tuple[float, float, float] | None:
         """Return what the mirror image of an antenna counts in its own block, or None.
 
@@ -89,6 +97,13 @@ class FreeSpaceKernels:
         """Return itself."""
         return self
 
+    def tables(self) -> None:
+        """Return None: there is nothing to keep."""
+        return
+
+    def use_tables(self, arrays: dict[str, np.ndarray]) -> None:
+        """Take nothing."""
+
     def self_images(self) -> None:
         """Return None: there is no image."""
         return
@@ -123,6 +138,13 @@ class PerfectGroundKernels:
     def serving(self, extent: Extent) -> PerfectGroundKernels:
         """Return itself."""
         return self
+
+    def tables(self) -> None:
+        """Return None: there is nothing to keep."""
+        return
+
+    def use_tables(self, arrays: dict[str, np.ndarray]) -> None:
+        """Take nothing."""
 
     def self_images(self) -> tuple[float, float, float]:
         """Return (-1, +1, -1): the image of a horizontal current runs backwards, its charge is opposite."""

@@ -80,6 +80,17 @@ class LossyGroundKernels:
                 self._table = build_table(self.response, self.extent.widest_m, low, high, tolerance=tolerance)
             return self._table
 
+    def tables(self) -> dict[str, np.ndarray]:
+        """Return the tables as arrays, made now if need be."""
+        return self.table().to_arrays()
+
+    def use_tables(self, arrays: dict[str, np.ndarray]) -> None:
+        """Take tables made before for the same ground, frequency and extent."""
+        from elbowroom.kernels.soil.table import SoilTable
+
+        with self._lock:
+            self._table = SoilTable.from_arrays(arrays)
+
     def fill(self, points: FloatArray, points2: FloatArray, wavenumber: float, work: Workspace) -> PointKernels:
         """Return the direct kernel with what the ground adds, for horizontal and vertical currents and for charges."""
         from elbowroom.kernels.soil.fill import fill_soil

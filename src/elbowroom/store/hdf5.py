@@ -100,6 +100,10 @@ class Hdf5Store:
         """The folder of this schema and version; it need not exist yet."""
         return self._folder
 
+    def beside(self, schema: Schema) -> Hdf5Store:
+        """Return the store of another schema in the same folder, which reports damage to the same place."""
+        return Hdf5Store(self._root, schema, report=self._report)
+
     def path_of(self, key: str) -> Path:
         """Return the file of a unit, present or not.
 

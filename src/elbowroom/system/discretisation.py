@@ -243,8 +243,12 @@ def grounded_ends(placed: Placed, conducting: bool) -> np.ndarray:
     return touching
 
 
+WIDTH_STEP_M = 5.0
+"""Step of the width for which grounds are prepared [m]: stations of one scatter of places differ by less."""
+
+
 def extent_of(station: Station) -> Extent:
-    """Return where the wires of a station lie, their thickness included."""
+    """Return where the wires of a station lie, their thickness included; its width in whole steps, which like stations share."""
     positions = station.positions
     reach = lowest = highest = thickest = 0.0
     seen: set[tuple] = set()
@@ -259,7 +263,8 @@ def extent_of(station: Station) -> Extent:
         reach = max(reach, float(np.hypot(ends[:, 0], ends[:, 1]).max()))
         thickest = max(thickest, *(w.radius for w in placed.antenna.wires))
     apart = float(pdist(positions[:, :2]).max()) if len(positions) > 1 else 0.0
-    return Extent(apart + 2.0 * (reach + thickest), lowest - thickest, highest + thickest)
+    widest = float(np.ceil((apart + 2.0 * (reach + thickest)) / WIDTH_STEP_M)) * WIDTH_STEP_M
+    return Extent(widest, lowest - thickest, highest + thickest)
 
 
 def _ground_samples(mesh: Mesh, attitude: FloatArray, height: float, frequency_hz: float, near: NearSettings) -> RingSamples:
