@@ -92,10 +92,7 @@ def spectrum_nodes(height, n=36):
 
 @EVERY_SOIL
 def test_far_field__is_what_a_plane_wave_drives(record, ground):
-    """A wave and its Fresnel reflection integrated along the wires, against the receive pattern, which is the far field.
-
-    Polynomial sines leave 2e-10 of a phase (docs/conventions.md).
-    """
+    """A wave and its Fresnel reflection integrated along the wires, against the receive pattern, which is the far field."""
     station = Station([Placed(crossed(), (0, 0, 0)), Placed(crossed(), (1.6, 0.4, 0.2), 30.0, 5.0, -8.0)], ground)
     d = discretise(station, FREQUENCY_HZ)
     currents, _ = solve_direct(d, precision="double")
@@ -123,7 +120,7 @@ def test_far_field__is_what_a_plane_wave_drives(record, ground):
     wrong = np.abs(found.conj() - drive).max() / np.abs(drive).max()
     record(
         f"far field and plane-wave drive, {ground.name}", np.abs(found - drive).max() / np.abs(drive).max(), 0.0,
-        absolute=1e-9, wrong=wrong, source="reciprocity (Harrington 1961, 3-8), Fresnel coefficients (Balanis, chapter 4)",
+        absolute=1e-10, wrong=wrong, source="reciprocity (Harrington 1961, 3-8), Fresnel coefficients (Balanis, chapter 4)",
     )  # fmt: skip
 
 

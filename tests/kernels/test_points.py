@@ -68,3 +68,19 @@ def test_turn_polynomials__are_the_numbers_compiled_in():
     used = [getattr(points_numba, f"S{i}") for i in range(6)], [getattr(points_numba, f"C{i}") for i in range(6)]
     np.testing.assert_allclose(used[0], sine, rtol=1e-9)
     np.testing.assert_allclose(used[1], cosine, rtol=1e-9)
+
+
+def test_phase_polynomials__are_the_numbers_compiled_in():
+    sine, cosine = turn_polynomials(6)
+    np.testing.assert_allclose(points_numba.PHASE_S, sine, rtol=1e-8)
+    np.testing.assert_allclose(points_numba.PHASE_C, cosine, rtol=1e-8)
+
+
+def test_phases__are_good_to_a_hundredth_of_what_kernels_are():
+    rng = np.random.default_rng(5)
+    unit = rng.normal(size=(400, 3))
+    unit /= np.linalg.norm(unit, axis=1)[:, None]
+    positions = rng.uniform(-1.0, 1.0, size=(7, 3))
+    real, imag = np.empty((7, 400)), np.empty((7, 400))
+    fill_phases(unit, positions, 3.0, real, imag)
+    assert np.abs(real + 1j * imag - plane_wave_phases(unit, positions, 3.0)).max() < 1e-11

@@ -2,7 +2,7 @@
 
 Sine and cosine come from polynomials on half a turn after the whole turns are taken off, and the full angle by doubling:
 sin and cos calls would keep the loops from being vectorised.  Real and imaginary parts go to separate arrays for the same
-reason.  The relative error is below 1e-9.  Nothing here raises; ``points`` holds the slow twins and the checks.
+reason.  The relative error of kernels is below 1e-9, that of phases below 1e-11.  Nothing here raises; ``points`` holds the slow twins and the checks.
 """
 
 from __future__ import annotations
@@ -30,6 +30,18 @@ C4 = 0.23493706859053826
 C5 = -0.024395932087904245
 
 
+# The same of degree 6, errors 7.8e-14 and 7.5e-13, for phases of plane waves: patterns then differ from what waves drive by no
+# more than the solution does, and one phase serves many currents.
+PHASE_S = (
+    3.1415926535896377, -5.167712779988121, 2.5501640359103175, -0.599264433968651, 0.08214479478752049, -0.0073640055089031434,
+    0.0004474917086385203,
+)  # fmt: skip
+PHASE_C = (
+    0.9999999999992488, -4.934802200249862, 4.058712107537296, -1.3352623152560823, 0.23532543653373605, -0.025776316206473058,
+    0.0018399891145570069,
+)  # fmt: skip
+
+
 @njit(**FAST_JIT_OPTIONS)
 def _half_turn(turns):
     """Return sin and cos of half the angle that is left of ``turns`` after whole turns are taken off."""
@@ -37,8 +49,9 @@ def _half_turn(turns):
     v = u * u
     v2 = v * v
     v4 = v2 * v2
-    sine = u * ((S0 + v * S1) + v2 * (S2 + v * S3) + v4 * (S4 + v * S5))
-    cosine = (C0 + v * C1) + v2 * (C2 + v * C3) + v4 * (C4 + v * C5)
+    s, c = PHASE_S, PHASE_C
+    sine = u * ((s[0] + v * s[1]) + v2 * (s[2] + v * s[3]) + v4 * ((s[4] + v * s[5]) + v2 * s[6]))
+    cosine = (c[0] + v * c[1]) + v2 * (c[2] + v * c[3]) + v4 * ((c[4] + v * c[5]) + v2 * c[6])
     return sine, cosine
 
 
