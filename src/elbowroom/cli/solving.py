@@ -111,7 +111,10 @@ def solve_all(runs: list[JobRun], screen: Screen, wish: Wish | None = None) -> l
     campaign.predict(sampled=wish.plan_only)
     # Where workers are elsewhere, so is the memory that counts; it is looked at when they are known.
     campaign.check(available_bytes=None if wish.cluster is None else sys.maxsize)
-    split = campaign.split(wish.workers, wish.threads)
+    threads = wish.threads
+    if threads is None and wish.cluster not in (None, "local"):
+        threads = 1  # how many cores a worker elsewhere has for itself only its owner knows
+    split = campaign.split(wish.workers, threads)
     _tell_plan(campaign, split, wish, screen)
     if wish.plan_only:
         return []
@@ -182,15 +185,16 @@ def _solve(campaign: Campaign, split: Split, wish: Wish, screen: Screen) -> dict
     place_of = {id(unit): i for i, unit in enumerate(campaign.units)}
     failures: dict[int, UnitFailure] = {}
     with _log(wish.log or campaign.runs[0].job.store_folder / LOG_FILE) as log, contextlib.ExitStack() as stack:
-        progress = RunProgress(screen, items, 1 if alone else split.workers)
-        workers, described, memory_bytes = _workers(split, wish, alone, progress.stage)
+        progress = RunProgress(screen, items, split.workers)
+        staff = _staff(split, wish, alone, progress.stage)
         # Ended even if nothing is begun.
-        stack.callback(workers.stop)
-        if memory_bytes:
-            campaign.check(available_bytes=memory_bytes)
-        log.info("%d units to solve, %d in the store; %s", progress.all, sum(u.stored for u in campaign.units), described)
-        screen.say(described)
-        events = stack.enter_context(contextlib.closing(run_items(items, workers, elsewhere=campaign.elsewhere)))
+        stack.callback(staff.workers.stop)
+        progress.workers = staff.at_once
+        if staff.memory_bytes:
+            campaign.check(available_bytes=staff.memory_bytes)
+        log.info("%d units to solve, %d in the store; %s", progress.all, sum(u.stored for u in campaign.units), staff.described)
+        screen.say(staff.described)
+        events = stack.enter_context(contextlib.closing(run_items(items, staff.workers, elsewhere=campaign.elsewhere)))
         stack.enter_context(progress)
         for event in events:
             item = event.item
@@ -223,24 +227,31 @@ def _solve(campaign: Campaign, split: Split, wish: Wish, screen: Screen) -> dict
     return failures
 
 
-def _workers(split: Split, wish: Wish, alone: bool, stage: Callable[[float, str, float], None]) -> tuple[Workers, str, int]:
-    """Return who does the work, a line that says so, and the memory [byte] that each has elsewhere; 0 if unknown."""
+class _Staff(NamedTuple):
+    """Who does the work, a line that says so, how many, and the memory [byte] that each has elsewhere; 0 if unknown."""
+
+    workers: Workers
+    described: str
+    at_once: int
+    memory_bytes: int = 0
+
+
+def _staff(split: Split, wish: Wish, alone: bool, stage: Callable[[float, str, float], None]) -> _Staff:
+    """Return who does the work."""
     from elbowroom.base.machine import available_memory_bytes
     from elbowroom.job.engine.local import InProcess, ProcessWorkers
 
-    each = f"{split.threads} thread{'s' if split.threads > 1 else ''}"
+    each, count = f"{split.threads} thread{'s' if split.threads > 1 else ''}", split.workers
     if wish.cluster is not None:
         from elbowroom.job.engine.cluster import DaskWorkers, connect
 
         workers = DaskWorkers(connect(wish.cluster, workers=split.workers))
-        return workers, f"solving on a cluster of {workers.workers} workers, each unit with {each}", workers.memory_bytes
+        count = workers.workers
+        return _Staff(workers, f"solving on a cluster of {count} workers, each unit with {each}", count, workers.memory_bytes)
     if alone:
-        return InProcess(stage), f"solving in this process with {each}", 0
-    return (
-        ProcessWorkers(split.workers, available_memory_bytes()),
-        f"solving in {split.workers} worker process{'es' if split.workers > 1 else ''}, each with {each}",
-        0,
-    )
+        return _Staff(InProcess(stage), f"solving in this process with {each}", 1)
+    processes = f"{count} worker process{'es' if count > 1 else ''}"
+    return _Staff(ProcessWorkers(count, available_memory_bytes()), f"solving in {processes}, each with {each}", count)
 
 
 def _emit_unit(campaign: Campaign, unit: CampaignUnit, state: str, screen: Screen) -> None:

@@ -16,7 +16,10 @@ if TYPE_CHECKING:
     from distributed import Client, Future
 
 CONNECT_SECONDS = 30.0
-"""How long a scheduler may take to answer, and the first worker to come [s]."""
+"""How long a scheduler may take to answer [s]."""
+
+WORKER_SECONDS = 180.0
+"""How long the first worker may take to come [s]; batch systems start processes one after another."""
 
 QUEUED_PER_WORKER = 4
 """Items given to the scheduler for each of its workers: enough that none waits for us, few enough to be told what runs."""
@@ -77,7 +80,7 @@ class DaskWorkers:
     def __init__(self, client: Client) -> None:
         self._client = client
         try:
-            client.wait_for_workers(1, timeout=CONNECT_SECONDS)
+            client.wait_for_workers(1, timeout=WORKER_SECONDS)
         except TimeoutError as cause:
             client.close()
             msg = f"the cluster at {client.scheduler.address if client.scheduler else '?'} has no workers"
