@@ -2,7 +2,8 @@
 
 Sine and cosine come from polynomials on half a turn after the whole turns are taken off, and the full angle by doubling:
 sin and cos calls would keep the loops from being vectorised.  Real and imaginary parts go to separate arrays for the same
-reason.  The relative error of kernels is below 1e-9, that of phases below 1e-11.  Nothing here raises; ``points`` holds the slow twins and the checks.
+reason.  The relative error of kernels is below 1e-9, that of phases below 1e-11.  Nothing here raises; ``points`` holds the
+slow twins and the checks.
 """
 
 from __future__ import annotations
