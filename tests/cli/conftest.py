@@ -1,6 +1,7 @@
 """Running commands as a user does, inside the test's own process."""
 
 import contextlib
+import signal
 import sys
 from dataclasses import dataclass
 
@@ -20,6 +21,13 @@ class Outcome:
     @property
     def all(self):
         return self.out + self.err
+
+
+@pytest.fixture(autouse=True, scope="session")
+def _interruptible():
+    """Let programs that tests start see Ctrl-C even where the tests run in the background, where a shell turns it off."""
+    if signal.getsignal(signal.SIGINT) is signal.SIG_IGN:
+        signal.signal(signal.SIGINT, signal.default_int_handler)
 
 
 @pytest.fixture
