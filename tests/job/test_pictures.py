@@ -5,6 +5,7 @@ import os
 import struct
 import zlib
 from contextlib import contextmanager
+from dataclasses import replace
 from pathlib import Path
 
 import matplotlib
@@ -30,6 +31,8 @@ from elbowroom.job.pictures import (
     picture_name,
     port_impedances,
 )
+from elbowroom.job.pictures import ports as ports_picture
+from elbowroom.job.pictures import skymaps as skymaps_picture
 from elbowroom.job.pictures.cuts import principal_planes
 from elbowroom.job.pictures.layouts import _port_places
 from elbowroom.job.pictures.ports import input_reflection, mismatch
@@ -141,6 +144,36 @@ def test_draw_impedance__one_or_more_antennas_and_frequencies(count, frequencies
         for f in (160e6, 140e6, 150e6)[:frequencies]
     ]
     looks_drawn(draw_impedance(made, tmp_path / "z.png", title="t", ports=["y", "x"]))
+
+
+def as_interpolated(made):
+    return replace(made, statistics=replace(made.statistics, origin="interpolated currents"))
+
+
+def test_draw_impedance__channels_made_from_others_are_marked(solution, tmp_path, monkeypatch):
+    marked = []
+    monkeypatch.setattr(ports_picture, "mark_interpolated", lambda axes, x, origins: marked.append((list(x), list(origins))))
+    made = [port_impedances(solve(cluster(2), 140e6)), port_impedances(as_interpolated(solve(cluster(2), 141e6)))]
+
+    draw_impedance(made, tmp_path / "z.png")
+
+    assert marked[0] == ([140.0, 141.0], ["assembled", "interpolated currents"])
+    assert len(marked) == 8
+
+
+def test_pictures_of_a_channel_made_from_others__say_so(job, solution, tmp_path, monkeypatch):
+    said = []
+
+    def noted(path, title, details, *rest, **more):
+        said.append(list(details))
+        return sheet(path, title, details, *rest, **more)
+
+    monkeypatch.setattr(skymaps_picture, "sheet", noted)
+    for made in (solution, as_interpolated(solution)):
+        draw_sky_maps(beam_fields(made, job.beams, hemisphere_grid(15.0), job.termination_values()), 0, tmp_path / "sky.png")
+
+    assert "interpolated" not in " ".join(said[0])
+    assert "currents interpolated between solved channels" in said[1]
 
 
 def test_draw_impedance__unknown_port_and_nothing_to_draw_are_refused(solution, tmp_path):

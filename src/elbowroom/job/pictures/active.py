@@ -14,11 +14,15 @@ from elbowroom.base.arrays import FloatArray
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.job.pictures.sheets import (
     COUPLED,
+    INTERPOLATED,
     ISOLATED,
     band_text,
     frequency_text,
+    interpolated_caption,
     legend_above,
     legend_of,
+    mark_interpolated,
+    origin_text,
     printable,
     sheet,
     shortened,
@@ -74,7 +78,7 @@ def draw_active(
     x: FloatArray = np.arange(1.0, rows.size + 1) if single else active.frequency_hz / 1e6
     label = "port, in the order of the layout" if single else "frequency [MHz]"
     returned = active.returned_power()[:, beam]
-    _draw(path, "Active impedance and reflection", details, terminations, x, label, z, gamma, returned, single)
+    _draw(path, "Active impedance and reflection", details, terminations, x, label, z, gamma, returned, single, active.origins)
     return Path(path)
 
 
@@ -125,6 +129,7 @@ def draw_scan(
         f"beam {shortened(name or active.beams[0].name, 32)}: port {shortened(active.beams[0].port, 16)} of {rows.size}, "
         f"pointed along azimuth {azimuth_deg % 360.0:.5g}\u00b0",
         frequency_text(float(active.frequency_hz[0])),
+        origin_text(active.origins[0]) if active.origins else "",
     ]
     z, gamma = active.impedance_ohm[0][:, rows], np.abs(active.reflection[0][:, rows])
     label = f"zenith angle pointed at [deg], positive towards azimuth {azimuth_deg % 360.0:.5g}\u00b0"
@@ -154,8 +159,12 @@ def _draw(
     reflection: FloatArray,
     returned: FloatArray,
     single: bool,
+    origins: Sequence[str] = (),
 ) -> None:
     caption = ["" if terminations is None else termination_text(terminations), *_EXPLAINED]
+    made = list(origins).count(INTERPOLATED)
+    if made:
+        caption.append(interpolated_caption(made, single=single))
     infinite = int(np.sum(~np.isfinite(impedance)))
     if infinite:
         caption.append(f"{infinite} values without current are not drawn")
@@ -168,6 +177,8 @@ def _draw(
             (panels[2], reflection, "|active reflection| [-]"),
         ):
             _spread(axes, x, values[0] if single else values)
+            if not single:
+                mark_interpolated(axes, x, origins)
             axes.set_xlabel(label)
             axes.set_ylabel(quantity)
             axes.grid(color="0.92", lw=0.6)

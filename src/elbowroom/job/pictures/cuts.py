@@ -23,6 +23,7 @@ from elbowroom.job.pictures.sheets import (
     frequency_text,
     legend_above,
     legend_of,
+    origin_text,
     printable,
     sheet,
     shortened,
@@ -186,7 +187,7 @@ def draw_cuts(
     ]
     if component != "total":
         caption.append(f"Ludwig's third definition, co-polar azimuth {float(azimuth_deg(nominal)):.5g}\u00b0")
-    details = [title, beam_text(beam, weights), frequency_text(solution.frequency_hz)]
+    details = [title, beam_text(beam, weights), frequency_text(solution.frequency_hz), origin_text(solution.statistics.origin)]
     with sheet(path, f"Cuts, {COMPONENTS[component]}", details, caption, size=(12.0, 5.4)) as figure:
         panels = figure.subplots(1, 2, sharey=True)
         top = 0.0
@@ -293,7 +294,12 @@ def draw_element_spread(
     if left_out:
         caption.append(f"left out: {left_out} without weight, or shorted while others are not")
     number = f"{len(rows)} antenna{'' if len(rows) == 1 else 's'}"
-    details = [title, f"port {shortened(port, 24)} of {number}", frequency_text(solution.frequency_hz)]
+    details = [
+        title,
+        f"port {shortened(port, 24)} of {number}",
+        frequency_text(solution.frequency_hz),
+        origin_text(solution.statistics.origin),
+    ]
     with sheet(path, "How different are the antennas", details, caption, size=(12.0, 8.2)) as figure:
         panels = figure.subplots(2, 2, sharex=True, sharey="row", height_ratios=(1.25, 1.0))
         for (upper, lower), plane, own, alone in zip(panels.T, planes, embedded, isolated, strict=True):

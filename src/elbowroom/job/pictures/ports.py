@@ -15,10 +15,13 @@ from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.stations import PortName
 from elbowroom.job.pictures.sheets import (
     COUPLED,
+    INTERPOLATED,
     ISOLATED,
     band_text,
+    interpolated_caption,
     legend_above,
     legend_of,
+    mark_interpolated,
     printable,
     sheet,
     shortened,
@@ -26,6 +29,7 @@ from elbowroom.job.pictures.sheets import (
 )
 from elbowroom.radiation.solution import Solution
 from elbowroom.system.port_algebra import scattering_from_loaded
+from elbowroom.system.solving import ORIGINS
 from elbowroom.system.terminations import Termination, reflection_of
 
 if TYPE_CHECKING:
@@ -52,6 +56,8 @@ class PortImpedances:
     coupled_reflection, isolated_reflection : float64 (P,)
         Amplitude of the power wave that the port's termination reflects: 0 (matched) to 1, and above where the port or the
         termination has a negative resistance.
+    origin : str
+        Where the solution comes from.
     """
 
     frequency_hz: float
@@ -61,6 +67,7 @@ class PortImpedances:
     isolated_ohm: ComplexArray
     coupled_reflection: FloatArray
     isolated_reflection: FloatArray
+    origin: str = ORIGINS[0]
 
 
 def input_reflection(scattering: ComplexArray, termination: ComplexArray) -> ComplexArray:
@@ -137,7 +144,7 @@ def port_impedances(solution: Solution, termination: Termination = 100.0) -> Por
 
     return PortImpedances(
         solution.frequency_hz, solution.port_names, values, impedance(coupled), impedance(isolated),
-        mismatch(coupled, load), mismatch(isolated, load),
+        mismatch(coupled, load), mismatch(isolated, load), solution.statistics.origin,
     )  # fmt: skip
 
 
@@ -192,6 +199,10 @@ def draw_impedance(
     ]
     if len(wanted) < len(known):
         caption.append(f"ports {', '.join(wanted)} of {', '.join(known)}")
+    origins = [item.origin for item in every]
+    made = origins.count(INTERPOLATED)
+    if made:
+        caption.append(interpolated_caption(made, single=len(every) == 1))
     with sheet(
         path,
         "Port impedance and mismatch",
@@ -215,6 +226,8 @@ def draw_impedance(
                 (row[3], reflected, alone, "|reflection| at the termination [-]"),
             ):
                 _draw_spread(axes, frequencies, own, single)
+                if len(every) > 1:
+                    mark_interpolated(axes, frequencies, origins)
                 axes.set_ylabel(quantity)
                 axes.set_title(f"port {label}", loc="left")
             # Differences of rounding and residual are not to fill a panel.

@@ -30,10 +30,14 @@ from numpy.typing import ArrayLike
 from elbowroom.base.arrays import FloatArray
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.job.files import written_whole
+from elbowroom.system.solving import ORIGINS
 from elbowroom.system.terminations import ParallelCircuit, PortTermination, SampledReflection, SeriesCircuit, Termination
 
 NOT_MEASURED = "model, not a measurement"
 """Said at the foot of every picture."""
+
+INTERPOLATED = ORIGINS[2]
+"""Origin of channels that were not solved."""
 
 COUPLED, ISOLATED, DIFFERENCE = "#1b4f9c", "#c8501e", "#4d4d4d"
 """Colours of the coupled result, the isolated one and their difference; told apart in any kind of colour vision."""
@@ -180,6 +184,27 @@ def shortened(text: str, longest: int) -> str:
 def frequency_text(frequency_hz: float) -> str:
     """Return a frequency in MHz to the hertz, as ``110.25 MHz``."""
     return f"{_megahertz(frequency_hz)} MHz"
+
+
+def origin_text(origin: str) -> str:
+    """Return what a picture of one channel says of where it comes from; nothing if the station was solved there."""
+    return "currents interpolated between solved channels" if origin == INTERPOLATED else ""
+
+
+def interpolated_caption(count: int, *, single: bool = False) -> str:
+    """Return what the caption says of some channels made from solved ones; ``single`` where the picture shows nothing else."""
+    if single:
+        return origin_text(INTERPOLATED)
+    return f"strokes along the lower edge: {count} channels whose currents were interpolated between solved ones"
+
+
+def mark_interpolated(axes: Axes, x: FloatArray, origins: Sequence[str]) -> None:
+    """Mark channels at x (F,) that were made from solved ones by strokes along the lower edge; no origins: all were solved."""
+    made = [place for place, origin in zip(x, origins, strict=False) if origin == INTERPOLATED]
+    if made:
+        axes.plot(
+            made, np.zeros(len(made)), "|", transform=axes.get_xaxis_transform(), color="0.35", ms=9, mew=0.9, clip_on=False
+        )
 
 
 def band_text(frequencies_hz: Sequence[float]) -> str:

@@ -15,7 +15,16 @@ from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.directions import Directions, azimuth_deg, ludwig3
 from elbowroom.job.beamfields import BeamFields, mean_nominal_phi_rad
 from elbowroom.job.jobfile import Beam
-from elbowroom.job.pictures.sheets import HALO, decibels, frequency_text, printable, sheet, shortened, termination_text
+from elbowroom.job.pictures.sheets import (
+    HALO,
+    decibels,
+    frequency_text,
+    origin_text,
+    printable,
+    sheet,
+    shortened,
+    termination_text,
+)
 from elbowroom.system.terminations import Termination
 
 if TYPE_CHECKING:
@@ -256,7 +265,7 @@ def draw_sky_maps(
         caption.append(f"{solution.port_names[row]}: of the most central antenna of the beam")
     if component != "total":
         caption.append(f"Ludwig's third definition, co-polar azimuth {float(azimuth_deg(nominal)):.5g}\u00b0")
-    details = [title, beam_text(beam, weights), frequency_text(solution.frequency_hz)]
+    details = [title, beam_text(beam, weights), frequency_text(solution.frequency_hz), origin_text(solution.statistics.origin)]
     places = map_places(closed_grid(theta, sky), closed_grid(phi, sky), projection)
     with sheet(path, f"All-sky maps, {COMPONENTS[component]}", details, caption, size=(12.0, 10.2)) as figure:
         panels = figure.subplots(2, 3)
