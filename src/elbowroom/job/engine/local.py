@@ -99,8 +99,8 @@ class _Slot:
         return f"its worker process was ended by {name}{killer}"
 
     def ask_to_end(self) -> None:
-        if self.executor is not None:
-            self.executor.shutdown(wait=False, cancel_futures=True)
+        # The executor is not told yet: told without waiting it forgets its thread, and the end of the program meets that thread
+        # half way through closing its pipes.
         if self.process is not None and self.process.is_alive():
             self.process.terminate()
 
