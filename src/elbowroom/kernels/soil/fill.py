@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
+from numba import config
 
 from elbowroom.base.arrays import FloatArray
 from elbowroom.base.errors import ModelRangeError
@@ -47,6 +48,10 @@ def fill_soil(table: SoilTable, points: FloatArray, points2: FloatArray, work: W
     flat = work.array("soil", (8 * plane + 16,))
     begin = -flat.ctypes.data % 64 // flat.itemsize
     flat = flat[begin : begin + 8 * plane]
+    kernels = flat.reshape(8, plane)[:, : rows * count].reshape(4, 2, rows, count)
+    if config.DISABLE_JIT:  # type: ignore[attr-defined]
+        _fill_plainly(table, points, points2, kernels, direct=direct)
+        return PointKernels(kernels[0], kernels[1], kernels[2], kernels[3])
     turns, grid = table.scales
     padded = np.empty((3, -(-count // _LANES) * _LANES))
     np.multiply(points2, turns, out=padded[:, :count])
@@ -63,8 +68,17 @@ def fill_soil(table: SoilTable, points: FloatArray, points2: FloatArray, work: W
     )
     x, y, z = turns * points
     fill_pairs(x, y, z, *padded, count, turns, grid, sizes, nodes, flat, plane, *scratch, np.empty(64, dtype=flat.dtype))
-    kernels = flat.reshape(8, plane)[:, : rows * count].reshape(4, 2, rows, count)
     return PointKernels(kernels[0], kernels[1], kernels[2], kernels[3])
+
+
+def _fill_plainly(table: SoilTable, points: FloatArray, points2: FloatArray, kernels: FloatArray, *, direct: bool) -> None:
+    """Fill (4, 2, Q, Q') without compiled code, whose vector instructions have no meaning when compilation is turned off."""
+    offset = points[:, :, None] - points2[:, None, :]
+    made = np.array(table.kernels(np.hypot(offset[0], offset[1]), points[2][:, None] + points2[2]))
+    if direct:
+        distance = np.linalg.norm(offset, axis=0)
+        made[:3] += np.exp(-1j * table.wavenumber * distance) / distance
+    kernels[:, 0], kernels[:, 1] = made.real, made.imag
 
 
 def _check_reach(table: SoilTable, points: FloatArray, points2: FloatArray) -> None:
