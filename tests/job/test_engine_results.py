@@ -91,7 +91,7 @@ ROUNDING = {"double": np.finfo(np.float64).eps, "single": np.finfo(np.float32).e
 
 
 @pytest.mark.parametrize("precision", ["double", "single", "mixed", "reduced"])
-def test_thread_counts__agree_within_100_roundings(precision):
+def test_thread_counts__agree_to_100_roundings_or_to_what_refinement_leaves(precision):
     # Mixed is refined to a residual of 1e-9 and then as good as double but for the conditioning of what is left.
     limit = 1e-9 if precision == "mixed" else 100.0 * ROUNDING[precision]
     options = {"solver": "reduced"} if precision == "reduced" else {"solver": "direct", "precision": precision}

@@ -30,7 +30,7 @@ def test_split__one_unit_gets_all_cores():
 
 
 def test_split__an_odd_unit_at_the_end_is_weighed():
-    # three units on two cores: two rounds of one-thread units take 4, three two-thread units one after another 3 / 0.95
+    # three units on two cores: two rounds of one-thread units take 2, three of two threads one after another 3 / 1.6
     assert choose_split(3, unit(), cores=2, memory_bytes=24 * GIGABYTE) == Split(1, 2)
     # but what threads do not shorten takes its time either way
     assert choose_split(3, unit(serial=50.0), cores=2, memory_bytes=24 * GIGABYTE) == Split(2, 1)
@@ -56,8 +56,8 @@ def test_seconds__with_threads():
     whole = unit(10.0, serial=4.0)
     assert seconds_with(whole, 8, 8) == pytest.approx(10.0)
     one = seconds_with(whole, 1, 8)
-    # the rest is shared but for a twentieth
-    assert one == pytest.approx(4.0 + 6.0 / (0.05 + 0.95 / 8))
+    # the rest is shared but for a quarter
+    assert one == pytest.approx(4.0 + 6.0 / (0.25 + 0.75 / 8))
     assert seconds_with(whole, 4, 8) < one
 
 
