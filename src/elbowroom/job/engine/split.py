@@ -13,8 +13,8 @@ from elbowroom.base.errors import ModelRangeError
 from elbowroom.job.plan import Prediction
 
 PARALLEL_SHARE = 0.75
-"""Part of what threads can share that they do share; the rest waits.  Measured by ``validation/benchmarks/measure_engine.py`` with
-one and two threads, 80 antennas solved directly; more threads are reckoned from that."""
+"""Part of what threads can share that they do share; the rest waits.  By ``validation/benchmarks/measure_engine.py`` with
+one and two threads, 80 antennas solved directly; more are reckoned from that."""
 
 SMALL_SECONDS = 10.0
 """Predicted time of a whole job up to which it is solved in this process with all cores [s]: a worker takes about two seconds
