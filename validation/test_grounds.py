@@ -18,7 +18,8 @@ import pytest
 import references
 from elbowroom.base.constants import IMPEDANCE_OF_VACUUM, VACUUM_PERMITTIVITY, wavenumber_of
 from elbowroom.geometry.antennas import Antenna, Port
-from elbowroom.geometry.grounds import FreeSpace, MeshOnSoil, PerfectGround, Soil
+from elbowroom.geometry.grounds import FreeSpace, MeshOnSoil, PerfectGround
+from elbowroom.geometry.soils import Soil
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import Wire
 from elbowroom.job.solve import solve

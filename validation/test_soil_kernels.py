@@ -22,7 +22,7 @@ import pytest
 from numpy.polynomial import chebyshev
 
 from elbowroom.base.constants import IMPEDANCE_OF_VACUUM, VACUUM_PERMITTIVITY, wavenumber_of
-from elbowroom.kernels.soil.response import GroundResponse, bare_soil, mesh_on_soil
+from elbowroom.kernels.soil.response import GroundResponse, layered_soil, mesh_on_soil, under_mesh
 from elbowroom.kernels.soil.sommerfeld import GroundQuadrature
 
 pytestmark = pytest.mark.validation
@@ -42,6 +42,8 @@ class Case:
     rho: float
     z: float
     phi: float = 0.6
+    below: tuple[tuple[float, float, float], ...] = ()
+    """Under a layer of the soil above: depth where it begins [m], permittivity and conductivity [S/m]."""
 
     @property
     def k(self) -> float:
@@ -49,26 +51,50 @@ class Case:
 
     @property
     def eps(self) -> complex:
-        return self.relative - 1j * self.conductivity / (2.0 * pi * self.frequency_hz * VACUUM_PERMITTIVITY)
+        return self.complex_permittivity(self.relative, self.conductivity)
+
+    def complex_permittivity(self, relative: float, conductivity: float) -> complex:
+        return relative - 1j * conductivity / (2.0 * pi * self.frequency_hz * VACUUM_PERMITTIVITY)
+
+    @property
+    def strata(self) -> list[tuple[float, complex]]:
+        """Thickness and permittivity from the surface down."""
+        depths = [0.0, *(depth for depth, _, _ in self.below), float("inf")]
+        soils = [self.eps, *(self.complex_permittivity(e, s) for _, e, s in self.below)]
+        return [(b - a, eps) for a, b, eps in zip(depths, depths[1:], soils, strict=False)]
 
     def response(self) -> GroundResponse:
-        return bare_soil(self.k, self.eps) if self.mesh is None else mesh_on_soil(self.k, self.eps, *self.mesh)
+        soil = layered_soil(self.k, self.strata)
+        return soil if self.mesh is None else under_mesh(soil, *self.mesh)
 
 
 CASES = {
     "moist soil, 150 MHz, 3 m": Case(150e6, 10.0, 0.01, None, 3.0, 1.4),
     "wet soil, 50 MHz, 0.5 m": Case(50e6, 25.0, 0.05, None, 0.5, 0.6),
     "mesh on moist soil, 150 MHz, 2 m": Case(150e6, 10.0, 0.01, (0.1, 1e-3), 2.0, 1.1),
+    "dry on wet soil, 150 MHz, 2 m": Case(150e6, 4.0, 0.002, None, 2.0, 1.1, below=((0.4, 12.0, 0.01), (1.5, 25.0, 0.05))),
+    "mesh on dry on wet soil, 80 MHz, 1.5 m": Case(80e6, 5.0, 0.005, (0.1, 1e-3), 1.5, 0.9, below=((0.5, 20.0, 0.03),)),
 }
 
 
 def line_reflections(level, case):
     """Return u0 and the reflection of the transverse electric field, TM and TE, from impedances at z = 0; mpmath numbers."""
     k, eta = mpmath.mpf(case.k), mpmath.mpf(IMPEDANCE_OF_VACUUM)
-    eps = mpmath.mpc(case.eps)
-    u0, u1 = mpmath.sqrt(level**2 - k**2), mpmath.sqrt(level**2 - k**2 * eps)
+    eps = mpmath.mpc(case.eps)  # of the top layer, in which the sheet lies
+    u0 = mpmath.sqrt(level**2 - k**2)
     air_tm, air_te = u0 * eta / (1j * k), 1j * k * eta / u0
-    ground_tm, ground_te = u1 * eta / (1j * k * eps), 1j * k * eta / u1
+    ground_tm = ground_te = None
+    for thickness, inside in reversed(case.strata):
+        # Each layer is a line that ends in what lies below it.
+        layer = mpmath.mpc(inside)
+        u = mpmath.sqrt(level**2 - k**2 * layer)
+        own_tm, own_te = u * eta / (1j * k * layer), 1j * k * eta / u
+        if ground_tm is None:
+            ground_tm, ground_te = own_tm, own_te
+            continue
+        t = mpmath.tanh(u * thickness)
+        ground_tm = own_tm * (ground_tm + own_tm * t) / (own_tm + ground_tm * t)
+        ground_te = own_te * (ground_te + own_te * t) / (own_te + ground_te * t)
     if case.mesh is not None:
         pitch, radius = case.mesh
         x = eta * k * pitch / (2 * mpmath.pi) * mpmath.log(pitch / (2 * mpmath.pi * radius))
@@ -105,7 +131,7 @@ def integrands(level, case):
 def reference(name, path):
     """Return the seven fields, summed along one of two paths by Gauss's rule with panels in proportion to the scales."""
     case = CASES[name]
-    corner = 1.6 * case.k * np.sqrt(case.eps + 1.0).real
+    corner = 1.6 * case.k * max(np.sqrt(eps + 1.0).real for _, eps in case.strata)
     height = (0.25 if path == "arch" else 0.4) * case.k
     end = corner + 36.0 / case.z
     nodes, weights = np.polynomial.legendre.leggauss(20)

@@ -5,16 +5,9 @@ import pytest
 from numpy.testing import assert_allclose
 
 from elbowroom.base.errors import JobFileError, ModelRangeError
-from elbowroom.geometry.grounds import (
-    GROUND_TYPES,
-    FreeSpace,
-    MeshOnSoil,
-    MoistSoil,
-    PerfectGround,
-    Soil,
-    TabulatedSoil,
-)
+from elbowroom.geometry.grounds import GROUND_TYPES, FreeSpace, MeshOnSoil, PerfectGround
 from elbowroom.geometry.soil_tables import read_soil_table
+from elbowroom.geometry.soils import LayeredSoil, MoistSoil, Soil, TabulatedSoil
 
 TABLE = TabulatedSoil((50e6, 150e6, 350e6), (12.0, 10.0, 8.0), (0.01, 0.02, 0.04))
 
@@ -39,6 +32,13 @@ TABLE = TabulatedSoil((50e6, 150e6, 350e6), (12.0, 10.0, 8.0), (0.01, 0.02, 0.04
         (lambda: MeshOnSoil(Soil(10.0, 0.01), 0.1, 0.001, 0.0), "wire_conductivity_s_per_m"),
         (lambda: MeshOnSoil(Soil(10.0, 0.01), 0.1, 0.001, 1e6, 0.5), "wire_relative_permeability"),
         (lambda: MeshOnSoil(PerfectGround(), 0.1, 0.001), "expected Soil"),
+        (lambda: LayeredSoil((), Soil(10.0, 0.01)), "1 to 10 above the last, which has no end, got 0"),
+        (lambda: LayeredSoil(((0.5, Soil(4.0, 0.0)),) * 11, Soil(10.0, 0.01)), "got 11"),
+        (lambda: LayeredSoil(((0.5, Soil(4.0, 0.0)), (0.0, Soil(5.0, 0.0))), Soil(10.0, 0.01)), "thickness of layer 2"),
+        (lambda: LayeredSoil(((np.nan, Soil(4.0, 0.0)),), Soil(10.0, 0.01)), "thickness of layer 1"),
+        (lambda: LayeredSoil(((0.5, PerfectGround()),), Soil(10.0, 0.01)), "layer 1"),
+        (lambda: LayeredSoil(((0.5, Soil(4.0, 0.0)),), MeshOnSoil(Soil(4.0, 0.0), 0.1, 1e-3)), "layer without end"),
+        (lambda: LayeredSoil(((0.5, Soil(4.0, 0.0)),), Soil(10.0, 0.01), 1.0), "tolerance 1.0"),
     ],
 )
 def test_grounds__refuse_what_cannot_be(make, told):
@@ -69,8 +69,31 @@ def test_moist_soil__follows_the_published_polynomial():
         MoistSoil(0.2, 0.01).at(1.2e9)
 
 
+def test_layered_soil__is_known_where_all_its_layers_are():
+    layered = LayeredSoil(((0.4, MoistSoil(0.05, 1e-3, 1e-7)), (1.0, TABLE)), Soil(25.0, 0.05), 1e-6)
+    here = layered.at(250e6)
+    assert here == LayeredSoil(((0.4, MoistSoil(0.05, 1e-3).at(250e6)), (1.0, Soil(9.0, 0.03))), Soil(25.0, 0.05), 1e-6)
+    assert [thickness for thickness, _ in here.strata] == [0.4, 1.0, np.inf]
+    assert {soil.tolerance for _, soil in here.strata} == {1e-6}
+    assert MeshOnSoil(layered, 0.1, 1e-3).at(250e6).strata == here.strata
+    assert layered.kinks_hz == MeshOnSoil(layered, 0.1, 1e-3).kinks_hz == (50e6, 150e6, 350e6)
+    with pytest.raises(ModelRangeError, match="outside its 50 to 350 MHz"):
+        layered.at(40e6)
+
+
+def test_layered_soil__echoes_come_from_as_deep_as_loss_lets_them():
+    dry, wet = Soil(4.0, 1e-3), Soil(25.0, 0.05)
+    assert_allclose(LayeredSoil(((0.5, dry),), wet).echo_path_m, 2.0 * 0.5 * 2.0, rtol=1e-12)
+    # 20 m of the wet soil take exp(-20 0.05 377/5) = 1e-33 of what crosses it twice
+    assert_allclose(LayeredSoil(((0.5, dry), (20.0, wet)), dry).echo_path_m, 2.0, rtol=1e-12)
+    assert LayeredSoil(((20.0, wet),), dry).echo_path_m == 0.0
+    assert_allclose(MeshOnSoil(LayeredSoil(((0.5, TABLE),), wet), 0.1, 1e-3).echo_path_m, np.sqrt(12.0), rtol=1e-12)
+    assert all(g.echo_path_m == 0.0 for g in (FreeSpace(), PerfectGround(), wet, TABLE, MeshOnSoil(wet, 0.1, 1e-3)))
+
+
 def test_all_grounds__say_what_they_are():
     grounds = [FreeSpace(), PerfectGround(), Soil(10.0, 0.01), TABLE, MoistSoil(0.2, 0.01), MeshOnSoil(TABLE, 0.1, 1e-3, 1e7)]
+    grounds.append(LayeredSoil(((0.4, TABLE),), Soil(25.0, 0.05)))
     assert {type(g) for g in grounds} == set(GROUND_TYPES)
     assert len({g.describe() for g in grounds}) == len(grounds)
     for ground in grounds:

@@ -6,7 +6,8 @@ import pytest
 
 from elbowroom.base.errors import JobFileError, ModelRangeError, SolveError, StoreError
 from elbowroom.geometry.directions import hemisphere_grid
-from elbowroom.geometry.grounds import PerfectGround, TabulatedSoil
+from elbowroom.geometry.grounds import PerfectGround
+from elbowroom.geometry.soils import TabulatedSoil
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.job.band import FEWEST_CHANNELS, SegmentChannels, SegmentPlan, plan_segments, solve_band, solved_channels
 from elbowroom.job.engine.campaign import Campaign

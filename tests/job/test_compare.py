@@ -11,7 +11,8 @@ import pytest
 from elbowroom.base.errors import ExportError, JobFileError
 from elbowroom.geometry.antennas import Antenna, Port
 from elbowroom.geometry.directions import hemisphere_grid, unit_vectors
-from elbowroom.geometry.grounds import FreeSpace, PerfectGround, Soil
+from elbowroom.geometry.grounds import FreeSpace, PerfectGround
+from elbowroom.geometry.soils import Soil
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import Wire
 from elbowroom.job.beamfields import beam_fields, mean_nominal_phi_rad

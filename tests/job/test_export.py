@@ -11,7 +11,8 @@ import pytest
 from elbowroom.base.errors import ExportError, StoreError
 from elbowroom.geometry.antennas import Antenna, Port
 from elbowroom.geometry.directions import hemisphere_grid
-from elbowroom.geometry.grounds import PerfectGround, Soil
+from elbowroom.geometry.grounds import PerfectGround
+from elbowroom.geometry.soils import Soil
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import Wire
 from elbowroom.job.beamfields import beam_fields

@@ -9,7 +9,8 @@ from numpy.testing import assert_allclose
 
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.directions import hemisphere_grid
-from elbowroom.geometry.grounds import FreeSpace, MeshOnSoil, PerfectGround, Soil
+from elbowroom.geometry.grounds import FreeSpace, MeshOnSoil, PerfectGround
+from elbowroom.geometry.soils import Soil
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.job.compare import FLOOR_DB
 from elbowroom.job.groundcomparison import (

@@ -5,8 +5,9 @@ import pytest
 
 from elbowroom.base.errors import JobFileError
 from elbowroom.geometry.antennas import Antenna, Port
-from elbowroom.geometry.grounds import FreeSpace, MeshOnSoil, MoistSoil, PerfectGround, Soil, TabulatedSoil
+from elbowroom.geometry.grounds import FreeSpace, MeshOnSoil, PerfectGround
 from elbowroom.geometry.mesh import mesh_settings
+from elbowroom.geometry.soils import LayeredSoil, MoistSoil, Soil, TabulatedSoil
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import Wire
 from elbowroom.job.checks import check_station
@@ -35,6 +36,11 @@ zenith_angle_deg = 85
 """
 SOIL = "[station.ground]\nkind = 'soil'\n"
 MESH = "[station.ground]\nkind = 'mesh-on-soil'\n"
+
+
+DRY = "[[station.ground.layers]]\nrelative_permittivity = 4\nconductivity_s_per_m = 0.001\n"
+MIDDLE = "[[station.ground.layers]]\nwater_content = 0.2\nconductivity_s_per_m = 0.01\n"
+TABLE_BELOW = "[[station.ground.layers]]\nfile = 'soil.csv'\n"
 
 
 @pytest.fixture
@@ -68,6 +74,16 @@ def job(tmp_path):
             "wire_relative_permeability = 50",
             MeshOnSoil(TabulatedSoil((50e6, 200e6), (12.0, 9.0), (0.01, 0.02)), 0.1, 1e-3, 5e6, 50.0),
         ),
+        (
+            SOIL + DRY + "thickness_m = 0.4\n" + MIDDLE + "thickness_m = 1\n" + TABLE_BELOW,
+            LayeredSoil(
+                ((0.4, Soil(4.0, 1e-3)), (1.0, MoistSoil(0.2, 0.01))), TabulatedSoil((50e6, 200e6), (12.0, 9.0), (0.01, 0.02))
+            ),
+        ),
+        (
+            MESH + "pitch_m = 0.1\nwire_radius_m = 0.001\ntolerance = 1e-6\n" + DRY + "thickness_m = 0.4\n" + MIDDLE,
+            MeshOnSoil(LayeredSoil(((0.4, Soil(4.0, 1e-3)),), MoistSoil(0.2, 0.01), 1e-6), 0.1, 1e-3),
+        ),
     ],
 )
 def test_job__has_the_ground_that_its_table_describes(job, ground, expected):
@@ -82,7 +98,18 @@ def test_job__has_the_ground_that_its_table_describes(job, ground, expected):
     [
         ("[station.ground]\nrelative_permittivity = 10", "station.ground.kind: required key is missing"),
         ("[station.ground]\nkind = 'sole'", 'station.ground.kind = "sole": expected'),
-        (SOIL, "station.ground: none given; expected one of relative_permittivity, water_content and file"),
+        (SOIL, "station.ground: none given; expected one of relative_permittivity, water_content, file and layers"),
+        (SOIL + DRY, "station.ground.layers"),
+        (SOIL + "layers = []", "station.ground.layers"),
+        (SOIL + DRY + MIDDLE, "station.ground: thickness_m of layer 1 is missing; all but the last have one"),
+        (SOIL + (DRY + "thickness_m = 1\n") * 2, "station.ground: thickness_m of layer 2 is given; the last one"),
+        (SOIL + DRY + "thickness_m = 0\n" + MIDDLE, "station.ground: thickness of layer 1 [m] 0.0: expected a number from 0.001"),
+        (SOIL + "conductivity_s_per_m = 0.1\n" + DRY + "thickness_m = 1\n" + MIDDLE, "beside layers, each of which has its own"),
+        (SOIL + "relative_permittivity = 3\n" + DRY + "thickness_m = 1\n" + MIDDLE, "relative_permittivity and layers given"),
+        (SOIL + DRY + "thicknes_m = 1\n" + MIDDLE, "did you mean 'thickness_m'?"),
+        (SOIL + DRY + "thickness_m = 1\n" + MIDDLE.replace("0.2", "0.9"), "water_content 0.9"),
+        (SOIL + DRY + "thickness_m = 1\n" + TABLE_BELOW.replace("soil", "sail"), "station.ground.layers: "),
+        ("[station.ground]\nkind = 'perfect'\n" + DRY + MIDDLE, "layers is given, which kind"),
         (SOIL + "relative_permittivity = 10", "conductivity_s_per_m is missing beside relative_permittivity"),
         (SOIL + "relative_permittivity = 10\nwater_content = 0.1", "relative_permittivity and water_content given"),
         (SOIL + "relative_permittivity = 0.5\nconductivity_s_per_m = 0.01", "station.ground: relative_permittivity 0.5"),
@@ -127,6 +154,8 @@ def test_store_key__knows_the_ground_as_it_is_at_the_frequency():
         PerfectGround(), FreeSpace(), Soil(10.0, 0.02), Soil(10.0, 0.021), Soil(10.1, 0.02), Soil(10.0, 0.02, 1e-6),
         MeshOnSoil(Soil(10.0, 0.02), 0.1, 1e-3), MeshOnSoil(Soil(10.0, 0.02), 0.11, 1e-3),
         MeshOnSoil(Soil(10.0, 0.02), 0.1, 1e-3, 1e6), MeshOnSoil(Soil(10.0, 0.02), 0.1, 2e-3),
+        LayeredSoil(((0.4, Soil(10.0, 0.02)),), Soil(5.0, 0.02)), LayeredSoil(((0.5, Soil(10.0, 0.02)),), Soil(5.0, 0.02)),
+        LayeredSoil(((0.4, Soil(10.0, 0.02)),), Soil(5.0, 0.03)), MeshOnSoil(LayeredSoil(((0.4, Soil(10.0, 0.02)),), Soil(5.0, 0.02)), 0.1, 1e-3),
     ]  # fmt: skip
     assert len({key(g) for g in different}) == len(different)
 
@@ -150,6 +179,12 @@ def test_checks__say_nothing_of_ordinary_ground():
         (MeshOnSoil(Soil(10.0, 0.02), 0.1, 1e-3), 0.08, ("within 80 mm of the mesh", "pitch (100 mm)")),
         # wavelength 2 m, 0.63 m in the soil
         (MeshOnSoil(Soil(10.0, 0.02), 0.2, 1e-3), 1.0, ("pitch of the mesh 200 mm", "0.319 wavelengths", "up to a quarter")),
+        (
+            MeshOnSoil(LayeredSoil(((0.04, Soil(10.0, 0.02)),), Soil(25.0, 0.05)), 0.05, 1e-3),
+            1.0,
+            ("top layer of the soil 0.04 m, thinner than the pitch", "0.05 m"),
+        ),
+        (LayeredSoil(((0.5, Soil(10.0, 0.02)),), Soil(30.0, 1e-4)), 1.0, ("hardly loses power", "dB across the station's 30 m")),
         (Soil(30.0, 1e-4), 1.0, ("hardly loses power", "dB across the station's 30 m")),
     ],
 )

@@ -11,7 +11,7 @@ from elbowroom.base.errors import ModelRangeError, SolveError
 from elbowroom.kernels.point_kernels import Workspace
 from elbowroom.kernels.soil import table as table_module
 from elbowroom.kernels.soil.fill import fill_soil
-from elbowroom.kernels.soil.response import GroundResponse, MeshSheet, bare_soil, layered_soil, mesh_on_soil
+from elbowroom.kernels.soil.response import GroundResponse, MeshSheet, bare_soil, layered_soil, mesh_on_soil, under_mesh
 from elbowroom.kernels.soil.sommerfeld import GroundQuadrature, kernels_at
 from elbowroom.kernels.soil.splines import even_spline_coefficients, spline_basis, spline_weights
 from elbowroom.kernels.soil.table import SoilTable, build_table
@@ -34,6 +34,7 @@ GROUNDS = {
     "wet": soil(30.0, 0.001, 350e6),
     "mesh": mesh_on_soil(K, MOIST.permittivity, 0.1, 1e-3, 0.05 + 0.05j),
     "layers": layered_soil(K, [(0.4, 4.0 - 0.05j), (math.inf, 20.0 - 2.0j)]),
+    "mesh on layers": under_mesh(layered_soil(K, [(0.4, 4.0 - 0.3j), (math.inf, 20.0 - 2.0j)]), 0.1, 1e-3, 0.05 + 0.05j),
 }
 
 
@@ -127,6 +128,12 @@ def test_quadrature__answers_one_distance_as_it_answers_many():
     for n, rho in enumerate(RHO[::-1]):
         one = GroundQuadrature(MOIST, 0.1).kernels(np.array([rho]), Z)
         assert np.abs(one[:, 0] - many[:, n]).max() < 1e-10
+
+
+def test_quadrature__refuses_echoes_too_many_to_follow():
+    deep = layered_soil(wavenumber_of(350e6), [(100.0, 4.0), (math.inf, 80.0 - 200.0j)])
+    with pytest.raises(SolveError, match="panels of their integral stay unresolved"):
+        GroundQuadrature(deep, 0.1)
 
 
 def test_quadrature__knows_guided_waves_without_loss():

@@ -7,7 +7,7 @@ import pytest
 
 from elbowroom.base.constants import IMPEDANCE_OF_VACUUM
 from elbowroom.base.errors import ElbowroomError, ModelRangeError
-from elbowroom.kernels.soil.response import GroundResponse, MeshSheet, bare_soil, layered_soil, mesh_on_soil
+from elbowroom.kernels.soil.response import GroundResponse, MeshSheet, bare_soil, layered_soil, mesh_on_soil, under_mesh
 
 K = 3.1
 EPS = 12.0 - 1.4j
@@ -18,6 +18,7 @@ GROUNDS = {
     "soil": bare_soil(K, EPS),
     "mesh": mesh_on_soil(K, EPS, 0.1, 1e-3, 0.3 + 0.3j),
     "layers": layered_soil(K, [(0.3, 5.0 - 0.2j), (0.5, 25.0 - 2.0j), (math.inf, 9.0 - 0.3j)]),
+    "mesh on layers": under_mesh(layered_soil(K, [(0.3, 5.0 - 0.2j), (math.inf, 25.0 - 2.0j)]), 0.1, 1e-3, 0.3 + 0.3j),
 }
 
 
@@ -82,6 +83,13 @@ def test_layers__alike_are_one_soil():
     for a, b in zip(alike, GROUNDS["soil"].coefficients(ANYWHERE), strict=True):
         np.testing.assert_allclose(a, b, rtol=1e-12)
     assert layered_soil(K, [(math.inf, EPS)]) == GROUNDS["soil"]
+
+
+def test_mesh__on_layers_alike_is_a_mesh_on_one_soil():
+    alike = under_mesh(layered_soil(K, [(0.2, EPS), (math.inf, EPS)]), 0.1, 1e-3, 0.3 + 0.3j).coefficients(ANYWHERE)
+    for a, b, bare in zip(alike, GROUNDS["mesh"].coefficients(ANYWHERE), GROUNDS["soil"].coefficients(ANYWHERE), strict=True):
+        np.testing.assert_allclose(a, b, rtol=1e-11)
+        assert np.abs(a - bare).max() > 0.1
 
 
 def test_layers__thick_hide_what_is_below_and_thin_vanish():

@@ -6,7 +6,8 @@ import pytest
 from numpy.testing import assert_allclose
 
 from elbowroom.base.errors import GeometryError
-from elbowroom.geometry.grounds import PerfectGround, Soil, TabulatedSoil
+from elbowroom.geometry.grounds import PerfectGround
+from elbowroom.geometry.soils import Soil, TabulatedSoil
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.kernels import grounds
 from elbowroom.kernels.grounds import PerfectGroundKernels, PointKernels

@@ -3,8 +3,9 @@
 import numpy as np
 import pytest
 
-from elbowroom.geometry.grounds import FreeSpace, PerfectGround, Soil
+from elbowroom.geometry.grounds import FreeSpace, PerfectGround
 from elbowroom.geometry.shapes import log_periodic, monopole
+from elbowroom.geometry.soils import Soil
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.job.solve import solve
 from elbowroom.system.discretisation import discretise

@@ -16,7 +16,8 @@ from stations import benchmark_station, best_of
 from threadpoolctl import threadpool_limits
 
 from elbowroom.base.constants import VACUUM_PERMITTIVITY, wavenumber_of
-from elbowroom.geometry.grounds import MeshOnSoil, PerfectGround, Soil
+from elbowroom.geometry.grounds import MeshOnSoil, PerfectGround
+from elbowroom.geometry.soils import Soil
 from elbowroom.job.solve import solve
 from elbowroom.kernels.point_kernels import Workspace
 from elbowroom.kernels.points_numba import fill_image

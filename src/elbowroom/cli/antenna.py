@@ -139,7 +139,8 @@ def antenna(
 
 def _ground(name: str, soil: tuple[float, float] | None, wire_mesh: tuple[float, float] | None) -> Ground:
     """Return the ground that the options ask for."""
-    from elbowroom.geometry.grounds import GROUNDS, MeshOnSoil, Soil
+    from elbowroom.geometry.grounds import GROUNDS, MeshOnSoil
+    from elbowroom.geometry.soils import Soil
 
     if soil is None:
         if wire_mesh is not None:

@@ -87,7 +87,7 @@ def checked_output(run: JobRun, path: Path) -> Path:
     from elbowroom.base.errors import ExportError
 
     target, job = path.resolve(), run.job
-    own = [job.path, job.layout_path, *job.antenna_paths.values(), job.as_built_path, job.ground_path]
+    own = [job.path, job.layout_path, *job.antenna_paths.values(), job.as_built_path, *job.ground_paths]
     if any(target == Path(p).resolve() for p in own if p is not None):
         msg = f"cannot write {path}: it is a file of the job itself"
         raise ExportError(msg)

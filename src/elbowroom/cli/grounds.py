@@ -53,7 +53,7 @@ def grounds(
     and beams over frequency, and of how much power goes into the ground.
     """
     from elbowroom import __version__
-    from elbowroom.geometry.grounds import Soil
+    from elbowroom.geometry.soils import Soil
     from elbowroom.job.groundcomparison import compared_grounds, on_ground, write_ground_figures
     from elbowroom.job.pictures import picture_name
     from elbowroom.job.pictures.grounds import draw_grounds

@@ -9,7 +9,7 @@ import numpy as np
 
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.csvtable import fail_table, read_rows
-from elbowroom.geometry.grounds import TABLE_TOLERANCE, Soil, TabulatedSoil
+from elbowroom.geometry.soils import TABLE_TOLERANCE, Soil, TabulatedSoil
 
 _COLUMNS: dict[str, float | None] = {"frequency_hz": None, "relative_permittivity": None, "conductivity_s_per_m": None}
 

@@ -18,9 +18,8 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from elbowroom.base.arrays import ComplexArray, FloatArray
+from elbowroom.base.arrays import ComplexArray
 from elbowroom.base.errors import ModelRangeError, SolveError
-from elbowroom.geometry.grounds import MeshOnSoil, TabulatedSoil
 from elbowroom.geometry.mesh import MeshSettings
 from elbowroom.geometry.stations import Station
 from elbowroom.radiation.solution import Solution
@@ -89,13 +88,6 @@ def widest_segment(reach_m: float, low_hz: float, tolerance: float) -> float:
     return low
 
 
-def ground_kinks(station: Station) -> FloatArray:
-    """Return the frequencies [Hz] at which constants of the ground change their course: no polynomial passes over them."""
-    ground = station.ground
-    soil = ground.soil if isinstance(ground, MeshOnSoil) else ground
-    return np.array(soil.frequency_hz if isinstance(soil, TabulatedSoil) else ())
-
-
 def solved_channels(frequencies_hz: Sequence[float], solve_step_hz: float | None) -> tuple[float, ...]:
     """Return which channels are solved: the nearest ones to multiples of a step from the first, and the last.
 
@@ -152,7 +144,7 @@ def plan_segments(
     solved = np.asarray(solved_channels(frequencies_hz, solve_step_hz))
     if len(solved) < FEWEST_CHANNELS:
         return []
-    reach, kinks = reach_of(station), ground_kinks(station)
+    reach, kinks = reach_of(station), np.array(station.ground.kinks_hz)
     widths: dict[float, float] = {}
 
     def edges(share: float) -> list[int]:

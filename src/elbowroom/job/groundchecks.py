@@ -8,7 +8,8 @@ import numpy as np
 
 from elbowroom.base.constants import VACUUM_PERMITTIVITY, wavelength_of, wavenumber_of
 from elbowroom.base.errors import ModelRangeError
-from elbowroom.geometry.grounds import FreeSpace, MeshOnSoil, PerfectGround, Soil
+from elbowroom.geometry.grounds import FreeSpace, MeshOnSoil, PerfectGround
+from elbowroom.geometry.soils import EvenSoil, LayeredSoil, Soil
 from elbowroom.geometry.stations import Station
 
 LOWEST_OVER_SOIL_M = 0.04
@@ -51,6 +52,11 @@ def ground_doubts(station: Station, frequencies_hz: Sequence[float]) -> Iterator
             f"{lowest} comes within {low * 1e3:.3g} mm of the mesh, less than its pitch ({ground.pitch_m * 1e3:.3g} mm); so low "
             "an antenna meets single wires of it, which the model averages"
         )
+    if isinstance(ground, MeshOnSoil) and isinstance(ground.soil, LayeredSoil) and ground.soil.layers[0][0] < ground.pitch_m:
+        yield (
+            f"top layer of the soil {ground.soil.layers[0][0]:.3g} m, thinner than the pitch of the mesh on it "
+            f"({ground.pitch_m:.3g} m); the fields of single wires reach below it, and the model counts the top layer alone"
+        )
     worst: dict[str, tuple[float, str]] = {}
     for frequency in frequencies_hz:
         try:
@@ -58,11 +64,9 @@ def ground_doubts(station: Station, frequencies_hz: Sequence[float]) -> Iterator
         except ModelRangeError:
             # told where the job is read, and again where it is solved
             continue
-        assert isinstance(here, Soil | MeshOnSoil)
-        soil = here.soil.at(frequency) if isinstance(here, MeshOnSoil) else here
-        loss = soil.conductivity_s_per_m / (2.0 * np.pi * frequency * VACUUM_PERMITTIVITY)
-        index = np.sqrt(soil.relative_permittivity - 1j * loss)
-        inside = wavelength_of(frequency) / float(index.real)
+        assert isinstance(here, Soil | LayeredSoil | MeshOnSoil)
+        indices = [_index(soil.at(frequency), frequency) for _, soil in here.strata]
+        inside = wavelength_of(frequency) / float(indices[0].real)
         if isinstance(here, MeshOnSoil) and here.pitch_m > 0.25 * inside:
             text = (
                 f"pitch of the mesh {here.pitch_m * 1e3:.4g} mm, at {frequency / 1e6:.6g} MHz {here.pitch_m / inside:.3g} "
@@ -70,8 +74,12 @@ def ground_doubts(station: Station, frequencies_hz: Sequence[float]) -> Iterator
             )
             _keep(worst, "pitch", here.pitch_m / inside, text)
         across = _width(station)
-        nepers = -float(index.imag) * wavenumber_of(frequency) * across
-        if soil.relative_permittivity > 1.0 and nepers < LATERAL_NEPERS and across > 2.0 * inside:
+        # The layer that carries a wave farthest; soil that is air carries none of its own.
+        index = min((n for n in indices if n.real > 1.0), key=lambda n: -n.imag, default=None)
+        if index is None:
+            continue
+        nepers, inside = -float(index.imag) * wavenumber_of(frequency) * across, wavelength_of(frequency) / float(index.real)
+        if nepers < LATERAL_NEPERS and across > 2.0 * inside:
             text = (
                 f"soil that hardly loses power: at {frequency / 1e6:.6g} MHz a wave in it falls by {nepers * 8.686:.2g} dB "
                 f"across the station's {across:.3g} m, over {across / inside:.3g} wavelengths; tables of the kernels grow to "
@@ -80,6 +88,13 @@ def ground_doubts(station: Station, frequencies_hz: Sequence[float]) -> Iterator
             _keep(worst, "lateral", 1.0 / max(nepers, 1e-9), text)
     for _, text in worst.values():
         yield text
+
+
+def _index(soil: EvenSoil, frequency_hz: float) -> complex:
+    """Return the refractive index of even soil at a frequency [Hz]."""
+    here = soil.at(frequency_hz)
+    loss = here.conductivity_s_per_m / (2.0 * np.pi * frequency_hz * VACUUM_PERMITTIVITY)
+    return complex(np.sqrt(here.relative_permittivity - 1j * loss))
 
 
 def _keep(worst: dict[str, tuple[float, str]], kind: str, size: float, text: str) -> None:

@@ -12,7 +12,8 @@ import numpy as np
 from elbowroom.base.arrays import ComplexArray
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.directions import Directions, unit_vectors
-from elbowroom.geometry.grounds import Ground, MeshOnSoil, MoistSoil, PerfectGround, Soil, TabulatedSoil
+from elbowroom.geometry.grounds import Ground, MeshOnSoil, PerfectGround
+from elbowroom.geometry.soils import AnySoil
 from elbowroom.job.beamfields import beam_weights
 from elbowroom.job.compare import decibels, main_lobe, total_power
 from elbowroom.job.files import write_explained_csv
@@ -64,9 +65,7 @@ class GroundFigures:
     pattern_error: float
 
 
-def compared_grounds(
-    ground: Ground, soil: Soil | TabulatedSoil | MoistSoil | None = None, mesh: tuple[float, float] | None = None
-) -> dict[str, Ground]:
+def compared_grounds(ground: Ground, soil: AnySoil | None = None, mesh: tuple[float, float] | None = None) -> dict[str, Ground]:
     """Return the grounds to compare by name: a perfect plane, mesh on soil where a mesh is known, bare soil.
 
     Parameters
@@ -84,7 +83,7 @@ def compared_grounds(
         If no soil is known.
     """
     own = ground.soil if isinstance(ground, MeshOnSoil) else ground
-    if soil is None and isinstance(own, Soil | TabulatedSoil | MoistSoil):
+    if soil is None and isinstance(own, AnySoil):
         soil = own
     if soil is None:
         msg = (

@@ -27,6 +27,8 @@ wire_radius_m``
 ``[station.ground]               their metal [S/m], [-]; no loss by default
 wire_conductivity_s_per_m,
 wire_relative_permeability``
+``[[station.ground.layers]]``    instead of constants: one table for each layer from the surface down, with the soil's
+                                 keys above and ``thickness_m`` [m]; the last one has none and no end
 ``[station.ground] tolerance``   error of the soil's kernels times distance; 1e-5 by default
 ``[station] turn_deg``           turn of the whole station, its antennas included, about the station's reference
                                  point, from east towards north [deg]; 0 by default
@@ -91,7 +93,7 @@ from elbowroom.geometry.offsets import Offsets, displaced, read_offsets
 from elbowroom.geometry.stations import PortName
 from elbowroom.job.antennafile import read_antenna
 from elbowroom.job.damage import AMPLIFIER_OFF, Damage, read_damage
-from elbowroom.job.jobgrounds import read_ground
+from elbowroom.job.jobgrounds import ground_files, read_ground
 from elbowroom.job.jobmodel import Beam as Beam
 from elbowroom.job.jobmodel import Job as Job
 from elbowroom.job.jobmodel import azimuth_to_phi_deg as azimuth_to_phi_deg
@@ -209,7 +211,7 @@ def read_job(path: str | Path) -> Job:
         store_folder=folder / parts["store"].folder,
         output_folder=folder / parts["output"].folder,
         as_built_path=None if station_table.as_built is None else folder / station_table.as_built,
-        ground_path=folder / ground_table["file"] if ground_table is not None and "file" in ground_table else None,
+        ground_paths=ground_files(folder, ground_table),
         offsets=offsets,
         damage=damage,
         store_precision=parts["store"].precision,

@@ -120,8 +120,8 @@ class Job:
         Step of maps [deg].
     store_folder, output_folder : Path
         Where results go.
-    ground_path : Path or None
-        The table of the soil, if it has one.
+    ground_paths : tuple of Path
+        Tables of the soil.
     as_built_path : Path or None
         The file of offsets.
     offsets : Offsets or None
@@ -160,7 +160,7 @@ class Job:
     store_folder: Path
     output_folder: Path
     as_built_path: Path | None = None
-    ground_path: Path | None = None
+    ground_paths: tuple[Path, ...] = ()
     offsets: Offsets | None = None
     damage: Damage = field(default_factory=Damage)
     store_precision: str = "double"

@@ -10,9 +10,9 @@ from __future__ import annotations
 import difflib
 import re
 import tomllib
-from collections.abc import Iterable
+from collections.abc import Iterable, Iterator
 from pathlib import Path
-from typing import Any, NoReturn, TypeVar
+from typing import Any, NoReturn, TypeVar, get_args
 
 from pydantic import BaseModel, ConfigDict, ValidationError
 
@@ -179,6 +179,25 @@ def _sentence(error: Any, where: tuple[str | int, ...], known: Iterable[str]) ->
     return f"{path} = {shown(found)}: expected {_EXPECTED.get(kind, error['msg'])}"
 
 
+def _level(model: type[BaseModel], table: object, location: tuple[int | str, ...]) -> tuple[list[str], list[str]]:
+    """Return the keys that a table within a table may have, and those that it has."""
+    for step in location:
+        if isinstance(step, int):
+            table = table[step] if isinstance(table, list) else None
+            continue
+        model = next(_models_in(model.model_fields[step].annotation), model)
+        table = table.get(step) if isinstance(table, dict) else None
+    return list(model.model_fields), list(table) if isinstance(table, dict) else []
+
+
+def _models_in(annotation: object) -> Iterator[type[BaseModel]]:
+    """Yield the models that an annotation such as ``list[Model] | None`` mentions."""
+    if isinstance(annotation, type) and issubclass(annotation, BaseModel):
+        yield annotation
+    for part in get_args(annotation):
+        yield from _models_in(part)
+
+
 def validate_table(
     model: type[Model],
     table: object,
@@ -213,10 +232,11 @@ def validate_table(
             if error["type"] == "extra_forbidden":
                 # a misspelt key is most likely one of those not given
                 key = str(error["loc"][-1])
-                free = [k for k in model.model_fields if k not in table]
+                fields, given = _level(model, table, error["loc"][:-1])
+                free = [k for k in fields if k not in given]
                 close = difflib.get_close_matches(key.casefold(), free, n=1)
                 hinted.update(k for k in close if k in absent)
-                lines.append(_sentence(error, where, free if close else model.model_fields))
+                lines.append(_sentence(error, where, free if close else fields))
         for error in found:
             if error["type"] == "extra_forbidden" or (error["type"] == "missing" and str(error["loc"][-1]) in hinted):
                 continue

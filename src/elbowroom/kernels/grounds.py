@@ -13,7 +13,8 @@ from typing import Protocol
 import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
-from elbowroom.geometry.grounds import FreeSpace, Ground, MeshOnSoil, MoistSoil, PerfectGround, Soil, TabulatedSoil
+from elbowroom.geometry.grounds import FreeSpace, Ground, MeshOnSoil, PerfectGround
+from elbowroom.geometry.soils import LayeredSoil, MoistSoil, Soil, TabulatedSoil
 from elbowroom.kernels.lossy_grounds import LossyGroundKernels
 from elbowroom.kernels.point_kernels import Extent, PointKernels, Workspace, distinct_kernels
 from elbowroom.kernels.points_numba import fill_free, fill_image
@@ -161,6 +162,7 @@ _KERNELS: dict[type, Callable[[Ground, float, Extent], GroundKernels]] = {
     Soil: LossyGroundKernels,
     TabulatedSoil: LossyGroundKernels,
     MoistSoil: LossyGroundKernels,
+    LayeredSoil: LossyGroundKernels,
     MeshOnSoil: LossyGroundKernels,
 }
 

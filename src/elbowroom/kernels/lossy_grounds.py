@@ -9,7 +9,8 @@ import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.constants import VACUUM_PERMITTIVITY, wavenumber_of
-from elbowroom.geometry.grounds import Ground, MeshOnSoil, Soil
+from elbowroom.geometry.grounds import Ground, MeshOnSoil
+from elbowroom.geometry.soils import LayeredSoil, Soil
 from elbowroom.kernels.point_kernels import Extent, PointKernels, Workspace
 from elbowroom.kernels.wire_metal import internal_impedance
 
@@ -25,19 +26,20 @@ def relative_permittivity(soil: Soil, frequency_hz: float) -> complex:
 
 def ground_response(ground: Ground, frequency_hz: float) -> GroundResponse:
     """Return the reflection coefficients of soil, or of mesh on soil, at a frequency [Hz]."""
-    from elbowroom.kernels.soil.response import bare_soil, mesh_on_soil
+    from elbowroom.kernels.soil.response import layered_soil, under_mesh
 
-    here, wavenumber = ground.at(frequency_hz), wavenumber_of(frequency_hz)
-    if isinstance(here, MeshOnSoil):
-        metal = 0.0 + 0.0j
-        if here.wire_conductivity_s_per_m is not None:
-            metal = internal_impedance(
-                here.wire_radius_m, here.wire_conductivity_s_per_m, here.wire_relative_permeability, frequency_hz
-            )
-        soil = here.soil.at(frequency_hz)
-        return mesh_on_soil(wavenumber, relative_permittivity(soil, frequency_hz), here.pitch_m, here.wire_radius_m, metal)
-    assert isinstance(here, Soil)
-    return bare_soil(wavenumber, relative_permittivity(here, frequency_hz))
+    here = ground.at(frequency_hz)
+    assert isinstance(here, Soil | LayeredSoil | MeshOnSoil)
+    strata = [(thickness, relative_permittivity(soil.at(frequency_hz), frequency_hz)) for thickness, soil in here.strata]
+    response = layered_soil(wavenumber_of(frequency_hz), strata)
+    if not isinstance(here, MeshOnSoil):
+        return response
+    metal = 0.0 + 0.0j
+    if here.wire_conductivity_s_per_m is not None:
+        metal = internal_impedance(
+            here.wire_radius_m, here.wire_conductivity_s_per_m, here.wire_relative_permeability, frequency_hz
+        )
+    return under_mesh(response, here.pitch_m, here.wire_radius_m, metal)
 
 
 class LossyGroundKernels:
@@ -47,7 +49,7 @@ class LossyGroundKernels:
 
     Parameters
     ----------
-    ground : Soil, TabulatedSoil, MoistSoil or MeshOnSoil
+    ground : Soil, TabulatedSoil, MoistSoil, LayeredSoil or MeshOnSoil
         Which.
     frequency_hz : float
         [Hz].

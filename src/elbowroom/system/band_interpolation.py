@@ -85,8 +85,8 @@ def intervals_for(span_hz: float, reach_m: float, tolerance: float) -> int:
 def reach_of(station: Station) -> float:
     """Return the largest extra path [m] of waves between antennas over the distance of their places.
 
-    From one end of an antenna to another and past the image: what is left in the phase of interactions once that of the places
-    is taken out, and what an antenna's own block holds.
+    From one end of an antenna to another and past the image, or down through layers of the ground and back: what is left in the
+    phase of interactions once that of the places is taken out, and what an antenna's own block holds.
     """
     reach = 0.0
     seen: set[tuple] = set()
@@ -101,7 +101,7 @@ def reach_of(station: Station) -> float:
         if not station.ground.open_below:
             upright = 2.0 * float(ends[:, 2].max() + placed.position[2])
         reach = max(reach, float(np.hypot(2.0 * sideways, upright)))
-    return reach
+    return reach + station.ground.echo_path_m
 
 
 class _Losses:

@@ -16,7 +16,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from numbers import Complex, Real
 
 import numpy as np
@@ -120,6 +120,13 @@ class GroundResponse:
                 below_a * below_b
             )
             a, b = ac * (a + ac * t) / below_a, bc * (b + bc * t) / below_b
+        if self.sheet is not None:
+            # In parallel with the ground: 1/Z_TM - 1/Z_TE has a factor L^2 in closed form.
+            k, jx = self.wavenumber, 1j * self.sheet.reactance
+            z_te = self.sheet.loss + jx
+            z_tm = z_te - jx * (level / k2) / (self.permittivity + 1.0)
+            delta = delta - self.sheet.reactance / (k * (self.permittivity + 1.0) * z_te * z_tm)
+            a, b = a + 1j * k / z_tm, b + 1j * k / z_te
         e = -a / k2
         te, tm = u0 + b, 1.0 + u0 * e
         return (u0 - b) / te, (u0 * e - 1.0) / tm, 2.0 * (e + delta) / (te * tm)
@@ -214,15 +221,40 @@ def mesh_on_soil(
 ) -> GroundResponse:
     """Return the response of a square wire mesh, bonded at its crossings, on the surface of a half space.
 
-    Averaged boundary conditions (Kontorovich; Wait): good to |dGamma| of about 0.02 for pitches of 5-20 cm up to 350 MHz,
-    not for antenna wires lower than about one pitch, nor for a pitch above a quarter wavelength in the soil.
-
     Parameters
     ----------
     wavenumber : float
         k of air [rad/m].
     eps : complex
         Relative permittivity of the soil.
+    pitch_m, wire_radius_m, wire_impedance_ohm_per_m
+        See :func:`under_mesh`.
+
+    Returns
+    -------
+    GroundResponse
+
+    Raises
+    ------
+    ModelRangeError
+        As :func:`bare_soil` and :func:`under_mesh`.
+    """
+    return under_mesh(bare_soil(wavenumber, eps), pitch_m, wire_radius_m, wire_impedance_ohm_per_m)
+
+
+def under_mesh(
+    ground: GroundResponse, pitch_m: float, wire_radius_m: float, wire_impedance_ohm_per_m: complex = 0.0
+) -> GroundResponse:
+    """Return the response of a ground once a square wire mesh, bonded at its crossings, lies on it.
+
+    Averaged boundary conditions (Kontorovich; Wait): good to |dGamma| of about 0.02 for pitches of 5-20 cm up to 350 MHz,
+    not for antenna wires lower than about one pitch, nor for a pitch above a quarter wavelength in the soil.  The fields between
+    the wires reach about a pitch deep: their permittivity is that of the top layer, which has to be thicker.
+
+    Parameters
+    ----------
+    ground : GroundResponse
+        Soil without a mesh.
     pitch_m : float
         Distance of neighbouring parallel wires [m].
     wire_radius_m : float
@@ -237,10 +269,9 @@ def mesh_on_soil(
     Raises
     ------
     ModelRangeError
-        As :func:`bare_soil`; on a pitch that is not larger than the wire's diameter (the sheet's reactance,
-        ln(a/(2 pi r)), asks for more than pi diameters, and that is refused too), or an active wire impedance.
+        On a pitch that is not larger than the wire's diameter (the sheet's reactance, ln(a/(2 pi r)), asks for more than pi
+        diameters, and that is refused too), or an active wire impedance.
     """
-    k, soil = _positive("wavenumber", wavenumber), _passive("relative permittivity of soil", eps)
     pitch, radius = _positive("pitch of the mesh [m]", pitch_m), _positive("wire radius of the mesh [m]", wire_radius_m)
     if pitch <= 2.0 * math.pi * radius:
         msg = (
@@ -252,5 +283,5 @@ def mesh_on_soil(
     if not isinstance(wire, Complex) or not np.isfinite(complex(wire)) or complex(wire).real < 0.0:
         msg = f"impedance of the mesh's wire [ohm/m]: expected a finite number with a real part >= 0, got {wire!r}"
         raise ModelRangeError(msg)
-    reactance = k * pitch / (2.0 * math.pi) * math.log(pitch / (2.0 * math.pi * radius))
-    return GroundResponse(k, soil, MeshSheet(pitch * complex(wire) / IMPEDANCE_OF_VACUUM, reactance))
+    reactance = ground.wavenumber * pitch / (2.0 * math.pi) * math.log(pitch / (2.0 * math.pi * radius))
+    return replace(ground, sheet=MeshSheet(pitch * complex(wire) / IMPEDANCE_OF_VACUUM, reactance))

@@ -21,7 +21,7 @@ import numpy as np
 from scipy.special import hankel1e, j0
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
-from elbowroom.base.errors import ModelRangeError
+from elbowroom.base.errors import ModelRangeError, SolveError
 from elbowroom.kernels.soil.response import GroundResponse
 
 NEAR_DISTANCE_M = 1.5
@@ -41,6 +41,9 @@ _RULES = ((16, 6.0), (24, 15.0), (32, 24.0))
 
 _DEEPEST = 48
 _MOST_OPEN = 400
+
+LARGEST_REST = 1e-7
+"""What panels that were left unresolved may add to a kernel; more is refused."""
 
 _TRACE = 1e-8
 """Loss tangent, and resistance of a mesh over its reactance, below which it is taken to be this."""
@@ -118,6 +121,8 @@ class GroundQuadrature:
     ------
     ModelRangeError
         On a height sum that is not positive.
+    SolveError
+        If the coefficients vary too rapidly for panels to follow.
     """
 
     def __init__(self, response: GroundResponse, z_min_m: float) -> None:
@@ -145,6 +150,7 @@ class GroundQuadrature:
         last = _last_legendre(16)
         open_ = np.stack([breaks[:-1], breaks[1:]], axis=1)
         done = []
+        rest = 0.0
         for _ in range(_DEEPEST):
             half = 0.5 * (open_[:, 1] - open_[:, 0])
             samples = _four(self.response, path((open_[:, 0] + half)[:, None] + half[:, None] * x))
@@ -152,12 +158,19 @@ class GroundQuadrature:
             # What is left unresolved counts by the width it has; 100 m is farther than stations are wide.
             fine = tail * np.minimum(1.0, 100.0 * half) <= RESOLVED
             done.append(open_[fine])
-            open_ = open_[~fine]
+            open_, rest = open_[~fine], float((tail * half)[~fine].sum())
             # Rounding beside a pole can keep panels from ever looking resolved.
             if not open_.size or len(open_) > _MOST_OPEN:
                 break
             middle = open_.mean(axis=1)
             open_ = np.concatenate([np.stack([open_[:, 0], middle], axis=1), np.stack([middle, open_[:, 1]], axis=1)])
+        if rest > LARGEST_REST:
+            msg = (
+                f"kernels of the ground at a wavenumber of {self.response.wavenumber:.4g} rad/m: {len(open_)} panels of their "
+                f"integral stay unresolved, {rest:.1e} of a kernel, where {LARGEST_REST:g} is allowed; thick layers of soil that "
+                "hardly lose power do that: let the last layer that matters have no end"
+            )
+            raise SolveError(msg)
         panels = np.concatenate([*done, open_])
         return panels[np.argsort(panels[:, 0])]
 
