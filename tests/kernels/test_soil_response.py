@@ -46,6 +46,28 @@ def test_coupling_coefficient__is_the_sum_of_both_over_the_squared_wavenumber(na
     assert abs(limit[0] / limit[1] - 1.0) < 1e-5
 
 
+@pytest.mark.parametrize("mesh", [None, (0.1, 1e-3, 0.3 + 0.3j)])
+def test_coupling_coefficient__of_many_layers_keeps_its_digits_at_large_wavenumbers(mesh):
+    profile = [(0.05 + 0.03 * n, 4.0 + 1.7 * n - (0.1 + 4.0 * (n % 3)) * 1j) for n in range(10)]
+    ground = layered_soil(K, [*profile, (math.inf, 22.0 - 2.0j)])
+    if mesh is not None:
+        ground = under_mesh(ground, *mesh)
+    u0 = np.array([10.0, 100.0, 300.0, 1e3, 1e4, 1e5, 300.0 - 200.0j])
+    gh, ge, w = ground.coefficients(u0)
+    np.testing.assert_allclose(w * (u0 * u0 + K * K), ge + gh, rtol=1e-11)
+
+
+@pytest.mark.parametrize("mesh", [None, (0.1, 1e-3)])
+@pytest.mark.parametrize("strata", [[(0.1, 1.0), (math.inf, EPS)], [(0.3, 4.0), (math.inf, 1.0)]])
+def test_reflection__of_layers_of_air_ends_at_minus_one(strata, mesh):
+    ground = layered_soil(K, strata)
+    if mesh is not None:
+        ground = under_mesh(ground, *mesh)
+    near, level = np.array(ground.reflection(np.array([0.5 * np.pi - 1e-9, 0.5 * np.pi]))).T
+    np.testing.assert_allclose(level, -1.0, atol=1e-9)
+    np.testing.assert_allclose(near, level, atol=1e-6)
+
+
 @pytest.mark.parametrize("name", GROUNDS)
 def test_reflection__never_gains_and_ends_at_minus_one(name):
     gh, ge = GROUNDS[name].reflection(THETA)

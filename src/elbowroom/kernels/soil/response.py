@@ -104,19 +104,26 @@ class GroundResponse:
         """Carry the admittances of the half space up through the layers.
 
         With A = -k^2 e and B = h, equal at L = 0, delta = (A - B)/L^2 is carried along, so that w needs no division by L^2.
+        Of its two ways of writing, the one that A multiplies keeps its digits: B grows as L, A falls as 1/L.
         """
         k2 = self.wavenumber**2
         level: ComplexArray = u0 * u0 + k2
+
+        def vertical(eps: complex) -> ComplexArray:
+            u = np.sqrt(level - k2 * eps)
+            # A wave that runs level has no admittances; one that all but does tells their limit.
+            return np.asarray(np.where(u == 0.0, 1e-12 * self.wavenumber, u))
+
         assert self.bottom is not None
-        u = np.sqrt(level - k2 * self.bottom)
+        u = vertical(self.bottom)
         a, b, delta = -k2 * self.bottom / u, u, -1.0 / u
         for thickness, eps in reversed(self.layers):
-            u = np.sqrt(level - k2 * eps)
+            u = vertical(eps)
             ac, bc, delta_c = -k2 * eps / u, u, -1.0 / u
             decay = np.exp(-2.0 * u * thickness)
             t = (1.0 - decay) / (1.0 + decay)
             below_a, below_b = ac + a * t, bc + b * t
-            delta = (ac * bc * delta + t * (a * b + ac * bc) * delta_c + t * t * (b * (ac + bc) * delta_c - bc * bc * delta)) / (
+            delta = (ac * bc * delta + t * (a * b + ac * bc) * delta_c + t * t * (a * (ac + bc) * delta_c - ac * ac * delta)) / (
                 below_a * below_b
             )
             a, b = ac * (a + ac * t) / below_a, bc * (b + bc * t) / below_b
