@@ -110,9 +110,9 @@ class GroundResponse:
         level: ComplexArray = u0 * u0 + k2
 
         def vertical(eps: complex) -> ComplexArray:
-            u = np.sqrt(level - k2 * eps)
+            u: ComplexArray = np.sqrt(level - k2 * eps)
             # A wave that runs level has no admittances; one that all but does tells their limit.
-            return np.asarray(np.where(u == 0.0, 1e-12 * self.wavenumber, u))
+            return np.asarray(np.where(u == 0.0, 1e-12 * self.wavenumber, u), dtype=complex)
 
         assert self.bottom is not None
         u = vertical(self.bottom)
@@ -134,7 +134,7 @@ class GroundResponse:
             z_tm = z_te - jx * (level / k2) / (self.permittivity + 1.0)
             delta = delta - self.sheet.reactance / (k * (self.permittivity + 1.0) * z_te * z_tm)
             a, b = a + 1j * k / z_tm, b + 1j * k / z_te
-        e = -a / k2
+        e: ComplexArray = -a / k2
         te, tm = u0 + b, 1.0 + u0 * e
         return (u0 - b) / te, (u0 * e - 1.0) / tm, 2.0 * (e + delta) / (te * tm)
 
