@@ -217,10 +217,11 @@ def _without_interrupts() -> Iterator[None]:
 def _prepare_worker() -> None:
     """Make a new process ignore Ctrl-C, end when asked to, and end when its parent is gone."""
     signal.signal(signal.SIGINT, signal.SIG_IGN)
-    signal.signal(signal.SIGTERM, _end)
+    threading.Thread(target=_follow_parent, daemon=True).start()
     if hasattr(signal, "pthread_sigmask"):
         signal.pthread_sigmask(signal.SIG_UNBLOCK, {signal.SIGINT, signal.SIGTERM})
-    threading.Thread(target=_follow_parent, daemon=True).start()
+    # Last: until here there is nothing to clear away, and an exception would be told as one of the executor's.
+    signal.signal(signal.SIGTERM, _end)
 
 
 def _end(number: int, frame: FrameType | None) -> None:
