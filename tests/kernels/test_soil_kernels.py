@@ -192,6 +192,11 @@ def test_table__of_any_extent(far, low, high):
     assert held_out_error(build_table(MOIST, far, low, high), MOIST) < 1e-5
 
 
+def test_table__follows_echoes_from_deep_dry_sand_under_low_wires():
+    deep = layered_soil(wavenumber_of(350e6), [(10.0, 3.0 - 0.005j), (math.inf, 30.0 - 5.0j)])
+    assert held_out_error(build_table(deep, 15.0, 0.1, 6.0), deep) < 1e-5
+
+
 def test_table__survives_being_taken_apart():
     table = build_table(MOIST, 10.0, 0.3, 2.0)
     again = SoilTable.from_arrays(table.to_arrays())

@@ -26,7 +26,9 @@ _SPLINE_ERROR = 1.0 / 384.0
 """Error of an interpolating cubic spline over the fourth difference of its samples (Hall 1968 has 5/384 for the worst)."""
 
 _DISTANCES_M = (0.75, 1.5, 3.0, 4.5, 6.0, 9.0, 12.0, 18.0, 24.0, 36.0, 54.0)
-_MOST_CHEBYSHEV = 40
+_MOST_CHEBYSHEV = (40, 80)
+"""Nodes in height that are tried: the second where echoes from metres below turn the phase within a low antenna's reach."""
+
 _ATTEMPTS = 4
 _BEYOND = 5
 
@@ -234,14 +236,16 @@ class _Heights:
 def _chebyshev_heights(quadrature: GroundQuadrature, rho_max: float, z_low: float, z_high: float, allowed: float) -> _Heights:
     """Return as many nodes as the last coefficients at some distances ask for."""
     centre, half = 0.5 * np.log(z_low * z_high), 0.5 * np.log(z_high / z_low)
-    most = _Heights(centre, half, _MOST_CHEBYSHEV)
     rho = np.concatenate([[0.0], np.geomspace(0.3 * z_low, rho_max, 15)])
-    values = quadrature.kernels(rho, most.nodes())
-    m = np.arange(most.count)
-    spectrum = np.abs(values @ np.cos(np.pi * np.outer(m + 0.5, m) / most.count)).max(axis=(0, 1)) * (2.0 / most.count)
-    left = np.cumsum(spectrum[::-1])[::-1]
-    needed = int(np.argmax(left <= allowed)) if np.any(left <= allowed) else most.count
-    return _Heights(centre, half, int(np.clip(needed + 1, 5, most.count)))
+    for count in _MOST_CHEBYSHEV:
+        most = _Heights(centre, half, count)
+        values = quadrature.kernels(rho, most.nodes())
+        m = np.arange(count)
+        spectrum = np.abs(values @ np.cos(np.pi * np.outer(m + 0.5, m) / count)).max(axis=(0, 1)) * (2.0 / count)
+        left = np.cumsum(spectrum[::-1])[::-1]
+        if np.any(left <= allowed):
+            return _Heights(centre, half, int(np.clip(np.argmax(left <= allowed) + 1, 5, count)))
+    return most
 
 
 def _plan_distances(
