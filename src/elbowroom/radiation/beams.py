@@ -2,14 +2,18 @@
 
 from __future__ import annotations
 
+from concurrent.futures import ThreadPoolExecutor
+
 import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import ModelRangeError
+from elbowroom.base.threads import loop_threads
 from elbowroom.kernels.points_numba import accumulate_phases
 from elbowroom.radiation.patterns import CHUNK_DIRECTIONS
+from elbowroom.system.assembly import single_threaded_blas
 from elbowroom.system.discretisation import Discretisation
-from elbowroom.system.plane_waves import DirectionFrame, kind_vectors
+from elbowroom.system.plane_waves import DirectionFrame, KindWaves
 from elbowroom.system.spaces import CurrentSpace, all_unknowns
 
 
@@ -83,24 +87,34 @@ def current_beams(
     complex128 (B, D, 2)
     """
     d, space = discretisation, space or all_unknowns(discretisation)
-    ground = d.ground
     n_beams = currents.shape[1]
     out = np.zeros((n_beams, frame.count, 2), dtype=complex)
     positions = np.ascontiguousarray(d.station.positions * [1.0, 1.0, 0.0])
-    amounts = []
-    for k in range(len(d.kinds)):
+    amounts, waves = [], []
+    for k, kind in enumerate(d.kinds):
+        waves.append(KindWaves(kind, d.ground, d.wavenumber, circumference=circumference, basis=space.bases[k]))
         antennas = d.antennas_of(k)
         # (B, antennas, coordinates of one antenna)
         amounts.append(np.ascontiguousarray(currents[space.rows_of(antennas)].T).reshape(n_beams, len(antennas), -1))
-    for first in range(0, frame.count, CHUNK_DIRECTIONS):
+
+    def add(first: int) -> None:
         rows_d = slice(first, min(first + CHUNK_DIRECTIONS, frame.count))
         part = frame.part(rows_d)
         unit = np.ascontiguousarray(part.unit)
-        for k, kind in enumerate(d.kinds):
-            vectors = kind_vectors(kind, ground, part, d.wavenumber, circumference=circumference, basis=space.bases[k])
+        for k in range(len(d.kinds)):
+            vectors = waves[k].at(part)
             flat = vectors.reshape(len(vectors), -1)
             place = positions[d.antennas_of(k)]
             for beam in range(n_beams):
                 each = (amounts[k][beam] @ flat).reshape(len(place), part.count, 2)
                 out[beam, rows_d] += accumulate_phases(unit, place, d.wavenumber, each)
+
+    chunks = range(0, frame.count, CHUNK_DIRECTIONS)
+    if len(chunks) < 2:
+        for first in chunks:
+            add(first)
+        return out
+    # Products of a chunk are too small for BLAS to share among threads.
+    with single_threaded_blas(), ThreadPoolExecutor(loop_threads()) as pool:
+        list(pool.map(add, chunks))
     return out

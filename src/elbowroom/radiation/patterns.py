@@ -6,7 +6,7 @@ import numpy as np
 
 from elbowroom.base.arrays import ComplexArray
 from elbowroom.system.discretisation import Discretisation
-from elbowroom.system.plane_waves import DirectionFrame, kind_vectors, phases
+from elbowroom.system.plane_waves import DirectionFrame, KindWaves, phases
 from elbowroom.system.spaces import CurrentSpace, all_unknowns
 
 CHUNK_DIRECTIONS = 1024
@@ -35,7 +35,7 @@ def station_patterns(
     space : CurrentSpace, optional
         What the coordinates are; unknowns by default.
     circumference : bool, optional
-        See :func:`kind_vectors`.
+        See :class:`KindWaves`.
     out : complex128 (P, D, 2), optional
         Where to put the result.
 
@@ -45,7 +45,6 @@ def station_patterns(
         [m times the unit of the currents]
     """
     d, space = discretisation, space or all_unknowns(discretisation)
-    ground = d.ground
     n_patterns = currents.shape[1]
     if out is None:
         out = np.empty((n_patterns, frame.count, 2), dtype=complex)
@@ -54,13 +53,14 @@ def station_patterns(
     for k in range(len(d.kinds)):
         antennas = d.antennas_of(k)
         amounts = np.ascontiguousarray(currents[space.rows_of(antennas)].T)
-        by_kind.append((antennas, amounts.reshape(n_patterns, len(antennas), -1)))
+        waves = KindWaves(d.kinds[k], d.ground, d.wavenumber, circumference=circumference, basis=space.bases[k])
+        by_kind.append((waves, antennas, amounts.reshape(n_patterns, len(antennas), -1)))
     for first in range(0, frame.count, CHUNK_DIRECTIONS):
         rows_d = slice(first, min(first + CHUNK_DIRECTIONS, frame.count))
         part = frame.part(rows_d)
         total = np.zeros((n_patterns, part.count * 2), dtype=complex)
-        for kind, basis, (antennas, amounts) in zip(d.kinds, space.bases, by_kind, strict=True):
-            vectors = kind_vectors(kind, ground, part, d.wavenumber, circumference=circumference, basis=basis)
+        for waves, antennas, amounts in by_kind:
+            vectors = waves.at(part)
             turn = phases(part.unit, positions[antennas], d.wavenumber)
             n = vectors.shape[0]
             # A few antennas share one product, so that its inner dimension is long enough for full rate.

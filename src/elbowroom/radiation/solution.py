@@ -7,7 +7,7 @@ any field is computed, and every pattern is evaluated at exactly the directions 
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import ArrayLike
@@ -19,7 +19,7 @@ from elbowroom.radiation.beams import current_beams, pointing_weights
 from elbowroom.radiation.patterns import CHUNK_DIRECTIONS, station_patterns
 from elbowroom.radiation.power import PowerParts, power_parts
 from elbowroom.system.discretisation import Discretisation
-from elbowroom.system.plane_waves import direction_frame, kind_vectors, phases
+from elbowroom.system.plane_waves import KindWaves, direction_frame, phases
 from elbowroom.system.port_algebra import (
     admittance_from_loaded,
     admittance_from_scattering,
@@ -32,7 +32,7 @@ from elbowroom.system.port_algebra import (
     scattering_renormalised,
 )
 from elbowroom.system.solving import PortCurrents, SolveStatistics
-from elbowroom.system.spaces import CurrentSpace, all_unknowns
+from elbowroom.system.spaces import CurrentSpace, all_unknowns, reduced_space
 from elbowroom.system.terminations import Termination, reflection_of
 
 
@@ -47,7 +47,7 @@ class Solution:
     coupled : PortCurrents
         Currents (N, P) and loaded admittance (P, P) of the whole station.
     isolated : tuple of PortCurrents
-        For each antenna, the currents and loaded admittance of that antenna alone over the same ground.
+        For each antenna, the currents and loaded admittance of that antenna alone over the same ground; one for all of a kind.
     reference_ohm : float
         Resistance that loaded every port while solving [ohm].
     statistics : SolveStatistics
@@ -62,6 +62,7 @@ class Solution:
     reference_ohm: float
     statistics: SolveStatistics
     space: CurrentSpace = None  # type: ignore[assignment]
+    _kept: dict[bytes, ComplexArray] = field(default_factory=dict, init=False, repr=False)
 
     def __post_init__(self) -> None:
         if self.space is None:
@@ -277,20 +278,32 @@ class Solution:
 
     def _response(self, termination: Termination) -> ComplexArray:
         reflection = reflection_of(termination, self.discretisation.n_ports, self.reference_ohm)
-        return response_matrix(self.coupled.loaded_admittance, self.reference_ohm, reflection)
+        key = reflection.tobytes()
+        # Beams are formed again and again with one termination, and a large station's matrix takes a while to invert.
+        kept = self._kept.get(key)
+        if kept is None:
+            kept = response_matrix(self.coupled.loaded_admittance, self.reference_ohm, reflection)
+            self._kept.clear()
+            self._kept[key] = kept
+        return kept
 
-    def _isolated_amounts(self, termination: Termination) -> list[ComplexArray]:
-        """Return, for each antenna, its terminated receiving currents alone (N of the antenna, P of the antenna)."""
+    def _isolated_responses(self, termination: Termination) -> list[ComplexArray]:
+        """Return, for each antenna, what its ports' currents alone count in its terminated receiving currents, (P, P)."""
         reflection = reflection_of(termination, self.discretisation.n_ports, self.reference_ohm)
-        amounts: list[ComplexArray] = []
+        responses: list[ComplexArray] = []
         made: dict[tuple, ComplexArray] = {}
         for a, alone in enumerate(self.isolated):
             own = reflection[self.discretisation.ports_of(a)]
             key = (id(alone), own.tobytes())
             if key not in made:
-                made[key] = alone.currents @ response_matrix(alone.loaded_admittance, self.reference_ohm, own).T
-            amounts.append(made[key])
-        return amounts
+                made[key] = response_matrix(alone.loaded_admittance, self.reference_ohm, own).T
+            responses.append(made[key])
+        return responses
+
+    def _port_functions(self) -> list[ComplexArray]:
+        """Return, for each kind of antenna, the currents (N, P) of its ports while it stands alone."""
+        d = self.discretisation
+        return [self.isolated[d.antennas_of(k)[0]].currents for k in range(len(d.kinds))]
 
     def _port_rows(self, ports: Sequence[int] | np.ndarray | None) -> np.ndarray:
         count = self.discretisation.n_ports
@@ -347,21 +360,21 @@ class Solution:
         d = self.discretisation
         frame = direction_frame(theta_rad, phi_rad)
         rows = self._port_rows(ports)
-        amounts = self._isolated_amounts(termination)
-        ground = d.ground
+        responses, functions = self._isolated_responses(termination), self._port_functions()
         positions = d.station.positions * [1.0, 1.0, 0.0]
         owner = d.station.port_antennas[rows]
         out = np.empty((rows.size, frame.count, 2), dtype=complex)
+        waves = {k: KindWaves(d.kinds[k], d.ground, d.wavenumber, basis=functions[k]) for k in np.unique(d.kind_of[owner])}
         for first in range(0, frame.count, CHUNK_DIRECTIONS):
             chunk = slice(first, min(first + CHUNK_DIRECTIONS, frame.count))
             part = frame.part(chunk)
-            for k in np.unique(d.kind_of[owner]):
-                vectors = kind_vectors(d.kinds[k], ground, part, d.wavenumber)
+            for k, wave in waves.items():
+                vectors = wave.at(part)
                 for a in np.unique(owner[d.kind_of[owner] == k]):
                     mine = np.flatnonzero(owner == a)
                     local = rows[mine] - d.port_offsets[a]
                     turn = phases(part.unit, positions[a : a + 1], d.wavenumber)[0]
-                    out[mine, chunk] = turn[:, None] * np.tensordot(amounts[a][:, local].T, vectors, axes=1)
+                    out[mine, chunk] = turn[:, None] * np.tensordot(responses[a][:, local].T, vectors, axes=1)
         return out
 
     def beam_currents(self, weights: ArrayLike, termination: Termination = 100.0) -> ComplexArray:
@@ -399,11 +412,12 @@ class Solution:
         frame = direction_frame(theta_rad, phi_rad)
         table = self._checked_weights(weights)
         self._refuse_mixed_responses(table, termination)
-        amounts = self._isolated_amounts(termination)
-        currents = np.empty((self.discretisation.n_unknowns, len(table)), dtype=complex)
-        for a, amount in enumerate(amounts):
-            currents[self.discretisation.unknowns_of(a)] = amount @ table[:, self.discretisation.ports_of(a)].T
-        beams = current_beams(self.discretisation, currents, frame)
+        # A few functions of each antenna, as the coupled beam of a reduced solution has, and for the same reason: speed.
+        space = reduced_space(self.discretisation, self._port_functions())
+        amounts = np.empty((space.size, len(table)), dtype=complex)
+        for a, response in enumerate(self._isolated_responses(termination)):
+            amounts[space.of(a)] = response @ table[:, self.discretisation.ports_of(a)].T
+        beams = current_beams(self.discretisation, amounts, frame, space=space)
         return beams if np.ndim(weights) == 2 else beams[0]
 
     def pointing_weights(

@@ -78,46 +78,94 @@ def phases(unit: FloatArray, positions: FloatArray, wavenumber: float) -> Comple
     return out
 
 
-def _sampled_sums(
-    kind: Kind,
-    frame: DirectionFrame,
-    wavenumber: float,
-    tolerance: float,
-    mirror: bool,
-    circumference: bool,
-    basis: ComplexArray | None,
-) -> ComplexArray:
-    """Return (3, D, N): sums of the x, y, z current weights with the phases of (mirrored) points."""
-    sampled = kind.samples(np.inf, wavenumber, tolerance)
-    flip = np.array([1.0, 1.0, -1.0]) if mirror else np.ones(3)
-    unit = np.ascontiguousarray(frame.unit)
-    points = np.ascontiguousarray((sampled.points.T) * flip)
-    parts = np.empty((2, len(points), frame.count))
-    fill_phases(unit, points, wavenumber, parts[0], parts[1])
-    if circumference:
-        # A tube's far field: J0(ka sin psi), psi the angle between the direction and the (mirrored) wire.
-        tangents, index = np.unique(np.column_stack([sampled.tangent * flip, sampled.radius]), axis=0, return_inverse=True)
-        cosine = np.clip(tangents[:, :3] @ unit.T, -1.0, 1.0)
-        parts *= j0(wavenumber * tangents[:, 3:] * np.sqrt(1.0 - cosine**2))[index.ravel()]
-    if basis is None:
-        n = sampled.charge.shape[1]
-        sums = np.swapaxes(parts, 1, 2) @ np.concatenate(list(sampled.currents), axis=1)
+class KindWaves:
+    """Receive vectors of one kind of antenna at many directions: what does not depend on them is worked out once.
+
+    Parameters
+    ----------
+    kind : Kind
+        Design, attitude and height.
+    ground : GroundKernels
+        The ground.
+    wavenumber : float
+        [rad/m].
+    tolerance : float, optional
+        Relative accuracy of the quadrature along the wires.
+    circumference : bool, optional
+        Whether the current fills the tube (exact with the near kernel) or its axis.
+    basis : complex128 (N, n), optional
+        If given, the receive vectors of these combinations of unknowns instead.
+    """
+
+    def __init__(
+        self,
+        kind: Kind,
+        ground: GroundKernels,
+        wavenumber: float,
+        *,
+        tolerance: float = 1e-8,
+        circumference: bool = True,
+        basis: ComplexArray | None = None,
+    ) -> None:
+        self.ground, self.wavenumber, self.circumference = ground, wavenumber, circumference
+        self.sampled = kind.samples(np.inf, wavenumber, tolerance)
+        currents = self.sampled.currents
+        self.complex = basis is not None
+        self.count = self.sampled.charge.shape[1] if basis is None else basis.shape[1]
+        if basis is None:
+            self.weights = np.concatenate(list(currents), axis=1)
+        else:
+            # Real and imaginary parts of the phases meet those of the weights in one real product.
+            parts = [c @ part for part in (basis.real, basis.imag) for c in currents]
+            self.weights = np.concatenate(parts, axis=1)
+
+    def at(self, frame: DirectionFrame) -> ComplexArray:
+        """Return the receive vectors, the antenna standing at x = y = 0.
+
+        Returns
+        -------
+        complex128 (N, D, 2), or (n, D, 2)
+            Components along theta_hat and phi_hat [m].  Below the horizon of a ground the field is zero.
+        """
+        direct = self._sums(frame, mirror=False)
+        ct, st = np.cos(frame.theta_rad)[:, None], np.sin(frame.theta_rad)[:, None]
+        cp, sp = np.cos(frame.phi_rad)[:, None], np.sin(frame.phi_rad)[:, None]
+        reflection = self.ground.reflection(frame.theta_rad, self.wavenumber)
+        theta = ct * (cp * direct[0] + sp * direct[1]) - st * direct[2]
+        phi = -sp * direct[0] + cp * direct[1]
+        if reflection is not None:
+            image = self._sums(frame, mirror=True)
+            gh, ge = reflection[0][:, None], reflection[1][:, None]
+            theta = theta - ge * (ct * (cp * image[0] + sp * image[1]) + st * image[2])
+            phi = phi + gh * (-sp * image[0] + cp * image[1])
+            below = frame.theta_rad > 0.5 * np.pi * (1.0 + 1e-12)
+            theta[below], phi[below] = 0.0, 0.0
+        return np.ascontiguousarray(np.stack([theta.T, phi.T], axis=-1))
+
+    def _sums(self, frame: DirectionFrame, *, mirror: bool) -> ComplexArray:
+        """Return (3, D, n): sums of the x, y, z current weights with the phases of (mirrored) points."""
+        sampled, n = self.sampled, self.count
+        flip = np.array([1.0, 1.0, -1.0]) if mirror else np.ones(3)
+        unit = np.ascontiguousarray(frame.unit)
+        points = np.ascontiguousarray((sampled.points.T) * flip)
+        parts = np.empty((2, len(points), frame.count))
+        fill_phases(unit, points, self.wavenumber, parts[0], parts[1])
+        if self.circumference:
+            # A tube's far field: J0(ka sin psi), psi the angle between the direction and the (mirrored) wire.
+            tangents, index = np.unique(np.column_stack([sampled.tangent * flip, sampled.radius]), axis=0, return_inverse=True)
+            cosine = np.clip(tangents[:, :3] @ unit.T, -1.0, 1.0)
+            parts *= j0(self.wavenumber * tangents[:, 3:] * np.sqrt(1.0 - cosine**2))[index.ravel()]
+        sums = np.swapaxes(parts, 1, 2) @ self.weights
         result = np.empty((3, frame.count, n), dtype=complex)
         for component in range(3):
-            block = sums[..., component * n : (component + 1) * n]
-            result[component].real, result[component].imag = block[0], block[1]
+            own = slice(component * n, (component + 1) * n)
+            if not self.complex:
+                result[component].real, result[component].imag = sums[0][:, own], sums[1][:, own]
+                continue
+            other = slice((3 + component) * n, (4 + component) * n)
+            result[component].real = sums[0][:, own] - sums[1][:, other]
+            result[component].imag = sums[0][:, other] + sums[1][:, own]
         return result
-    n = basis.shape[1]
-    weights = np.concatenate([c @ basis for c in sampled.currents], axis=1)
-    # Real and imaginary parts of the phases meet those of the weights in one real product.
-    sums = np.swapaxes(parts, 1, 2) @ np.concatenate([weights.real, weights.imag], axis=1)
-    result = np.empty((3, frame.count, n), dtype=complex)
-    for component in range(3):
-        own = slice(component * n, (component + 1) * n)
-        other = slice((3 + component) * n, (4 + component) * n)
-        result[component].real = sums[0][:, own] - sums[1][:, other]
-        result[component].imag = sums[0][:, other] + sums[1][:, own]
-    return result
 
 
 def kind_vectors(
@@ -130,41 +178,5 @@ def kind_vectors(
     circumference: bool = True,
     basis: ComplexArray | None = None,
 ) -> ComplexArray:
-    """Return the receive vectors of the unknowns of one kind, its antenna standing at x = y = 0.
-
-    Parameters
-    ----------
-    kind : Kind
-        Design, attitude and height.
-    ground : GroundKernels
-        The ground.
-    frame : DirectionFrame
-        Directions.
-    wavenumber : float
-        [rad/m].
-    tolerance : float, optional
-        Relative accuracy of the quadrature along the wires.
-    circumference : bool, optional
-        Whether the current fills the tube (exact with the near kernel) or its axis.
-    basis : complex128 (N, n), optional
-        If given, the receive vectors of these combinations of unknowns instead.
-
-    Returns
-    -------
-    complex128 (N, D, 2), or (n, D, 2)
-        Components along theta_hat and phi_hat [m].  Below the horizon of a ground the field is zero.
-    """
-    direct = _sampled_sums(kind, frame, wavenumber, tolerance, False, circumference, basis)
-    ct, st = np.cos(frame.theta_rad)[:, None], np.sin(frame.theta_rad)[:, None]
-    cp, sp = np.cos(frame.phi_rad)[:, None], np.sin(frame.phi_rad)[:, None]
-    reflection = ground.reflection(frame.theta_rad, wavenumber)
-    theta = ct * (cp * direct[0] + sp * direct[1]) - st * direct[2]
-    phi = -sp * direct[0] + cp * direct[1]
-    if reflection is not None:
-        image = _sampled_sums(kind, frame, wavenumber, tolerance, True, circumference, basis)
-        gh, ge = reflection[0][:, None], reflection[1][:, None]
-        theta = theta - ge * (ct * (cp * image[0] + sp * image[1]) + st * image[2])
-        phi = phi + gh * (-sp * image[0] + cp * image[1])
-        below = frame.theta_rad > 0.5 * np.pi * (1.0 + 1e-12)
-        theta[below], phi[below] = 0.0, 0.0
-    return np.ascontiguousarray(np.stack([theta.T, phi.T], axis=-1))
+    """Return the receive vectors of the unknowns of one kind, its antenna standing at x = y = 0; see :class:`KindWaves`."""
+    return KindWaves(kind, ground, wavenumber, tolerance=tolerance, circumference=circumference, basis=basis).at(frame)
