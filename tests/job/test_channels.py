@@ -94,13 +94,46 @@ def test_segments__few_channels_are_solved_one_by_one():
     assert plan_segments(station_of(), wide, TOLERANCE) == []
 
 
-def test_segments__never_pass_over_an_entry_of_the_grounds_table():
-    def plans(*entries):
-        soil = TabulatedSoil(entries, tuple(10.0 + i % 2 for i in range(len(entries))), (0.01,) * len(entries))
-        return plan_segments(Station(station_of().placed, soil), CHANNELS, TOLERANCE)
+def plans_over_table(entries, channels, **options):
+    soil = TabulatedSoil(tuple(entries), tuple(10.0 + i % 2 for i in range(len(entries))), (0.01,) * len(entries))
+    return plan_segments(Station(station_of().placed, soil), channels, TOLERANCE, **options)
 
-    assert len(plans(100e6, 200e6)) == len(plans(CHANNELS[0], CHANNELS[-1])) == 1
-    assert plans(100e6, 148.3e6, 200e6) == []
+
+def test_segments__never_pass_over_an_entry_of_the_grounds_table():
+    assert len(plans_over_table((100e6, 200e6), CHANNELS)) == len(plans_over_table((CHANNELS[0], CHANNELS[-1]), CHANNELS)) == 1
+    # Either side has too few channels.
+    assert plans_over_table((100e6, 148.3e6, 200e6), CHANNELS) == []
+
+
+@pytest.mark.parametrize("spacing", [5e6, 10e6, 50e6])
+def test_segments__end_at_entries_of_the_grounds_table(spacing):
+    channels = tuple(50e6 + 1e5 * np.arange(3001))
+    entries = np.arange(50e6, 350.1e6, spacing)
+    plans = plans_over_table(entries, channels)
+    assert {f for p in plans for f in p.solved} == set(channels)
+    for plan in plans:
+        assert not np.any((entries > plan.low_hz) & (entries < plan.high_hz))
+        assert len(plan.solved) >= FEWEST_CHANNELS
+    for one, other in zip(plans[:-1], plans[1:], strict=True):
+        assert one.high_hz == other.low_hz
+
+
+def test_segments__entries_between_channels_are_between_segments():
+    channels = tuple(140e6 + 1e5 * np.arange(101))
+    plans = plans_over_table((100e6, 143.33e6, 147.111e6, 147.113e6, 200e6), channels)
+    ends = [(p.low_hz, p.high_hz) for p in plans]
+    assert ends == [(140e6, 143.3e6), (143.4e6, 147.1e6), (147.2e6, 150e6)]
+
+
+def test_segments__channels_beside_entries_are_solved_and_enough_between_them():
+    channels = tuple(140e6 + 25e3 * np.arange(801))
+    plans = plans_over_table((100e6, 150e6, 200e6), channels, solve_step_hz=1e6)
+    assert [(p.low_hz, p.high_hz) for p in plans] == [(140e6, 150e6), (150e6, 160e6)]
+    assert {f for p in plans for f in (*p.solved, *p.between)} == set(channels)
+    for plan in plans:
+        assert {plan.low_hz, plan.high_hz} <= set(plan.solved)
+        assert FEWEST_CHANNELS <= len(plan.solved) <= FEWEST_CHANNELS + 1
+        assert np.diff(plan.solved).max() <= 1e6
 
 
 # --- solutions

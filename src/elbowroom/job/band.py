@@ -18,7 +18,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from elbowroom.base.arrays import ComplexArray
+from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import ModelRangeError, SolveError
 from elbowroom.geometry.mesh import MeshSettings
 from elbowroom.geometry.stations import Station
@@ -48,6 +48,9 @@ WIDEST_SHARE = 0.6
 
 FEWEST_CHANNELS = 16
 """Solved channels of a segment below which solving them one by one is as quick; measured."""
+
+SAME_CHANNEL = 1e-9
+"""Relative distance of a channel from an entry of the ground's table below which it is at the entry."""
 
 SEED_RATIO, LEAST_SEED_HZ, SEEDED_STEPS = 3.0, 100.0, 2.0
 """Ratio of the distances from a narrow resonance at which the station is solved, the least of them [Hz], and steps of solving
@@ -122,7 +125,8 @@ def plan_segments(
 ) -> list[SegmentPlan]:
     """Return the segments of a band; channels that are in none are better solved one by one.
 
-    Segments within which the ground's table has an entry are left out: between entries it is linear, and bends there.
+    No segment passes over an entry of the ground's table, which is linear between entries and bends there: segments end at the
+    channels on either side of it, or both at the channel that it is.  A table with an entry to every few channels leaves none.
 
     Parameters
     ----------
@@ -133,7 +137,7 @@ def plan_segments(
     tolerance : float
         Error of embedded patterns that is aimed at.
     solve_step_hz : float, optional
-        About how far apart channels are solved [Hz]; all are by default.
+        About how far apart channels are solved [Hz]; all are by default.  Between close entries of a table it is less.
 
     Raises
     ------
@@ -144,16 +148,50 @@ def plan_segments(
     solved = np.asarray(solved_channels(frequencies_hz, solve_step_hz))
     if len(solved) < FEWEST_CHANNELS:
         return []
-    reach, kinks = reach_of(station), np.array(station.ground.kinks_hz)
+    reach = reach_of(station)
+    plans = []
+    for piece in _pieces(channels, solved, station.ground.kinks_hz, solve_step_hz):
+        chosen = _segment_ends(piece, reach, tolerance)
+        for first, last in zip(chosen[:-1], chosen[1:], strict=True):
+            own = piece[first : last + 1]
+            if len(own) < FEWEST_CHANNELS:
+                continue
+            inside = channels[(channels >= own[0]) & (channels <= own[-1])]
+            between = np.setdiff1d(inside, own)
+            plans.append(SegmentPlan(float(own[0]), float(own[-1]), tuple(map(float, own)), tuple(map(float, between))))
+    return plans
+
+
+def _pieces(
+    channels: FloatArray, solved: FloatArray, kinks_hz: Sequence[float], solve_step_hz: float | None
+) -> list[FloatArray]:
+    """Return the solved channels [Hz] of each part of a band over which the ground does not bend; all if it never does."""
+    inner = [f for f in kinks_hz if channels[0] * (1.0 + SAME_CHANNEL) < f < channels[-1] * (1.0 - SAME_CHANNEL)]
+    if not inner:
+        return [solved]
+    starts = [channels[0], *(channels[channels >= f * (1.0 - SAME_CHANNEL)][0] for f in inner)]
+    ends = [*(channels[channels <= f * (1.0 + SAME_CHANNEL)][-1] for f in inner), channels[-1]]
+    pieces = []
+    for start, end in zip(starts, ends, strict=True):
+        if end <= start:
+            continue
+        # As many as a segment needs, wherever there are as many: else all channels between would be assembled one by one.
+        step = None if solve_step_hz is None else min(solve_step_hz, (end - start) / (FEWEST_CHANNELS - 1))
+        pieces.append(np.asarray(solved_channels(channels[(channels >= start) & (channels <= end)], step)))
+    return pieces
+
+
+def _segment_ends(solved: FloatArray, reach_m: float, tolerance: float) -> list[int]:
+    """Return the solved channels, as indices, at which segments begin and end."""
     widths: dict[float, float] = {}
 
     def edges(share: float) -> list[int]:
-        """Return the solved channels at which segments of a part of the widest begin and end."""
+        """Return those of segments of a part of the widest."""
         found = [0]
         while found[-1] < len(solved) - 1:
             start = float(solved[found[-1]])
             if start not in widths:
-                widths[start] = widest_segment(reach, start, tolerance)
+                widths[start] = widest_segment(reach_m, start, tolerance)
             last = int(np.searchsorted(solved, start + share * widths[start] * (1.0 + 1e-9), side="right")) - 1
             found.append(max(last, found[-1] + 1))
         return found
@@ -163,17 +201,8 @@ def plan_segments(
     for share in np.linspace(0.5, 1.0, 26):
         tried = edges(float(share))
         if len(tried) == len(chosen):
-            chosen = tried
-            break
-    plans = []
-    for first, last in zip(chosen[:-1], chosen[1:], strict=True):
-        own = solved[first : last + 1]
-        if len(own) < FEWEST_CHANNELS or np.any((kinks > own[0]) & (kinks < own[-1])):
-            continue
-        inside = channels[(channels >= own[0]) & (channels <= own[-1])]
-        between = np.setdiff1d(inside, own)
-        plans.append(SegmentPlan(float(own[0]), float(own[-1]), tuple(map(float, own)), tuple(map(float, between))))
-    return plans
+            return tried
+    return chosen
 
 
 @dataclass(frozen=True)
