@@ -191,15 +191,18 @@ def blocks() -> None:
 def whole() -> None:
     """A whole frequency of 256 dipoles by the reduced solver, all cores, real ground against a perfect plane; at most 1.5 times."""
     for frequency in FREQUENCIES_HZ:
-        best = []
         grounds = (PerfectGround(), Soil(10.0, 0.01), MeshOnSoil(Soil(10.0, 0.01), 0.1, 1e-3))
         for ground in grounds:
             solve(replace(benchmark_station(3), ground=ground), frequency, solver="reduced")
-        for ground in grounds:
-            placed = replace(benchmark_station(256), ground=ground)
-            best.append(best_of(lambda: solve(placed, frequency, solver="reduced"), 3))  # noqa: B023
+        placed = [replace(benchmark_station(256), ground=ground) for ground in grounds]
+        # In turn, so that what else the machine does meets all grounds.
+        rounds = np.array([
+            [best_of(lambda: solve(station_, frequency, solver="reduced"), 1) for station_ in placed] for _ in range(7)  # noqa: B023
+        ])  # fmt: skip
+        best, middle = rounds.min(axis=0), np.median(rounds[:, 1:] / rounds[:, :1], axis=0)
         print(f"256 dipoles, {frequency / 1e6:g} MHz: {best[0]:.2f} s over a perfect plane, {best[1] / best[0]:.2f} times that over "
-              f"soil, {best[2] / best[0]:.2f} times over mesh on soil (target 1.5)")  # fmt: skip
+              f"soil, {best[2] / best[0]:.2f} times over mesh on soil; median of the rounds' ratios {middle[0]:.2f} and "
+              f"{middle[1]:.2f} (target 1.5)")  # fmt: skip
 
 
 MEASUREMENTS = {"tables": tables, "fine": fine, "fill": fill, "station": station, "blocks": blocks, "whole": whole}
