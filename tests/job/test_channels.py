@@ -1,24 +1,30 @@
 """Bands of many channels: segments, what is solved and what is made from it, units in the store, job files."""
 
+from dataclasses import replace
+
 import h5py
 import numpy as np
 import pytest
 
 from elbowroom.base.errors import JobFileError, ModelRangeError, SolveError, StoreError
 from elbowroom.geometry.directions import hemisphere_grid
-from elbowroom.geometry.grounds import PerfectGround
-from elbowroom.geometry.soils import TabulatedSoil
+from elbowroom.geometry.grounds import MeshOnSoil, PerfectGround
+from elbowroom.geometry.mesh import mesh_settings
+from elbowroom.geometry.soils import LayeredSoil, Soil, TabulatedSoil
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.job.band import FEWEST_CHANNELS, SegmentChannels, SegmentPlan, plan_segments, solve_band, solved_channels
+from elbowroom.job.channels import ChannelSettings, channel_key
 from elbowroom.job.engine.campaign import Campaign
 from elbowroom.job.engine.items import run_item
 from elbowroom.job.jobfile import read_job
 from elbowroom.job.pipeline import JobRun
-from elbowroom.job.solve import solve
+from elbowroom.job.solve import StationKeys, solve
 from elbowroom.radiation.solution import Solution
 from elbowroom.system.band_features import Feature
-from elbowroom.system.discretisation import discretise
+from elbowroom.system.discretisation import FarSettings, discretise
+from elbowroom.system.self_block import NearSettings
 from elbowroom.system.solving import solve_direct, solve_isolated
+from elbowroom.system.spaces import CurrentSpace
 from helpers import cluster, dipole
 
 TOLERANCE = 1e-3
@@ -226,11 +232,88 @@ def test_segment__one_that_gives_power_is_solved(monkeypatch):
     assert segment.solution(150.3e6).statistics.origin == "interpolated matrix"
 
 
+def rotated(solution):
+    """The same currents in other functions: each kind's mixed among themselves."""
+    rng = np.random.default_rng(0)
+    bases = solution.space.bases
+    mixes = [np.linalg.qr(rng.normal(size=2 * (b.shape[1],)) + 0j)[0] for b in bases]
+    currents = solution.coupled.currents.copy()
+    for a, k in enumerate(solution.discretisation.kind_of):
+        currents[solution.space.of(a)] = mixes[k].conj().T @ currents[solution.space.of(a)]
+    space = CurrentSpace(solution.space.offsets, tuple(b @ m for b, m in zip(bases, mixes, strict=True)))
+    return replace(solution, coupled=replace(solution.coupled, currents=currents), space=space)
+
+
+def test_space__is_like_what_single_precision_leaves_of_it():
+    space = CurrentSpace(np.array([0, 3]), (np.random.default_rng(0).normal(size=(5, 3)) + 0j, None))
+    assert space.like(CurrentSpace(space.offsets, (space.bases[0].astype(np.complex64), None)))
+    for bases in ((space.bases[0] * 1.00001, None), (space.bases[0][:, :2], None), (None, None), space.bases[:1]):
+        assert not space.like(CurrentSpace(space.offsets, bases))
+    assert not space.like(CurrentSpace(np.array([0, 4]), space.bases))
+
+
+@pytest.mark.parametrize("kept", ["other functions", "more functions"])
+def test_segment__channels_kept_in_unlike_functions_are_not_mixed_with_others(kept):
+    plan = SegmentPlan(140e6, 157e6, CHANNELS, (140.5e6, 145.5e6, 150.5e6))
+    segment = SegmentChannels(station_of(2), plan, TOLERANCE)
+    if kept == "other functions":
+        stored = rotated(segment.segment_solution(145e6))
+        assert stored.space.size == segment.segment.space.size
+    else:
+        stored = SegmentChannels(station_of(2), plan, 0.01 * TOLERANCE).solved(145e6)
+        assert stored.space.size > segment.segment.space.size
+    segment._memory[145e6] = stored
+    for f in plan.between:
+        made = segment.solution(f)
+        assert made.statistics.pattern_error <= TOLERANCE
+        assert pattern_error(made, plan.high_hz) <= made.statistics.pattern_error
+    # Those far from it are made from the others as they would be without it.
+    assert made.statistics.origin == "interpolated currents"
+    assert segment.solution(145e6) is stored
+
+
 def test_segment__what_is_not_solved_is_told_where_nothing_may_be():
     segment = SegmentChannels(station_of(2), SegmentPlan(140e6, 157e6, CHANNELS), TOLERANCE)
     segment.solve_missing = False
     with pytest.raises(SolveError, match="140 MHz is not solved yet"):
         segment.solution(140e6)
+
+
+# --- keys
+
+
+def keys_of(station, plan, frequency_hz=140e6, **options):
+    return [
+        channel_key(StationKeys(station), plan, ChannelSettings("default", 1e-3, 1e6), frequency_hz, solved=solved, **options)
+        for solved in (True, False)
+    ]
+
+
+def test_keys__tell_grounds_apart_that_differ_elsewhere_in_the_segment():
+    plan = SegmentPlan(140e6, 157e6, CHANNELS)
+
+    def over(*permittivities, wrap=lambda soil: soil):
+        soil = TabulatedSoil((140e6, 150e6, 160e6), permittivities, (0.01,) * 3)
+        return keys_of(Station(station_of().placed, wrap(soil)), plan)
+
+    for wrap in (lambda s: s, lambda s: LayeredSoil(((0.5, s),), Soil(20.0, 0.02)), lambda s: MeshOnSoil(s, 0.1, 1e-3)):
+        first = over(5.0, 7.0, 8.0, wrap=wrap)
+        assert over(5.0, 7.0, 8.0, wrap=wrap) == first
+        for other in (over(5.0, 7.0, 9.0, wrap=wrap), over(5.0, 7.5, 8.0, wrap=wrap)):
+            assert not set(other) & set(first)
+
+
+def test_keys__of_grounds_that_do_not_vary_are_what_they_were_and_shared_by_copies():
+    plan = SegmentPlan(140e6, 157e6, CHANNELS)
+    level = station_of().placed
+    how = ("segment", "0.001, from 140000000 to 157000000 Hz")
+    for ground in (PerfectGround(), Soil(5.0, 0.01), TabulatedSoil((100e6, 150e6, 200e6), (5.0,) * 3, (0.01,) * 3)):
+        station = Station(level, ground)
+        expected = StationKeys(station).key(140e6, mesh_settings("default"), NearSettings(), FarSettings(), how)
+        assert keys_of(station, plan)[0] == expected
+    varying = TabulatedSoil((100e6, 200e6), (5.0, 7.0), (0.01, 0.01))
+    shifted = [Placed(p.antenna, p.position + np.array([30.0, -7.0, 0.0])) for p in level]
+    assert keys_of(Station(level, varying), plan) == keys_of(Station(shifted, varying), plan)
 
 
 # --- jobs and stores

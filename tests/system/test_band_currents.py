@@ -134,6 +134,8 @@ def test_currents__what_cannot_be_is_refused(places):
         samples.weighting(100.5e6)
     with pytest.raises(ModelRangeError, match="already"):
         samples.add(101e6, of(101e6))
+    with pytest.raises(ModelRangeError, match=r"expected \(12, 12\) coordinates and ports, got \(13, 12\)"):
+        samples.add(103e6, np.zeros((13, 12), dtype=complex))
     for f in (103e6, 104e6):
         samples.add(f, of(f))
     with pytest.raises(ModelRangeError, match="outside"):

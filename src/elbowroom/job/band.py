@@ -39,6 +39,7 @@ from elbowroom.system.discretisation import FarSettings, discretise
 from elbowroom.system.reduction_error import sampled_antennas
 from elbowroom.system.self_block import NearSettings
 from elbowroom.system.solving import REFERENCE_OHM, PortCurrents, SolveStatistics
+from elbowroom.system.spaces import CurrentSpace
 
 MOST_INTERVALS = 6
 """Intervals between frequencies at which a segment is assembled; wider segments would need more functions."""
@@ -162,9 +163,7 @@ def plan_segments(
     return plans
 
 
-def _pieces(
-    channels: FloatArray, solved: FloatArray, kinks_hz: Sequence[float], solve_step_hz: float | None
-) -> list[FloatArray]:
+def _pieces(channels: FloatArray, solved: FloatArray, kinks_hz: Sequence[float], solve_step_hz: float | None) -> list[FloatArray]:
     """Return the solved channels [Hz] of each part of a band over which the ground does not bend; all if it never does."""
     inner = [f for f in kinks_hz if channels[0] * (1.0 + SAME_CHANNEL) < f < channels[-1] * (1.0 - SAME_CHANNEL)]
     if not inner:
@@ -277,7 +276,7 @@ class SegmentChannels:
         self._memory: dict[float, Solution] = {}
         self._fetch, self._keep, self._progress = fetch or self._memory.get, keep or self._remember, progress
         self._segment: BandSegment | None = None
-        self._samples: CurrentSamples | None = None
+        self._samples_in: list[tuple[CurrentSpace, CurrentSamples]] = []
         self._node_errors: dict[float, tuple[float, float]] = {}
         self._counts = BandCounts()
         self._probes: dict[float, tuple[complex, ...]] = {}
@@ -338,20 +337,30 @@ class SegmentChannels:
         """Return whether a solution's coordinates are those of the segment's functions."""
         return solution.statistics.origin == "interpolated matrix"
 
+    @property
+    def _samples(self) -> CurrentSamples | None:
+        """Solved channels from which others are made: of those kept, the most that are in the same functions.
+
+        A segment that was built twice, on machines that round otherwise, may leave channels in functions unlike each other's.
+        """
+        return max((made for _, made in self._samples_in), key=lambda made: len(made.nodes), default=None)
+
     def _add(self, frequency_hz: float) -> None:
-        """Take a solved channel among those from which others are made, if it is in the segment's functions."""
+        """Take a solved channel among those from which others are made, if it is in functions of the segment."""
         solution = self.solved(frequency_hz)
         if not self._is_sample(solution):
             self._node_errors.setdefault(frequency_hz, (np.inf, np.inf))
             return
         self._probes[frequency_hz] = solution.statistics.probes
         d = solution.discretisation
-        if self._samples is None:
+        samples = next((made for space, made in self._samples_in if space.like(solution.space)), None)
+        if samples is None:
             positions = self.station.positions
             distances = np.linalg.norm(positions[:, None] - positions[None, :], axis=2)
             ports = np.concatenate([np.arange(d.n_ports)[d.ports_of(int(a))] for a in sampled_antennas(distances)])
-            self._samples = CurrentSamples(positions, solution.space.offsets, d.port_offsets, ports)
-        self._samples.add(frequency_hz, solution.coupled.currents)
+            samples = CurrentSamples(positions, solution.space.offsets, d.port_offsets, ports)
+            self._samples_in.append((solution.space, samples))
+        samples.add(frequency_hz, solution.coupled.currents)
         s = solution.statistics
         self._node_errors[frequency_hz] = (s.pattern_error, s.port_matrix_error)
 
@@ -380,7 +389,7 @@ class SegmentChannels:
             Only these channels [Hz]; all of the segment by default.
         """
         wanted = np.asarray(self.plan.between if channels is None else channels, dtype=float)
-        if self._samples is None:
+        if not self._samples_in:
             for f in self.plan.solved:
                 self._add(f)
             for f in self.plan.between:

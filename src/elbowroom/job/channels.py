@@ -17,6 +17,7 @@ from elbowroom.geometry.stations import Station
 from elbowroom.job.band import SegmentChannels, SegmentPlan
 from elbowroom.job.sharing import working_on
 from elbowroom.job.solve import StationKeys, from_record, record_fits, to_record
+from elbowroom.store.keys import content_key
 from elbowroom.store.records import Record, Store
 from elbowroom.system.discretisation import FarSettings, discretise
 from elbowroom.system.self_block import NearSettings
@@ -56,6 +57,9 @@ class ChannelSettings:
 def channel_key(keys: StationKeys, plan: SegmentPlan, settings: ChannelSettings, frequency_hz: float, *, solved: bool) -> str:
     """Return the store's key of a channel of a segment.
 
+    Functions of a segment depend on the ground all over it, so that a ground that varies with frequency is told where it bends
+    and at the ends, in addition to what it is at the channel.
+
     Parameters
     ----------
     keys : StationKeys
@@ -74,6 +78,11 @@ def channel_key(keys: StationKeys, plan: SegmentPlan, settings: ChannelSettings,
         how = f"{how}, solved every {settings.solve_step_hz:.12g} Hz"
     if settings.single_storage:
         how = f"{how}, stored in single precision"
+    ground = keys.ground
+    bends = (plan.low_hz, *(f for f in ground.kinks_hz if plan.low_hz < f < plan.high_hz), plan.high_hz)
+    grounds = [ground.at(f) for f in bends]
+    if any(other != grounds[0] for other in grounds[1:]):
+        how = f"{how}, over {content_key(grounds)}"
     return keys.key(frequency_hz, mesh_settings(settings.mesh), NearSettings(), FarSettings(), ("segment", how))
 
 

@@ -132,6 +132,11 @@ class StationKeys:
     ----------
     station : Station
         The station.
+
+    Attributes
+    ----------
+    ground : Ground
+        Its ground.
     """
 
     def __init__(self, station: Station) -> None:
@@ -139,7 +144,7 @@ class StationKeys:
         index_of = {id(d): i for i, d in enumerate(designs)}
         index = [index_of[id(p.antenna)] if id(p.antenna) in index_of else designs.index(p.antenna) for p in station]
         places, attitudes = _relative_places(station)
-        self._ground = station.ground
+        self.ground = station.ground
         self._inputs = {
             "model_version": MODEL_VERSION,
             "designs": [_design_inputs(d) for d in designs],
@@ -153,7 +158,7 @@ class StationKeys:
         self, frequency_hz: float, mesh: MeshSettings, near: NearSettings, far: FarSettings, strategy: tuple[str, str]
     ) -> str:
         """Return the key of the station at a frequency [Hz]; see `solution_key`."""
-        ground = self._ground.at(frequency_hz)
+        ground = self.ground.at(frequency_hz)
         own = {
             "ground": ground,
             "frequency_hz": float(frequency_hz),

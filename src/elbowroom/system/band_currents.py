@@ -187,8 +187,12 @@ class CurrentSamples:
         Raises
         ------
         ModelRangeError
-            If the frequency is there already.
+            If the frequency is there already, or the currents are not as many as the samples'.
         """
+        expected = (int(self.counts.sum()), len(self.antenna_of_port))
+        if currents.shape != expected:
+            msg = f"currents at {frequency_hz:.12g} Hz: expected {expected} coordinates and ports, got {currents.shape}"
+            raise ModelRangeError(msg)
         at = int(np.searchsorted(self.nodes, frequency_hz))
         if at < len(self.nodes) and self.nodes[at] == frequency_hz:
             msg = f"{frequency_hz:.12g} Hz is among the solved frequencies already"

@@ -10,6 +10,9 @@ import numpy as np
 from elbowroom.base.arrays import ComplexArray
 from elbowroom.system.discretisation import Discretisation
 
+ROUNDING = 1e-6
+"""What functions that are the same may differ by, of the largest entry: some are kept in single precision."""
+
 
 @dataclass(frozen=True, eq=False)
 class CurrentSpace:
@@ -35,6 +38,21 @@ class CurrentSpace:
     def reduced(self) -> bool:
         """Whether any antenna has functions of its own."""
         return any(basis is not None for basis in self.bases)
+
+    def like(self, other: CurrentSpace) -> bool:
+        """Return whether the same coordinates mean the same currents in another space, to `ROUNDING`."""
+        if self is other:
+            return True
+        if not np.array_equal(self.offsets, other.offsets) or len(self.bases) != len(other.bases):
+            return False
+        for one, two in zip(self.bases, other.bases, strict=True):
+            if one is two:
+                continue
+            if one is None or two is None or one.shape != two.shape:
+                return False
+            if not np.allclose(one, two, rtol=0.0, atol=ROUNDING * float(np.abs(one).max(initial=0.0))):
+                return False
+        return True
 
     def of(self, antenna: int) -> slice:
         """Return the rows of one antenna."""
