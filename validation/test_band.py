@@ -6,12 +6,16 @@ import pytest
 from elbowroom.base.constants import IMPEDANCE_OF_VACUUM, SPEED_OF_LIGHT, VACUUM_PERMEABILITY
 from elbowroom.geometry.antennas import Antenna, Port
 from elbowroom.geometry.directions import sphere_quadrature
-from elbowroom.geometry.grounds import FreeSpace, PerfectGround
+from elbowroom.geometry.grounds import FreeSpace, MeshOnSoil, PerfectGround
+from elbowroom.geometry.soils import LayeredSoil, Soil
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import Wire
 from elbowroom.job.band import SegmentChannels, SegmentPlan, solve_band
 from elbowroom.system.band import BandSegment, SegmentSettings
 from elbowroom.system.band_currents import CurrentSamples
+from elbowroom.system.band_ground import GroundScan
+from elbowroom.system.discretisation import discretise
+from elbowroom.system.solving import solve_direct
 
 CHANNELS = np.sort(np.concatenate([140e6 + 1e6 * np.arange(18), [140.5e6, 147.53e6, 155.5e6]]))
 
@@ -129,3 +133,55 @@ def test_resonance__channels_beside_a_narrow_one_meet_their_statement():
         worst = max(worst, missed)
     print(f"{segment.counts.solved} solved, {segment.counts.interpolated} interpolated, {segment.counts.assembled} assembled")
     assert worst > 1e-3
+
+
+LEVEL = Antenna("level", [Wire((-0.58, -0.12, 0.44), (0.58, 0.12, 0.56), 0.005)], [Port("x", 0)])
+STANDING = [(0.0, 0.0, 0.0), (1.6, 0.3, 0.0), (10.0, 2.0, 0.0), (24.0, -3.0, 0.0)]
+
+
+def over_ground(ground, low_hz, high_hz):
+    return BandSegment(Station([Placed(LEVEL, p) for p in STANDING], ground), low_hz, high_hz, SegmentSettings(1e-4))
+
+
+def port_error(segment, frequency_hz):
+    """Return what a segment states of the ports at a frequency, what it errs by, and where its matrix came from."""
+    made = segment.solve(frequency_hz)
+    exact = solve_direct(discretise(segment.station, frequency_hz, mesh_hz=segment.high_hz), precision="double")[0]
+    error = np.abs(made.currents.loaded_admittance - exact.loaded_admittance).max() / np.abs(exact.loaded_admittance).max()
+    return made.statistics.port_matrix_error, float(error), made.statistics.origin
+
+
+@pytest.mark.parametrize("nodes", ["as many as the ground asks for", "as few as over a plane"])
+def test_ground__that_resonates_between_nodes_is_checked_there(nodes, monkeypatch):
+    """Identity: the same station, mesh and ground, assembled and solved at the frequency itself.
+
+    Dry sand under a tight mesh and over sea water is a cavity; its resonance lies between the frequencies that are checked anyway.
+    """
+    if nodes == "as few as over a plane":
+        monkeypatch.setattr(GroundScan, "intervals", lambda self, least, factor, tolerance: (least, factor * least))
+    cavity = MeshOnSoil(LayeredSoil(((1.0, Soil(3.0, 1e-5)),), Soil(80.0, 5.0)), 0.03, 1e-3)
+    segment = over_ground(cavity, 71e6, 88.58e6)
+    for frequency in (78.9e6, 85.4e6, 86.1e6):
+        stated, error, origin = port_error(segment, frequency)
+        print(f"{len(segment.nodes)} nodes, {frequency / 1e6:g} MHz, {origin}: ports off by {error:.1e}, stated {stated:.1e}")
+        assert error <= stated <= 1e-4
+    assert any(84e6 < f < 86.5e6 for f in segment.checked)
+
+
+@pytest.mark.parametrize(
+    ("ground", "low_hz", "high_hz"),
+    [
+        (LayeredSoil(((0.5, Soil(20.0, 1e-3)),), Soil(3.0, 1e-4)), 60e6, 72.6e6),
+        (MeshOnSoil(LayeredSoil(((0.5, Soil(9.0, 1e-4)),), Soil(80.0, 5.0)), 0.2, 1e-3), 71e6, 89.7e6),
+    ],
+    ids=["wet layer on dry soil", "mesh on a wet layer over the sea"],
+)
+def test_ground__that_guides_waves_is_met_without_assembling_every_channel(ground, low_hz, high_hz):
+    """Identity as above. With nodes for echoes alone most of these channels broke the tolerance, and were assembled."""
+    segment = over_ground(ground, low_hz, high_hz)
+    for part in (0.1, 0.3, 0.45, 0.62, 0.83):
+        frequency = low_hz + part * (high_hz - low_hz)
+        stated, error, origin = port_error(segment, frequency)
+        print(f"{len(segment.nodes)} nodes, {frequency / 1e6:g} MHz, {origin}: ports off by {error:.1e}, stated {stated:.1e}")
+        assert origin == "interpolated matrix"
+        assert error <= stated <= 1e-4

@@ -9,9 +9,10 @@ from elbowroom.geometry.grounds import FreeSpace, PerfectGround
 from elbowroom.geometry.shapes import log_periodic
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import Wire
-from elbowroom.system.band import BandSegment, SegmentSettings, is_passive
+from elbowroom.system.band import BandSegment, SegmentSettings
 from elbowroom.system.band_interpolation import OwnBlocks, band_nodes, intervals_for, node_weights, reach_of
 from elbowroom.system.discretisation import discretise
+from elbowroom.system.port_algebra import is_passive
 from elbowroom.system.solving import solve_direct
 from helpers import cluster
 

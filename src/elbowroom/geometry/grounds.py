@@ -27,7 +27,7 @@ class FreeSpace:
     kinks_hz: ClassVar[tuple[float, ...]] = ()
     """Frequencies at which its constants change their course: no polynomial in frequency passes over them."""
     echo_path_m: ClassVar[float] = 0.0
-    """Longest detour of waves through it that come back with an amplitude that counts."""
+    """Longest detour of single echoes through it that come back with an amplitude that counts, as planned with."""
 
     def at(self, frequency_hz: float) -> FreeSpace:
         """Return the ground as it is at a frequency [Hz]: numbers only, what a solution depends on."""

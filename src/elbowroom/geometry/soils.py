@@ -22,7 +22,7 @@ MOST_LAYERS, THICKNESS_RANGE_M = 10, (1e-3, 100.0)
 """Layers of :class:`LayeredSoil`."""
 
 LEAST_ECHO = 1e-4
-"""Amplitude below which what comes back from under a layer of soil is left out when steps in frequency are planned."""
+"""Amplitude below which what comes back from under a layer of soil is left out when widths in frequency are planned."""
 
 MOST_MOISTURE = 0.55
 """Largest volumetric water content of the polynomial of :class:`MoistSoil`."""
@@ -298,10 +298,12 @@ class LayeredSoil:
 
     @property
     def echo_path_m(self) -> float:
-        """Optical path [m] down to the deepest layer from which waves come back with `LEAST_ECHO` of their amplitude, and back.
+        """Optical path [m] of one echo down to the deepest layer that is seen through those above it, and back.
 
-        Of the attenuation sigma eta/(2 sqrt(eps_r)) that soil of little loss has at every frequency; where loss is not little, it
-        is overrated, and so is the path.
+        Seen is what comes back with `LEAST_ECHO`, by the attenuation sigma eta/(2 sqrt(eps_r)) and the speed c/sqrt(eps_r) of
+        soil of little loss.  Where loss is not little, waves are attenuated less and are slower, and echoes that come back with
+        some hundredths may be left out; so are second and further echoes and waves that run along a layer.  It serves to choose
+        widths of segments, and bounds nothing.
         """
         amplitude, path, longest = 1.0, 0.0, 0.0
         for thickness, soil in self.layers:

@@ -25,17 +25,17 @@ from elbowroom.geometry.stations import Station
 from elbowroom.radiation.solution import Solution
 from elbowroom.system.assembly import Progress
 from elbowroom.system.band import (
-    INTERPOLATION_SHARE,
     BandSegment,
     SegmentSettings,
-    is_passive,
     narrow_features,
     segment_discretisations,
 )
 from elbowroom.system.band_currents import CurrentSamples, Weighting
 from elbowroom.system.band_features import Feature
+from elbowroom.system.band_ground import INTERPOLATION_SHARE
 from elbowroom.system.band_interpolation import OwnBlocks, intervals_for, reach_of
 from elbowroom.system.discretisation import FarSettings, discretise
+from elbowroom.system.port_algebra import is_passive
 from elbowroom.system.reduction_error import sampled_antennas
 from elbowroom.system.self_block import NearSettings
 from elbowroom.system.solving import REFERENCE_OHM, PortCurrents, SolveStatistics
@@ -437,7 +437,7 @@ class SegmentChannels:
 
     def _own_blocks(self) -> OwnBlocks:
         plan = self.plan
-        _, made = segment_discretisations(
+        _, made, _ = segment_discretisations(
             self.station, plan.low_hz, plan.high_hz, self.tolerance, {**self._options, "mesh_hz": plan.high_hz}
         )
         return OwnBlocks(made)

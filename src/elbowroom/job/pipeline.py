@@ -29,6 +29,7 @@ from elbowroom.job.sampling import FunctionCounts
 from elbowroom.job.solve import SOLUTION_SCHEMA, StationKeys, chosen_solver, solve, strategy_of
 from elbowroom.store import Hdf5Store
 from elbowroom.store.records import DamageReport
+from elbowroom.system.band_ground import segment_intervals
 from elbowroom.system.terminations import PortTermination
 
 if TYPE_CHECKING:
@@ -102,6 +103,7 @@ class JobRun:
         self._solvers: dict[float, str] = {}
         self._functions: FunctionCounts | None = None
         self._segments: list[SegmentPlan] | None = None
+        self._intervals: dict[SegmentPlan, int] = {}
         self._stored_segment: StoredSegment | None = None
         self._keys, self._meshes = StationKeys(self.station), StationMeshes(self.station)
         options: dict[str, Any] = {} if report is None else {"report": report}
@@ -233,7 +235,12 @@ class JobRun:
             shared = predict_reduced(
                 self.station, frequency_hz, job.mesh, job.tolerance, functions=SEGMENT_FUNCTIONS * known, **common
             )
-            return in_segment(shared, SEGMENT_FUNCTIONS * known, job.tolerance, solved=frequency_hz in plan.solved)
+            if plan not in self._intervals:
+                self._intervals[plan] = segment_intervals(self.station, plan.low_hz, plan.high_hz, job.tolerance)[0]
+            return in_segment(
+                shared, SEGMENT_FUNCTIONS * known, job.tolerance, solved=frequency_hz in plan.solved,
+                intervals=self._intervals[plan],
+            )  # fmt: skip
         return predict_reduced(self.station, frequency_hz, job.mesh, job.tolerance, functions=functions, **common)
 
     def sample_functions(self) -> None:

@@ -60,7 +60,11 @@ SOIL_PAIR_COST, SOIL_ASSEMBLY_COST = 1.7, 2.5
 """Time of pairs in the reduced solver and of assembly in the direct one over soil, over that on a perfect plane; measured."""
 
 SEGMENT_FUNCTIONS, SEGMENT_MATRICES = 1.15, 8.0
-"""Functions of a segment over those of one frequency, and matrices of it that are held at once; measured, at 350 MHz."""
+"""Functions of a segment over those of one frequency, and matrices of it that are held at once where it has `USUAL_INTERVALS`;
+measured, at 350 MHz."""
+
+USUAL_INTERVALS = 6
+"""Intervals between frequencies at which a segment is assembled, unless the ground asks for more."""
 
 SEGMENT_SHARE, BETWEEN_SHARE = 0.5, 0.2
 """Time of a channel whose matrix is interpolated, its part in the segment's own included, and of one that is made from others,
@@ -292,7 +296,9 @@ def predict_reduced(
     return Prediction(int(memory), int(disk), float(seconds), unknowns, float(serial))
 
 
-def in_segment(alone: Prediction, functions: float, tolerance: float, *, solved: bool) -> Prediction:
+def in_segment(
+    alone: Prediction, functions: float, tolerance: float, *, solved: bool, intervals: int = USUAL_INTERVALS
+) -> Prediction:
     """Return what a channel takes whose matrix is interpolated, or that is made from solved ones, given what it takes alone.
 
     Parameters
@@ -305,9 +311,11 @@ def in_segment(alone: Prediction, functions: float, tolerance: float, *, solved:
         Of the reduced solver.
     solved : bool
         Whether the channel is solved.
+    intervals : int, optional
+        Intervals between frequencies at which the segment is assembled.
     """
     entry = 8.0 if tolerance >= 3e-5 else 16.0
-    samples = SEGMENT_MATRICES * entry * 0.5 * functions * (functions + TILE_ORDER)
+    samples = (SEGMENT_MATRICES + max(intervals - USUAL_INTERVALS, 0)) * entry * 0.5 * functions * (functions + TILE_ORDER)
     share = SEGMENT_SHARE if solved else BETWEEN_SHARE
     return replace(alone, memory_bytes=int(alone.memory_bytes + samples), seconds=share * alone.seconds)
 

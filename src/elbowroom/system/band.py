@@ -3,10 +3,11 @@
 The mesh and the functions of each antenna are held over the segment.  The functions are those of all nodes together, made
 orthogonal and cut until a few antennas, and then the whole station, meet the tolerance.  At some frequencies between the nodes,
 where interpolation is worst, the residual of the full system is worked out as after any reduced solve: the error found there
-holds what the functions and what the interpolation left out.  At every other frequency the sensitivity of the currents to small
-errors of the matrix is measured by a random one; where a resonance makes it larger than at the checked frequencies the stated
-error grows with it, and where that, or a scattering matrix that gives more power than it gets, breaks the tolerance, the
-residual is worked out there too, and if need be the frequency is assembled for itself.
+holds what the functions and what the interpolation left out.  A ground that resonates is looked at first
+(`elbowroom.system.band_ground`): it may ask for more nodes, and for a check where it does.  At every other frequency the
+sensitivity of the currents to small errors of the matrix is measured by a random one; where a resonance makes it larger than at
+the checked frequencies the stated error grows with it, and where that, or a scattering matrix that gives more power than it gets,
+breaks the tolerance, the residual is worked out there too, and if need be the frequency is assembled for itself.
 
 Features too narrow to be met by any channel are sought in `elbowroom.system.band_features`.
 """
@@ -35,11 +36,12 @@ from elbowroom.system.band_features import (
     probe_sources,
     scanned,
 )
-from elbowroom.system.band_interpolation import MatrixSamples, OwnBlocks, band_nodes, intervals_for, own_blocks, reach_of
+from elbowroom.system.band_ground import GroundScan, segment_intervals
+from elbowroom.system.band_interpolation import MatrixSamples, OwnBlocks, band_nodes, own_blocks
 from elbowroom.system.discretisation import Discretisation, FarSettings, discretise
 from elbowroom.system.factorisation import Factors
 from elbowroom.system.interactions import SkeletonInteractions
-from elbowroom.system.port_algebra import scattering_from_loaded
+from elbowroom.system.port_algebra import is_passive
 from elbowroom.system.reduction import Candidates, ReductionSettings, current_weights
 from elbowroom.system.reduction_error import ReductionError, reduction_error
 from elbowroom.system.self_block import NearSettings
@@ -53,9 +55,6 @@ from elbowroom.system.solving import (
 )
 from elbowroom.system.solving_reduced import ReducedStation, assemble_reduced, port_currents
 from elbowroom.system.spaces import CurrentSpace
-
-INTERPOLATION_SHARE = 0.02
-"""Part of the tolerance that interpolation of blocks may take: errors of many blocks gather in a pattern."""
 
 PROBES = 12
 """Ports whose currents are disturbed to measure how sensitive they are."""
@@ -74,9 +73,6 @@ CHECKED_WIDTH, MOST_RESONANCES = 0.02, 2
 
 MOST_ROUNDS = 3
 """Times that a segment is begun again with more functions when a checked frequency exceeds the tolerance."""
-
-OWN_FACTOR = 2
-"""Intervals of own blocks over those of interactions; the nodes of interactions are among theirs."""
 
 
 @dataclass(frozen=True)
@@ -217,8 +213,8 @@ def segment_discretisations(
     options: dict[str, Any],
     *,
     progress: Progress | None = None,
-) -> tuple[FloatArray, list[Discretisation]]:
-    """Return the frequencies [Hz] at which a segment is assembled, and the station at these and halfway between.
+) -> tuple[FloatArray, list[Discretisation], GroundScan | None]:
+    """Return the frequencies [Hz] at which a segment is assembled, the station at these and some between, and its ground.
 
     Parameters
     ----------
@@ -233,14 +229,14 @@ def segment_discretisations(
     progress : callable, optional
         Told the stage and the fraction done.
     """
-    intervals = intervals_for(high_hz - low_hz, reach_of(station), INTERPOLATION_SHARE * tolerance)
-    fine = band_nodes(low_hz, high_hz, OWN_FACTOR * intervals)
+    intervals, own_intervals, scan = segment_intervals(station, low_hz, high_hz, tolerance)
+    fine = band_nodes(low_hz, high_hz, own_intervals)
     made = []
     for done, f in enumerate(fine):
         made.append(discretise(station, float(f), **options))
         if progress is not None:
             progress("own blocks", (done + 1) / len(fine))
-    return band_nodes(low_hz, high_hz, intervals), made
+    return band_nodes(low_hz, high_hz, intervals), made, scan
 
 
 def narrow_features(
@@ -355,11 +351,11 @@ class BandSegment:
         self._clock = time.perf_counter()
         self.checked: dict[float, tuple[float, float]] = {}
         self.probed: dict[float, ComplexArray] = {}
-        self.nodes, made = segment_discretisations(
+        self.nodes, made, self._ground = segment_discretisations(
             station, low_hz, high_hz, self.settings.tolerance, self._options, progress=progress
         )
         self.own = OwnBlocks(made)
-        self._at_nodes = made[::OWN_FACTOR]
+        self._at_nodes = made[:: (len(made) - 1) // (len(self.nodes) - 1)]
         ends = (self._at_nodes[0], self._at_nodes[-1])
         self.mesh_error = max(mesh_error(d, solve_isolated(d)) for d in ends)
         self._lap("own blocks")
@@ -455,10 +451,17 @@ class BandSegment:
                 self._checkers[found.frequency_hz] = node
 
     def check_frequencies(self) -> np.ndarray:
-        """Return frequencies between nodes at which interpolation is least certain, the topmost interval always among them."""
+        """Return frequencies between nodes at which interpolation is least certain, the topmost interval always among them.
+
+        Where the ground resonates, the worst of its kernels' frequencies are added.
+        """
         between = 0.5 * (self.nodes[:-1] + self.nodes[1:])
         chosen = np.unique(np.linspace(len(between) - 1, 0, min(self.settings.checked, len(between))).round().astype(int))
-        return np.asarray(between[chosen])
+        checked = np.asarray(between[chosen])
+        if self._ground is None:
+            return checked
+        counts = len(self.nodes) - 1, len(self.own.nodes) - 1
+        return np.append(checked, self._ground.missed_by(checked, *counts, self.settings.tolerance))
 
     def _check(self) -> float:
         self.checked, self.probed = {}, {}
@@ -568,18 +571,3 @@ class BandSegment:
         statistics = replace(solved.statistics, mesh_error=self.mesh_error)
         self._lap("assembled channels")
         return ChannelSolution(solved.discretisation, solved.currents, solved.space, isolated, statistics, float("nan"))
-
-
-def is_passive(loaded_admittance: ComplexArray, reference_ohm: float, tolerance: float) -> bool:
-    """Return whether no wave sent into the ports comes back larger than by a tolerance.
-
-    The largest singular value of S is at most 1 + tolerance exactly if (1 + tolerance)^2 - S^H S has a Cholesky factor.
-    """
-    s = scattering_from_loaded(loaded_admittance, reference_ohm)
-    if not np.all(np.isfinite(s)):
-        return False
-    try:
-        np.linalg.cholesky((1.0 + tolerance) ** 2 * np.eye(len(s)) - s.conj().T @ s)
-    except np.linalg.LinAlgError:
-        return False
-    return True

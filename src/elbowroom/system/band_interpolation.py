@@ -2,9 +2,10 @@ r"""Impedance matrices between the frequencies at which they were assembled.
 
 Between antennas i and j the product :math:`f Z_{ij}(f) \exp(jkd_{ij})`, with d the distance of their places, has no phase left
 but that of paths across the antennas themselves, and no pole: on a mesh and in functions that are held, it is a polynomial in
-frequency for all purposes.  The same holds for an antenna's own block without loss, loads and networks, which are put back as
-they are at each frequency.  Nodes are the extrema of a Chebyshev polynomial, ends included; own blocks, in which potentials
-of current and charge nearly cancel, have twice as many intervals.
+frequency for all purposes, unless the ground resonates or guides waves (`elbowroom.system.band_ground`).  The same holds for an
+antenna's own block without loss, loads and networks, which are put back as they are at each frequency.  Nodes are the extrema of
+a Chebyshev polynomial, ends included; own blocks, in which potentials of current and charge nearly cancel, have up to twice as
+many intervals.
 
 References
 ----------
@@ -83,10 +84,11 @@ def intervals_for(span_hz: float, reach_m: float, tolerance: float) -> int:
 
 
 def reach_of(station: Station) -> float:
-    """Return the largest extra path [m] of waves between antennas over the distance of their places.
+    """Return the extra path [m] over the distance of their places that waves between antennas are planned with.
 
-    From one end of an antenna to another and past the image, or down through layers of the ground and back: what is left in the
-    phase of interactions once that of the places is taken out, and what an antenna's own block holds.
+    From one end of an antenna to another and past the image, which is the largest over free space and images; over layers, down
+    through them and back once in addition.  Left out are waves that run in the ground or along its layers, slower than in air
+    over all of the distance, and echoes of echoes: `elbowroom.system.band_ground` sees whether they count.
     """
     reach = 0.0
     seen: set[tuple] = set()

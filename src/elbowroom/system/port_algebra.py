@@ -177,3 +177,18 @@ def response_matrix(loaded_admittance: ComplexArray, reference_ohm: float, refle
     shorted = reflection == -1.0
     factor = np.where(shorted, 1.0 - reflection, -reference_ohm * (1.0 + reflection))
     return factor[:, None] * inverse
+
+
+def is_passive(loaded_admittance: ComplexArray, reference_ohm: float, tolerance: float) -> bool:
+    """Return whether no wave sent into the ports comes back larger than by a tolerance.
+
+    The largest singular value of S is at most 1 + tolerance exactly if (1 + tolerance)^2 - S^H S has a Cholesky factor.
+    """
+    s = scattering_from_loaded(loaded_admittance, reference_ohm)
+    if not np.all(np.isfinite(s)):
+        return False
+    try:
+        np.linalg.cholesky((1.0 + tolerance) ** 2 * np.eye(len(s)) - s.conj().T @ s)
+    except np.linalg.LinAlgError:
+        return False
+    return True
