@@ -179,6 +179,16 @@ class TestSphereQuadrature:
         with pytest.raises(GeometryError, match="degree: expected a whole number"):
             sphere_quadrature(degree)
 
+    def test_sphere_quadrature__more_zenith_angles_raise_the_degree_in_their_cosine(self):
+        rule = sphere_quadrature(4, hemisphere=True, zenith_angles=20)
+        assert rule.shape == (20, 5)
+        z = np.cos(rule.theta_rad)
+        assert_allclose(rule.integrate(z**39), 2.0 * np.pi / 40.0, rtol=1e-13)
+        few = sphere_quadrature(4, hemisphere=True)
+        assert abs(few.integrate(np.cos(few.theta_rad) ** 39) - 2.0 * np.pi / 40.0) > 1e-3
+        with pytest.raises(GeometryError, match="zenith_angles: expected at least 3 for degree 4, got 2"):
+            sphere_quadrature(4, zenith_angles=2)
+
 
 class TestCut:
     def test_cut__lies_in_its_plane_from_horizon_to_horizon(self):

@@ -10,6 +10,7 @@ from elbowroom import Antenna, FreeSpace, Layout, PerfectGround, Placed, Port, S
 from elbowroom.base.constants import SPEED_OF_LIGHT
 from elbowroom.base.errors import GeometryError, ModelRangeError
 from elbowroom.geometry.mesh import MESHES
+from elbowroom.geometry.soils import LayeredSoil, Soil
 from elbowroom.job.checks import PROXIMITY_RADII, RADIUS_LIMIT_WAVELENGTHS, check_station, mesh_statistics
 from elbowroom.system.discretisation import discretise
 
@@ -287,7 +288,29 @@ def test_mesh_statistics__count_what_the_solver_makes():
 def test_wire__just_above_a_perfect_ground__is_doubted():
     low = Antenna("low", [Wire((-0.4, 0, 0.005), (0.4, 0, 0.005), 0.004)], [Port("x", 0)])
     problems = check_station(Station([Placed(low)], PerfectGround()), [100e6])
-    assert any("5 mm above the ground, 2.5 radii from its image" in p.text for p in problems)
+    (doubt,) = [p.text for p in problems if "its image" in p.text]
+    # ln(2 h/a) over arcosh(h/a), h = 1.25 a
+    assert "5 mm above the ground, 2.5 radii from its image; below 10" in doubt
+    assert "32 % too high" in doubt
+    thick = Antenna("thick", [Wire((-0.4, 0, 0.05), (0.4, 0, 0.05), 0.011)], [Port("x", 0)])
+    over_soil = [p.text for p in check_station(Station([Placed(thick)], Soil(10.0, 0.02)), [100e6]) if "its image" in p.text]
+    assert len(over_soil) == 1
+    assert "9.1 radii from its image" in over_soil[0]
+    assert "0.56 % too high" in over_soil[0]
     high = Antenna("high", [Wire((-0.4, 0, 0.02), (0.4, 0, 0.02), 0.004)], [Port("x", 0)])
     assert not any("its image" in p.text for p in check_station(Station([Placed(high)], PerfectGround()), [100e6]))
     assert not any("its image" in p.text for p in check_station(Station([Placed(low)], FreeSpace()), [100e6]))
+
+
+def test_echoes__too_quick_for_the_power_over_the_sky__are_doubted():
+    wire = Antenna("d", [Wire((-0.2, 0, 0.5), (0.2, 0, 0.5), 0.002)], [Port("x", 0)])
+
+    def said(depth_m, conductivity, frequencies):
+        ground = LayeredSoil(((depth_m, Soil(3.0, conductivity)),), Soil(30.0, 0.1))
+        return [p.text for p in check_station(Station([Placed(wire)], ground), frequencies) if "quadrature" in p.text]
+
+    (doubt,) = said(100.0, 1e-5, [50e6, 350e6])
+    assert doubt.startswith("at 350 MHz the ground's reflection turns so quickly")
+    assert "leave out 0.03 of it (expected: 1e-05)" in doubt
+    assert said(100.0, 1e-5, [50e6]) == []
+    assert said(20.0, 1e-4, [350e6]) == []

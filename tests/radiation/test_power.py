@@ -4,13 +4,22 @@ import numpy as np
 import pytest
 from numpy.testing import assert_allclose
 
+from elbowroom.base.errors import ModelRangeWarning
 from elbowroom.geometry.antennas import Antenna, Load, Port
-from elbowroom.geometry.grounds import FreeSpace, PerfectGround
+from elbowroom.geometry.directions import Directions
+from elbowroom.geometry.grounds import FreeSpace, MeshOnSoil, PerfectGround
 from elbowroom.geometry.networks import FeedPoint, Line, Network
+from elbowroom.geometry.soils import LayeredSoil, Soil
 from elbowroom.geometry.stations import Placed, Station
 from elbowroom.geometry.wires import Wire
+from elbowroom.job.oneantenna import alone
 from elbowroom.job.solve import solve
-from helpers import FREQUENCY_HZ, cluster
+from elbowroom.radiation.patterns import station_patterns
+from elbowroom.radiation.power import power_directions
+from elbowroom.radiation.power_quadrature import MOST_REFLECTION_DEGREE, power_sphere, reflection_degree
+from elbowroom.system.discretisation import discretise
+from elbowroom.system.plane_waves import direction_frame
+from helpers import FREQUENCY_HZ, cluster, crossed, dipole
 
 
 @pytest.mark.parametrize("ground", [True, False], ids=["perfect", "free-space"])
@@ -66,3 +75,84 @@ def test_power_parts__network_takes_what_its_lossy_lines_do():
     assert_allclose(lossy.networks + lossy.radiated, lossy.accepted, rtol=1e-5)
     # a matched line of 1.3 dB would take 26 %; one that carries waves both ways takes more
     assert lossy.fraction("networks")[0] > 1.0 - 10.0**-0.13
+
+
+# --- integration over the sky above grounds that echo
+
+DRY, WET, SEA = Soil(3.0, 1e-4), Soil(30.0, 0.1), Soil(80.0, 5.0)
+
+
+def panels(n_panels, n_phi):
+    """Return a rule that knows nothing of reflections: Gauss rules of 24 points on panels that shrink towards the horizon."""
+    x, w = np.polynomial.legendre.leggauss(24)
+    edges = (np.arange(n_panels + 1) / n_panels) ** 2
+    low, step = edges[:-1, None], np.diff(edges)[:, None]
+    cosine, weight = (low + step * (x + 1.0) / 2.0).ravel(), (step * w / 2.0).ravel()
+    phi = np.arange(n_phi) * (2.0 * np.pi / n_phi)
+    return Directions(
+        np.repeat(np.arccos(cosine), n_phi), np.tile(phi, cosine.size), np.repeat(weight * (2.0 * np.pi / n_phi), n_phi)
+    )
+
+
+def sent(d, sky):
+    """Power of a current through the first gap."""
+    current = d.kinds[0].mesh.gap_vectors.T[:, :1].astype(complex)
+    return sky.integrate(
+        np.sum(np.abs(station_patterns(d, current, direction_frame(sky.theta_rad, sky.phi_rad))[0]) ** 2, axis=-1)
+    )
+
+
+@pytest.mark.parametrize(
+    ("ground", "frequency_hz"),
+    [
+        (LayeredSoil(((10.0, DRY),), WET), 350e6),
+        (LayeredSoil(((20.0, DRY),), WET), 350e6),
+        (LayeredSoil(((40.0, DRY),), WET), 150e6),
+        (MeshOnSoil(LayeredSoil(((2.0, Soil(3.0, 0.0)),), SEA), 0.1, 1e-3), 200e6),
+        (MeshOnSoil(Soil(10.0, 0.01), 0.02, 1e-3), 50e6),
+        (SEA, 50e6),
+    ],
+    ids=["10m", "20m", "40m", "mesh-on-lossless", "fine-mesh", "sea"],
+)
+@pytest.mark.parametrize("upright", [True, False], ids=["upright", "level"])
+def test_power_directions__follow_the_echoes_of_layers(ground, frequency_hz, upright):
+    design = dipole(half_length=0.2, height=0.5 if upright else 0.1, direction=(0.0, 0.0, 1.0) if upright else (1.0, 0.0, 0.0))
+    d = discretise(alone(design, ground), frequency_hz, self_blocks=False)
+    reference, coarser = sent(d, panels(40, 12)), sent(d, panels(32, 12))
+    assert reference == pytest.approx(coarser, rel=1e-7)
+    assert sent(d, power_directions(d)) == pytest.approx(reference, rel=1e-6)
+
+
+def test_power_sphere__of_one_antenna_follows_echoes_too():
+    d = discretise(alone(dipole(half_length=0.2, height=0.5), LayeredSoil(((20.0, DRY),), WET)), 350e6, self_blocks=False)
+    assert sent(d, power_sphere(d, d.wavenumber * 0.7, 8.0)) == pytest.approx(sent(d, panels(24, 12)), rel=1e-6)
+
+
+def test_power_directions__of_large_stations_over_even_ground_are_no_more_than_the_degree_asks_for():
+    places = [(x, y, 0.0) for x in (0.0, 30.0) for y in (0.0, 25.0)]
+    shapes = []
+    for ground in (PerfectGround(), Soil(10.0, 0.01), SEA, MeshOnSoil(Soil(10.0, 0.01), 0.1, 1e-3)):
+        d = discretise(Station([Placed(crossed(), p) for p in places], ground), 200e6, self_blocks=False)
+        shapes.append(power_directions(d).shape)
+    assert len(set(shapes)) == 1
+
+
+def test_reflection_degree__of_known_polynomials():
+    """T_7 with cos(theta) from 0 to 1; its square is (1 + T_14)/2, and T_3^2 is of lower degree."""
+
+    def reflection(theta):
+        turn = np.arccos(2.0 * np.cos(theta) - 1.0)
+        return 0.5j * np.cos(7.0 * turn), 0.9 * np.cos(3.0 * turn)
+
+    degree, missing = reflection_degree(reflection)
+    assert degree == 14
+    assert missing < 1e-12
+
+
+def test_power_directions__say_so_where_echoes_turn_too_quickly():
+    ground = LayeredSoil(((100.0, Soil(3.0, 1e-5)),), WET)
+    d = discretise(alone(dipole(half_length=0.2, height=0.5), ground), 350e6, self_blocks=False)
+    with pytest.warns(ModelRangeWarning, match=f"350 MHz: .* degree {MOST_REFLECTION_DEGREE} .* leave out 0.03 of it"):
+        sky = power_directions(d)
+    error = sent(d, sky) / sent(d, panels(80, 12)) - 1.0
+    assert 1e-8 < abs(error) < 0.03

@@ -176,7 +176,7 @@ def hemisphere_grid(step_deg: float) -> Directions:
     return _product(theta, phi, rows * step)
 
 
-def sphere_quadrature(degree: int, hemisphere: bool = False) -> Directions:
+def sphere_quadrature(degree: int, hemisphere: bool = False, *, zenith_angles: int | None = None) -> Directions:
     """Return directions and weights that integrate spherical harmonics exactly.
 
     Gauss-Legendre rule in cos(theta), equal steps in phi.  Over the sphere, and likewise over the
@@ -191,21 +191,28 @@ def sphere_quadrature(degree: int, hemisphere: bool = False) -> Directions:
     hemisphere : bool
         Only the directions above the horizon (zenith angle below 90 deg); the rule is then a Gauss rule
         in cos(theta) on (0, 1).
+    zenith_angles : int, optional
+        How many, where more are wanted than the degree asks for: degree // 2 + 1.
 
     Returns
     -------
     Directions
-        (degree // 2 + 1) x (degree + 1) directions, zenith first, with weights and shape.
+        ``zenith_angles`` x (degree + 1) directions, zenith first, with weights and shape.
 
     Raises
     ------
     GeometryError
-        If the degree is negative or not a whole number.
+        If the degree is negative or not a whole number, or there are too few zenith angles for it.
     """
     if isinstance(degree, bool) or not isinstance(degree, int | np.integer) or degree < 0:
         msg = f"degree: expected a whole number, 0 or more, got {degree!r}"
         raise GeometryError(msg)
-    nodes, weights = np.polynomial.legendre.leggauss(int(degree) // 2 + 1)
+    least = int(degree) // 2 + 1
+    n_theta = least if zenith_angles is None else zenith_angles
+    if n_theta < least:
+        msg = f"zenith_angles: expected at least {least} for degree {degree}, got {zenith_angles!r}"
+        raise GeometryError(msg)
+    nodes, weights = np.polynomial.legendre.leggauss(n_theta)
     cos_theta = nodes[::-1]
     rows = weights[::-1]
     if hemisphere:

@@ -57,6 +57,7 @@ def ground_doubts(station: Station, frequencies_hz: Sequence[float]) -> Iterator
             f"top layer of the soil {ground.soil.layers[0][0]:.3g} m, thinner than the pitch of the mesh on it "
             f"({ground.pitch_m:.3g} m); the fields of single wires reach below it, and the model counts the top layer alone"
         )
+    yield from _quick_reflection(station, frequencies_hz)
     worst: dict[str, tuple[float, str]] = {}
     for frequency in frequencies_hz:
         try:
@@ -88,6 +89,25 @@ def ground_doubts(station: Station, frequencies_hz: Sequence[float]) -> Iterator
             _keep(worst, "lateral", 1.0 / max(nepers, 1e-9), text)
     for _, text in worst.values():
         yield text
+
+
+def _quick_reflection(station: Station, frequencies_hz: Sequence[float]) -> Iterator[str]:
+    """Yield what the integration of radiated power cannot follow, at the lowest or the highest frequency.
+
+    Echoes of layers turn more quickly the higher the frequency, the fields along a fine mesh the lower.
+    """
+    from elbowroom.kernels.lossy_grounds import ground_response
+    from elbowroom.radiation.power_quadrature import reflection_degree, unresolved_reflection
+
+    for frequency in sorted({min(frequencies_hz), max(frequencies_hz)}, reverse=True):
+        try:
+            response = ground_response(station.ground, frequency)
+        except ModelRangeError:
+            continue  # told where the job is read
+        text = unresolved_reflection(*reflection_degree(response.reflection))
+        if text is not None:
+            yield f"at {frequency / 1e6:.6g} MHz {text}"
+            return
 
 
 def _index(soil: EvenSoil, frequency_hz: float) -> complex:

@@ -21,7 +21,7 @@ from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.constants import wavelength_of
 from elbowroom.base.errors import GeometryError, ModelRangeError
 from elbowroom.geometry.antennas import Antenna
-from elbowroom.geometry.directions import Directions, azimuth_deg, hemisphere_grid, ludwig3, sphere_quadrature
+from elbowroom.geometry.directions import Directions, azimuth_deg, hemisphere_grid, ludwig3
 from elbowroom.geometry.grounds import FreeSpace, Ground
 from elbowroom.geometry.mesh import MeshSettings, mesh_settings
 from elbowroom.geometry.stations import Placed, Station
@@ -29,7 +29,7 @@ from elbowroom.job.checks import Problem, check_station
 from elbowroom.job.compare import decibels, half_power_width_deg, refined_peak, total_power
 from elbowroom.job.files import write_explained_csv
 from elbowroom.job.solve import solution_key, solve, strategy_of
-from elbowroom.radiation.power import LEAST_LOSSY_DEGREE
+from elbowroom.radiation.power_quadrature import power_sphere
 from elbowroom.radiation.solution import Solution, antenna_power_gain
 from elbowroom.store.records import Store
 from elbowroom.system.discretisation import FarSettings
@@ -40,6 +40,9 @@ SKY_STEP_DEG, FINEST_SKY_STEP_DEG = 2.0, 0.25
 
 CUT_STEP_DEG = 0.25
 """Step of the planes on which half-power widths are read; the crossing itself is interpolated."""
+
+SPHERE_DIGITS = 8.0
+"""Digits of a field that the quadrature of its power is made for."""
 
 LEAST_ACCEPTED = 1e-9
 """Part of the available power that a port must accept for an efficiency to be told."""
@@ -248,17 +251,8 @@ def sky_for(solution: Solution) -> Directions:
 
 
 def sphere_for(solution: Solution) -> Directions:
-    """Return directions and weights that integrate the power of an antenna's patterns, over the sky only above a ground.
-
-    The degree follows the rule L = ka + 1.8 d^(2/3) (ka)^(1/3) for fields of sources within a radius a to d digits (Chew, Jin,
-    Michielssen, Song (eds.), Fast and Efficient Algorithms in Computational Electromagnetics, 2001, section 3.3; from memory),
-    with d = 8; power takes twice that.  A ground's image is within the radius, too.
-    """
-    ground = solution.station.ground
-    size = _electrical_radius(solution)
-    order = int(np.ceil(size + 1.8 * 8.0 ** (2.0 / 3.0) * size ** (1.0 / 3.0))) + 2
-    degree = max(2 * order, LEAST_LOSSY_DEGREE) if ground.lossy else 2 * order
-    return sphere_quadrature(degree, hemisphere=not ground.open_below)
+    """Return directions and weights that integrate the power of an antenna's patterns; see :func:`power_sphere`."""
+    return power_sphere(solution.discretisation, _electrical_radius(solution), SPHERE_DIGITS)
 
 
 @dataclass(frozen=True, eq=False)

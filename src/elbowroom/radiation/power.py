@@ -8,16 +8,17 @@ import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.constants import IMPEDANCE_OF_VACUUM
-from elbowroom.geometry.directions import Directions, sphere_quadrature
+from elbowroom.geometry.directions import Directions
 from elbowroom.radiation.beams import current_beams
 from elbowroom.radiation.patterns import CHUNK_DIRECTIONS, station_patterns
+from elbowroom.radiation.power_quadrature import power_sphere
 from elbowroom.system.discretisation import Discretisation, attachments, extent_of
 from elbowroom.system.plane_waves import direction_frame
 from elbowroom.system.self_block import lumped_loads, wire_loss
 from elbowroom.system.spaces import CurrentSpace
 
-LEAST_LOSSY_DEGREE = 96
-"""Degree of the quadrature over the sky above a lossy ground: its reflection turns quickly near the horizon."""
+POWER_DIGITS = 6.0
+"""Digits of a field that the quadrature of its power is made for."""
 
 
 @dataclass(frozen=True)
@@ -62,20 +63,12 @@ class PowerParts:
 
 
 def power_directions(discretisation: Discretisation) -> Directions:
-    """Return directions and weights that integrate the power of any field of a station.
-
-    The degree follows the rule L = ka + 1.8 d^(2/3) (ka)^(1/3) for fields of sources within a radius a to d digits (Chew, Jin,
-    Michielssen, Song (eds.), Fast and Efficient Algorithms in Computational Electromagnetics, 2001, section 3.3; from memory),
-    with d = 6; power takes twice that.
-    """
+    """Return directions and weights that integrate the power of any field of a station; see :func:`power_sphere`."""
     ground, extent = discretisation.station.ground, extent_of(discretisation.station)
     # an image stands as far below the ground as the antenna above
     tall = extent.highest_m if not ground.open_below else 0.5 * (extent.highest_m - extent.lowest_m)
     size = discretisation.wavenumber * float(np.hypot(0.5 * extent.widest_m, tall))
-    degree = 2 * (int(np.ceil(size + 1.8 * 6.0 ** (2.0 / 3.0) * size ** (1.0 / 3.0))) + 2)
-    if ground.lossy:
-        degree = max(degree, LEAST_LOSSY_DEGREE)
-    return sphere_quadrature(degree, hemisphere=not ground.open_below)
+    return power_sphere(discretisation, size, POWER_DIGITS)
 
 
 def power_parts(
