@@ -17,7 +17,7 @@ from elbowroom.radiation.patterns import station_patterns
 from elbowroom.system.assembly import PairFiller, antenna_distances
 from elbowroom.system.band import BandSegment, SegmentSettings
 from elbowroom.system.discretisation import discretise, extent_of
-from elbowroom.system.ground_blocks import ground_block, ring_samples
+from elbowroom.system.ground_blocks import RING_TOLERANCE, ground_block, ring_count, ring_samples
 from elbowroom.system.interactions import SkeletonInteractions, SkeletonTable, carried_field
 from elbowroom.system.plane_waves import direction_frame
 from elbowroom.system.reduction import ReductionSettings
@@ -100,14 +100,41 @@ def test_own_blocks__are_those_of_images(fake, attitude):
     assert [k.mesh.n_unknowns for k in fake_d.kinds] == [k.mesh.n_unknowns for k in true_d.kinds]
 
 
-@pytest.mark.parametrize("height", [0.01, 0.05, 0.2])
-def test_own_block__of_a_low_wire_is_that_of_its_image(fake, height):
-    """Three points round the wire leave what is of third order in radius over twice the height."""
-    low = dipole(height=height, direction=(1.0, 0.2, 0.0))
+@pytest.mark.parametrize(
+    ("height", "radius"), [(0.01, 0.002), (0.05, 0.002), (0.2, 0.002), (0.05, 0.01), (0.05, 0.015), (0.05, 0.02), (0.1, 0.02)]
+)
+@pytest.mark.parametrize("direction", [(1.0, 0.2, 0.0), (1.0, 0.0, 0.0), (0.0, 1.0, 0.0)], ids=["askew", "east", "north"])
+def test_own_block__of_a_low_wire_is_that_of_its_image(fake, height, radius, direction):
+    """Points round the wire, the first to its side, leave a term of order 2 n in the logarithm: C(2 n, n)/(2 n) (a/2h)^(2 n)."""
+    low = dipole(height=height, direction=direction, radius=radius)
     found, expected = (discretise(Station([Placed(low, (0, 0, 0))], g), FREQUENCY_HZ) for g in (ANY_SOIL, PerfectGround()))
     free = discretise(Station([Placed(low, (0, 0, 0))]), FREQUENCY_HZ).kinds[0].self_block
     images = expected.kinds[0].self_block - free
-    assert relative(found.kinds[0].self_block - free, images) < 3.0 * (0.002 / (2.0 * height)) ** 3 + 1e-7
+    assert relative(found.kinds[0].self_block - free, images) < 5e-6
+
+
+@pytest.mark.parametrize("ratio", [0.01, 0.05, 0.06, 0.1, 0.18, 0.25, 0.33])
+@pytest.mark.parametrize("aside_deg", [0.0, 10.0, 30.0, 90.0])
+def test_ring_count__means_of_a_logarithm_over_points_are_those_over_circles(ratio, aside_deg):
+    """The mean over circles about two parallel lines is that of their distance, 1: ln 1 (mean value of harmonic functions)."""
+    count = ring_count(np.array([ratio]), np.array([1.0]))
+    turns = 1j * np.exp(2j * np.pi * np.arange(count) / count)
+    ways = np.exp(1j * np.radians(aside_deg)) + ratio * (turns[:, None] + turns.conj()[None, :])
+    assert abs(np.mean(np.log(np.abs(ways)))) < 1.05 * RING_TOLERANCE
+    assert count == 3 or 2.0 / (count - 2) * ratio ** (count - 2) > RING_TOLERANCE
+
+
+def test_ring_samples__high_wires_have_three_points_and_only_low_ones_more():
+    level = dipole(height=1.0, direction=(1.0, 0.0, 0.0))
+    d = discretise(station(ANY_SOIL, PLACES[:1], antenna=level), FREQUENCY_HZ, self_blocks=False)
+    mesh = d.kinds[0].mesh
+    for up, count in ((0.0, 3), (-0.979, 3), (-0.983, 5), (-0.996, 7)):
+        ends = (mesh.start + [0.0, 0.0, up], mesh.end + [0.0, 0.0, up])
+        samples = ring_samples(mesh, *ends, 1.0 + up, d.wavenumber, 1e-8)
+        assert samples.points.shape[2] == count
+        across = samples.points - samples.points.mean(axis=2, keepdims=True)
+        assert_allclose(np.linalg.norm(across, axis=0), 0.002, rtol=1e-9)
+        assert_allclose(across[2, :, 0], 0.0, atol=1e-12)  # the first to the side
 
 
 def test_pairs__sampled_and_close_are_those_of_images(fake):

@@ -36,7 +36,7 @@ from elbowroom.system.solving import (
 from elbowroom.system.solving_reduced import solve_reduced
 from elbowroom.system.spaces import CurrentSpace, all_unknowns
 
-MODEL_VERSION = 2
+MODEL_VERSION = 3
 """Raised whenever a change of the physics or numerics changes solved currents beyond rounding."""
 
 PLACE_STEP_M = 1e-6

@@ -2,7 +2,7 @@
 
 The ground's part of the kernels is smooth between points above it, so that Gauss points along the wires serve, as many as the
 distance to where an image would be asks for.  Currents are spread round the wires as they are in the direct part: the mean over
-three points of a circle is that over all of it up to terms of third order in its radius over the distance.
+n points of a circle is that over all of it up to terms of order n in its radius over the distance.
 """
 
 from __future__ import annotations
@@ -17,7 +17,11 @@ from elbowroom.geometry.mesh import Mesh
 from elbowroom.kernels.grounds import GroundKernels, Workspace
 from elbowroom.kernels.quadrature import points_per_element, sample_mesh
 
-RING_POINTS = 3
+RING_COUNTS = (3, 5, 7, 9)
+"""Points round a wire: three for wires more than 10 radii above the ground, more for thicker or lower ones."""
+
+RING_TOLERANCE = 1e-4
+"""What means over rings of points may lack of the logarithmic kernel of a parallel wire; see :func:`ring_count`."""
 
 MOST_KERNELS = 2_000_000
 """Pairs of points whose kernels are worked out at a time, to keep the memory small."""
@@ -29,8 +33,8 @@ class RingSamples:
 
     Attributes
     ----------
-    points : float64 (3, Q, RING_POINTS)
-        [m]
+    points : float64 (3, Q, R)
+        R of them round a wire at each quadrature point [m].
     currents : float64 (3, Q, N)
         Weights of the x, y and z currents [m].
     charge : float64 (Q, N)
@@ -43,10 +47,33 @@ class RingSamples:
 
 
 def _across(tangent: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Return two unit vectors (E, 3) across each of some unit vectors (E, 3)."""
-    first = np.cross(tangent, np.eye(3)[np.argmin(np.abs(tangent), axis=1)])
+    """Return two unit vectors (E, 3) across each of some unit vectors (E, 3), the first of them level."""
+    upright = np.abs(tangent[:, 2]) > 1.0 - 1e-9
+    first = np.cross(tangent, np.where(upright[:, None], [1.0, 0.0, 0.0], [0.0, 0.0, 1.0]))
     first /= np.linalg.norm(first, axis=1)[:, None]
     return first, np.cross(tangent, first)
+
+
+def ring_count(radius: FloatArray, distance: FloatArray) -> int:
+    r"""Return how many points round wires stand for whole circles, seen from some distances.
+
+    The mean of the logarithm of the distance to n points of a circle of radius a differs from that to all of it by
+
+    .. math:: \frac{1}{n} \ln \left|1 - (a / z)^n \right|
+
+    at a complex place z, the first point's direction taken as real, an exact identity (the roots of unity).  Kernels have such a
+    ring at both ends.  Straight above, where the image of the wire itself is seen and most counts, (a/z)^n is imaginary for odd
+    n and a first point to the side: what is left is of order 2 n.
+
+    Parameters
+    ----------
+    radius : float64 (E,)
+        a [m].
+    distance : float64 (E,)
+        abs(z), from the axis of a wire to where its image would be [m].
+    """
+    ratio = float(np.max(radius / distance))
+    return next((n for n in RING_COUNTS if 2.0 / n * ratio**n <= RING_TOLERANCE), RING_COUNTS[-1])
 
 
 def ring_samples(
@@ -75,7 +102,8 @@ def ring_samples(
     sampled = sample_mesh(placed, counts, panels)
     element = np.repeat(np.arange(mesh.n_elements), counts * panels)
     first, second = _across(placed.tangent)
-    angle = 2.0 * np.pi * np.arange(RING_POINTS) / RING_POINTS
+    n_ring = ring_count(mesh.radius, clear)
+    angle = 2.0 * np.pi * np.arange(n_ring) / n_ring
     ring = mesh.radius[:, None, None] * (
         np.cos(angle)[None, :, None] * first[:, None] + np.sin(angle)[None, :, None] * second[:, None]
     )
@@ -97,25 +125,26 @@ def ground_block(ground: GroundKernels, samples: RingSamples, samples2: RingSamp
     """
     current = np.sqrt(wavenumber * IMPEDANCE_OF_VACUUM / (4.0 * np.pi))
     charge = np.sqrt(IMPEDANCE_OF_VACUUM / (4.0 * np.pi * wavenumber))
-    n, n2, count2 = samples.charge.shape[1], samples2.charge.shape[1], samples2.points.shape[1]
+    n, n2 = samples.charge.shape[1], samples2.charge.shape[1]
+    rings, rings2 = samples.points.shape[2], samples2.points.shape[2]
     flat2 = samples2.points.reshape(3, -1)
     level2 = np.concatenate([current * samples2.currents[0], current * samples2.currents[1]], axis=1)
     upright2, charge2 = current * samples2.currents[2], charge * samples2.charge
     crossed2 = wavenumber * np.concatenate([upright2, charge2], axis=1)
     total = np.zeros((2, n, n2))
     work = Workspace()
-    step = max(1, MOST_KERNELS // (RING_POINTS * flat2.shape[1]))
+    step = max(1, MOST_KERNELS // (rings * flat2.shape[1]))
     for first in range(0, samples.points.shape[1], step):
         rows = slice(first, first + step)
         points = np.ascontiguousarray(samples.points[:, rows].reshape(3, -1))
         kernels = ground.correction(points, flat2, wavenumber, work)
         assert kernels is not None  # of a ground that has one
         # Weights are real: real and imaginary parts of the kernels meet them apart.
-        level = _ring_mean(kernels.horizontal, count2) @ level2
-        upright = _ring_mean(kernels.vertical, count2) @ upright2
-        charges = _ring_mean(kernels.charge, count2) @ charge2
+        level = _ring_mean(kernels.horizontal, rings, rings2) @ level2
+        upright = _ring_mean(kernels.vertical, rings, rings2) @ upright2
+        charges = _ring_mean(kernels.charge, rings, rings2) @ charge2
         if kernels.cross is not None:
-            crossed = _ring_mean(kernels.cross, count2) @ crossed2
+            crossed = _ring_mean(kernels.cross, rings, rings2) @ crossed2
             charges = charges + crossed[..., :n2]
             upright = upright - crossed[..., n2:]
         for part, weights in ((level[..., :n2], samples.currents[0]), (level[..., n2:], samples.currents[1])):
@@ -125,9 +154,9 @@ def ground_block(ground: GroundKernels, samples: RingSamples, samples2: RingSamp
     return np.asarray(1j * (total[0] + 1j * total[1]))
 
 
-def _ring_mean(kernel: FloatArray, count2: int) -> FloatArray:
-    """Return the mean (2, Q, Q') of a kernel over the rings of both its points."""
-    last = kernel.reshape(2, -1, RING_POINTS, count2, RING_POINTS)
+def _ring_mean(kernel: FloatArray, rings: int, rings2: int) -> FloatArray:
+    """Return the mean (2, Q, Q') of a kernel over the rings, of so many points each, of both its points."""
+    last = kernel.reshape(2, -1, rings, kernel.shape[2] // rings2, rings2)
     # Sums of a few strided parts: half the time of a mean over two axes.
-    inner = last[..., 0] + last[..., 1] + last[..., 2]
-    return np.asarray((inner[:, :, 0] + inner[:, :, 1] + inner[:, :, 2]) / RING_POINTS**2)
+    inner = sum((last[..., p] for p in range(1, rings2)), last[..., 0])
+    return np.asarray(sum((inner[:, :, p] for p in range(1, rings)), inner[:, :, 0]) / (rings * rings2))
