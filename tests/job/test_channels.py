@@ -390,6 +390,24 @@ def test_job__keys_tell_tolerance_segment_step_and_storage_apart(folder):
     assert len(set(keys)) == 6
 
 
+@pytest.mark.parametrize(("spacing_mhz", "told"), [(5, True), (10, False)])
+def test_job__a_table_of_soil_too_fine_for_segments_is_told(folder, spacing_mhz, told):
+    entries = range(140, 165, spacing_mhz)
+    rows = [f"{f}e6,{10 + f % 7},0.01" for f in entries]
+    (folder / "soil.csv").write_text("\n".join(["frequency_hz,relative_permittivity,conductivity_s_per_m", *rows]) + "\n")
+    ground = "antenna = \"dipole.toml\"\n[station.ground]\nkind = 'soil'\nfile = 'soil.csv'"
+    text = JOB.replace('antenna = "dipole.toml"', ground).replace("solve_step_hz = 1e6\n", "")
+    (folder / "job.toml").write_text(text)
+    run = JobRun(read_job(folder / "job.toml"))
+    doubts = [p.text for p in run.problems() if "one by one" in p.text]
+    assert len(doubts) == told
+    if told:
+        assert doubts[0].startswith("35 of 35 channels are assembled one by one")
+        assert "of which 3 lie in the band" in doubts[0]
+    else:
+        assert [(p.low_hz, p.high_hz) for p in run.segments] == [(140e6, 150e6)]
+
+
 def test_job__none_assembles_every_frequency(folder):
     run = run_of(folder, "solve_step_hz = 1e6", "segments = 'none'", frequencies_hz=[150e6])
     assert run.segments == []

@@ -38,7 +38,8 @@ shift_north_m``
 ``[band] start_hz, stop_hz,      instead of the list: start, start + step, ... up to stop, stop included if a
 step_hz``                        whole number of steps away [Hz]
 ``[band] segments``              ``"auto"``: where the reduced method solves many channels, matrices are assembled at a
-                                 few frequencies and interpolated to the channels, within the tolerance; ``"none"``:
+                                 few frequencies and interpolated to the channels, within the tolerance, between
+                                 entries of a soil's table where there are 16 channels or more; ``"none"``:
                                  every frequency is assembled for itself
 ``[band] solve_step_hz``         about how far apart channels are solved [Hz]; those in between are interpolated from
                                  them where the estimated error allows, else solved too; all are solved by default

@@ -121,7 +121,7 @@ class JobRun:
     def problems(self) -> list[Problem]:
         """Return what is wrong or doubtful in the model and its terminations; nothing is solved."""
         found = check_station(self.station, self.frequencies_hz, self.job.mesh)
-        doubts = [*self.job.terminations.doubts(), *self._beam_doubts()]
+        doubts = [*self.job.terminations.doubts(), *self._beam_doubts(), *self._segment_doubts()]
         return [*found, *(Problem("warning", text) for text in doubts)]
 
     def _beam_doubts(self) -> list[str]:
@@ -142,6 +142,22 @@ class JobRun:
                     "mean; their polarisations differ and the beam may not form"
                 )
         return doubts
+
+    def _segment_doubts(self) -> list[str]:
+        """Return whether a soil's table keeps many channels from sharing matrices."""
+        kinks = self.station.ground.kinks_hz
+        channels = self.job.frequencies_hz
+        inside = sum(channels[0] < f < channels[-1] for f in kinks)
+        if not inside or self.job.segments != "auto" or self.job.solver == "direct" or len(channels) < FEWEST_CHANNELS:
+            return []
+        alone = sum(self.segment_of(f) is None and self.solver_at(f) == "reduced" for f in channels)
+        if alone < FEWEST_CHANNELS:
+            return []
+        return [
+            f"{alone} of {len(channels)} channels are assembled one by one, in which the table of the soil may have a part: "
+            f"channels share matrices between two of its entries, of which {inside} lie in the band, where there are "
+            f"{FEWEST_CHANNELS} or more"
+        ]
 
     def plan(self) -> list[Unit]:
         """Return the units of the job, which the store has, and what the others take."""
