@@ -340,3 +340,45 @@ def test_screen__closed_or_full__leaves_no_trace_back(job, closed, code):
     done = subprocess.run(["bash", "-c", f"{arguments} {tail}"], capture_output=True, text=True, check=False)
     assert "Traceback" not in done.stderr
     assert done.returncode == code
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "words"),
+    [
+        ('title = "Seven antennas"', "title = " + "9" * 5000, "a number of thousands of digits"),
+        ('title = "Seven antennas"', "title = " + "[" * 3000 + "]" * 3000, "brackets nested hundreds deep"),
+        ('title = "Seven antennas"', 'title = "red\\u001b[31m\\nline"', r'"red\x1b[31m\nline"'),
+        ('ground = "perfect"', "ground = " + "[" * 200 + "]" * 200, "station.ground = [[...]]"),
+    ],
+)
+def test_job__that_no_reader_expects__is_told_in_one_message(command, job, change, old, new, words):
+    change(job, old, new)
+    refused(command("inspect", job), 2, "job.toml", words)
+
+
+def test_job__whose_layout_is_a_pipe_that_nobody_writes__is_not_waited_for(command, job):
+    import os
+
+    (job.parent / "layout.csv").unlink()
+    os.mkfifo(job.parent / "layout.csv")
+    refused(command("inspect", job), 2, "layout.csv", "the file is empty")
+
+
+@pytest.mark.parametrize("victim", ["job.toml", "antenna.toml", "layout.csv", "store", "store/deeper/solve.log"])
+def test_log__is_not_written_into_files_of_the_job(command, job, victim):
+    target = job.parent / victim
+    before = target.read_bytes() if target.exists() else None
+    refused(command("solve", job, "--log", target), 7, "cannot write", victim)
+    assert (target.read_bytes() if target.exists() else None) == before
+
+
+def test_log__on_a_full_disk__stops_nothing(command, job):
+    outcome = command("solve", job, "--log", "/dev/full", "--quiet")
+    assert (outcome.code, outcome.err) == (0, ""), outcome.err
+    assert list((job.parent / "store").glob("*/*.h5"))
+
+
+def test_store__that_is_a_link_to_itself__is_refused(command, job):
+    (job.parent / "store").symlink_to("store")
+    refused(command("solve", job), 6, "store")
+    refused(command("store", "pack", job, job.parent / "p"), 6)

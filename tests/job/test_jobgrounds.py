@@ -107,7 +107,7 @@ def test_job__has_the_ground_that_its_table_describes(job, ground, expected):
         (SOIL + "conductivity_s_per_m = 0.1\n" + DRY + "thickness_m = 1\n" + MIDDLE, "beside layers, each of which has its own"),
         (SOIL + "relative_permittivity = 3\n" + DRY + "thickness_m = 1\n" + MIDDLE, "relative_permittivity and layers given"),
         (SOIL + DRY + "thicknes_m = 1\n" + MIDDLE, "did you mean 'thickness_m'?"),
-        (SOIL + DRY + "thickness_m = 1\n" + MIDDLE.replace("0.2", "0.9"), "water_content 0.9"),
+        (SOIL + DRY + "thickness_m = 1\n" + MIDDLE.replace("0.2", "0.9"), "station.ground: layer 2: water_content 0.9"),
         (SOIL + DRY + "thickness_m = 1\n" + TABLE_BELOW.replace("soil", "sail"), "station.ground.layers: "),
         ("[station.ground]\nkind = 'perfect'\n" + DRY + MIDDLE, "layers is given, which kind"),
         (SOIL + "relative_permittivity = 10", "conductivity_s_per_m is missing beside relative_permittivity"),
@@ -136,6 +136,19 @@ def test_job__soil_must_be_known_at_every_frequency(job, tmp_path):
     (tmp_path / "short.csv").write_text("frequency_hz,relative_permittivity,conductivity_s_per_m\n100e6,12,0.01\n200e6,9,0.02\n")
     with pytest.raises(JobFileError, match="60 MHz lies outside its 100 to 200 MHz"):
         job(SOIL + "file = 'short.csv'")
+
+
+def test_job__layer_and_line_of_bad_soil_are_named(job, tmp_path):
+    lines = ["frequency_hz,relative_permittivity,conductivity_s_per_m", "100e6,12,0.01", "200e6,0.5,0.02"]
+    (tmp_path / "bad.csv").write_text("\n".join(lines))
+    with pytest.raises(JobFileError, match=r"line 3: relative_permittivity 0\.5: expected a number from 1 to 100"):
+        job(SOIL + "file = 'bad.csv'")
+    (tmp_path / "short.csv").write_text("\n".join(lines[:2]))
+    with pytest.raises(JobFileError, match="station.ground: layer 2: soil table: 60 MHz lies outside"):
+        job(SOIL + DRY + "thickness_m = 1\n" + TABLE_BELOW.replace("soil.csv", "short.csv"))
+    (tmp_path / "empty.csv").write_text("")
+    with pytest.raises(JobFileError, match="a header line and frequencies, a line each, expected"):
+        job(SOIL + "file = 'empty.csv'")
 
 
 def key(ground, frequency_hz=150e6):

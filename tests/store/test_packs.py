@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import os
 import tarfile
 
 import numpy as np
@@ -186,3 +187,20 @@ def test_full_disk__leaves_no_half_a_pack_and_no_half_a_unit(full_store, pack, t
         leave(None)
         unpack(pack, tmp_path / "disk" / "other")
         assert len(other.keys()) == N_UNITS
+
+
+def test_pack__replaces_packs_only(full_store, tmp_path):
+    units = sorted(unit_paths(full_store.folder.parent))
+    mine = tmp_path / "layout.csv"
+    mine.write_text("east_m,north_m\n")
+    with pytest.raises(StoreError, match=r"layout\.csv: exists already and is no pack"):
+        write_pack(mine, units, replace=True)
+    assert mine.read_text() == "east_m,north_m\n"
+
+
+def test_pack__unit_that_is_a_pipe__is_damaged_and_not_waited_for(full_store, tmp_path):
+    units = sorted(unit_paths(full_store.folder.parent))
+    units[0].unlink()
+    os.mkfifo(units[0])
+    with pytest.raises(StoreError, match="not an ordinary file"):
+        write_pack(tmp_path / "p", units)

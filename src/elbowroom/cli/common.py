@@ -85,16 +85,36 @@ def checked_output(run: JobRun, path: Path) -> Path:
         Naming what stands there.
     """
     from elbowroom.base.errors import ExportError
+    from elbowroom.base.inputs import real_path
 
-    target, job = path.resolve(), run.job
+    target, job = real_path(path), run.job
     own = [job.path, job.layout_path, *job.antenna_paths.values(), job.as_built_path, *job.ground_paths]
-    if any(target == Path(p).resolve() for p in own if p is not None):
+    if any(target == real_path(p) for p in own if p is not None):
         msg = f"cannot write {path}: it is a file of the job itself"
         raise ExportError(msg)
-    if target.is_relative_to(job.store_folder.resolve()):
+    if target.is_relative_to(real_path(job.store_folder)):
         msg = f"cannot write {path}: it lies in the job's store"
         raise ExportError(msg)
     return path
+
+
+def checked_log(runs: list[JobRun], path: Path) -> None:
+    """Refuse a log that would be written into a file of a job, or where its store's folder is to be.
+
+    Raises
+    ------
+    ExportError
+        Naming what stands there.
+    """
+    from elbowroom.base.errors import ExportError
+    from elbowroom.base.inputs import real_path
+
+    for run in runs:
+        if real_path(path) == real_path(run.job.store_folder):
+            msg = f"cannot write {path}: it is the folder of the job's store"
+            raise ExportError(msg)
+        if real_path(path).parent != real_path(run.job.store_folder):
+            checked_output(run, path)
 
 
 def checked_folder(folder: Path) -> Path:

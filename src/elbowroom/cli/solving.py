@@ -95,9 +95,12 @@ def solve_all(runs: list[JobRun], screen: Screen, wish: Wish | None = None) -> l
     ElbowroomError
         If nothing can be started.
     """
+    from elbowroom.cli.common import checked_log
     from elbowroom.job.engine.campaign import Campaign
 
     wish = wish or Wish()
+    if wish.log is not None:
+        checked_log(runs, wish.log)
     for run in runs:
         for line in run.job.resolved_lines():
             screen.say(f"  {line}")
@@ -331,7 +334,9 @@ def _log(path: Path) -> Iterator[logging.Logger]:
     handler: logging.Handler
     try:
         path.parent.mkdir(parents=True, exist_ok=True)
-        handler = logging.FileHandler(path, encoding="utf-8")
+        handler = logging.FileHandler(path, encoding="utf-8", errors="backslashreplace")
+        # a full disk says so where units are stored; logging would show a traceback for each line instead
+        handler.handleError = lambda record: None  # type: ignore[method-assign]
     except OSError:
         handler = logging.NullHandler()
     handler.setFormatter(logging.Formatter("%(asctime)s %(levelname)s %(message)s"))
@@ -343,7 +348,8 @@ def _log(path: Path) -> Iterator[logging.Logger]:
         raise
     finally:
         log.removeHandler(handler)
-        handler.close()
+        with contextlib.suppress(OSError):
+            handler.close()
 
 
 def _log_end(log: logging.Logger, item: WorkItem, result: ItemResult) -> None:

@@ -187,13 +187,14 @@ def prune(
 @STORE
 @FILE
 @click.option("--leave-damaged", is_flag=True, help="Pack the sound units although others are damaged.")
-@click.option("--replace", is_flag=True, help="Write over FILE if it exists.")
+@click.option("--replace", is_flag=True, help="Write over FILE if it exists and is a pack.")
 @modes
 def pack(store: Path, file: Path, leave_damaged: bool, replace: bool, mode: str | None) -> None:
     """Write all units of STORE, or those that a job needs, into one portable FILE; every byte is checked.
 
     FILE is a tar file with a sum over all of it; 'unpack' adds it to another store.
     """
+    from elbowroom.base.inputs import real_path
     from elbowroom.cli.screen import readable_bytes
     from elbowroom.job.storecare import needs_of, place_of
     from elbowroom.store.care import entries, entry_of
@@ -201,7 +202,7 @@ def pack(store: Path, file: Path, leave_damaged: bool, replace: bool, mode: str 
 
     screen = make_screen(mode)
     place = place_of(store)
-    if file.resolve().is_relative_to(place.folder.resolve()):
+    if real_path(file).is_relative_to(real_path(place.folder)):
         msg = "a pack cannot stand inside the store itself"
         raise StoreError(msg, path=file)
     if file.exists() and file.is_file() and not replace:

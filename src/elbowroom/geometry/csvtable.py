@@ -20,6 +20,7 @@ import numpy as np
 
 from elbowroom.base.arrays import FloatArray
 from elbowroom.base.errors import JobFileError
+from elbowroom.base.inputs import read_input
 
 _UNITS = {"_s_per_m": "siemens per metre", "_hz": "hertz", "_m": "metres", "_deg": "degrees"}
 """Units by how columns end; others are plain numbers."""
@@ -84,7 +85,7 @@ def read_rows(
         If the file cannot be read or split into columns; other problems are returned, so that the caller can add to them.
     """
     columns = (*texts[:1], *numbers, *texts[1:])
-    records, problems = _split_records(_read_text(file))
+    records, problems = _split_records(_read_text(file, things))
     if not records:
         fail_table(file, what, problems or [(0, f"no header line and no {things}")])
     header_line, header = records[0]
@@ -129,9 +130,9 @@ def counted(count: int, noun: str) -> str:
     return f"{count} {noun}{'' if count == 1 else 's'}"
 
 
-def _read_text(file: Path) -> str:
+def _read_text(file: Path, things: str) -> str:
     try:
-        data = file.read_bytes()
+        data = read_input(file)
     except FileNotFoundError:
         near = difflib.get_close_matches(file.name, _siblings(file), n=1)
         msg = "no such file" + (f"; did you mean {near[0]!r}?" if near else "")
@@ -143,7 +144,7 @@ def _read_text(file: Path) -> str:
         msg = f"cannot be read: {getattr(cause, 'strerror', None) or cause}"
         raise JobFileError(msg, file=file) from cause
     if not data.strip():
-        msg = "the file is empty; a header line and one line for each antenna expected"
+        msg = f"the file is empty; a header line and {things}, a line each, expected"
         raise JobFileError(msg, file=file)
     try:
         return data.decode("utf-8-sig")

@@ -35,7 +35,7 @@ def checked_number(name: str, value: float, low: float, high: float, *, open_low
     """Return a number from a range; raise ModelRangeError naming it if it is not."""
     number = float(value)
     if not (np.isfinite(number) and low <= number <= high and not (open_low and number == low)):
-        msg = f"{name} {value!r}: expected a number from {'above ' if open_low else ''}{low:g} to {high:g}"
+        msg = f"{name} {number!r}: expected a number from {'above ' if open_low else ''}{low:g} to {high:g}"
         raise ModelRangeError(msg)
     return number
 
@@ -329,8 +329,15 @@ class LayeredSoil:
         ModelRangeError
             If a layer is not known there.
         """
-        layers = tuple((thickness, soil.at(frequency_hz)) for thickness, soil in self.layers)
-        return replace(self, layers=layers, bottom=self.bottom.at(frequency_hz))
+        soils = []
+        for number, (_, soil) in enumerate(self.strata, start=1):
+            try:
+                soils.append(soil.at(frequency_hz))
+            except ModelRangeError as cause:
+                msg = f"layer {number}: {cause}"
+                raise ModelRangeError(msg) from cause
+        layers = tuple((thickness, soil) for (thickness, _), soil in zip(self.layers, soils[:-1], strict=True))
+        return replace(self, layers=layers, bottom=soils[-1])
 
     def describe(self) -> str:
         """Return one line for people."""

@@ -115,7 +115,13 @@ class GroundTable(SoilTable):
         """Return the soil; raise JobFileError or ModelRangeError if it cannot be."""
         if self.layers is None:
             return self.even_soil(folder, self.tolerance)
-        even = [layer.even_soil(folder, self.tolerance) for layer in self.layers]
+        even = []
+        for number, layer in enumerate(self.layers, start=1):
+            try:
+                even.append(layer.even_soil(folder, self.tolerance))
+            except ModelRangeError as cause:
+                msg = f"layer {number}: {cause}"
+                raise ModelRangeError(msg) from cause
         thick = [layer.thickness_m or 0.0 for layer in self.layers[:-1]]
         return LayeredSoil(tuple(zip(thick, even[:-1], strict=True)), even[-1], self.tolerance)
 

@@ -11,6 +11,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from elbowroom.base.errors import ElbowroomError, StoreError
+from elbowroom.base.inputs import read_input, real_path
 from elbowroom.job.dropping import PORTS_SCHEMA
 from elbowroom.job.groundtables import GROUND_SCHEMA, table_key
 from elbowroom.job.solve import SOLUTION_SCHEMA
@@ -145,16 +146,15 @@ def jobs_beside(folder: Path) -> list[JobRun]:
     found = []
     for path in sorted(folder.absolute().parent.glob("*.toml")):
         try:
-            with path.open("rb") as file:
-                table = tomllib.load(file)
+            table = tomllib.loads(read_input(path).decode("utf-8-sig"))
             if "band" not in table and "station" not in table:
                 continue  # an antenna, or somebody else's
             run = JobRun(read_job(path))
-        except (OSError, ValueError, ElbowroomError) as cause:
+        except (OSError, ValueError, RecursionError, ElbowroomError) as cause:
             first = str(cause).splitlines()[0]
             msg = f"beside it stands {path}, which may be a job of this store and cannot be read: {first}"
             raise StoreError(msg, path=folder) from cause
-        if run.job.store_folder.resolve() == folder.resolve():
+        if real_path(run.job.store_folder) == real_path(folder):
             found.append(run)
     return found
 
@@ -265,12 +265,12 @@ def plan_pruning(
         be read, a run works on a unit that no known job needs, or the system refuses.
     """
     for run in named:
-        if run.job.store_folder.resolve() != folder.resolve():
+        if real_path(run.job.store_folder) != real_path(folder):
             msg = f"the job {run.job.path} has another store: {run.job.store_folder}"
             raise StoreError(msg, path=folder)
-    runs = {run.job.path.resolve(): run for run in named}
+    runs = {real_path(run.job.path): run for run in named}
     if not only_named:
-        runs |= {path: run for run in jobs_beside(folder) if (path := run.job.path.resolve()) not in runs}
+        runs |= {path: run for run in jobs_beside(folder) if (path := real_path(run.job.path)) not in runs}
         if not runs:
             msg = "no job says what must stay: name those whose units are needed (--job), or say that none is (--only-named)"
             raise StoreError(msg, path=folder)

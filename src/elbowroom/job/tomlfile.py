@@ -17,6 +17,7 @@ from typing import Any, NoReturn, TypeVar, get_args
 from pydantic import BaseModel, ConfigDict, ValidationError
 
 from elbowroom.base.errors import JobFileError
+from elbowroom.base.inputs import read_input
 
 Model = TypeVar("Model", bound=BaseModel)
 
@@ -73,7 +74,7 @@ def read_toml(path: str | Path, what: str) -> tuple[str, dict[str, Any]]:
     """
     file = Path(path)
     try:
-        data = file.read_bytes()
+        data = read_input(file)
     except FileNotFoundError:
         try:
             siblings = [p.name for p in file.parent.iterdir() if p.is_file()]
@@ -108,6 +109,11 @@ def read_toml(path: str | Path, what: str) -> tuple[str, dict[str, Any]]:
         shown = text.splitlines()[number - 1].strip()[:80] if text.splitlines()[number - 1 :] else ""
         msg = f"not TOML: {place}: {reason[:1].lower()}{reason[1:]}" + (f": {shown}" if shown else "")
         raise JobFileError(msg, file=file) from cause
+    except (RecursionError, ValueError) as cause:
+        # not faults of the grammar: brackets too deep for the parser, more digits than Python makes a number of
+        deep = isinstance(cause, RecursionError)
+        msg = "not usable TOML: " + ("brackets nested hundreds deep" if deep else "a number of thousands of digits")
+        raise JobFileError(msg, file=file) from cause
 
 
 def key_path(*parts: str | int) -> str:
@@ -118,8 +124,13 @@ def key_path(*parts: str | int) -> str:
             path += f"[{part}]"
         else:
             bare = re.fullmatch(r"[A-Za-z0-9_-]+", part)
-            path += ("." if path else "") + (part if bare else f'"{part}"')
+            path += ("." if path else "") + (part if bare else f'"{visible(part)}"')
     return path
+
+
+def visible(text: str) -> str:
+    """Return text with what no screen should be sent, line ends and control characters, escaped."""
+    return "".join(c if c.isprintable() else c.encode("unicode_escape").decode("ascii") for c in text)
 
 
 def shown(value: Any) -> str:
@@ -129,9 +140,10 @@ def shown(value: Any) -> str:
     elif isinstance(value, dict):
         text = "a table"
     elif isinstance(value, str):
-        text = '"' + value + '"'
+        text = '"' + visible(value[:100]) + '"'
     elif isinstance(value, list):
-        text = "[" + ", ".join(shown(v) for v in value[:6]) + (", ...]" if len(value) > 6 else "]")
+        parts = ["[...]" if isinstance(v, list) else shown(v) for v in value[:6]] + ["..."] * (len(value) > 6)
+        text = "[" + ", ".join(parts) + "]"
     else:
         text = str(value)
     return text if len(text) <= 60 else text[:57] + "..."

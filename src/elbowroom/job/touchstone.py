@@ -21,6 +21,7 @@ import numpy as np
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import JobFileError
+from elbowroom.base.inputs import read_input
 from elbowroom.job.tomlfile import counted, near_miss
 from elbowroom.system.terminations import SampledReflection
 
@@ -95,7 +96,7 @@ class _Reader:
 
     def _text(self) -> str:
         try:
-            data = self.file.read_bytes()
+            data = read_input(self.file)
         except FileNotFoundError:
             try:
                 siblings = [p.name for p in self.file.parent.iterdir() if p.is_file()]

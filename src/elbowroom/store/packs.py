@@ -101,6 +101,9 @@ def write_pack(target: Path, units: Sequence[Path], *, replace: bool = False) ->
     if os.path.lexists(target) and (not replace or not target.is_file()):
         msg = "exists already; another name, or leave to replace it, is needed" if target.is_file() else "is no plain file"
         raise StoreError(msg, path=target)
+    if target.is_file() and not _begins_like_a_pack(target):
+        msg = "exists already and is no pack, which alone is replaced; another name is needed"
+        raise StoreError(msg, path=target)
     packed, problems = [], []
     for path in sorted(units, key=lambda p: (p.parent.name, p.name)):
         try:
@@ -138,6 +141,16 @@ def write_pack(target: Path, units: Sequence[Path], *, replace: bool = False) ->
     except OSError as cause:
         raise explained(cause, target, "cannot be written") from cause
     return packed
+
+
+def _begins_like_a_pack(path: Path) -> bool:
+    """Return whether a file is empty or begins as packs do, damaged ones and those of other programs' versions too."""
+    try:
+        with open(path, "rb") as file:
+            start = file.read(_BLOCK)
+    except OSError as cause:
+        raise explained(cause, path, "cannot be read") from cause
+    return not start or start.startswith(_CONTENTS.encode("ascii") + b"\0")
 
 
 def read_contents(path: Path) -> list[PackedUnit]:
@@ -200,6 +213,9 @@ def unpack(
 
 
 def _summed(path: Path) -> PackedUnit:
+    if os.path.lexists(path) and not path.is_file():
+        msg = "not an ordinary file"
+        raise NotAUnit(msg)
     with open(path, "rb", buffering=0) as file:
         header = check_bytes(file, None, path.name.removesuffix(".h5"))
         if path.parent.name != f"{header.schema_name}-v{header.schema_version}":

@@ -222,7 +222,7 @@ def _content_of(file: io.FileIO) -> Iterator[h5py.File]:
     try:
         with h5py.File(GuardedFile(file), "r") as content:
             yield content
-    except (KeyError, TypeError, ValueError, AttributeError, RuntimeError, OSError) as cause:
+    except (KeyError, TypeError, ValueError, AttributeError, RuntimeError, OverflowError, OSError) as cause:
         if isinstance(cause, OSError) and cause.errno:
             raise
         # the sum is right, so these are the bytes that were written: by a program that is not ours

@@ -11,6 +11,7 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 
 from elbowroom.base.errors import GeometryError, JobFileError, ResourceError
+from elbowroom.base.inputs import real_path
 from elbowroom.base.machine import available_cores, limit_of_memory_bytes
 from elbowroom.job.channels import SegmentWork, solve_segment
 from elbowroom.job.engine.items import StationWork, WorkItem, solve_units
@@ -85,7 +86,7 @@ class Campaign:
 
     def __init__(self, runs: Sequence[JobRun]) -> None:
         self.runs = tuple(runs)
-        paths = [run.job.path.resolve() for run in self.runs]
+        paths = [real_path(run.job.path) for run in self.runs]
         twice = {str(p) for p in paths if paths.count(p) > 1}
         if twice:
             msg = f"{', '.join(sorted(twice))} is given more than once"
@@ -94,7 +95,7 @@ class Campaign:
         # By store and key: what makes two units one.
         self._same: dict[tuple[Path, str], list[CampaignUnit]] = {}
         for run in self.runs:
-            folder = run.job.store_folder.resolve()
+            folder = real_path(run.job.store_folder)
             for frequency in run.frequencies_hz:
                 key = run.key(frequency)
                 same = self._same.setdefault((folder, key), [])
@@ -177,7 +178,7 @@ class Campaign:
             return
         for unit in stored:
             record = unit.run.store.get(unit.key)
-            for same in self._same[unit.run.job.store_folder.resolve(), unit.key]:
+            for same in self._same[real_path(unit.run.job.store_folder), unit.key]:
                 same.stored = record is not None
                 same.statistics = None if record is None else stored_statistics(record)
 
@@ -272,7 +273,7 @@ class Campaign:
 
     def units_of(self, item: WorkItem, index: int) -> list[CampaignUnit]:
         """Return all units that a frequency of an item serves, by its index."""
-        return self._same[item.store_folder.resolve(), item.keys[index]]
+        return self._same[real_path(item.store_folder), item.keys[index]]
 
     def elsewhere(self, item: WorkItem) -> bool:
         """Return whether another run works on what is missing of an item."""
