@@ -142,6 +142,16 @@ def test_segments__channels_beside_entries_are_solved_and_enough_between_them():
         assert np.diff(plan.solved).max() <= 1e6
 
 
+def test_segments__made_narrow_by_echoes_have_enough_channels_solved():
+    channels = tuple(140e6 + 25e3 * np.arange(1601))
+    layered = LayeredSoil(((3.0, Soil(3.0, 1e-4)),), Soil(25.0, 0.05))
+    plans = plan_segments(Station(station_of().placed, layered), channels, 1e-4, solve_step_hz=1e6)
+    assert {f for p in plans for f in (*p.solved, *p.between)} == set(channels)
+    for plan in plans:
+        assert plan.high_hz - plan.low_hz < 10e6
+        assert FEWEST_CHANNELS <= len(plan.solved) <= FEWEST_CHANNELS + 1
+
+
 # --- solutions
 
 

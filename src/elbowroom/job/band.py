@@ -138,7 +138,8 @@ def plan_segments(
     tolerance : float
         Error of embedded patterns that is aimed at.
     solve_step_hz : float, optional
-        About how far apart channels are solved [Hz]; all are by default.  Between close entries of a table it is less.
+        About how far apart channels are solved [Hz]; all are by default.  It is less over soil where segments are so narrow, for
+        echoes of layers or entries of a table, that they would have too few.
 
     Raises
     ------
@@ -155,9 +156,13 @@ def plan_segments(
         chosen = _segment_ends(piece, reach, tolerance)
         for first, last in zip(chosen[:-1], chosen[1:], strict=True):
             own = piece[first : last + 1]
+            inside = channels[(channels >= own[0]) & (channels <= own[-1])]
+            if len(own) < FEWEST_CHANNELS <= len(inside) and solve_step_hz is not None and station.ground.lossy:
+                # Echoes and tables make segments narrow; without one, all channels between would be assembled one by one.
+                finer = float(own[-1] - own[0]) / (FEWEST_CHANNELS - 1)
+                own = np.asarray(solved_channels(inside, min(solve_step_hz, finer)))
             if len(own) < FEWEST_CHANNELS:
                 continue
-            inside = channels[(channels >= own[0]) & (channels <= own[-1])]
             between = np.setdiff1d(inside, own)
             plans.append(SegmentPlan(float(own[0]), float(own[-1]), tuple(map(float, own)), tuple(map(float, between))))
     return plans
@@ -172,11 +177,8 @@ def _pieces(channels: FloatArray, solved: FloatArray, kinks_hz: Sequence[float],
     ends = [*(channels[channels <= f * (1.0 + SAME_CHANNEL)][-1] for f in inner), channels[-1]]
     pieces = []
     for start, end in zip(starts, ends, strict=True):
-        if end <= start:
-            continue
-        # As many as a segment needs, wherever there are as many: else all channels between would be assembled one by one.
-        step = None if solve_step_hz is None else min(solve_step_hz, (end - start) / (FEWEST_CHANNELS - 1))
-        pieces.append(np.asarray(solved_channels(channels[(channels >= start) & (channels <= end)], step)))
+        if end > start:
+            pieces.append(np.asarray(solved_channels(channels[(channels >= start) & (channels <= end)], solve_step_hz)))
     return pieces
 
 
