@@ -382,3 +382,21 @@ def test_store__that_is_a_link_to_itself__is_refused(command, job):
     (job.parent / "store").symlink_to("store")
     refused(command("solve", job), 6, "store")
     refused(command("store", "pack", job, job.parent / "p"), 6)
+
+
+def test_screen__without_the_letters_of_a_name__shows_their_codes(job):
+    import os
+
+    folder = job.parent.rename(job.parent.with_name("b\u00e4\u2603d"))
+    surroundings = {**os.environ, "PYTHONIOENCODING": "ascii"}
+    program = [sys.executable, "-m", "elbowroom.cli.main", "draw", folder / job.name, "--layout-only"]
+    done = subprocess.run(program, env=surroundings, capture_output=True, timeout=60, check=False)
+    assert (done.returncode, done.stderr) == (0, b"")
+    assert rb"b\xe4\u2603d" in done.stdout
+
+
+def test_screen__whose_reader_has_gone__ends_the_program_by_the_code_of_that(job):
+    for mode in ("--quiet", "--json"):
+        program = f"{sys.executable} -m elbowroom.cli.main inspect {job} {mode} | true; exit ${{PIPESTATUS[0]}}"
+        done = subprocess.run(["bash", "-c", program], capture_output=True, timeout=60, check=False)
+        assert (done.returncode, done.stderr) == (141, b"")

@@ -144,7 +144,7 @@ def test_job__layer_and_line_of_bad_soil_are_named(job, tmp_path):
     with pytest.raises(JobFileError, match=r"line 3: relative_permittivity 0\.5: expected a number from 1 to 100"):
         job(SOIL + "file = 'bad.csv'")
     (tmp_path / "short.csv").write_text("\n".join(lines[:2]))
-    with pytest.raises(JobFileError, match="station.ground: layer 2: soil table: 60 MHz lies outside"):
+    with pytest.raises(JobFileError, match=r"station\.ground: layer 2: soil table: 60 MHz lies outside"):
         job(SOIL + DRY + "thickness_m = 1\n" + TABLE_BELOW.replace("soil.csv", "short.csv"))
     (tmp_path / "empty.csv").write_text("")
     with pytest.raises(JobFileError, match="a header line and frequencies, a line each, expected"):

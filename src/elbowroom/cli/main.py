@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+import io
 import os
 import signal
 import sys
 from pathlib import Path
-from typing import Any
+from typing import Any, NoReturn
 
 import click
 
@@ -220,11 +221,22 @@ def _terminated(number: int, frame: object) -> None:
     raise _Terminated
 
 
+def _reader_gone() -> NoReturn:
+    """End when the reader of our output has gone: nothing more can be said to it, nor what is left when Python ends."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), 1)
+    sys.stderr.close()
+    sys.exit(CLOSED_PIPE_EXIT_CODE)
+
+
 def main() -> None:
     """Run a command; say what is wrong in one message and end with the code of its kind."""
     for name in ("stdout", "stderr"):
         if getattr(sys, name) is None:  # closed by whoever started us
             setattr(sys, name, open(os.devnull, "w"))
+        stream = getattr(sys, name)
+        if isinstance(stream, io.TextIOWrapper):
+            # names that the terminal's encoding has no letters for are no reason to stop
+            stream.reconfigure(errors="backslashreplace")
     signal.signal(signal.SIGTERM, _terminated)
     try:
         code = cli.main(standalone_mode=False)
@@ -242,9 +254,12 @@ def main() -> None:
         click.echo(f"error: {error}", err=True)
         sys.exit(error.exit_code)
     except BrokenPipeError:
-        # The reader of our output has gone; nothing more can be said to it.
-        sys.stderr.close()
-        sys.exit(CLOSED_PIPE_EXIT_CODE)
+        _reader_gone()
+    except SystemExit as end:
+        # click and rich end by 1, the code of our own faults
+        if isinstance(end.__context__, BrokenPipeError):
+            _reader_gone()
+        raise
     except OSError as error:
         # Whatever concerns files of jobs, stores and results has been said above; this is the screen.
         click.echo(f"error: cannot write to the screen or read a file: {error}", err=True)

@@ -67,7 +67,11 @@ class Screen:
     def emit(self, kind: str, **values: Any) -> None:
         """Write one JSON line, in JSON mode only."""
         if self.mode == "json":
-            print(json.dumps({"kind": kind, **values}), flush=True)
+            try:
+                print(json.dumps({"kind": kind, **values}), flush=True)
+            except BrokenPipeError:
+                # without a number click leaves it to the program, instead of ending by 1
+                raise BrokenPipeError from None
 
     def wrote(self, path: Path, what: str = "") -> None:
         """Tell that a file was written."""
