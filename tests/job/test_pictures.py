@@ -128,6 +128,40 @@ def test_draw_layout__five_designs_tilts_and_odd_names(tmp_path):
     looks_drawn(draw_layout(Station(placed, PerfectGround()), tmp_path / "odd.png", title="two\nlines $ \\alpha & \u5929" * 9))
 
 
+@pytest.mark.parametrize(("count", "named"), [(7, True), (70, False)])
+def test_draw_layout__damage_leaves_marks_and_names(count, named, tmp_path, monkeypatch):
+    from elbowroom.job.damage import Damage
+    from elbowroom.job.pictures import layouts as module
+
+    places = [(2.0 * (i % 9), 2.0 * (i // 9), 0.0) for i in range(count)]
+    placed = [Placed(crossed(), place, name=f"A{i:03d}") for i, place in enumerate(places)]
+    gone = Placed(crossed(), (-3.0, 1.0, 0.0), name="gone")
+    damage = Damage(("gone",), {"A001/x": "open", "A001/y": "open", "A002/x": "shorted", "A004/y": "amplifier off"})
+    figures = keep_figures(monkeypatch, module)
+    looks_drawn(draw_layout(Station(placed), tmp_path / "l.png", damage=damage, missing=[gone]))
+    plan = figures[0].axes[0]
+    marked = {line.get_label(): line.get_xydata() for line in plan.lines}
+    reach = max(np.hypot(*end[:2]) for wire in crossed().wires for end in (wire.start, wire.end))
+    np.testing.assert_allclose(marked["2 ports open"], [[2.0 + reach, 0.0], [2.0, reach]], atol=1e-12)
+    np.testing.assert_allclose(marked["1 port shorted"], [[4.0 + reach, 0.0]], atol=1e-12)
+    np.testing.assert_allclose(marked["1 antenna missing"], [[-3.0, 1.0]], atol=1e-12)
+    assert len(marked["1 port off"]) == 1
+    assert plan.get_xlim()[0] < -3.4
+    names = {text.get_text() for text in plan.texts}
+    assert {"gone", "A001", "A002", "A004"} <= names
+    assert ("A003" in names) is named
+
+
+def test_missing_antennas__stand_where_the_layout_and_the_turn_put_them(job):
+    from elbowroom.job.damage import Damage
+    from elbowroom.job.pictures import missing_antennas
+
+    whole = job.station()
+    broken = replace(job, damage=Damage((whole.placed[2].name,)))
+    assert missing_antennas(broken) == (whole.placed[2],)
+    assert missing_antennas(job) == ()
+
+
 def test_draw_layout__ports_are_where_their_gaps_are():
     leaning = Placed(crossed(), (1.0, 2.0, 0.0), rotation_deg=90.0)
     upright = Placed(dipole(height=1.0), (5.0, 0.0, 0.0))

@@ -190,7 +190,7 @@ class _Pictures:
 
     def layout(self) -> None:
         """Draw where the antennas stand and what they look like."""
-        from elbowroom.job.pictures import draw_layout, picture_name
+        from elbowroom.job.pictures import draw_layout, missing_antennas, picture_name
 
         job = self.run.job
         path = self.folder / picture_name("layout")
@@ -201,6 +201,8 @@ class _Pictures:
                 title=job.title,
                 frequencies_hz=self.run.frequencies_hz,
                 termination=self.run.port_terminations,
+                damage=job.damage,
+                missing=missing_antennas(job),
             )
         )
 

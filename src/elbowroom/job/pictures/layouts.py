@@ -3,17 +3,20 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
 from matplotlib.collections import LineCollection
+from matplotlib.layout_engine import ConstrainedLayoutEngine
 from matplotlib.lines import Line2D
 
 from elbowroom.base.arrays import FloatArray
 from elbowroom.base.constants import wavelength_of
 from elbowroom.geometry.antennas import Antenna
 from elbowroom.geometry.stations import Placed, Station
+from elbowroom.job.damage import AMPLIFIER_OFF, OPEN, SHORTED, Damage
 from elbowroom.job.pictures.sheets import (
     HALO,
     PORT_COLOURS,
@@ -29,9 +32,22 @@ from elbowroom.system.terminations import PortTermination, Termination
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
 
-_NAMED_ANTENNAS = 30
+    from elbowroom.job.jobmodel import Job
+
+_FEW_ANTENNAS = 30
+_NAMED_ANTENNAS = 60
 _MOST_DESIGNS = 3
 _MARK = "#b3123f"
+_BROKEN = "#7a1fa2"
+_STATE_MARKS = {OPEN: "o", SHORTED: "X", AMPLIFIER_OFF: "s"}
+
+
+def missing_antennas(job: Job) -> tuple[Placed, ...]:
+    """Return the antennas that a job says are missing, where they would stand."""
+    if not job.damage.missing:
+        return ()
+    whole = replace(job, damage=Damage()).station()
+    return tuple(placed for placed in whole if placed.name in job.damage.missing)
 
 
 def draw_layout(
@@ -41,6 +57,8 @@ def draw_layout(
     title: str = "",
     frequencies_hz: Sequence[float] = (),
     termination: Termination | Sequence[PortTermination] | None = None,
+    damage: Damage | None = None,
+    missing: Sequence[Placed] = (),
 ) -> Path:
     """Draw a station as seen from above, and one antenna of each design from the side.
 
@@ -56,6 +74,10 @@ def draw_layout(
         Frequencies of the job [Hz]; the spacing is told in wavelengths at the lowest and the highest one.
     termination : optional
         What the ports see [ohm], or terminations that change over frequency.
+    damage : Damage, optional
+        Ports that are dead, to be marked.
+    missing : sequence of Placed, optional
+        Antennas that are no part of the station, and where they would stand; see `missing_antennas`.
 
     Returns
     -------
@@ -70,13 +92,20 @@ def draw_layout(
     pair, spacing, diameter = _extent(station)
     n_ports = len(station.port_names)
     counts = f"{_counted(len(station), 'antenna')}, {_counted(n_ports, 'port')}"
-    details = [title, counts, _spacing_text(station, pair, spacing, diameter, frequencies_hz)]
+    dead = _dead_ports(station, damage)
+    details = [
+        title,
+        counts,
+        _spacing_text(station, pair, spacing, diameter, frequencies_hz),
+    ]
     caption = [band_text(frequencies_hz), "east and north from the reference point of the layout"]
     if termination is not None:
         caption.append(termination_text(termination))
     colours = port_colours(station)
     shown = station.designs[:_MOST_DESIGNS]
     radii = sorted({wire.radius * 1e3 for design in station.designs for wire in design.wires})
+    if AMPLIFIER_OFF in dead.values():
+        caption.append("off: amplifier off")
     caption.append(f"wire radius {radii[0]:.3g}" + (f" to {radii[-1]:.3g} mm" if len(radii) > 1 else " mm"))
     if len(station.designs) > len(shown):
         caption.append(f"side views of {len(shown)} of {len(station.designs)} designs")
@@ -84,11 +113,19 @@ def draw_layout(
     if len(shown) > 2:
         views = [(design, "south") for design in shown]
     with sheet(path, "Station layout", details, caption, size=(12.0, 8.0)) as figure:
+        engine = figure.get_layout_engine()
+        assert isinstance(engine, ConstrainedLayoutEngine)
+        # Titles of lower side views must not touch the labels above them.
+        engine.set(hspace=0.1)
         grid = figure.add_gridspec(len(views), 2, width_ratios=(1.75, 1.0))
         plan = figure.add_subplot(grid[:, 0])
         handles = draw_from_above(plan, station, colours, pair)
         legend_above(figure, handles, [str(handle.get_label()) for handle in handles])
         plan.set_title("seen from above", loc="left")
+        marks = _mark_damage(plan, station, dead, missing)
+        if marks:
+            plan.legend(handles=marks, loc="lower right", bbox_to_anchor=(1.0, 1.0), ncols=len(marks), borderaxespad=0.1,
+                        columnspacing=1.1, handletextpad=0.2, fontsize=8.0)  # fmt: skip
         for row, (design, direction) in enumerate(views):
             axes = figure.add_subplot(grid[row, 1])
             draw_from_side(axes, station, design, direction, colours, len(views))
@@ -97,6 +134,44 @@ def draw_layout(
 
 def _counted(count: int, noun: str) -> str:
     return f"{count} {noun}{'' if count == 1 else 's'}"
+
+
+def _dead_ports(station: Station, damage: Damage | None) -> dict[int, str]:
+    """Return what is wrong with dead ports, by their row."""
+    if damage is None:
+        return {}
+    return {row: state for row, name in enumerate(station.port_names) if (state := damage.state(name)) is not None}
+
+
+def _mark_damage(axes: Axes, station: Station, dead: dict[int, str], missing: Sequence[Placed]) -> list[Line2D]:
+    """Mark dead ports at the tips of their arrows and missing antennas where they would stand; return what a legend needs."""
+    handles = []
+    few = len(station) <= _FEW_ANTENNAS
+    size = 7.0 if few else 5.5
+    tips = _port_tips(station)
+    # Ports that look one way would hide one another's marks; antennas of many ports do so anyway.
+    for state, marker in _STATE_MARKS.items():
+        rows = [row for row, found in dead.items() if found == state]
+        if rows:
+            hollow = state == OPEN
+            (line,) = axes.plot(
+                *tips[rows].T, marker, ms=size + (2.5 if state == SHORTED else 0.0), color=_BROKEN, mew=1.3 if hollow else 0.6,
+                mfc="white" if hollow else _BROKEN, mec=_BROKEN if hollow else "white", zorder=6,
+                label=f"{_counted(len(rows), 'port')} {'off' if state == AMPLIFIER_OFF else state}",
+            )  # fmt: skip
+            handles.append(line)
+    if missing:
+        places = np.array([placed.position[:2] for placed in missing])
+        ends = np.concatenate([_wire_ends(placed) for placed in missing])[:, :, :2]
+        axes.add_collection(LineCollection(list(ends), colors="0.6", linewidths=1.0, linestyles=":", zorder=2))
+        (line,) = axes.plot(*places.T, "x", ms=size + 3.0, color=_BROKEN, mew=2.2, zorder=6,
+                          label=f"{_counted(len(missing), 'antenna')} missing")  # fmt: skip
+        handles.append(line)
+        _fit(axes, ends.reshape(-1, 2))
+    # In large stations only what is broken has a name.
+    owners = sorted({int(station.port_antennas[row]) for row in dead}) if len(station) > _NAMED_ANTENNAS else []
+    _name(axes, [*missing, *(station.placed[i] for i in owners)][:_NAMED_ANTENNAS], _BROKEN, 8.5 if few else 7.0)
+    return handles
 
 
 def _extent(station: Station) -> tuple[tuple[int, int] | None, float, float]:
@@ -149,14 +224,10 @@ def draw_from_above(
     """Draw wires and ports as seen from above, and return what a legend needs; the closest pair is marked if given."""
     wires = [_wire_ends(placed) for placed in station]
     flat = np.concatenate(wires)[:, :, :2]
-    few = len(station) <= _NAMED_ANTENNAS
+    few = len(station) <= _FEW_ANTENNAS
     axes.add_collection(LineCollection(list(flat), colors="0.45", linewidths=1.6 if few else 0.8, zorder=2))
-    reach = np.array([np.max(np.linalg.norm(w[:, :, :2] - p.position[:2], axis=-1)) for w, p in zip(wires, station, strict=True)])
-    owner = station.port_antennas
     middle_of_gap, level = _port_places(station)
-    arrow = np.maximum(reach, 1e-3)[owner]
-    heading = station.port_nominal_phi_rad
-    tips = middle_of_gap[:, :2] + arrow[:, None] * np.array([np.cos(heading), np.sin(heading)]).T
+    tips = _port_tips(station)
     port_of = np.array([n.port for n in station.port_names])
     for name, colour in colours.items():
         mine = level & (port_of == name)
@@ -171,28 +242,10 @@ def draw_from_above(
     if pair is not None:
         axes.plot(*station.positions[list(pair), :2].T, "-", color=_MARK, lw=1.2, zorder=4)
         axes.plot(*station.positions[list(pair), :2].T, "o", ms=11 if few else 8, mfc="none", mec=_MARK, mew=1.1, zorder=4)
-    if few and named:
-        for placed, own in zip(station, reach, strict=True):
-            # At 45 degrees between the arms of a crossed antenna there is room.
-            where = np.asarray(placed.position[:2]) + 0.25 * own * np.array([1.0, -1.0])
-            axes.annotate(
-                printable(shortened(placed.name, 12)),
-                where,
-                xytext=(4, -4),
-                textcoords="offset points",
-                ha="left",
-                va="top",
-                fontsize=8.5,
-                color="0.15",
-                zorder=5,
-                path_effects=HALO,
-            )
+    if named and len(station) <= _NAMED_ANTENNAS:
+        _name(axes, station.placed, "0.15", 8.5 if few else 7.0)
     shown = np.concatenate([flat.reshape(-1, 2), tips[level]])
-    low, high = shown.min(axis=0), shown.max(axis=0)
-    half = max(0.54 * float(np.max(high - low)), 0.3)
-    middle = 0.5 * (low + high)
-    axes.set_xlim(middle[0] - half, middle[0] + half)
-    axes.set_ylim(middle[1] - half, middle[1] + half)
+    _fit(axes, shown)
     axes.set_aspect("equal")
     axes.set_xlabel("east [m]")
     axes.set_ylabel("north [m]")
@@ -213,6 +266,45 @@ def draw_from_above(
     if pair is not None:
         handles.append(Line2D([], [], color=_MARK, marker="o", mfc="none", lw=1.2, label="closest pair"))
     return handles
+
+
+def _fit(axes: Axes, points: FloatArray) -> None:
+    """Give a plan limits that show some points (N, 2) [m], and what it was made to show before, in a square."""
+    if axes.get_autoscale_on():
+        low, high = points.min(axis=0), points.max(axis=0)
+    else:
+        inner = np.array([axes.get_xlim(), axes.get_ylim()])
+        low, high = np.minimum(inner[:, 0], points.min(axis=0)), np.maximum(inner[:, 1], points.max(axis=0))
+        if np.all(low == inner[:, 0]) and np.all(high == inner[:, 1]):
+            return
+    half = max(0.54 * float(np.max(high - low)), 0.3)
+    middle = 0.5 * (low + high)
+    axes.set_xlim(middle[0] - half, middle[0] + half)
+    axes.set_ylim(middle[1] - half, middle[1] + half)
+
+
+def _name(axes: Axes, antennas: Sequence[Placed], colour: str, size: float = 8.5) -> None:
+    """Write the names of antennas beside them."""
+    for placed in antennas:
+        # At 45 degrees between the arms of a crossed antenna there is room.
+        where = np.asarray(placed.position[:2]) + 0.25 * _reach(placed) * np.array([1.0, -1.0])
+        axes.annotate(
+            printable(shortened(placed.name, 12)), (where[0], where[1]), xytext=(4, -4), textcoords="offset points",
+            ha="left", va="top", fontsize=size, color=colour, zorder=5, path_effects=HALO,
+        )  # fmt: skip
+
+
+def _reach(placed: Placed) -> float:
+    """Return how far an antenna's wires reach from its place, seen from above [m]."""
+    return float(np.max(np.linalg.norm(_wire_ends(placed)[:, :, :2] - placed.position[:2], axis=-1)))
+
+
+def _port_tips(station: Station) -> FloatArray:
+    """Return where the arrows of ports end, (P, 2) [m]: as far as their antennas reach; the gap itself for upright ports."""
+    middle, level = _port_places(station)
+    arrow = np.where(level, np.maximum([_reach(placed) for placed in station], 1e-3)[station.port_antennas], 0.0)
+    heading = station.port_nominal_phi_rad
+    return np.asarray(middle[:, :2] + arrow[:, None] * np.array([np.cos(heading), np.sin(heading)]).T)
 
 
 def _port_places(station: Station) -> tuple[FloatArray, np.ndarray]:
@@ -299,7 +391,8 @@ def draw_from_side(
     axes.set_aspect("equal", anchor="W")
     which = printable(shortened(placed.name, 14)) + (f", one of {count}" if count > 1 else "")
     space = "" if grounded else " in free space"
-    name = f"{printable(shortened(design.name, 24))}{space}, from the {direction} ({which})"
+    seen = f"{space}, from the {direction} ({which})"
+    name = printable(shortened(design.name, max(min(24, 52 - len(seen)), 8))) + seen
     axes.set_title(name if named else f"from the {direction}{space}", loc="left", fontsize=9 if named else None)
     axes.set_xlabel(f"{'east' if direction == 'south' else 'north'} of its centre [m]")
     axes.set_ylabel("height [m]")
