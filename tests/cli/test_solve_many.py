@@ -179,6 +179,16 @@ def test_run__that_drops_currents__keeps_port_matrices_only(command, job, change
     (whole,) = (job.parent / "store").rglob("*.h5")
     with h5py.File(whole) as file:
         admittance = file["loaded_admittance_s"][...]
+    results = job.parent / "results"
+
+    def made_of_ports():
+        outcome = command("ports", job)
+        assert outcome.code == 0, outcome.all
+        tables = {path.name: path.read_text() for path in (*results.glob("ports_S.*"), *results.glob("active*.csv"))}
+        assert len(tables) >= 2
+        return tables
+
+    from_currents = made_of_ports()
     outcome = command("run", job)
     assert outcome.code == 0, outcome.all
     assert "dropped" in outcome.out
@@ -189,8 +199,12 @@ def test_run__that_drops_currents__keeps_port_matrices_only(command, job, change
         assert "currents_per_volt" not in file
         assert (file["loaded_admittance_s"][...] == admittance).all()
         assert file["record_attributes"].attrs["strategy"] == "direct"
+    # ports need none
+    assert made_of_ports() == from_currents
     # another table needs the currents
-    assert command("compare", job).code == 6
+    outcome = command("compare", job)
+    assert outcome.code == 6
+    assert "currents of 1 were dropped once their tables were made (store.currents)" in outcome.all
     assert "1 to solve" in command("solve", job).out
 
 
@@ -235,3 +249,28 @@ def test_cluster__without_dask__says_what_to_install(command, band, monkeypatch)
     outcome = command("solve", band, "--cluster", "local")
     assert outcome.code == 8
     assert "pip install 'elbowroom[cluster]'" in outcome.err
+
+
+@pytest.mark.parametrize(
+    ("channels", "step", "method", "why"),
+    [
+        ("start_hz = 100e6\nstop_hz = 150e6\nstep_hz = 1e6", "10e6", "auto", "a station of this size is solved directly"),
+        ("start_hz = 100e6\nstop_hz = 150e6\nstep_hz = 1e6", "10e6", "reduced", "it leaves 6 of 51 channels to be solved"),
+        ("start_hz = 100e6\nstop_hz = 150e6\nstep_hz = 1e6", "0.5e6", "reduced", "the 51 channels are no closer than it"),
+        ("start_hz = 100e6\nstop_hz = 110e6\nstep_hz = 0.25e6", "0.5e6", "reduced", None),
+    ],
+)
+def test_step_of_solving_without_effect__is_told(command, job, change, channels, step, method, why):
+    text = job.read_text()
+    (line,) = [x for x in text.splitlines() if x.startswith("frequency_hz")]
+    change(job, line, f"{channels}\nsolve_step_hz = {step}")
+    change(job, 'method = "auto"', f'method = "{method}"')
+    outcome = command("inspect", job)
+    assert outcome.code == 0, outcome.all
+    assert ("has no effect" in outcome.all) == (why is not None)
+    if why is None:
+        assert "20 of them are made from solved ones where the error allows" in " ".join(
+            command("solve", job, "--plan").all.split()
+        )
+    else:
+        assert why in " ".join(outcome.all.split())

@@ -272,7 +272,7 @@ def test_pack_and_unpack(command, job, store, tmp_path):
     assert outcome.code == 0
     assert "1 units" in outcome.out
     target = tmp_path / "new" / "store"
-    outcome = command("store", "unpack", pack, target, "--json")
+    outcome = command("store", "unpack", target, pack, "--json")
     assert outcome.code == 0
     assert len(lines(outcome, "added")) == 1
     copied = Hdf5Store(target, SOLUTION_SCHEMA)
@@ -280,12 +280,12 @@ def test_pack_and_unpack(command, job, store, tmp_path):
     assert copied.keys() == [own_key(store)]
     everything = tmp_path / "all.pack"
     command("store", "pack", store.folder.parent, everything)
-    outcome = command("store", "unpack", everything, target)
+    outcome = command("store", "unpack", target, everything)
     assert "1 units added" in outcome.out
     assert "1 were there already" in outcome.out
     # a job takes them up: nothing is left to solve
     shutil.rmtree(store.folder)
-    command("store", "unpack", pack, job)
+    command("store", "unpack", job, pack)
     assert "0 to solve" in command("solve", job).out
 
 
@@ -306,7 +306,7 @@ def test_pack__damage_stops_it_unless_it_is_to_be_left(command, job, store, tmp_
 def test_unpack__a_damaged_pack_adds_nothing(command, job, tmp_path):
     command("store", "pack", job, tmp_path / "p")
     damage(tmp_path / "p")
-    outcome = command("store", "unpack", tmp_path / "p", tmp_path / "new")
+    outcome = command("store", "unpack", tmp_path / "new", tmp_path / "p")
     assert outcome.code == 6
     assert "damaged, or no pack of this program" in outcome.err
     assert not (tmp_path / "new").exists()
@@ -322,8 +322,8 @@ def test_bad_places__are_told(command, job, store, tmp_path):
         (["list", job.parent], 6, f"that of the job in it is meant by naming {job}"),
         (["verify", store.folder], 6, f"the store is {store.folder.parent}"),
         (["verify", tmp_path / "notes.txt"], 2, "notes.txt"),
-        (["unpack", tmp_path / "absent", store.folder.parent], 6, "no such pack"),
-        (["unpack", tmp_path / "notes.txt", store.folder.parent], 6, "it ends inside its first header"),
+        (["unpack", store.folder.parent, tmp_path / "absent"], 6, "no such pack"),
+        (["unpack", store.folder.parent, tmp_path / "notes.txt"], 6, "it ends inside its first header"),
         (["pack", job, store.folder / "p"], 6, "cannot stand inside the store"),
         (["prune", job, "--job", store.folder.parent], 2, "expected a job file, found a folder"),
         (["prune", job, "--older-than-days", "-1"], 2, "is not in the range"),
@@ -361,7 +361,7 @@ def test_read_only_disk__is_looked_at_and_not_changed(command, job, tmp_path):
     if not try_mount(disk):
         pytest.skip("mounts are not allowed here, and no folder is read-only for an administrator")
     try:
-        assert command("store", "unpack", pack, disk / "store").code == 0
+        assert command("store", "unpack", disk / "store", pack).code == 0
         subprocess.run(["mount", "-o", "remount,ro", str(disk)], check=True)
         assert "2 units" in command("store", "list", disk / "store").out
         assert command("store", "verify", disk / "store").code == 0
@@ -373,7 +373,7 @@ def test_read_only_disk__is_looked_at_and_not_changed(command, job, tmp_path):
         outcome = command("store", "prune", disk / "store", "--only-named", "--older-than-days", "1")
         assert outcome.code == 6
         assert "mounted read-only" in outcome.err
-        outcome = command("store", "unpack", pack, disk / "other")
+        outcome = command("store", "unpack", disk / "other", pack)
         assert outcome.code == 6
         assert "mounted read-only" in outcome.err
         assert "2 units" in command("store", "list", disk / "store").out

@@ -187,3 +187,12 @@ def test_cluster_of_crowded_workers__is_refused():
         cluster = distributed.LocalCluster(n_workers=1, threads_per_worker=2, processes=False, dashboard_address=None)
         with pytest.raises(ResourceError, match=r"takes several units at a time.*--nthreads 1"):
             DaskWorkers(distributed.Client(cluster))
+
+
+def test_scheduler_file_that_does_not_come__is_told(tmp_path, monkeypatch):
+    pytest.importorskip("distributed", reason="Dask distributed is not installed (extra 'cluster')")
+    from elbowroom.job.engine import cluster
+
+    monkeypatch.setattr(cluster, "CONNECT_SECONDS", 0.3)
+    with pytest.raises(ResourceError, match=r"no scheduler answers at .*absent\.json: there is no such file"):
+        cluster.connect(str(tmp_path / "absent.json"))

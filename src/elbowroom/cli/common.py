@@ -54,8 +54,8 @@ def open_jobs(jobs: tuple[Path, ...], frequencies_hz: tuple[float, ...], screen:
     return [open_job(job, frequencies_hz, screen) for job in jobs]
 
 
-def require_stored(run: JobRun) -> None:
-    """Refuse to go on unless the store has every frequency.
+def require_stored(run: JobRun, *, ports_only: bool = False) -> None:
+    """Refuse to go on unless the store has every frequency, or at least its port matrices.
 
     Raises
     ------
@@ -63,14 +63,20 @@ def require_stored(run: JobRun) -> None:
         Naming what is missing and how to get it.
     """
     from elbowroom.base.errors import StoreError
+    from elbowroom.job.dropping import has_ports
 
     missing = [f for f in run.frequencies_hz if run.key(f) not in run.store]
+    without_currents = {f for f in missing if has_ports(run, f)}
+    if ports_only:
+        missing = [f for f in missing if f not in without_currents]
     if missing:
         shown = ", ".join(f"{f / 1e6:g} MHz" for f in missing[:5]) + (", ..." if len(missing) > 5 else "")
         broken = sum(run.path_of(f).exists() for f in missing)
         damaged = f"; {broken} of their files in the store are damaged" if broken else ""
+        dropped = sum(f in without_currents for f in missing)
+        gone = f"; currents of {dropped} were dropped once their tables were made (store.currents)" if dropped else ""
         msg = (
-            f"{len(missing)} of {len(run.frequencies_hz)} frequencies are not solved yet ({shown}){damaged}; "
+            f"{len(missing)} of {len(run.frequencies_hz)} frequencies are not in the store ({shown}){damaged}{gone}; "
             f"'elbowroom solve {run.job.path}' solves them, 'elbowroom run' does everything"
         )
         raise StoreError(msg, path=run.job.store_folder)

@@ -73,7 +73,7 @@ def ports(
     pointed = _pointed(run, scan_beam) if scan_azimuth_deg is not None else None
     scanned = _scan_frequency(run, scan_frequency_hz) if scan_azimuth_deg is not None else 0.0
     folder = checked_folder(output or run.job.output_folder)
-    require_stored(run)
+    require_stored(run, ports_only=True)
     version = int(touchstone_version)
     path = checked_output(run, folder / f"ports_{matrix}{'.ts' if version == 2 else f'.s{len(rows)}p'}")
     write_port_matrices(run, path, matrix, wanted, reference_ohm=_reference(reference_ohm), version=version)

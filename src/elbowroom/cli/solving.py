@@ -142,7 +142,9 @@ def _tell_plan(campaign: Campaign, split: Split, wish: Wish, screen: Screen) -> 
     shared = sum(u.twin is not None and not u.stored for u in units)
     what = "frequencies" if len(campaign.runs) == 1 else f"units of {len(campaign.runs)} stations"
     twins = f", {shared} solved with another of the same key" if shared else ""
-    screen.say(f"{len(units)} {what}, {stored} in the store already, {len(left)} to solve{twins}")
+    made = sum(u.frequency_hz in plan.between for u in left for plan in u.run.segments)
+    between = f"; {made} of them are made from solved ones where the error allows, else solved too" if made else ""
+    screen.say(f"{len(units)} {what}, {stored} in the store already, {len(left)} to solve{twins}{between}")
     whole = campaign.total()
     seconds = predicted_seconds(campaign, split)
     at_once = min(split.workers, len(left))

@@ -227,11 +227,11 @@ def pack(store: Path, file: Path, leave_damaged: bool, replace: bool, mode: str 
 
 
 @store.command()
-@FILE
 @STORE
+@FILE
 @modes
-def unpack(file: Path, store: Path, mode: str | None) -> None:
-    """Add the units of a pack FILE to STORE, after checking every byte; sound ones already there stay."""
+def unpack(store: Path, file: Path, mode: str | None) -> None:
+    """Add to STORE the units of a pack FILE, after checking every byte; sound ones already there stay."""
     from elbowroom.cli.screen import readable_bytes
     from elbowroom.job.storecare import place_of
     from elbowroom.store.packs import unpack as unpacked

@@ -35,7 +35,7 @@ NORMALISATIONS = ("effective-length", "peak")
 FORMATS = ("hdf5", "csv")
 
 WARNING = (
-    "Results of a model, not a measurement: soil, cables, tolerances, weather and whatever else the job does not "
+    "Results of a model, not a measurement: uneven ground, cables, tolerances, weather and whatever else the job does not "
     "describe are not in them."
 )
 CONVENTIONS = (

@@ -11,7 +11,7 @@ import numpy as np
 
 from elbowroom.base.errors import JobFileError
 from elbowroom.geometry.stations import Station
-from elbowroom.job.band import FEWEST_CHANNELS, SegmentPlan, plan_segments
+from elbowroom.job.band import FEWEST_CHANNELS, SegmentPlan, plan_segments, solved_channels
 from elbowroom.job.channels import ChannelSettings, StoredSegment, channel_key
 from elbowroom.job.checks import Problem, StationMeshes, check_station
 from elbowroom.job.groundchecks import HORIZON_NOTE, LOW_BEAM_DEG
@@ -121,7 +121,7 @@ class JobRun:
     def problems(self) -> list[Problem]:
         """Return what is wrong or doubtful in the model and its terminations; nothing is solved."""
         found = check_station(self.station, self.frequencies_hz, self.job.mesh)
-        doubts = [*self.job.terminations.doubts(), *self._beam_doubts(), *self._segment_doubts()]
+        doubts = [*self.job.terminations.doubts(), *self._beam_doubts(), *self._segment_doubts(), *self._step_doubts()]
         return [*found, *(Problem("warning", text) for text in doubts)]
 
     def _beam_doubts(self) -> list[str]:
@@ -157,6 +157,24 @@ class JobRun:
             f"{alone} of {len(channels)} channels are assembled one by one, in which the table of the soil may have a part: "
             f"channels share matrices between two of its entries, of which {inside} lie in the band, where there are "
             f"{FEWEST_CHANNELS} or more"
+        ]
+
+    def _step_doubts(self) -> list[str]:
+        """Return why a step of solving leads to no channel that is made from others."""
+        step = self.job.solve_step_hz
+        if step is None or any(plan.between for plan in self.segments):
+            return []
+        channels = self.job.frequencies_hz
+        text = f"band.solve_step_hz = {step:.10g} has no effect, every channel is solved: "
+        solved = solved_channels(channels, step)
+        if not any(self.solver_at(f) == "reduced" for f in solved):
+            why = "the reduced method interpolates, and a station of this size is solved directly"
+            return [f'{text}{why}; method = "reduced" asks for it']
+        if len(solved) == len(channels):
+            return [text + f"the {len(channels)} channels are no closer than it"]
+        return [
+            text + f"it leaves {len(solved)} of {len(channels)} channels to be solved, and no segment of the band has the "
+            f"{FEWEST_CHANNELS} solved ones that channels in between are made from; a smaller step gives more"
         ]
 
     def plan(self) -> list[Unit]:
@@ -204,7 +222,8 @@ class JobRun:
             self._segments = []
             if job.segments == "auto" and job.solver != "direct" and len(job.frequencies_hz) >= FEWEST_CHANNELS:
                 reduced = [f for f in job.frequencies_hz if self.solver_at(f) == "reduced"]
-                self._segments = plan_segments(self.station, reduced, job.tolerance, solve_step_hz=job.solve_step_hz)
+                if len(reduced) >= FEWEST_CHANNELS:
+                    self._segments = plan_segments(self.station, reduced, job.tolerance, solve_step_hz=job.solve_step_hz)
         return self._segments
 
     def segment_of(self, frequency_hz: float) -> SegmentPlan | None:

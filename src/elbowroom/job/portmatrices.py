@@ -19,6 +19,7 @@ from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import ExportError, ModelRangeError
 from elbowroom.geometry.stations import PortName, Station
 from elbowroom.job.beamfields import beam_weights
+from elbowroom.job.dropping import ports_solution
 from elbowroom.job.files import written_whole
 from elbowroom.job.jobmodel import Beam
 from elbowroom.job.pipeline import JobRun, UnitProgress
@@ -112,7 +113,7 @@ def port_matrices(
     reference = np.broadcast_to(reference, (len(rows),)).copy()
     made, origins = [], []
     for frequency in run.frequencies_hz:
-        solution = run.solution(frequency, progress)
+        solution = ports_solution(run, frequency, progress)
         seen = run.termination_at(frequency)
         made.append(solution.port_matrix(parameter, rows, termination=seen, reference_ohm=reference))
         origins.append(solution.statistics.origin)
@@ -273,7 +274,7 @@ def active_ports(
         raise ModelRangeError(msg)
     weights, impedance, reflection, origins = [], [], [], []
     for frequency in run.frequencies_hz:
-        solution, seen = run.solution(frequency, progress), run.termination_at(frequency)
+        solution, seen = ports_solution(run, frequency, progress), run.termination_at(frequency)
         origins.append(solution.statistics.origin)
         weights.append(beam_weights(solution, chosen))
         impedance.append(solution.active_impedance(weights[-1], termination=seen))

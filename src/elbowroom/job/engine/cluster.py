@@ -6,6 +6,8 @@ of threads is a setting of its whole process.
 
 from __future__ import annotations
 
+import time
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from elbowroom.base.errors import ResourceError
@@ -56,11 +58,22 @@ def connect(address: str, *, workers: int = 1, threads: int = 1) -> Client:
         return Client(cluster)
     try:
         if address.endswith(".json"):
+            _wait_for(Path(address))
             return Client(scheduler_file=address, timeout=CONNECT_SECONDS)
         return Client(address, timeout=CONNECT_SECONDS)
     except (OSError, ValueError, TimeoutError) as cause:
         msg = f"no scheduler answers at {address}: {cause}"
         raise ResourceError(msg) from cause
+
+
+def _wait_for(file: Path) -> None:
+    """Wait a while for a scheduler's file, which batch systems may be late with; raise OSError if it does not come."""
+    deadline = time.monotonic() + CONNECT_SECONDS
+    while not file.is_file():
+        if time.monotonic() > deadline:
+            msg = f"there is no such file, nor did one come within {CONNECT_SECONDS:g} s"
+            raise OSError(msg)
+        time.sleep(0.2)
 
 
 class DaskWorkers:
