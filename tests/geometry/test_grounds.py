@@ -126,3 +126,9 @@ def test_soil_table__is_read_and_its_faults_are_told_together(tmp_path):
     path.write_text("frequency_hz,permittivity,conductivity_s_per_m\n")
     with pytest.raises(JobFileError, match="no frequencies below the header"):
         read_soil_table(path)
+
+
+@pytest.mark.parametrize("wire", [(1e-300,), (0.0,), (1e-3, 1e-300), (1e-3, 0.0)])
+def test_mesh__of_wires_that_are_none_is_refused(wire):
+    with pytest.raises(ModelRangeError, match=r"wire_(radius_m|conductivity_s_per_m) .*: expected a number from 1"):
+        MeshOnSoil(Soil(10.0, 0.01), 0.1, *wire)

@@ -121,7 +121,7 @@ def test_job__has_the_ground_that_its_table_describes(job, ground, expected):
         (MESH + "relative_permittivity = 10\nconductivity_s_per_m = 0.01\npitch_m = 0.1", "wire_radius_m missing"),
         (
             MESH + "relative_permittivity = 10\nconductivity_s_per_m = 0.01\npitch_m = 0.1\nwire_radius_m = 0.2",
-            "station.ground: wire_radius_m 0.2: expected a number from above 0 to 0.01",
+            "station.ground: wire_radius_m 0.2: expected a number from 1e-06 to 0.01",
         ),
         ("[station.ground]\nkind = 'perfect'\npitch_m = 0.1", 'pitch_m is given, which kind = "perfect" has no use for'),
     ],

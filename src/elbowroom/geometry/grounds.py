@@ -12,6 +12,9 @@ from typing import ClassVar, get_args
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.soils import AnySoil, EvenSoil, LayeredSoil, Soil, checked_number
 
+THINNEST_WIRE_M, WORST_METAL_S_PER_M = 1e-6, 1.0
+"""Of meshes: a micrometre, and a hundred thousand times below what any metal conducts; another unit, or a slip."""
+
 
 @dataclass(frozen=True)
 class FreeSpace:
@@ -99,10 +102,10 @@ class MeshOnSoil:
         pitch = checked_number("pitch_m", self.pitch_m, 1e-3, 10.0)
         object.__setattr__(self, "pitch_m", pitch)
         # The averaged boundary condition takes its wires for thin against the pitch.
-        radius = checked_number("wire_radius_m", self.wire_radius_m, 0.0, 0.1 * pitch, open_low=True)
+        radius = checked_number("wire_radius_m", self.wire_radius_m, THINNEST_WIRE_M, 0.1 * pitch)
         object.__setattr__(self, "wire_radius_m", radius)
         if self.wire_conductivity_s_per_m is not None:
-            metal = checked_number("wire_conductivity_s_per_m", self.wire_conductivity_s_per_m, 0.0, 1e9, open_low=True)
+            metal = checked_number("wire_conductivity_s_per_m", self.wire_conductivity_s_per_m, WORST_METAL_S_PER_M, 1e9)
             object.__setattr__(self, "wire_conductivity_s_per_m", metal)
         permeability = checked_number("wire_relative_permeability", self.wire_relative_permeability, 1.0, 1e5)
         object.__setattr__(self, "wire_relative_permeability", permeability)
