@@ -11,7 +11,7 @@ import time
 import h5py
 import pytest
 
-from elbowroom.cli.screen import readable_bytes, readable_seconds
+from elbowroom.cli.screen import readable_seconds
 
 
 def test_start_inspect_solve__on_the_template(command, tmp_path):
@@ -190,7 +190,6 @@ def test_second_run__compiles_nothing(job):
 
 
 def test_readable_numbers():
-    assert [readable_bytes(n) for n in (10, 2048, 5 << 20, 3 << 30)] == ["10 B", "2.0 KiB", "5.0 MiB", "3.00 GiB"]
     assert [readable_seconds(n) for n in (12.34, 600, 7200)] == ["12.3 s", "10.0 min", "2.0 h"]
 
 

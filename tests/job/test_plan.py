@@ -7,11 +7,11 @@ import pytest
 
 from elbowroom import PerfectGround, Placed, Station, crossed_dipoles, random_disc
 from elbowroom.base.errors import ModelRangeError, ResourceError
+from elbowroom.base.sizes import readable_bytes
 from elbowroom.job.plan import (
     PROCESS_BYTES,
     Prediction,
     calibrated_rate,
-    format_bytes,
     format_seconds,
     predict,
     predict_station,
@@ -110,7 +110,7 @@ def test_refusal__gives_figures(tmp_path):
 
 
 def test_words():
-    assert [format_bytes(b) for b in (0, 999, 1000, 123456, 4.3e9, 2e12)] == [
+    assert [readable_bytes(b) for b in (0, 999, 1000, 123456, 4.3e9, 2e12)] == [
         "0 byte",
         "999 byte",
         "1 kB",

@@ -238,7 +238,7 @@ def _draw(
 
     title = station.placed[0].antenna.name
     frequencies = sorted({row.frequency_hz for row in rows})
-    common = {"title": title, "termination": termination}
+    common = {"title": title, "termination": termination, "ground": station.ground}
 
     def path(what: str) -> Path:
         return folder / picture_name(f"antenna-{what}", stem)
@@ -249,4 +249,4 @@ def _draw(
     screen.wrote(pictures.draw_antenna_gain(rows, path("gain"), free_space=free_space, **common))  # type: ignore[arg-type]
     screen.wrote(pictures.draw_antenna_cuts(cuts, path("cuts"), **common))  # type: ignore[arg-type]
     if convergence:
-        screen.wrote(pictures.draw_antenna_convergence(rows, path("convergence"), title=title))
+        screen.wrote(pictures.draw_antenna_convergence(rows, path("convergence"), title=title, ground=station.ground))

@@ -231,7 +231,8 @@ class _Pictures:
         """Draw what runs over frequency."""
         from elbowroom.job.pictures import draw_impedance, picture_name
 
-        self._wrote(draw_impedance(self.impedances, self.folder / picture_name("impedance"), title=self.run.job.title))
+        job, path = self.run.job, self.folder / picture_name("impedance")
+        self._wrote(draw_impedance(self.impedances, path, title=job.title, dead=list(job.damage.ports)))
 
 
 @click.command()

@@ -14,15 +14,6 @@ from rich.table import Table
 from rich.text import Text
 
 
-def readable_bytes(count: float) -> str:
-    """Return a size with a binary unit."""
-    for unit in ("B", "KiB", "MiB"):
-        if abs(count) < 1024.0:
-            return f"{count:.0f} {unit}" if unit == "B" else f"{count:.1f} {unit}"
-        count /= 1024.0
-    return f"{count:.2f} GiB"
-
-
 def readable_seconds(seconds: float) -> str:
     """Return a duration in the unit people would use."""
     if seconds < 90.0:

@@ -134,7 +134,8 @@ def solve_all(runs: list[JobRun], screen: Screen, wish: Wish | None = None) -> l
 
 
 def _tell_plan(campaign: Campaign, split: Split, wish: Wish, screen: Screen) -> None:
-    from elbowroom.cli.screen import readable_bytes, readable_seconds
+    from elbowroom.base.sizes import readable_bytes
+    from elbowroom.cli.screen import readable_seconds
     from elbowroom.job.engine.campaign import predicted_seconds
 
     units, left = campaign.units, campaign.to_solve

@@ -38,7 +38,7 @@ def list_units(store: Path, mode: str | None) -> None:
 
     Looks at headers and descriptions only; 'verify' reads every byte.
     """
-    from elbowroom.cli.screen import readable_bytes
+    from elbowroom.base.sizes import readable_bytes
     from elbowroom.job.storecare import claims_in, needs_of, place_of
     from elbowroom.store.care import entries, left_behind
 
@@ -143,7 +143,7 @@ def prune(
     """
     from math import isfinite
 
-    from elbowroom.cli.screen import readable_bytes
+    from elbowroom.base.sizes import readable_bytes
     from elbowroom.job.storecare import carry_out, place_of, plan_pruning
 
     if not isfinite(older_than_days):
@@ -195,7 +195,7 @@ def pack(store: Path, file: Path, leave_damaged: bool, replace: bool, mode: str 
     FILE is a tar file with a sum over all of it; 'unpack' adds it to another store.
     """
     from elbowroom.base.inputs import real_path
-    from elbowroom.cli.screen import readable_bytes
+    from elbowroom.base.sizes import readable_bytes
     from elbowroom.job.storecare import needs_of, place_of
     from elbowroom.store.care import entries, entry_of
     from elbowroom.store.packs import write_pack
@@ -232,7 +232,7 @@ def pack(store: Path, file: Path, leave_damaged: bool, replace: bool, mode: str 
 @modes
 def unpack(store: Path, file: Path, mode: str | None) -> None:
     """Add to STORE the units of a pack FILE, after checking every byte; sound ones already there stay."""
-    from elbowroom.cli.screen import readable_bytes
+    from elbowroom.base.sizes import readable_bytes
     from elbowroom.job.storecare import place_of
     from elbowroom.store.packs import unpack as unpacked
 
@@ -264,7 +264,7 @@ def _facts(unit: UnitEntry) -> dict[str, Any]:
 
 
 def _cells(unit: UnitEntry) -> list[Any]:
-    from elbowroom.cli.screen import readable_bytes
+    from elbowroom.base.sizes import readable_bytes
 
     frequency = _frequency_hz(unit)
     ports = unit.attributes.get("port_names")
@@ -281,7 +281,7 @@ def _tell_damaged(screen: Screen, units: list[UnitEntry]) -> None:
 
 
 def _total(screen: Screen, units: list[UnitEntry], what: str, **more: int) -> None:
-    from elbowroom.cli.screen import readable_bytes
+    from elbowroom.base.sizes import readable_bytes
 
     size = sum(u.size_bytes for u in units)
     screen.emit("total", units=len(units), size_bytes=size, **more)
@@ -291,7 +291,7 @@ def _total(screen: Screen, units: list[UnitEntry], what: str, **more: int) -> No
 
 
 def _tell_plan(screen: Screen, plan: Pruning) -> None:
-    from elbowroom.cli.screen import readable_bytes
+    from elbowroom.base.sizes import readable_bytes
 
     def described(removal: Removal) -> list[Any]:
         if removal.unit is None:

@@ -34,7 +34,7 @@ wire_relative_permeability``
                                  point, from east towards north [deg]; 0 by default
 ``[station] shift_east_m,        shift of the whole station, after the turn [m]; 0 by default
 shift_north_m``
-``[band] frequency_hz``          list of frequencies [Hz], in any order; they are solved in rising order
+``[band] frequency_hz``          list of frequencies [Hz], in any order; results are in rising order
 ``[band] start_hz, stop_hz,      instead of the list: start, start + step, ... up to stop, stop included if a
 step_hz``                        whole number of steps away [Hz]
 ``[band] segments``              ``"auto"``: where the reduced method solves many channels, matrices are assembled at a

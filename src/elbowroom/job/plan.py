@@ -19,6 +19,7 @@ import numpy as np
 from elbowroom.base.constants import wavelength_of, wavenumber_of
 from elbowroom.base.errors import ModelRangeError, ResourceError
 from elbowroom.base.machine import available_memory_bytes
+from elbowroom.base.sizes import readable_bytes
 from elbowroom.geometry.mesh import MeshSettings, mesh_settings
 from elbowroom.geometry.stations import Station
 from elbowroom.job.checks import StationMeshes
@@ -389,8 +390,8 @@ def lacking(prediction: Prediction, disk_bytes: Mapping[Path, int], available_by
     found = []
     if prediction.memory_bytes > available:
         found.append(
-            f"{format_bytes(prediction.memory_bytes)} of memory needed for {prediction.n_unknowns} unknowns, "
-            f"{format_bytes(available)} available"
+            f"{readable_bytes(prediction.memory_bytes)} of memory needed for {prediction.n_unknowns} unknowns, "
+            f"{readable_bytes(available)} available"
         )
     disks: dict[int, tuple[Path, Path, int]] = {}
     for folder, count in disk_bytes.items():
@@ -403,7 +404,7 @@ def lacking(prediction: Prediction, disk_bytes: Mapping[Path, int], available_by
     for shown, place, count in disks.values():
         free = shutil.disk_usage(place).free
         if count > free:
-            found.append(f"{format_bytes(count)} of disk needed in {shown}, {format_bytes(free)} free")
+            found.append(f"{readable_bytes(count)} of disk needed in {shown}, {readable_bytes(free)} free")
     return found
 
 
@@ -413,15 +414,6 @@ def too_large(found: Sequence[str]) -> str:
         f"this job is too large here: {'; '.join(found)}; nothing was started. Take fewer antennas or frequencies, the "
         "default mesh or a lower top frequency, or a machine with more of it"
     )
-
-
-def format_bytes(count: float) -> str:
-    """Return a number of bytes for people: ``3.2 GB``, powers of 1000."""
-    for unit in ("byte", "kB", "MB", "GB", "TB"):
-        if abs(count) < 999.5 or unit == "TB":
-            return f"{count:.0f} {unit}" if unit == "byte" else f"{count:.3g} {unit}"
-        count /= 1000.0
-    raise AssertionError
 
 
 def format_seconds(seconds: float) -> str:
