@@ -208,6 +208,7 @@ def test_pictures_of_a_channel_made_from_others__say_so(job, solution, tmp_path,
 
     assert "interpolated" not in " ".join(said[0])
     assert "currents interpolated between solved channels" in said[1]
+    assert "perfect ground" in said[0]
 
 
 def test_draw_impedance__unknown_port_and_nothing_to_draw_are_refused(solution, tmp_path):
@@ -525,6 +526,79 @@ def test_draw_impedance__reflections_above_one_are_not_cut_off(frequencies, tmp_
     largest = max(item.coupled_reflection.max() for item in made[:frequencies])
     assert largest > 1.05
     assert figures[0].axes[3].get_ylim()[1] >= largest
+
+
+@pytest.mark.parametrize("frequencies", [1, 2])
+def test_draw_impedance__dead_ports_stay_out_and_places_have_names(frequencies, tmp_path, monkeypatch):
+    """The shorted port reflects all; with it the panel would reach 1."""
+    made = [port_impedances(solve(cluster(3), f), [100.0, 100.0, "short", 100.0, 100.0, 100.0]) for f in (140e6, 150e6)]
+    said, figures = [], keep_figures(monkeypatch, ports_picture)
+    inner = ports_picture.sheet
+    monkeypatch.setattr(ports_picture, "sheet", lambda *a, **k: said.append(a) or inner(*a, **k))
+    looks_drawn(draw_impedance(made[:frequencies], tmp_path / "z.png", ports=["x"], dead=["A002/x", "A001/y"]))
+    assert "1 dead port left out" in said[0][3]
+    assert said[0][2][2] == "perfect ground"
+    panel = figures[0].axes[3]
+    drawn = np.concatenate([np.asarray(line.get_ydata(), dtype=float) for line in panel.lines])
+    live = np.concatenate([m.coupled_reflection[[0, 4]] for m in made[:frequencies]])
+    assert drawn.max() <= max(live.max(), max(m.isolated_reflection[[0, 4]].max() for m in made)) < 0.999
+    if frequencies == 1:
+        assert [text.get_text() for text in panel.get_xticklabels()] == ["A001", "A003"]
+    # all of a name dead: they are drawn rather than nothing
+    draw_impedance(made, tmp_path / "z.png", ports=["x"], dead=["A001/x", "A002/x", "A003/x"])
+    assert not any("dead" in text for text in said[1][3])
+
+
+def test_mark_interpolated__has_a_place_in_the_legend_and_is_no_stroke():
+    from matplotlib.figure import Figure
+
+    from elbowroom.job.pictures.sheets import legend_of, mark_interpolated
+
+    axes = Figure().add_subplot()
+    mark_interpolated(axes, np.array([1.0, 2.0, 3.0]), ["assembled", "interpolated currents", "assembled"])
+    (handle,), (label,) = legend_of([axes])
+    assert label == "interpolated channel"
+    assert handle.get_marker() == "^"
+    np.testing.assert_allclose(handle.get_xdata(), [2.0])
+
+
+def test_ground_text__every_ground_in_few_words():
+    from elbowroom.geometry.grounds import GROUND_TYPES, FreeSpace, MeshOnSoil
+    from elbowroom.geometry.soils import LayeredSoil, MoistSoil, Soil, TabulatedSoil
+    from elbowroom.job.pictures.sheets import ground_text
+
+    moist = MoistSoil(0.2, 0.01)
+    known = {
+        FreeSpace(): "in free space",
+        PerfectGround(): "perfect ground",
+        Soil(10.0, 0.01): "soil, permittivity 10, 0.01 S/m",
+        MeshOnSoil(Soil(10.0, 0.01), 0.1, 0.0015): "100 mm mesh on soil, permittivity 10, 0.01 S/m",
+        LayeredSoil(((0.5, Soil(4.0, 0.001)),), Soil(10.0, 0.01)): "2 layers of soil",
+        moist: "soil, 20 % water",
+        TabulatedSoil((1e8, 2e8), (10.0, 9.0), (0.01, 0.02)): "soil of a table",
+    }
+    assert {type(ground) for ground in known} == set(GROUND_TYPES)
+    assert {ground: ground_text(ground) for ground in known} == known
+
+
+def test_pictures_of_an_antenna__tell_the_ground_and_leave_no_panel_empty(tmp_path, monkeypatch):
+    """Crossed dipoles over a perfect plane are kept apart by symmetry: there is no coupling to draw."""
+    from elbowroom.job.oneantenna import alone, antenna_figures, pattern_cuts, solve_alone
+    from elbowroom.job.pictures import antenna as module
+
+    said, figures = [], keep_figures(monkeypatch, module)
+    inner = module.sheet
+    monkeypatch.setattr(module, "sheet", lambda *a, **k: said.append(a) or inner(*a, **k))
+    station = alone(crossed(), PerfectGround())
+    solved = solve_alone(station, 100e6)
+    rows = antenna_figures(solved, solve_alone(station, 100e6, "refined"))
+    module.draw_antenna_impedance(rows, tmp_path / "z.png", ground=station.ground)
+    assert len(figures[0].axes) == 2
+    assert "coupling between ports: below -80 dB everywhere" in said[0][3]
+    module.draw_antenna_gain(rows, tmp_path / "g.png", ground=station.ground)
+    module.draw_antenna_convergence(rows, tmp_path / "d.png", ground=station.ground)
+    module.draw_antenna_cuts(pattern_cuts(solved, step_deg=5.0), tmp_path / "c.png", ground=station.ground)
+    assert ["perfect ground" in arguments[2] for arguments in said] == [True] * 4
 
 
 def test_draw_antenna__of_two_ports_over_a_ground_and_of_one_with_a_network_in_free_space(tmp_path):

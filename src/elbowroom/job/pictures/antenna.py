@@ -14,6 +14,7 @@ from elbowroom.base.arrays import FloatArray
 from elbowroom.base.constants import wavelength_of
 from elbowroom.base.errors import ModelRangeError
 from elbowroom.geometry.directions import azimuth_deg
+from elbowroom.geometry.grounds import Ground
 from elbowroom.geometry.stations import Station
 from elbowroom.job.oneantenna import AntennaFigures, PatternCut
 from elbowroom.job.pictures.layouts import draw_from_above, draw_from_side, port_colours
@@ -21,6 +22,7 @@ from elbowroom.job.pictures.sheets import (
     PORT_COLOURS,
     band_text,
     frequency_text,
+    ground_text,
     legend_above,
     legend_of,
     one_termination_text,
@@ -179,12 +181,29 @@ def _decades(axes: Axes) -> None:
     axes.yaxis.set_minor_formatter(NullFormatter())
 
 
+def _ground(ground: Ground | None) -> str:
+    return "" if ground is None else ground_text(ground)
+
+
+def _styles_below(axes: Axes, *styles: tuple[str, str]) -> None:
+    """Say below the axis of a panel, where nothing lies on curves, what line styles are; colours are those of ports."""
+    lines = [Line2D([], [], color="0.25", ls=style, lw=1.8, label=called) for style, called in styles]
+    axes.legend(
+        handles=lines, loc="upper center", bbox_to_anchor=(0.5, -0.14), ncols=len(lines), handlelength=3.6, columnspacing=1.6
+    )
+
+
 def _seen_text(termination: complex) -> str:
     return f"every port terminated with {one_termination_text(termination)}"
 
 
 def draw_antenna_impedance(
-    rows: Sequence[AntennaFigures], path: str | Path, *, termination: complex = 100.0, title: str = ""
+    rows: Sequence[AntennaFigures],
+    path: str | Path,
+    *,
+    termination: complex = 100.0,
+    title: str = "",
+    ground: Ground | None = None,
 ) -> Path:
     """Draw impedance, reflection and coupling of the ports over frequency.
 
@@ -198,6 +217,8 @@ def draw_antenna_impedance(
         What the ports see [ohm].
     title : str, optional
         Name of the antenna.
+    ground : Ground, optional
+        What it stands on, to be told.
 
     Raises
     ------
@@ -209,17 +230,21 @@ def draw_antenna_impedance(
     curves = _Curves(rows)
     frequencies = sorted({row.frequency_hz for row in rows})
     coupled = len(curves.ports) > 1
+    # Ports that a symmetry keeps apart would leave a panel empty.
+    apart = coupled and not any(np.any(_values(r, "coupling_db") >= _LEAST_DB) for r in curves.ports.values())
     caption = [_seen_text(termination), "reflection: of power waves, |(Z - conj(Z_T))/(Z + Z_T)|"]
-    if not coupled:
+    if apart:
+        caption.append(f"coupling between ports: below {_LEAST_DB:g} dB everywhere")
+    elif not coupled:
         caption.append("circles: reflections of 0, -6 and -10 dB")
-    details = [title, band_text(frequencies)]
-    with sheet(path, "Impedance and reflection of the antenna", details, caption, size=(13.0, 5.0)) as figure:
-        panels = figure.subplots(1, 3)
+    details = [title, band_text(frequencies), _ground(ground)]
+    with sheet(path, "Impedance and reflection of the antenna", details, caption, size=(13.0, 5.2)) as figure:
+        panels = figure.subplots(1, 2 if apart else 3)
         curves.panel(panels[0], "impedance", "R and X [ohm]", ("resistance_ohm", "-", "R"), ("reactance_ohm", "--", "X"))
         panels[0].axhline(0.0, color="0.6", lw=0.8, zorder=0)
         curves.panel(panels[1], "reflection at the termination", "reflection [dB]", ("reflection_db", "-", ""), least=_LEAST_DB)
         panels[1].set_ylim(top=max(0.0, panels[1].get_ylim()[1]))
-        if coupled:
+        if coupled and not apart:
             curves.panel(
                 panels[2],
                 "largest coupling to another port",
@@ -227,11 +252,9 @@ def draw_antenna_impedance(
                 ("coupling_db", "-", ""),
                 least=_LEAST_DB,
             )
-            if not any(np.any(_values(r, "coupling_db") >= _LEAST_DB) for r in curves.ports.values()):
-                panels[2].texts[-1].set_text(f"below {_LEAST_DB:g} dB everywhere")
-        else:
+        elif not coupled:
             _reflection_plane(panels[2], curves, termination)
-        panels[0].legend(loc="best")
+        _styles_below(panels[0], ("-", "R"), ("--", "X"))
         legend_above(figure, *_port_handles(curves))
     return Path(path)
 
@@ -267,7 +290,13 @@ def _reflection_plane(axes: Axes, curves: _Curves, termination: complex) -> None
 
 
 def draw_antenna_gain(
-    rows: Sequence[AntennaFigures], path: str | Path, *, termination: complex = 100.0, title: str = "", free_space: bool = False
+    rows: Sequence[AntennaFigures],
+    path: str | Path,
+    *,
+    termination: complex = 100.0,
+    title: str = "",
+    ground: Ground | None = None,
+    free_space: bool = False,
 ) -> Path:
     """Draw directivity, gain, half-power widths, cross-polarisation, efficiency and, in free space, front-to-back ratio.
 
@@ -283,7 +312,7 @@ def draw_antenna_gain(
         "cross-polarisation: largest within half power of the peak, Ludwig's third definition",
         "efficiency: radiated over accepted power" + (", what other ports take counted as lost" if len(curves.ports) > 1 else ""),
     ]
-    details = [title, band_text(frequencies)]
+    details = [title, band_text(frequencies), _ground(ground)]
     with sheet(path, "Gain and patterns of the antenna over frequency", details, caption, size=(13.0, 8.6)) as figure:
         panels = figure.subplots(2, 3)
         curves.panel(
@@ -320,12 +349,14 @@ def draw_antenna_gain(
         _wide(panels[1, 1], 1.0)
         for axes in panels[0]:
             if any(np.any(np.isfinite(line.get_ydata())) for line in axes.lines):
-                axes.legend(loc="best", fontsize=8.0)
+                axes.legend(loc="best", fontsize=8.0, handlelength=3.4)
         legend_above(figure, *_port_handles(curves))
     return Path(path)
 
 
-def draw_antenna_convergence(rows: Sequence[AntennaFigures], path: str | Path, *, title: str = "") -> Path:
+def draw_antenna_convergence(
+    rows: Sequence[AntennaFigures], path: str | Path, *, title: str = "", ground: Ground | None = None
+) -> Path:
     """Draw what changes on the finer mesh: impedance, reflection, directivity and pattern, over frequency.
 
     Parameters are those of :func:`draw_antenna_impedance`.
@@ -339,14 +370,15 @@ def draw_antenna_convergence(rows: Sequence[AntennaFigures], path: str | Path, *
         f"unknowns: {words[0]}, finer {words[1]}",
         "pattern: largest change of the terminated response over the sky, below its peak",
     ]
-    with sheet(path, "Convergence of the antenna's mesh", [title, band_text(frequencies)], caption, size=(13.0, 5.0)) as figure:
+    details = [title, band_text(frequencies), _ground(ground)]
+    with sheet(path, "Convergence of the antenna's mesh", details, caption, size=(13.0, 5.2)) as figure:
         panels = figure.subplots(1, 3)
         curves.panel(
             panels[0], "impedance and reflection", "change [-]", ("impedance_change", "-", "|Z'/Z - 1|"),
             ("reflection_change", ":", "|change of reflection|"),
         )  # fmt: skip
         _decades(panels[0])
-        panels[0].legend(loc="best", fontsize=8.0)
+        _styles_below(panels[0], ("-", "|Z'/Z - 1|"), (":", "|change of reflection|"))
         curves.panel(panels[1], "directivity at the peak", "change [dB]", ("directivity_change_db", "-", ""))
         _wide(panels[1], 1e-3)
         curves.panel(panels[2], "pattern", "largest change below the peak [dB]", ("pattern_change_db", "-", ""))
@@ -361,6 +393,7 @@ def draw_antenna_cuts(
     *,
     termination: complex = 100.0,
     title: str = "",
+    ground: Ground | None = None,
     floor_db: float = -40.0,
 ) -> Path:
     """Draw patterns in vertical planes along, across and diagonal to the co-polarisation, a column a frequency.
@@ -375,6 +408,8 @@ def draw_antenna_cuts(
         What the ports see [ohm].
     title : str, optional
         Name of the antenna.
+    ground : Ground, optional
+        What it stands on, to be told.
     floor_db : float, optional
         Lower end of the scales, below the largest value of each frequency [dB].
 
@@ -404,7 +439,8 @@ def draw_antenna_cuts(
         }
         caption.append(f"{plane}: angles positive towards azimuth {', '.join(towards.values())}")
     size = (max(4.0 + 3.2 * len(frequencies), 8.6), 9.6)
-    with sheet(path, "Patterns of the antenna", [title, band_text(frequencies)], caption, size=size) as figure:
+    details = [title, band_text(frequencies), _ground(ground)]
+    with sheet(path, "Patterns of the antenna", details, caption, size=size) as figure:
         panels = figure.subplots(3, len(frequencies), squeeze=False, sharex=True, sharey="col")
         for column, frequency in zip(panels.T, frequencies, strict=True):
             here = [cut for cut in cuts if cut.frequency_hz == frequency]

@@ -20,16 +20,14 @@ from elbowroom.job.pictures.sheets import (
     DIFFERENCE,
     ISOLATED,
     decibels,
-    frequency_text,
     legend_above,
     legend_of,
-    origin_text,
     printable,
     sheet,
     shortened,
     termination_text,
 )
-from elbowroom.job.pictures.skymaps import COMPONENTS, beam_text, component_size, response_words
+from elbowroom.job.pictures.skymaps import COMPONENTS, beam_text, component_size, response_words, solution_texts
 from elbowroom.radiation.solution import Solution
 from elbowroom.system.terminations import Termination
 
@@ -187,7 +185,7 @@ def draw_cuts(
     ]
     if component != "total":
         caption.append(f"Ludwig's third definition, co-polar azimuth {float(azimuth_deg(nominal)):.5g}\u00b0")
-    details = [title, beam_text(beam, weights), frequency_text(solution.frequency_hz), origin_text(solution.statistics.origin)]
+    details = [title, beam_text(beam, weights), *solution_texts(solution)]
     with sheet(path, f"Cuts, {COMPONENTS[component]}", details, caption, size=(12.0, 5.4)) as figure:
         panels = figure.subplots(1, 2, sharey=True)
         top = 0.0
@@ -297,8 +295,7 @@ def draw_element_spread(
     details = [
         title,
         f"port {shortened(port, 24)} of {number}",
-        frequency_text(solution.frequency_hz),
-        origin_text(solution.statistics.origin),
+        *solution_texts(solution),
     ]
     with sheet(path, "How different are the antennas", details, caption, size=(12.0, 8.2)) as figure:
         panels = figure.subplots(2, 2, sharex=True, sharey="row", height_ratios=(1.25, 1.0))

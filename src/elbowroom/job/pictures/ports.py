@@ -8,7 +8,6 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
-from matplotlib.ticker import MaxNLocator
 
 from elbowroom.base.arrays import ComplexArray, FloatArray
 from elbowroom.base.errors import ModelRangeError
@@ -18,10 +17,12 @@ from elbowroom.job.pictures.sheets import (
     INTERPOLATED,
     ISOLATED,
     band_text,
+    ground_text,
     interpolated_caption,
     legend_above,
     legend_of,
     mark_interpolated,
+    name_ticks,
     printable,
     sheet,
     shortened,
@@ -58,6 +59,8 @@ class PortImpedances:
         termination has a negative resistance.
     origin : str
         Where the solution comes from.
+    ground : str
+        What the station stands on, in few words.
     """
 
     frequency_hz: float
@@ -68,6 +71,7 @@ class PortImpedances:
     coupled_reflection: FloatArray
     isolated_reflection: FloatArray
     origin: str = ORIGINS[0]
+    ground: str = ""
 
 
 def input_reflection(scattering: ComplexArray, termination: ComplexArray) -> ComplexArray:
@@ -145,11 +149,17 @@ def port_impedances(solution: Solution, termination: Termination = 100.0) -> Por
     return PortImpedances(
         solution.frequency_hz, solution.port_names, values, impedance(coupled), impedance(isolated),
         mismatch(coupled, load), mismatch(isolated, load), solution.statistics.origin,
+        ground_text(solution.station.ground),
     )  # fmt: skip
 
 
 def draw_impedance(
-    impedances: Sequence[PortImpedances], path: str | Path, *, title: str = "", ports: Sequence[str] | None = None
+    impedances: Sequence[PortImpedances],
+    path: str | Path,
+    *,
+    title: str = "",
+    ports: Sequence[str] | None = None,
+    dead: Sequence[str] = (),
 ) -> Path:
     """Draw resistance, reactance and mismatch of the ports over frequency, in the station and isolated.
 
@@ -163,6 +173,9 @@ def draw_impedance(
         Title of the job.
     ports : sequence of str, optional
         Names of the ports to draw, a row of panels each; the first four by default.
+    dead : sequence of str, optional
+        Ports, as ``antenna/port``, that are left out, and counted in the caption; if no others have a name that is drawn, they
+        are drawn.
 
     Returns
     -------
@@ -199,6 +212,15 @@ def draw_impedance(
     ]
     if len(wanted) < len(known):
         caption.append(f"ports {', '.join(wanted)} of {', '.join(known)}")
+    alive = np.array([str(n) not in set(dead) for n in names])
+    chosen = {name: np.array([n.port == name for n in names]) for name in wanted}
+    left_out = 0
+    for name, mine in chosen.items():
+        if np.any(mine & alive):
+            left_out += int(np.sum(mine & ~alive))
+            chosen[name] = mine & alive
+    if left_out:
+        caption.append(f"{left_out} dead port{'' if left_out == 1 else 's'} left out")
     origins = [item.origin for item in every]
     made = origins.count(INTERPOLATED)
     if made:
@@ -206,13 +228,14 @@ def draw_impedance(
     with sheet(
         path,
         "Port impedance and mismatch",
-        [title, band_text([item.frequency_hz for item in every])],
+        [title, band_text([item.frequency_hz for item in every]), every[0].ground],
         caption,
         size=(14.5, 1.4 + 3.0 * len(wanted)),
     ) as figure:
         panels = figure.subplots(len(wanted), 4, squeeze=False)
         for row, name in zip(panels, wanted, strict=True):
-            mine = np.array([n.port == name for n in names])
+            mine = chosen[name]
+            antennas = [n.antenna for n, is_mine in zip(names, mine, strict=True) if is_mine]
             coupled = np.array([item.coupled_ohm[mine] for item in every])
             isolated = np.array([item.isolated_ohm[mine] for item in every])
             reflected = np.array([item.coupled_reflection[mine] for item in every])
@@ -225,7 +248,7 @@ def draw_impedance(
                 (row[2], change, None, "change of R + jX by coupling [%]"),
                 (row[3], reflected, alone, "|reflection| at the termination [-]"),
             ):
-                _draw_spread(axes, frequencies, own, single)
+                _draw_spread(axes, frequencies, own, single, antennas)
                 if len(every) > 1:
                     mark_interpolated(axes, frequencies, origins)
                 axes.set_ylabel(quantity)
@@ -253,7 +276,9 @@ def _widen(axes: Axes, least: float) -> None:
     axes.set_ylim(low - 0.5 * lacking, high + 0.5 * lacking)
 
 
-def _draw_spread(axes: Axes, frequencies_mhz: FloatArray, coupled: FloatArray, isolated: FloatArray | None) -> None:
+def _draw_spread(
+    axes: Axes, frequencies_mhz: FloatArray, coupled: FloatArray, isolated: FloatArray | None, antennas: Sequence[str]
+) -> None:
     """Draw values (F, ports) of the station as band, median and single lines, those of isolated antennas dashed."""
     count = coupled.shape[1]
     axes.grid(color="0.92", lw=0.6)
@@ -266,7 +291,7 @@ def _draw_spread(axes: Axes, frequencies_mhz: FloatArray, coupled: FloatArray, i
             axes.plot(order, isolated[0], "_", ms=11 if count <= 40 else 5, mew=2.0, color=ISOLATED, label="isolated")
         axes.axhline(np.median(coupled[0]), color=COUPLED, lw=1.0, alpha=0.7, label="coupled, median", zorder=1)
         axes.set_xlabel("antenna, in the order of the layout")
-        axes.xaxis.set_major_locator(MaxNLocator(integer=True, nbins=8, min_n_ticks=1))
+        name_ticks(axes, antennas)
         axes.set_xlim(1 - max(0.4, 0.01 * count), count + max(0.4, 0.01 * count))
         return
     x = frequencies_mhz
@@ -285,6 +310,7 @@ def _draw_spread(axes: Axes, frequencies_mhz: FloatArray, coupled: FloatArray, i
     axes.plot(x, np.median(coupled, axis=1), color=COUPLED, lw=2.0, marker=dots, ms=4, label="coupled, median")
     alone = np.empty((0, len(x))) if isolated is None else np.unique(isolated.round(9), axis=1).T[:6]
     for i, curve in enumerate(alone):
-        axes.plot(x, curve, color=ISOLATED, lw=1.8, ls="--", marker=dots, ms=4, label="isolated" if i == 0 else None)
+        # Dots would close the gaps of the dashes.
+        axes.plot(x, curve, color=ISOLATED, lw=1.8, ls=(0, (4, 2)), label="isolated" if i == 0 else None)
     axes.set_xlabel("frequency [MHz]")
     axes.margins(x=0.02)

@@ -29,6 +29,8 @@ from numpy.typing import ArrayLike
 
 from elbowroom.base.arrays import FloatArray
 from elbowroom.base.errors import ModelRangeError
+from elbowroom.geometry.grounds import FreeSpace, Ground, MeshOnSoil, PerfectGround
+from elbowroom.geometry.soils import LayeredSoil, MoistSoil, Soil
 from elbowroom.job.files import written_whole
 from elbowroom.system.solving import ORIGINS
 from elbowroom.system.terminations import ParallelCircuit, PortTermination, SampledReflection, SeriesCircuit, Termination
@@ -44,6 +46,9 @@ COUPLED, ISOLATED, DIFFERENCE = "#1b4f9c", "#c8501e", "#4d4d4d"
 
 PORT_COLOURS = ("#1b6ca8", "#d9801a", "#2a8c5a", "#8a4fa3", "#8c6d31", "#b03a5b")
 """Colours of ports by the order of their names."""
+
+MADE = "#7a1fa2"
+"""Colour of marks of channels that were not solved."""
 
 HALO = [withStroke(linewidth=2.5, foreground="white")]
 """Path effects of text on lines."""
@@ -195,16 +200,43 @@ def interpolated_caption(count: int, *, single: bool = False) -> str:
     """Return what the caption says of some channels made from solved ones; ``single`` where the picture shows nothing else."""
     if single:
         return origin_text(INTERPOLATED)
-    return f"strokes along the lower edge: {count} channels whose currents were interpolated between solved ones"
+    return f"triangles along the lower edge: {count} channels whose currents were interpolated between solved ones"
 
 
 def mark_interpolated(axes: Axes, x: FloatArray, origins: Sequence[str]) -> None:
-    """Mark channels at x (F,) that were made from solved ones by strokes along the lower edge; no origins: all were solved."""
+    """Mark channels at x (F,) that were made from solved ones by triangles along the lower edge; no origins: all were solved."""
     made = [place for place, origin in zip(x, origins, strict=False) if origin == INTERPOLATED]
     if made:
+        # Strokes would be taken for ticks of the axis.
         axes.plot(
-            made, np.zeros(len(made)), "|", transform=axes.get_xaxis_transform(), color="0.35", ms=9, mew=0.9, clip_on=False
-        )
+            made, np.full(len(made), 0.022), "^", transform=axes.get_xaxis_transform(), color=MADE, ms=5.0, mew=0.0,
+            label="interpolated channel", zorder=4,
+        )  # fmt: skip
+
+
+def name_ticks(axes: Axes, names: Sequence[str]) -> None:
+    """Label places 1, 2, ... along the lower edge with names, as many of them as there is room for."""
+    words = [printable(shortened(name, 12)) for name in names]
+    most = max(2, 36 // (max(len(word) for word in words) + 2))
+    step = -(-len(words) // most)
+    axes.set_xticks(np.arange(1, len(words) + 1)[::step], words[::step])
+
+
+def ground_text(ground: Ground) -> str:
+    """Return what a station stands on in few words, for the line of facts: `describe` of the ground may be long."""
+    if isinstance(ground, FreeSpace):
+        return "in free space"
+    if isinstance(ground, PerfectGround):
+        return "perfect ground"
+    if isinstance(ground, MeshOnSoil):
+        return f"{ground.pitch_m * 1e3:.4g} mm mesh on {ground_text(ground.soil)}"
+    if isinstance(ground, Soil):
+        return f"soil, permittivity {ground.relative_permittivity:.4g}, {ground.conductivity_s_per_m:.4g} S/m"
+    if isinstance(ground, LayeredSoil):
+        return f"{len(ground.layers) + 1} layers of soil"
+    if isinstance(ground, MoistSoil):
+        return f"soil, {100.0 * ground.water_content:.3g} % water"
+    return "soil of a table"
 
 
 def band_text(frequencies_hz: Sequence[float]) -> str:

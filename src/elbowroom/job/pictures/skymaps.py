@@ -19,12 +19,14 @@ from elbowroom.job.pictures.sheets import (
     HALO,
     decibels,
     frequency_text,
+    ground_text,
     origin_text,
     printable,
     sheet,
     shortened,
     termination_text,
 )
+from elbowroom.radiation.solution import Solution
 from elbowroom.system.terminations import Termination
 
 if TYPE_CHECKING:
@@ -156,6 +158,12 @@ def beam_text(beam: Beam, weights: ComplexArray) -> str:
     return f"beam {shortened(beam.name, 32)}: port {shortened(beam.port, 16)} of {number}, {pointing_text(beam)}"
 
 
+def solution_texts(solution: Solution) -> tuple[str, str, str]:
+    """Return frequency, ground and, where it was not solved, origin of a solution in words."""
+    ground = ground_text(solution.station.ground)
+    return frequency_text(solution.frequency_hz), ground, origin_text(solution.statistics.origin)
+
+
 def isolated_peak(fields: BeamFields, index: int) -> float:
     """Return the largest magnitude of an isolated beam over the directions of its fields: 0 dB of its pictures [m]."""
     return float(component_size(fields.isolated[index], fields.directions.phi_rad, 0.0).max())
@@ -265,7 +273,7 @@ def draw_sky_maps(
         caption.append(f"{solution.port_names[row]}: of the most central antenna of the beam")
     if component != "total":
         caption.append(f"Ludwig's third definition, co-polar azimuth {float(azimuth_deg(nominal)):.5g}\u00b0")
-    details = [title, beam_text(beam, weights), frequency_text(solution.frequency_hz), origin_text(solution.statistics.origin)]
+    details = [title, beam_text(beam, weights), *solution_texts(solution)]
     places = map_places(closed_grid(theta, sky), closed_grid(phi, sky), projection)
     with sheet(path, f"All-sky maps, {COMPONENTS[component]}", details, caption, size=(12.0, 10.2)) as figure:
         panels = figure.subplots(2, 3)
