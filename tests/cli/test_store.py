@@ -6,6 +6,7 @@ import json
 import os
 import shutil
 import subprocess
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -82,13 +83,35 @@ def test_list__a_folder_and_a_job(command, job, store):
     own = command("store", "list", job)
     assert own.code == 0
     assert "Another job" not in own.out
-    assert "1 units of other jobs" in own.out
+    assert "1 unit of other jobs" in own.out
     told = lines(command("store", "list", store.folder.parent, "--json"), "unit")
     assert [(u["frequency_hz"], u["key"], u["state"]) for u in told] == [
         (110e6, own_key(store), "stored"), (120e6, OTHER, "stored"),
     ]  # fmt: skip
     assert told[0]["size_bytes"] == store.path_of(own_key(store)).stat().st_size
     assert told[0]["title"] == "Seven antennas"
+
+
+def test_list__grounds_and_origins_tell_units_of_one_title_apart(command, job, store):
+    record = store.get(OTHER)
+    soils = [f"soil, relative permittivity {e}, 0.01 S/m" for e in (5, 10)]
+    for number, changes in enumerate(
+        ({"ground": soils[0], "origin": "interpolated currents"}, {"ground": soils[1]}, {"ground": None, "origin": None})
+    ):
+        attributes = {k: v for k, v in (record.attributes | changes).items() if v is not None}
+        store.put(content_key(f"another {number}"), replace(record, attributes=attributes))
+    outcome = command("store", "list", store.folder.parent)
+    rows = [[cell.strip() for cell in line.split("\u2502")[1:-1]] for line in outcome.out.splitlines() if "Another job" in line]
+    # files come in the order of their keys, and numbers by first appearance
+    assert sorted((row[2].split(" ")[0], row[4]) for row in rows) == [
+        ("", ""), ("perfect", "assembled"), ("soil", "assembled"), ("soil", "interp. currents"),
+    ]  # fmt: skip
+    assert {"soil 1", "soil 2"} <= {row[2] for row in rows}
+    assert all(any(line.endswith(f": {soil}") for line in outcome.out.splitlines()) for soil in soils)
+    told = lines(command("store", "list", store.folder.parent, "--json"), "unit")
+    assert {(u["ground"], u["origin"]) for u in told} == {
+        ("perfect", "assembled"), (soils[0], "interpolated currents"), (soils[1], "assembled"), (None, None),
+    }  # fmt: skip
 
 
 def test_list__tells_missing_units_claims_and_damage(command, job, store, change):
@@ -137,11 +160,11 @@ def test_prune__lists_first_and_keeps_what_jobs_beside_it_need(command, job, sto
     assert "nothing was removed: '--remove' does it" in outcome.out
     assert len(store.keys()) == 2
     outcome = command("store", "prune", store.folder.parent, "--remove")
-    assert "1 files removed" in outcome.out
+    assert "1 file removed" in outcome.out
     assert store.keys() == [own_key(store)]
     assert store.verify(own_key(store)) is None
     outcome = command("store", "prune", job, "--remove")
-    assert "nothing to remove; 1 units stay" in outcome.out
+    assert "nothing to remove; 1 unit stays" in outcome.out
 
 
 def test_prune__keeps_what_a_job_needs_that_is_named(command, job, store, tmp_path):
@@ -240,7 +263,7 @@ def test_prune__keeps_port_matrices_of_units_without_currents(command, job, stor
     matrices = Hdf5Store(store.folder.parent, PORTS_SCHEMA)
     record = matrices.get(own)
     matrices.put(OTHER, record)
-    assert "1 units" in command("store", "list", job).out
+    assert "1 unit" in command("store", "list", job).out
     command("store", "prune", job, "--remove", "--other-versions")
     assert matrices.keys() == [own]
     assert store.keys() == []
@@ -270,7 +293,7 @@ def test_pack_and_unpack(command, job, store, tmp_path):
     pack = tmp_path / "own.pack"
     outcome = command("store", "pack", job, pack)
     assert outcome.code == 0
-    assert "1 units" in outcome.out
+    assert "1 unit" in outcome.out
     target = tmp_path / "new" / "store"
     outcome = command("store", "unpack", target, pack, "--json")
     assert outcome.code == 0
@@ -281,7 +304,7 @@ def test_pack_and_unpack(command, job, store, tmp_path):
     everything = tmp_path / "all.pack"
     command("store", "pack", store.folder.parent, everything)
     outcome = command("store", "unpack", target, everything)
-    assert "1 units added" in outcome.out
+    assert "1 unit added" in outcome.out
     assert "1 were there already" in outcome.out
     # a job takes them up: nothing is left to solve
     shutil.rmtree(store.folder)
@@ -298,7 +321,7 @@ def test_pack__damage_stops_it_unless_it_is_to_be_left(command, job, store, tmp_
     outcome = command("store", "pack", store.folder.parent, tmp_path / "p", "--leave-damaged")
     assert outcome.code == 0
     assert f"damaged: {store.path_of(OTHER)}" in outcome.err
-    assert "1 units" in outcome.out
+    assert "1 unit" in outcome.out
     assert command("store", "pack", job, tmp_path / "p").code == 6
     assert command("store", "pack", job, tmp_path / "p", "--replace").code == 0
 

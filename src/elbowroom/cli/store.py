@@ -53,11 +53,7 @@ def list_units(store: Path, mode: str | None) -> None:
     for unit in units:
         screen.emit("unit", **_facts(unit), state="damaged" if unit.problem else "stored", problem=unit.problem)
     if units:
-        screen.table(
-            f"Units in {place.folder}",
-            ["frequency [MHz]", "title", "solver", "ports", "size", "stored (UTC)", "key", "state"],
-            [[*_cells(u), u.key[:_SHOWN_KEY], "damaged" if u.problem else "stored"] for u in units],
-        )
+        _unit_table(screen, f"Units in {place.folder}", units)
     _tell_damaged(screen, units)
     if place.run is not None and needs is not None:
         there = {u.key for u in units}
@@ -70,11 +66,11 @@ def list_units(store: Path, mode: str | None) -> None:
         screen.emit("claim", key=key, host=holder.host, pid=holder.pid, since_utc=holder.since_utc, state=holder.state)
         screen.say(f"{key[:_SHOWN_KEY]}: claimed by {holder}")
     left = left_behind(place.folder)
-    _total(screen, units, "units")
+    _total(screen, units, "")
     if others:
-        screen.say(f"{len(others)} units of other jobs, {readable_bytes(sum(u.size_bytes for u in others))}")
+        screen.say(f"{_counted(len(others), 'unit')} of other jobs, {readable_bytes(sum(u.size_bytes for u in others))}")
     if left:
-        screen.say(f"{len(left)} files set aside or left behind; 'elbowroom store prune' removes them")
+        screen.say(f"{_counted(len(left), 'file')} set aside or left behind; 'elbowroom store prune' removes them")
 
 
 @store.command()
@@ -111,7 +107,7 @@ def verify(store: Path, aside: bool, mode: str | None) -> None:
                     "set aside", file=str(report.path), moved_to=None if report.moved_to is None else str(report.moved_to)
                 )
                 screen.say(str(report))
-    _total(screen, units, "units read", damaged=len(damaged))
+    _total(screen, units, " read", damaged=len(damaged))
     if damaged:
         if not aside:
             screen.say("runs set damaged units aside and solve them again; '--set-aside' does the first now")
@@ -165,20 +161,21 @@ def prune(
         screen.emit("job", path=str(path))
         screen.say(f"units of {path} stay")
     _tell_plan(screen, plan)
-    stays = f"{len(plan.kept)} units stay ({readable_bytes(sum(u.size_bytes for u in plan.kept))})"
+    stay = f"{_counted(len(plan.kept), 'unit')} {'stays' if len(plan.kept) == 1 else 'stay'}"
+    stays = f"{stay} ({readable_bytes(sum(u.size_bytes for u in plan.kept))})"
     if not plan.removals:
         screen.say(f"nothing to remove; {stays}")
         return
     size = readable_bytes(sum(r.size_bytes for r in plan.removals))
     if not remove:
-        screen.say(f"{len(plan.removals)} files would go ({size}), {stays}; nothing was removed: '--remove' does it")
+        screen.say(f"{_counted(len(plan.removals), 'file')} would go ({size}), {stays}; nothing was removed: '--remove' does it")
         return
     gone, stayed = carry_out(plan, place.folder)
     for removal in gone:
         screen.emit("removed", file=str(removal.path), size_bytes=removal.size_bytes)
     for text in stayed:
         screen.warn(f"not removed: {text}")
-    screen.say(f"{len(gone)} files removed ({readable_bytes(sum(r.size_bytes for r in gone))}), {stays}")
+    screen.say(f"{_counted(len(gone), 'file')} removed ({readable_bytes(sum(r.size_bytes for r in gone))}), {stays}")
     if stayed:
         sys.exit(StoreError.exit_code)
 
@@ -223,7 +220,7 @@ def pack(store: Path, file: Path, leave_damaged: bool, replace: bool, mode: str 
         missing = [f for f in place.run.frequencies_hz if place.run.key(f) not in there]
         if missing:
             screen.warn(f"not in the pack, because not solved: {', '.join(f'{f / 1e6:g}' for f in missing)} MHz")
-    screen.wrote(file, f"{len(packed)} units, {readable_bytes(file.stat().st_size)}")
+    screen.wrote(file, f"{_counted(len(packed), 'unit')}, {readable_bytes(file.stat().st_size)}")
 
 
 @store.command()
@@ -247,7 +244,7 @@ def unpack(store: Path, file: Path, mode: str | None) -> None:
 
     added = unpacked(file, place.folder, report=lambda damage: screen.warn(str(damage)), each=each)
     size = readable_bytes(sum(u.length for u in added))
-    screen.say(f"{len(added)} units added to {place.folder} ({size}), {len(there)} were there already")
+    screen.say(f"{_counted(len(added), 'unit')} added to {place.folder} ({size}), {len(there)} were there already")
 
 
 def _frequency_hz(unit: UnitEntry) -> float | None:
@@ -259,7 +256,8 @@ def _facts(unit: UnitEntry) -> dict[str, Any]:
     return {
         "file": str(unit.path), "key": unit.key, "schema": unit.schema_name, "schema_version": unit.schema_version,
         "size_bytes": unit.size_bytes, "frequency_hz": _frequency_hz(unit), "title": unit.attributes.get("title"),
-        "solver": unit.attributes.get("strategy"), "stored_utc": unit.created_utc or None,
+        "ground": unit.attributes.get("ground"), "solver": unit.attributes.get("strategy"),
+        "origin": unit.attributes.get("origin"), "stored_utc": unit.created_utc or None,
     }  # fmt: skip
 
 
@@ -272,6 +270,49 @@ def _cells(unit: UnitEntry) -> list[Any]:
         "?" if frequency is None else frequency / 1e6, unit.attributes.get("title") or "", unit.attributes.get("strategy") or "",
         len(ports) if isinstance(ports, list) else "", readable_bytes(unit.size_bytes), unit.created_utc[:16].replace("T", " "),
     ]  # fmt: skip
+
+
+def _unit_table(screen: Screen, title: str, units: list[UnitEntry]) -> None:
+    """Show units in a table; grounds of one kind are numbered, and described below it."""
+    grounds = _ground_names([_ground_of(u) for u in units])
+    columns = ["frequency [MHz]", "title", "ground", "solver", "origin", "ports", "size", "stored (UTC)", "key"]
+    rows = []
+    for unit in units:
+        frequency, name, solver, *rest = _cells(unit)
+        ground = grounds[_ground_of(unit)]
+        origin = str(unit.attributes.get("origin") or "")
+        # Columns must leave room for one another: the words of records are in JSON.
+        rows.append([frequency, name, ground, solver, origin.replace("interpolated", "interp."), *rest, unit.key[:_SHOWN_KEY]])
+    if any(u.problem for u in units):
+        columns.append("state")
+        for row, unit in zip(rows, units, strict=True):
+            row.append("damaged" if unit.problem else "stored")
+    screen.table(title, columns, rows)
+    for description, name in grounds.items():
+        if description != name:
+            screen.say(description if description.startswith(name) else f"{name}: {description}")
+
+
+def _ground_of(unit: UnitEntry) -> str:
+    """Return what a unit says of its ground in words; tables of grounds have other numbers at each frequency: their kind."""
+    ground = unit.attributes.get("ground")
+    return str(ground.get("kind", "") if isinstance(ground, dict) else ground or "")
+
+
+def _ground_names(descriptions: list[str]) -> dict[str, str]:
+    """Return a short name for each description of a ground: its first words, numbered where several begin alike."""
+    different = list(dict.fromkeys(descriptions))
+    first = {text: text.replace(":", ",").split(",")[0].strip()[:18] for text in different}
+    names = {}
+    for text in different:
+        alike = [other for other in different if first[other] == first[text]]
+        names[text] = first[text] if len(alike) == 1 else f"{first[text]} {alike.index(text) + 1}"
+    return names
+
+
+def _counted(count: int, noun: str) -> str:
+    # That of `geometry.csvtable` would load numpy, for which help texts need not wait.
+    return f"{count} {noun}{'' if count == 1 else 's'}"
 
 
 def _tell_damaged(screen: Screen, units: list[UnitEntry]) -> None:
@@ -287,7 +328,7 @@ def _total(screen: Screen, units: list[UnitEntry], what: str, **more: int) -> No
     screen.emit("total", units=len(units), size_bytes=size, **more)
     told = "".join(f", {count} {name}" for name, count in more.items())
     if screen.mode != "json":
-        screen.out.print(f"{len(units)} {what}, {readable_bytes(size)}{told}", markup=False)
+        screen.out.print(f"{_counted(len(units), 'unit')}{what}, {readable_bytes(size)}{told}", markup=False)
 
 
 def _tell_plan(screen: Screen, plan: Pruning) -> None:
