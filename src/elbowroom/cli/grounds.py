@@ -73,16 +73,33 @@ def grounds(
         )
         for name, ground in known.items()
     }
-    rows = _compared(own, runs, known, screen)
-    write_ground_figures(rows, table, (f"elbowroom {__version__}; job {own.job.title}", *about))
+    rows, origins = _compared(own, runs, known, screen)
+    made = _origins_told(own, origins)
+    write_ground_figures(rows, table, (f"elbowroom {__version__}; job {own.job.title}", *about, *made))
     _show(rows, screen)
+    for line in made:
+        screen.say(line)
     screen.wrote(table, "all figures and what they mean")
     screen.wrote(draw_grounds(rows, folder / picture_name("grounds"), title=own.job.title, about=about))
     screen.say("results of a model, not a measurement")
 
 
-def _compared(own: JobRun, runs: dict[str, JobRun], known: dict[str, Ground], screen: Screen) -> list[GroundFigures]:
-    """Solve what is missing, one ground and frequency after another, and compare."""
+def _origins_told(own: JobRun, origins: dict[str, list[str]]) -> list[str]:
+    """Return what to say of frequencies that were not assembled for themselves, by ground; nothing if there are none."""
+    from elbowroom.job.portmatrices import origin_lines
+
+    told: list[str] = []
+    for name, each in origins.items():
+        meaning, *lines = origin_lines(own.frequencies_hz, each) or [""]
+        if lines:
+            told += [line for line in (meaning,) if line not in told] + [f"{name}: {line}" for line in lines]
+    return told
+
+
+def _compared(
+    own: JobRun, runs: dict[str, JobRun], known: dict[str, Ground], screen: Screen
+) -> tuple[list[GroundFigures], dict[str, list[str]]]:
+    """Solve what is missing, one ground and frequency after another, and compare; return the origins on each ground, too."""
     from elbowroom.base.errors import GeometryError
     from elbowroom.geometry.directions import hemisphere_grid
     from elbowroom.job.groundcomparison import compare_grounds
@@ -103,14 +120,17 @@ def _compared(own: JobRun, runs: dict[str, JobRun], known: dict[str, Ground], sc
         refuse_if_too_large(total([runs[name].predicted(f) for name, f in missing]), folder=own.job.store_folder)
     directions = hemisphere_grid(own.job.sky_step_deg)
     rows: list[GroundFigures] = []
+    origins: dict[str, list[str]] = {name: [] for name in runs}
     for count, frequency in enumerate(own.frequencies_hz, start=1):
         solutions = {name: run.solution(frequency) for name, run in runs.items()}
+        for name, solution in solutions.items():
+            origins[name].append(solution.statistics.origin)
         solved = [name for name in known if (name, frequency) in missing]
         state = f"solved on {', '.join(solved)}" if solved else "from store"
         screen.say(f"  {frequency / 1e6:g} MHz ({count} of {len(own.frequencies_hz)}): {state}")
         screen.emit("unit", frequency_hz=frequency, solved=solved)
         rows += compare_grounds(solutions, own.job.beams, directions, own.termination_at(frequency))
-    return rows
+    return rows, origins
 
 
 def _show(rows: list[GroundFigures], screen: Screen) -> None:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import click
 
@@ -157,7 +157,10 @@ def _active(run: JobRun, reference_ohm: float | None, folder: Path, screen: Scre
 def _show(found: ActivePorts, screen: Screen) -> None:
     import numpy as np
 
-    table = []
+    from elbowroom.cli.screen import tell_origins, with_origins
+
+    table: list[list[Any]] = []
+    origins = []
     returned = found.returned_power()
     for f, frequency in enumerate(found.frequency_hz):
         for b, beam in enumerate(found.beams):
@@ -170,16 +173,16 @@ def _show(found: ActivePorts, screen: Screen) -> None:
                 f"{frequency / 1e6:.6g}", beam.name, f"{middle.real:.1f}{middle.imag:+.1f}j", f"{np.median(size):.3f}",
                 f"{size[worst]:.3f}", str(found.port_names[driven[worst]]), f"{100.0 * returned[f, b]:.1f}",
             ])  # fmt: skip
+            origins.append(found.origins[f])
             screen.emit(
-                "active", frequency_hz=float(frequency), beam=beam.name, ports=int(driven.size),
+                "active", origin=found.origins[f], frequency_hz=float(frequency), beam=beam.name, ports=int(driven.size),
                 median_reflection=float(np.median(size)), largest_reflection=float(size[worst]),
                 port_of_largest=str(found.port_names[driven[worst]]), returned_power=float(returned[f, b]),
             )  # fmt: skip
-    screen.table(
-        "Ports driven at once",
-        ["frequency [MHz]", "beam", "median Z [ohm]", "median |reflection|", "largest", "at port", "returned power [%]"],
-        table,
-    )
+    columns = ["frequency [MHz]", "beam", "median Z [ohm]", "median |reflection|", "largest", "at port", "returned power [%]"]
+    with_origins(columns, table, origins)
+    screen.table("Ports driven at once", columns, table)
+    tell_origins(screen, origins)
     screen.say("returned power: of all that is sent into the ports of a beam, the part that comes back to them")
 
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import click
 
@@ -68,14 +68,21 @@ def _fields(run: JobRun, step_deg: float | None = None, *, solve_damaged: bool =
 def _show_comparison(rows: list[BeamComparison], screen: Screen, path: Path) -> None:
     from dataclasses import asdict
 
-    table = [[r.frequency_hz / 1e6, r.beam, *(f"{getattr(r, name):.2f}" for name in SHOWN.values())] for r in rows]
-    screen.table("Coupled against isolated beams", ["frequency [MHz]", "beam", *SHOWN], table)
+    from elbowroom.cli.screen import tell_origins, with_origins
+
+    table: list[list[Any]] = [
+        [r.frequency_hz / 1e6, r.beam, *(f"{getattr(r, name):.2f}" for name in SHOWN.values())] for r in rows
+    ]
+    columns = ["frequency [MHz]", "beam", *SHOWN]
+    with_origins(columns, table, [row.origin for row in rows])
+    screen.table("Coupled against isolated beams", columns, table)
     for row in rows:
         screen.emit("comparison", **{k: None if isinstance(v, float) and math.isnan(v) else v for k, v in asdict(row).items()})
     screen.say(
         "peak: coupled over isolated; widths: at half power, of the lobe at the peak, up through the zenith; shape: what is left "
         "in the main lobe after the best complex factor; spread: of the antennas' patterns where the beam points"
     )
+    tell_origins(screen, [row.origin for row in rows])
     away = [r for r in rows if r.coupled_peak_offset_deg > 0.5 * max(r.coupled_width_up_deg, r.coupled_width_across_deg, 1.0)]
     for r in away:
         screen.warn(

@@ -94,3 +94,30 @@ class Screen:
             self.out.print()
             for column, cell in zip(columns, row, strict=True):
                 self.out.print(f"  {column}: {cell}", markup=False)
+
+
+def with_origins(columns: list[str], rows: list[list[Any]], origins: Sequence[str]) -> None:
+    """Add a column with the origin of each row's channel to a table, unless all were assembled."""
+    if _not_all_assembled(origins):
+        columns.append("origin")
+        for row, origin in zip(rows, origins, strict=True):
+            row.append(short_origin(origin))
+
+
+def short_origin(origin: str) -> str:
+    """Return the origin of a channel in words that leave room for other columns."""
+    return origin.replace("interpolated", "interp.")
+
+
+def tell_origins(screen: Screen, origins: Sequence[str]) -> None:
+    """Say what origins mean, unless all channels were assembled."""
+    from elbowroom.system.solving import ORIGIN_MEANING
+
+    if _not_all_assembled(origins):
+        screen.say(f"origin: {ORIGIN_MEANING}")
+
+
+def _not_all_assembled(origins: Sequence[str]) -> bool:
+    from elbowroom.system.solving import ORIGINS
+
+    return any(origin != ORIGINS[0] for origin in origins)

@@ -274,6 +274,8 @@ def _cells(unit: UnitEntry) -> list[Any]:
 
 def _unit_table(screen: Screen, title: str, units: list[UnitEntry]) -> None:
     """Show units in a table; grounds of one kind are numbered, and described below it."""
+    from elbowroom.cli.screen import short_origin
+
     grounds = _ground_names([_ground_of(u) for u in units])
     columns = ["frequency [MHz]", "title", "ground", "solver", "origin", "ports", "size", "stored (UTC)", "key"]
     rows = []
@@ -281,8 +283,7 @@ def _unit_table(screen: Screen, title: str, units: list[UnitEntry]) -> None:
         frequency, name, solver, *rest = _cells(unit)
         ground = grounds[_ground_of(unit)]
         origin = str(unit.attributes.get("origin") or "")
-        # Columns must leave room for one another: the words of records are in JSON.
-        rows.append([frequency, name, ground, solver, origin.replace("interpolated", "interp."), *rest, unit.key[:_SHOWN_KEY]])
+        rows.append([frequency, name, ground, solver, short_origin(origin), *rest, unit.key[:_SHOWN_KEY]])
     if any(u.problem for u in units):
         columns.append("state")
         for row, unit in zip(rows, units, strict=True):
