@@ -128,3 +128,23 @@ def test_ports__of_a_job_that_is_not_solved_says_how(command, job):
     outcome = command("ports", job)
     assert outcome.code == 6
     assert "elbowroom solve" in outcome.err
+
+
+def test_ports__pictures_name_antennas_and_ground(command, solved, monkeypatch):
+    from contextlib import contextmanager
+
+    from elbowroom.job.pictures import active as module
+
+    figures, said, inner = [], [], module.sheet
+
+    @contextmanager
+    def kept(path, title, details, *rest, **more):
+        with inner(path, title, details, *rest, **more) as figure:
+            yield figure
+            figures.append(figure)
+            said.append(details)
+
+    monkeypatch.setattr(module, "sheet", kept)
+    assert command("ports", solved, "--scan", 120).code == 0
+    assert ["perfect ground" in details for details in said] == [True] * 4
+    assert [tick.get_text() for tick in figures[0].axes[0].get_xticklabels()] == ["A001", "A002", "A003"]

@@ -151,7 +151,8 @@ def _active(run: JobRun, reference_ohm: float | None, folder: Path, screen: Scre
     screen.wrote(path, "every port of every beam, and what the columns mean")
     for index, beam in enumerate(found.beams):
         picture = folder / picture_name("active", beam.name)
-        screen.wrote(draw_active(found, index, picture, terminations=run.port_terminations, title=run.job.title))
+        about = {"title": run.job.title, "ground": run.job.ground}
+        screen.wrote(draw_active(found, index, picture, terminations=run.port_terminations, **about))  # type: ignore[arg-type]
 
 
 def _show(found: ActivePorts, screen: Screen) -> None:
@@ -204,5 +205,8 @@ def _scan(
     path = picture.with_suffix(".csv")
     write_active_ports(found, path, (*_head(run), f"Scan of beam {beam.name} along azimuth {azimuth_deg:g} deg."))
     screen.wrote(path, f"beam {beam.name} from horizon to horizon along azimuth {azimuth_deg:g} deg")
-    draw_scan(found, signed, azimuth_deg, picture, name=beam.name, terminations=run.port_terminations, title=run.job.title)
+    draw_scan(
+        found, signed, azimuth_deg, picture, name=beam.name, terminations=run.port_terminations, title=run.job.title,
+        ground=run.job.ground,
+    )  # fmt: skip
     screen.wrote(picture)

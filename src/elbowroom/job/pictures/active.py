@@ -12,16 +12,19 @@ from numpy.typing import ArrayLike
 
 from elbowroom.base.arrays import FloatArray
 from elbowroom.base.errors import ModelRangeError
+from elbowroom.geometry.grounds import Ground
 from elbowroom.job.pictures.sheets import (
     COUPLED,
     INTERPOLATED,
     ISOLATED,
     band_text,
     frequency_text,
+    ground_text,
     interpolated_caption,
     legend_above,
     legend_of,
     mark_interpolated,
+    name_ticks,
     origin_text,
     printable,
     sheet,
@@ -41,7 +44,13 @@ _EXPLAINED = (
 
 
 def draw_active(
-    active: ActivePorts, beam: int, path: str | Path, *, terminations: Sequence[Any] | None = None, title: str = ""
+    active: ActivePorts,
+    beam: int,
+    path: str | Path,
+    *,
+    terminations: Sequence[Any] | None = None,
+    title: str = "",
+    ground: Ground | None = None,
 ) -> Path:
     """Draw active impedance and reflection of the ports of one beam over frequency.
 
@@ -57,6 +66,8 @@ def draw_active(
         What each port sees, to be told.
     title : str, optional
         Title of the job.
+    ground : Ground, optional
+        What the station stands on, to be told.
 
     Raises
     ------
@@ -72,13 +83,18 @@ def draw_active(
         title,
         f"beam {shortened(one.name, 32)}: port {shortened(one.port, 16)} of {rows.size}, {pointing}",
         band_text(active.frequency_hz),  # type: ignore[arg-type]
+        "" if ground is None else ground_text(ground),
     ]
     z, gamma = active.impedance_ohm[:, beam, rows], np.abs(active.reflection[:, beam, rows])
     single = active.frequency_hz.size == 1
     x: FloatArray = np.arange(1.0, rows.size + 1) if single else active.frequency_hz / 1e6
-    label = "port, in the order of the layout" if single else "frequency [MHz]"
+    label = "antenna, in the order of the layout" if single else "frequency [MHz]"
     returned = active.returned_power()[:, beam]
-    _draw(path, "Active impedance and reflection", details, terminations, x, label, z, gamma, returned, single, active.origins)
+    antennas = [active.port_names[row].antenna for row in rows]
+    _draw(
+        path, "Active impedance and reflection", details, terminations, x, label, z, gamma, returned, single, active.origins,
+        antennas,
+    )  # fmt: skip
     return Path(path)
 
 
@@ -91,6 +107,7 @@ def draw_scan(
     name: str = "",
     terminations: Sequence[Any] | None = None,
     title: str = "",
+    ground: Ground | None = None,
 ) -> Path:
     """Draw active impedance and reflection over the pointing of a beam in one vertical plane, at one frequency.
 
@@ -110,6 +127,8 @@ def draw_scan(
         What each port sees, to be told.
     title : str, optional
         Title of the job.
+    ground : Ground, optional
+        What the station stands on, to be told.
 
     Raises
     ------
@@ -129,6 +148,7 @@ def draw_scan(
         f"beam {shortened(name or active.beams[0].name, 32)}: port {shortened(active.beams[0].port, 16)} of {rows.size}, "
         f"pointed along azimuth {azimuth_deg % 360.0:.5g}\u00b0",
         frequency_text(float(active.frequency_hz[0])),
+        "" if ground is None else ground_text(ground),
         origin_text(active.origins[0]) if active.origins else "",
     ]
     z, gamma = active.impedance_ohm[0][:, rows], np.abs(active.reflection[0][:, rows])
@@ -160,6 +180,7 @@ def _draw(
     returned: FloatArray,
     single: bool,
     origins: Sequence[str] = (),
+    antennas: Sequence[str] = (),
 ) -> None:
     caption = ["" if terminations is None else termination_text(terminations), *_EXPLAINED]
     made = list(origins).count(INTERPOLATED)
@@ -182,7 +203,9 @@ def _draw(
             axes.set_xlabel(label)
             axes.set_ylabel(quantity)
             axes.grid(color="0.92", lw=0.6)
-            if single:
+            if single and antennas:
+                name_ticks(axes, antennas)
+            elif single:
                 axes.xaxis.set_major_locator(MaxNLocator(integer=True, nbins=8, min_n_ticks=1))
         back = np.sqrt(returned)
         if single:
