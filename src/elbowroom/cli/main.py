@@ -142,7 +142,8 @@ def layout(
 def inspect(job: Path, frequencies_hz: tuple[float, ...], mode: str | None) -> None:
     """Look at JOB without solving: settings, problems of the model, meshes, predicted time, memory and disk."""
     from elbowroom.base.machine import available_memory_bytes
-    from elbowroom.cli.screen import readable_bytes, readable_seconds
+    from elbowroom.base.sizes import readable_bytes
+    from elbowroom.cli.screen import readable_seconds
     from elbowroom.job.checks import mesh_statistics
 
     screen = make_screen(mode)
