@@ -204,7 +204,7 @@ def test_run__that_drops_currents__keeps_port_matrices_only(command, job, change
     # another table needs the currents
     outcome = command("compare", job)
     assert outcome.code == 6
-    assert "currents of 1 were dropped once their tables were made (store.currents)" in outcome.all
+    assert "of 1 the currents were dropped once their tables were made (store.currents)" in outcome.all
     assert "1 to solve" in command("solve", job).out
 
 

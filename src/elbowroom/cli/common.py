@@ -74,9 +74,9 @@ def require_stored(run: JobRun, *, ports_only: bool = False) -> None:
         broken = sum(run.path_of(f).exists() for f in missing)
         damaged = f"; {broken} of their files in the store are damaged" if broken else ""
         dropped = sum(f in without_currents for f in missing)
-        gone = f"; currents of {dropped} were dropped once their tables were made (store.currents)" if dropped else ""
+        gone = f"; of {dropped} the currents were dropped once their tables were made (store.currents)" if dropped else ""
         msg = (
-            f"{len(missing)} of {len(run.frequencies_hz)} frequencies are not in the store ({shown}){damaged}{gone}; "
+            f"{len(missing)} of {len(run.frequencies_hz)} frequencies are not solved yet ({shown}){damaged}{gone}; "
             f"'elbowroom solve {run.job.path}' solves them, 'elbowroom run' does everything"
         )
         raise StoreError(msg, path=run.job.store_folder)
