@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 
 from elbowroom.base.errors import ModelRangeError
+from elbowroom.base.threads import blas_threads
 from elbowroom.geometry.antennas import Antenna, Load, Port
 from elbowroom.geometry.grounds import FreeSpace, PerfectGround
 from elbowroom.geometry.shapes import log_periodic
@@ -202,3 +203,20 @@ def test_passive__is_told_by_the_largest_singular_value():
     for size, expected in ((0.999, True), (1.0005, True), (1.002, False), (np.nan, False)):
         admittance = (np.eye(6) - size * s) / 200.0
         assert is_passive(admittance, 100.0, 1e-3) is expected
+
+
+def test_small_stations__solve_channels_with_one_thread_of_blas(crossed_segment, monkeypatch):
+    used = []
+    inner = BandSegment._port_currents
+
+    def told(self, d):
+        used.append(blas_threads())
+        return inner(self, d)
+
+    monkeypatch.setattr(BandSegment, "_port_currents", told)
+    before = blas_threads()
+    crossed_segment.solve(140e6)
+    monkeypatch.setattr("elbowroom.system.band.SMALL_ORDER", 1)
+    crossed_segment.solve(140e6)
+    assert used == [1, before]
+    assert blas_threads() == before
