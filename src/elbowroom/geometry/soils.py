@@ -31,11 +31,11 @@ MOISTURE_RANGE_HZ = (1e6, 1e9)
 """Frequencies that the polynomial of :class:`MoistSoil` was measured at [Hz]."""
 
 
-def checked_number(name: str, value: float, low: float, high: float, *, open_low: bool = False) -> float:
+def checked_number(name: str, value: float, low: float, high: float) -> float:
     """Return a number from a range; raise ModelRangeError naming it if it is not."""
     number = float(value)
-    if not (np.isfinite(number) and low <= number <= high and not (open_low and number == low)):
-        msg = f"{name} {number!r}: expected a number from {'above ' if open_low else ''}{low:g} to {high:g}"
+    if not (np.isfinite(number) and low <= number <= high):
+        msg = f"{name} {number!r}: expected a number from {low:g} to {high:g}"
         raise ModelRangeError(msg)
     return number
 

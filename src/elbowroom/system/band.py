@@ -75,7 +75,6 @@ CHECKED_WIDTH, MOST_RESONANCES = 0.02, 2
 MOST_ROUNDS = 3
 """Times that a segment is begun again with more functions when a checked frequency exceeds the tolerance."""
 
-
 SMALL_ORDER = 1000
 """Functions of a station below which one thread of BLAS solves its channels: with 720 of them two threads took a fifth longer on
 an idle machine of two cores, and several times longer on a busy one, where they wait for each other in every small product."""
